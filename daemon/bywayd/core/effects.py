@@ -1,0 +1,300 @@
+"""
+What the front wants done, as commands. The runtime carries them out, in order; nobody else does.
+
+Rules for the runtime:
+
+1. Carry out all effects of one `handle` in their order before the next event is handed in.
+   None may block: what cannot be sent at once is dropped and reported (`Undeliverable`), a worker
+   or surveyor that cannot be written to is reported lost.
+2. An effect for a worker or surveyor that has gone meanwhile is dropped: its loss is on the way.
+3. Instants are readings of the same clock that `handle` is given.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Literal, TypeAlias
+
+from pydantic import BaseModel
+
+from bywayd.core.events import Facts, Outcome, Peer
+from bywayd.core.instants import Instant
+
+# -- to clients, sources, listeners ------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class Reply:
+    """Send a message to one peer, on the socket it came from, with the id it is an answer to."""
+
+    peer: Peer
+    id: str
+    #: A model of `byway.messages`.
+    message: BaseModel
+
+
+@dataclass(frozen=True, slots=True)
+class Publish:
+    """
+    Send a message on the events socket.
+
+    `number` is its place in the stream of this topic, from 1, for the header. The runtime keeps
+    the last frames of a topic for new subscribers and sends them with the number they had.
+    """
+
+    topic: str
+    number: int
+    message: BaseModel
+
+
+# -- to the workers ----------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class Job:
+    """Everything that a worker needs for one replan. Numbers are never used twice."""
+
+    job: int
+    #: The vehicle's definition, as in the settings. Opaque.
+    vehicle: object
+    start: tuple[float, float, float]
+    goal: tuple[float, float, float]
+    #: When the worker must have sent its `WorkerDone`. Time for the front is already set aside.
+    deadline: Instant
+    seed: int
+    method: str
+    left_out: tuple[str, ...]
+    clearance_m: float | None
+    start_speed_mps: float
+    start_curvature_per_m: float
+    gap_wanted: float
+    #: The snapshot to plan on; stays in memory until the core has released it.
+    revision: int
+    #: Opaque.
+    handle: object
+
+
+@dataclass(frozen=True, slots=True)
+class SpawnWorker:
+    """Start a worker that will go by this number. It says `WorkerReady`, or is reported lost."""
+
+    worker: int
+
+
+@dataclass(frozen=True, slots=True)
+class KillWorker:
+    """Kill the process at once (SIGKILL), whatever its state. `WorkerLost` follows."""
+
+    worker: int
+    why: str
+
+
+@dataclass(frozen=True, slots=True)
+class PingWorker:
+    """Ask an idle worker for a `WorkerAlive`."""
+
+    worker: int
+
+
+@dataclass(frozen=True, slots=True)
+class StartJob:
+    """Hand a job to an idle worker."""
+
+    worker: int
+    job: Job
+
+
+@dataclass(frozen=True, slots=True)
+class SteerJob:
+    """
+    Tell a worker to end its job now: "finish" with the best it has, "cancel" without interest.
+
+    Answered by the `WorkerDone` of the job, which may have been on its way already. For a job
+    that the worker is no longer at, it is to be ignored.
+    """
+
+    worker: int
+    job: int
+    how: Literal["finish", "cancel"]
+
+
+@dataclass(frozen=True, slots=True)
+class Recheck:
+    """
+    Ask an idle worker whether a route still stands on a newer snapshot: the planner's exact,
+    independent check, nothing else. Answered by `WorkerChecked`, as soon as possible and by
+    `job.deadline` at the latest.
+
+    `job` is the replan as it would be planned now: same request, newest revision and handle, a
+    number of its own. `outcome` is the one whose `route` and `path` are to be checked; it may
+    have come from another worker.
+    """
+
+    worker: int
+    job: Job
+    outcome: Outcome
+
+
+# -- to the surveyor ---------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class Change:
+    """
+    One change of one layer. The surveyor applies it whole or refuses it whole.
+
+    What to do, by `what`; `body` is the message of `byway.messages` that asked for it (its
+    geometry is opaque to the core), or None for "drop":
+
+    * "declare"   the layer exists, with these settings (idempotent) - `body`: the claim
+    * "put"       the obstacle `obstacle_id` is this - `body`: the put
+    * "drop"      the obstacle `obstacle_id` is gone; no error if it never was - no body
+    * "replace"   the layer holds this and nothing else - `body`: the replace_layer
+    * "patch"     these cells overwrite what the layer had there - `body`: the patch
+
+    All of them can be applied a second time without harm: a successor of a surveyor that died
+    gets the batch again whose answer never came.
+    """
+
+    what: Literal["declare", "put", "drop", "replace", "patch"]
+    layer: str
+    obstacle_id: str | None
+    body: BaseModel | None
+
+
+@dataclass(frozen=True, slots=True)
+class SpawnSurveyor:
+    """
+    Start a surveyor that will go by this number. It says `SurveyorReady`, or is reported lost.
+
+    With `revision` None it starts with an empty site. Otherwise it goes on from that snapshot:
+    `handle` is the current one, `in_use` the handles of every snapshot (this one included) whose
+    memory must stay as it is until `ReleaseBefore`.
+    """
+
+    surveyor: int
+    revision: int | None
+    handle: object
+    in_use: tuple[object, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class KillSurveyor:
+    """Kill the process at once (SIGKILL). `SurveyorLost` follows."""
+
+    surveyor: int
+    why: str
+
+
+@dataclass(frozen=True, slots=True)
+class PingSurveyor:
+    """Ask a surveyor without work for a `SurveyorAlive`."""
+
+    surveyor: int
+
+
+@dataclass(frozen=True, slots=True)
+class ApplyChanges:
+    """
+    Apply these in order, then publish. Answered by one `SnapshotReady` with the same number.
+
+    One batch is out at a time; what comes in meanwhile makes the next one.
+    """
+
+    surveyor: int
+    batch: int
+    changes: tuple[Change, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class ReleaseBefore:
+    """No job reads a snapshot older than this revision any more: give back their memory."""
+
+    surveyor: int
+    revision: int
+
+
+@dataclass(frozen=True, slots=True)
+class DescribeSite:
+    """
+    Ask for the site as tables, for one client. Answered by `SiteDescribed` with the same ticket.
+
+    `message` is the client's `site` message of `byway.messages`.
+    """
+
+    surveyor: int
+    ticket: int
+    message: BaseModel
+
+
+# -- to the runtime ----------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class Log:
+    """Write a line: `event` is a fixed dotted name, facts are keys with units."""
+
+    level: Literal["debug", "info", "warning", "error"]
+    event: str
+    facts: Mapping[str, object]
+
+
+@dataclass(frozen=True, slots=True)
+class Wake:
+    """Hand in a `Tick` at this instant, or as soon after as can be. Replaces the last `Wake`."""
+
+    at: Instant
+
+
+@dataclass(frozen=True, slots=True)
+class Stop:
+    """Everything open has been answered: flush the sockets and end. The last effect."""
+
+    why: str
+
+
+Effect: TypeAlias = (
+    Reply
+    | Publish
+    | SpawnWorker
+    | KillWorker
+    | PingWorker
+    | StartJob
+    | SteerJob
+    | Recheck
+    | SpawnSurveyor
+    | KillSurveyor
+    | PingSurveyor
+    | ApplyChanges
+    | ReleaseBefore
+    | DescribeSite
+    | Log
+    | Wake
+    | Stop
+)
+
+__all__ = [
+    "ApplyChanges",
+    "Change",
+    "DescribeSite",
+    "Effect",
+    "Facts",
+    "Instant",
+    "Job",
+    "KillSurveyor",
+    "KillWorker",
+    "Log",
+    "PingSurveyor",
+    "PingWorker",
+    "Publish",
+    "Recheck",
+    "ReleaseBefore",
+    "Reply",
+    "SpawnSurveyor",
+    "SpawnWorker",
+    "StartJob",
+    "SteerJob",
+    "Stop",
+    "Wake",
+]

@@ -1,0 +1,355 @@
+"""
+What can happen to the front, in the past tense. The runtime makes these; nobody else does.
+
+Three kinds of origin:
+
+* clients and sources, through the two ROUTER sockets (`Received`, `Unreadable`, `Undeliverable`),
+* the crew, through the socket pairs and pidfds (`Worker...`, `Surveyor...`, `SnapshotReady`,
+  `SiteDescribed`),
+* the runtime itself (`Started`, `Tick`, `Vitals`, `StopAsked`).
+
+Rules for the runtime:
+
+1. One call of `Front.handle(event, now)` an event, in order of arrival for each origin; `now`
+   never goes back. Budgets are measured from the `now` of the `Received`, so read the clock when
+   the frames come off the socket.
+2. `worker` and `surveyor` are the numbers that `SpawnWorker` and `SpawnSurveyor` gave. A number
+   is never used twice. `WorkerLost` / `SurveyorLost` is the last event with that number: read
+   and hand over what its pipe still holds first, then report the loss, once, whatever the cause
+   (died, killed by us, could not be started, its pipe closed or spoke nonsense).
+3. Values marked *opaque* pass through the core untouched: it neither reads nor copies them.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Literal, TypeAlias
+
+from pydantic import BaseModel
+
+from bywayd.core.instants import Instant
+
+#: What planning came to. Names as in the protocol; an outcome is never an error.
+OutcomeKind: TypeAlias = Literal[
+    "route", "start_blocked", "goal_blocked", "start_too_fast", "no_route", "not_found"
+]
+
+#: Facts for a program beside a sentence for a person.
+Facts: TypeAlias = Mapping[str, object]
+
+
+@dataclass(frozen=True, slots=True)
+class Peer:
+    """Where a message came from and where its reply goes: a socket and a ROUTER identity."""
+
+    channel: Literal["requests", "updates"]
+    identity: bytes
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """
+    What a worker found, as it came from the planner: the daemon's share is added by the core.
+
+    `route` and `path` are opaque. `route` is exactly what the answer's route field takes (packed
+    columns); `path` is whatever a worker needs beside it to check this route again (it comes
+    back in `Recheck`). Both are None unless `kind` is "route".
+    """
+
+    kind: OutcomeKind
+    #: In `cost_unit`; inf when there is no route.
+    cost: float
+    cost_unit: str
+    #: Proven lower bound of any route's cost.
+    bound: float
+    #: (cost - bound) / cost; nan or 1.0 when there is no route: passed on as it is.
+    gap: float
+    #: Obstacles in the way of start or goal, in the form of the answer's field. Opaque.
+    blocked_by: tuple[object, ...] = ()
+    #: Counts and measurements of the search. Opaque but for keys that the core adds.
+    statistics: Facts | None = None
+    route: object = None
+    path: object = None
+
+
+@dataclass(frozen=True, slots=True)
+class Refusal:
+    """One change of a batch that the surveyor would not take, by its place in the batch."""
+
+    index: int
+    #: A code of the protocol's closed list of errors.
+    code: str
+    #: A sentence for a person, with the offending value.
+    text: str
+    facts: Facts
+
+
+# -- from clients and sources ------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class Received:
+    """A message came in and the protocol's door let it through."""
+
+    peer: Peer
+    #: Header: the request id, chosen by the sender; replies carry it back.
+    id: str
+    #: The decoded body, a model of `byway.messages`; its class says the kind.
+    message: BaseModel
+    #: A digest of the body as it came (hashlib.blake2b, 16 bytes, over the frames after the
+    #: header): tells a repeat from a conflict without keeping the body.
+    fingerprint: bytes
+    #: Header: place in the sender's own stream (updates), or None.
+    number: int | None = None
+    #: Header: the epoch that the sender believes in, or None.
+    epoch: str | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Unreadable:
+    """Frames came in that the protocol's door refused. Answered if `id` is known, and counted."""
+
+    peer: Peer
+    id: str | None
+    code: str
+    text: str
+    facts: Facts
+
+
+@dataclass(frozen=True, slots=True)
+class Undeliverable:
+    """A reply could not be handed to its peer (gone, or its queue is full). Counted only."""
+
+    peer: Peer
+
+
+# -- from the workers --------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class WorkerReady:
+    """A worker has started, its kernels are warm, and it waits for its first job."""
+
+    worker: int
+
+
+@dataclass(frozen=True, slots=True)
+class WorkerAlive:
+    """
+    A sign of life, nothing else.
+
+    A worker says it when it takes a job, then at least every 100 ms while it is busy, and at
+    once as the answer to `PingWorker`. Any other event of a worker counts as one too.
+    """
+
+    worker: int
+
+
+@dataclass(frozen=True, slots=True)
+class WorkerBetter:
+    """A verified route, better than what this worker sent for this job before."""
+
+    worker: int
+    job: int
+    outcome: Outcome
+
+
+@dataclass(frozen=True, slots=True)
+class WorkerDone:
+    """
+    A job has ended (by itself, by its deadline, by finish or cancel); the worker is idle.
+
+    Carries the best outcome again, so that a lost `WorkerBetter` never matters. After a
+    "cancel" the outcome is ignored and may be an empty `not_found`.
+    """
+
+    worker: int
+    job: int
+    outcome: Outcome
+
+
+@dataclass(frozen=True, slots=True)
+class WorkerFailed:
+    """
+    A job has ended without an outcome; the worker is idle and well.
+
+    `code` is an error of the protocol: "bad_value" when the planner found the request senseless
+    (the text says what), "internal" for an exception nobody expected.
+    """
+
+    worker: int
+    job: int
+    code: str
+    text: str
+    facts: Facts
+
+
+@dataclass(frozen=True, slots=True)
+class WorkerChecked:
+    """The answer to `Recheck`: whether the route still stands. The worker is idle."""
+
+    worker: int
+    job: int
+    good: bool
+    #: What was found, when it is not good: a sentence for the log.
+    text: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class WorkerLost:
+    """A worker is gone. The last event with this number."""
+
+    worker: int
+    why: str
+
+
+# -- from the surveyor -------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class SurveyorReady:
+    """
+    A surveyor has started and holds a site: an empty one with the layers of the settings
+    declared, or the one it was given to recover.
+
+    `revision` and `handle` name its current snapshot; for a successor the very one that
+    `SpawnSurveyor` gave it.
+    """
+
+    surveyor: int
+    revision: int
+    #: Opaque: how workers attach to the snapshot.
+    handle: object
+    memory_bytes: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class SurveyorAlive:
+    """
+    A sign of life, nothing else: the answer to `PingSurveyor`, and said at least every 500 ms
+    while a long batch is being worked on.
+    """
+
+    surveyor: int
+
+
+@dataclass(frozen=True, slots=True)
+class SnapshotReady:
+    """
+    The answer to one `ApplyChanges`: its changes are in this snapshot, but for the refused ones.
+
+    The revision is the same as before when nothing changed (all refused, all without effect).
+    """
+
+    surveyor: int
+    batch: int
+    revision: int
+    #: Opaque.
+    handle: object
+    refusals: tuple[Refusal, ...] = ()
+    memory_bytes: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class SiteDescribed:
+    """
+    The answer to one `DescribeSite`. `body` is opaque to the core and goes to the asker as the
+    fields of the `site_is` message.
+    """
+
+    surveyor: int
+    ticket: int
+    body: object
+
+
+@dataclass(frozen=True, slots=True)
+class SurveyorLost:
+    """The surveyor is gone. The last event with this number."""
+
+    surveyor: int
+    why: str
+
+
+# -- from the runtime --------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class Started:
+    """The first event of all: the runtime can carry out effects now. Surveyor and workers follow."""
+
+
+@dataclass(frozen=True, slots=True)
+class Tick:
+    """Time has passed: the instant of the last `Wake` has come. Harmless at any other time."""
+
+
+@dataclass(frozen=True, slots=True)
+class Vitals:
+    """
+    What the runtime measured about itself, about once a second, for the health record.
+
+    `facts` is opaque and appears in the record as it is (resident bytes, longest turn, replies
+    and log lines dropped, ...): numbers by name, names with their unit.
+    """
+
+    facts: Mapping[str, float]
+
+
+@dataclass(frozen=True, slots=True)
+class StopAsked:
+    """Somebody wants the daemon to end (SIGTERM): drain, then `Stop`."""
+
+    why: str
+
+
+Event: TypeAlias = (
+    Received
+    | Unreadable
+    | Undeliverable
+    | WorkerReady
+    | WorkerAlive
+    | WorkerBetter
+    | WorkerDone
+    | WorkerFailed
+    | WorkerChecked
+    | WorkerLost
+    | SurveyorReady
+    | SurveyorAlive
+    | SnapshotReady
+    | SiteDescribed
+    | SurveyorLost
+    | Started
+    | Tick
+    | Vitals
+    | StopAsked
+)
+
+__all__ = [
+    "Event",
+    "Facts",
+    "Instant",
+    "Outcome",
+    "OutcomeKind",
+    "Peer",
+    "Received",
+    "Refusal",
+    "SiteDescribed",
+    "SnapshotReady",
+    "Started",
+    "StopAsked",
+    "SurveyorAlive",
+    "SurveyorLost",
+    "SurveyorReady",
+    "Tick",
+    "Undeliverable",
+    "Unreadable",
+    "Vitals",
+    "WorkerAlive",
+    "WorkerBetter",
+    "WorkerChecked",
+    "WorkerDone",
+    "WorkerFailed",
+    "WorkerLost",
+    "WorkerReady",
+]
