@@ -16,9 +16,10 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Literal, TypeAlias
 
-from pydantic import BaseModel
-
-from bywayd.core.events import Facts, Outcome, Peer
+from byway.frames import Header
+from byway.messages import Message, Site
+from byway.packed import Bytes
+from bywayd.core.events import Outcome, Peer
 from bywayd.core.instants import Instant
 
 # -- to clients, sources, listeners ------------------------------------------------------------
@@ -26,26 +27,27 @@ from bywayd.core.instants import Instant
 
 @dataclass(frozen=True, slots=True)
 class Reply:
-    """Send a message to one peer, on the socket it came from, with the id it is an answer to."""
+    """Send `byway.frames.encode(header, message, packed)` to a peer, on the socket it is at."""
 
     peer: Peer
-    id: str
-    #: A model of `byway.messages`.
-    message: BaseModel
+    header: Header
+    message: Message
+    packed: Bytes = b""
 
 
 @dataclass(frozen=True, slots=True)
 class Publish:
     """
-    Send a message on the events socket.
+    Send `byway.frames.encode(header, message, packed)` on the events socket, under a topic.
 
-    `number` is its place in the stream of this topic, from 1, for the header. The runtime keeps
-    the last frames of a topic for new subscribers and sends them with the number they had.
+    The header's number is the place in the stream of this topic, from 1. The runtime keeps the
+    last frames of a topic for new subscribers, and sends them again as they were.
     """
 
     topic: str
-    number: int
-    message: BaseModel
+    header: Header
+    message: Message
+    packed: Bytes = b""
 
 
 # -- to the workers ----------------------------------------------------------------------------
@@ -56,8 +58,9 @@ class Job:
     """Everything that a worker needs for one replan. Numbers are never used twice."""
 
     job: int
-    #: The vehicle's definition, as in the settings. Opaque.
-    vehicle: object
+    #: The name of the vehicle, and its definition (`KnownVehicle`). Opaque.
+    vehicle: str
+    definition: object
     start: tuple[float, float, float]
     goal: tuple[float, float, float]
     #: When the worker must have sent its `WorkerDone`. Time for the front is already set aside.
@@ -140,27 +143,39 @@ class Recheck:
 
 
 @dataclass(frozen=True, slots=True)
+class LayerFlags:
+    """What a layer is, for as long as it exists."""
+
+    unknown_blocks: bool = False
+    outlines_only: bool = False
+
+
+@dataclass(frozen=True, slots=True)
 class Change:
     """
     One change of one layer. The surveyor applies it whole or refuses it whole.
 
-    What to do, by `what`; `body` is the message of `byway.messages` that asked for it (its
-    geometry is opaque to the core), or None for "drop":
+    A layer that does not exist yet is made first, with `settings` (whoever contradicts the
+    settings of a layer that exists has been refused before). Then, by `what`:
 
-    * "declare"   the layer exists, with these settings (idempotent) - `body`: the claim
-    * "put"       the obstacle `obstacle_id` is this - `body`: the put
-    * "drop"      the obstacle `obstacle_id` is gone; no error if it never was - no body
-    * "replace"   the layer holds this and nothing else - `body`: the replace_layer
-    * "patch"     these cells overwrite what the layer had there - `body`: the patch
+    * "claim"     nothing more
+    * "put"       the obstacles in `message` and `packed` are where they say
+    * "replace"   the layer holds these and nothing else, no cells either
+    * "patch"     the cells in `message` and `packed` overwrite what the layer had there
+    * "drop"      the obstacles `ids` are gone; no error for those that never were
 
     All of them can be applied a second time without harm: a successor of a surveyor that died
     gets the batch again whose answer never came.
     """
 
-    what: Literal["declare", "put", "drop", "replace", "patch"]
+    what: Literal["claim", "put", "replace", "patch", "drop"]
     layer: str
-    obstacle_id: str | None
-    body: BaseModel | None
+    settings: LayerFlags
+    #: For put, replace and patch: as it came, its numbers not yet looked at.
+    message: Message | None = None
+    packed: Bytes = b""
+    #: For drop.
+    ids: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -220,12 +235,12 @@ class DescribeSite:
     """
     Ask for the site as tables, for one client. Answered by `SiteDescribed` with the same ticket.
 
-    `message` is the client's `site` message of `byway.messages`.
+    A layer that the message names is known; one that the surveyor has no snapshot of is empty.
     """
 
     surveyor: int
     ticket: int
-    message: BaseModel
+    message: Site
 
 
 # -- to the runtime ----------------------------------------------------------------------------
@@ -273,28 +288,3 @@ Effect: TypeAlias = (
     | Wake
     | Stop
 )
-
-__all__ = [
-    "ApplyChanges",
-    "Change",
-    "DescribeSite",
-    "Effect",
-    "Facts",
-    "Instant",
-    "Job",
-    "KillSurveyor",
-    "KillWorker",
-    "Log",
-    "PingSurveyor",
-    "PingWorker",
-    "Publish",
-    "Recheck",
-    "ReleaseBefore",
-    "Reply",
-    "SpawnSurveyor",
-    "SpawnWorker",
-    "StartJob",
-    "SteerJob",
-    "Stop",
-    "Wake",
-]

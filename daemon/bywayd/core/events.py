@@ -23,12 +23,13 @@ Rules for the runtime:
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Literal, TypeAlias
 
-from pydantic import BaseModel
-
-from bywayd.core.instants import Instant
+from byway import frames
+from byway.errors import SenderFault
+from byway.messages import SiteIs
+from byway.packed import Bytes
 
 #: What planning came to. Names as in the protocol; an outcome is never an error.
 OutcomeKind: TypeAlias = Literal[
@@ -50,26 +51,18 @@ class Peer:
 @dataclass(frozen=True, slots=True)
 class Outcome:
     """
-    What a worker found, as it came from the planner: the daemon's share is added by the core.
+    What a worker found. The core reads kind and cost; the rest is opaque and goes to the asker.
 
-    `route` and `path` are opaque. `route` is exactly what the answer's route field takes (packed
-    columns); `path` is whatever a worker needs beside it to check this route again (it comes
-    back in `Recheck`). Both are None unless `kind` is "route".
+    `body` and `packed` are what `answer` and `better` take: a `byway.messages.OutcomeIs` as
+    msgpack, and the frame with its columns. `path` is whatever a worker needs beside them to
+    check this route again; it comes back in `Recheck`, perhaps in another worker.
     """
 
     kind: OutcomeKind
-    #: In `cost_unit`; inf when there is no route.
+    #: inf when there is no route.
     cost: float
-    cost_unit: str
-    #: Proven lower bound of any route's cost.
-    bound: float
-    #: (cost - bound) / cost; nan or 1.0 when there is no route: passed on as it is.
-    gap: float
-    #: Obstacles in the way of start or goal, in the form of the answer's field. Opaque.
-    blocked_by: tuple[object, ...] = ()
-    #: Counts and measurements of the search. Opaque but for keys that the core adds.
-    statistics: Facts | None = None
-    route: object = None
+    body: bytes
+    packed: Bytes = b""
     path: object = None
 
 
@@ -90,31 +83,18 @@ class Refusal:
 
 @dataclass(frozen=True, slots=True)
 class Received:
-    """A message came in and the protocol's door let it through."""
+    """A message came in, and the door `byway.frames.decode` let it through."""
 
     peer: Peer
-    #: Header: the request id, chosen by the sender; replies carry it back.
-    id: str
-    #: The decoded body, a model of `byway.messages`; its class says the kind.
-    message: BaseModel
-    #: A digest of the body as it came (hashlib.blake2b, 16 bytes, over the frames after the
-    #: header): tells a repeat from a conflict without keeping the body.
-    fingerprint: bytes
-    #: Header: place in the sender's own stream (updates), or None.
-    number: int | None = None
-    #: Header: the epoch that the sender believes in, or None.
-    epoch: str | None = None
+    came: frames.Received
 
 
 @dataclass(frozen=True, slots=True)
 class Unreadable:
-    """Frames came in that the protocol's door refused. Answered if `id` is known, and counted."""
+    """Frames came in that the door refused. The sender is told why, and it is counted."""
 
     peer: Peer
-    id: str | None
-    code: str
-    text: str
-    facts: Facts
+    fault: SenderFault
 
 
 @dataclass(frozen=True, slots=True)
@@ -249,18 +229,18 @@ class SnapshotReady:
     handle: object
     refusals: tuple[Refusal, ...] = ()
     memory_bytes: int = 0
+    #: How many obstacles each layer has, for the health record.
+    obstacles: Mapping[str, int] = field(default_factory=dict)
 
 
 @dataclass(frozen=True, slots=True)
 class SiteDescribed:
-    """
-    The answer to one `DescribeSite`. `body` is opaque to the core and goes to the asker as the
-    fields of the `site_is` message.
-    """
+    """The answer to one `DescribeSite`: goes to the asker as it is."""
 
     surveyor: int
     ticket: int
-    body: object
+    message: SiteIs
+    packed: Bytes
 
 
 @dataclass(frozen=True, slots=True)
@@ -276,7 +256,10 @@ class SurveyorLost:
 
 @dataclass(frozen=True, slots=True)
 class Started:
-    """The first event of all: the runtime can carry out effects now. Surveyor and workers follow."""
+    """The first event of all: effects can be carried out now. The crew is spawned."""
+
+    #: The wall clock (seconds since 1970), for people and for clients that compare clocks.
+    wall_s: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -289,11 +272,15 @@ class Vitals:
     """
     What the runtime measured about itself, about once a second, for the health record.
 
-    `facts` is opaque and appears in the record as it is (resident bytes, longest turn, replies
-    and log lines dropped, ...): numbers by name, names with their unit.
+    `facts` is opaque and appears among the counts of the record as it is (peers, replies and log
+    lines dropped, the longest turn, ...): whole numbers by name, names with their unit.
     """
 
-    facts: Mapping[str, float]
+    facts: Mapping[str, int]
+    #: The wall clock, read at the same moment.
+    wall_s: float
+    #: Resident bytes of each process, by name.
+    memory_bytes: Mapping[str, int] = field(default_factory=dict)
 
 
 @dataclass(frozen=True, slots=True)
@@ -324,32 +311,3 @@ Event: TypeAlias = (
     | Vitals
     | StopAsked
 )
-
-__all__ = [
-    "Event",
-    "Facts",
-    "Instant",
-    "Outcome",
-    "OutcomeKind",
-    "Peer",
-    "Received",
-    "Refusal",
-    "SiteDescribed",
-    "SnapshotReady",
-    "Started",
-    "StopAsked",
-    "SurveyorAlive",
-    "SurveyorLost",
-    "SurveyorReady",
-    "Tick",
-    "Undeliverable",
-    "Unreadable",
-    "Vitals",
-    "WorkerAlive",
-    "WorkerBetter",
-    "WorkerChecked",
-    "WorkerDone",
-    "WorkerFailed",
-    "WorkerLost",
-    "WorkerReady",
-]

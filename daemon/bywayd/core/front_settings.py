@@ -5,20 +5,18 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
-from bywayd.core.instants import Duration
+from bywayd.core.effects import LayerFlags
 from bywayd.core.invariant import invariant
 
 
-def _ms(milliseconds: float) -> Duration:
-    return Duration.of_s(milliseconds / 1000)
-
-
 @dataclass(frozen=True, slots=True)
-class KnownLayer:
-    """A layer that the settings declare, so that it exists before any source has claimed it."""
+class KnownVehicle:
+    """A vehicle of the settings. The core knows it by name only."""
 
-    unknown_blocks: bool = False
-    outlines_only: bool = False
+    #: Its motion model, for `vehicles_are`.
+    model: str
+    #: Opaque: what defines it, as in the settings (msgpack can carry it).
+    settings: Mapping[str, object]
 
 
 @dataclass(frozen=True, slots=True)
@@ -30,31 +28,30 @@ class FrontSettings:
 
     # -- what is served -----------------------------------------------------------------------
 
-    #: Vehicle definitions by name, as in the settings; opaque, they travel to workers and askers.
-    vehicles: Mapping[str, Mapping[str, object]] = field(default_factory=dict)
+    #: Vehicles by name.
+    vehicles: Mapping[str, KnownVehicle] = field(default_factory=dict)
     #: Layers that exist from the start.
-    layers: Mapping[str, KnownLayer] = field(default_factory=dict)
-    #: Where the sockets are, for `welcome`: "requests", "updates", "events" and so on.
-    endpoints: Mapping[str, str] = field(default_factory=dict)
-    #: The limits of the wire, for `welcome`; opaque.
-    limits: Mapping[str, int | float] = field(default_factory=dict)
-    #: The daemon's own version, for `welcome` and health.
-    version: str = "0"
+    layers: Mapping[str, LayerFlags] = field(default_factory=dict)
+    #: Where the other sockets are, for `welcome`.
+    updates_endpoints: tuple[str, ...] = ()
+    events_endpoints: tuple[str, ...] = ()
+    #: The daemon's name and version, for `welcome`.
+    software: str = ""
 
     # -- planning -----------------------------------------------------------------------------
 
     #: Worker processes.
     workers: int = 2
     #: The longest budget that is granted.
-    budget_max: Duration = Duration.of_s(60)
+    budget_max_s: float = 60.0
     #: Set aside at the end of each budget for the last check, packing and sending ...
-    margin: Duration = _ms(2)
+    margin_s: float = 0.002
     #: ... but never more than this share of a budget, so that short ones are not eaten up.
     margin_ratio_max: float = 0.2
     #: A waiting replan with less than this left is not worth starting any more.
-    start_left_min: Duration = _ms(1.5)
+    start_left_min_s: float = 0.0015
     #: A replan whose worker was lost or whose route was blocked is tried again if this is left.
-    retry_left_min: Duration = _ms(3)
+    retry_left_min_s: float = 0.003
     #: The share of its budget that a replan may wait before running ones are cut short for it.
     patience_ratio: float = 0.25
     #: Waiting replans per worker before new ones are refused: a longer queue only makes answers
@@ -64,20 +61,20 @@ class FrontSettings:
     # -- the crew -----------------------------------------------------------------------------
 
     #: A worker that has not ended its job this long after the job's deadline is killed.
-    worker_grace: Duration = _ms(50)
+    worker_grace_s: float = 0.05
     #: A busy worker that says nothing at all for this long is killed.
-    worker_silence: Duration = _ms(500)
+    worker_silence_s: float = 0.5
     #: Idle workers and the idle surveyor are asked for a sign of life this often.
-    ping_every: Duration = Duration.of_s(1)
+    ping_every_s: float = 1.0
     #: A worker must be ready within this time of its start: forked warm it takes 20 ms, but the
     #: first may have to compile for two minutes.
-    start_time_max: Duration = Duration.of_s(300)
+    start_time_max_s: float = 300.0
     #: A surveyor that says nothing for this long while it owes an answer is killed.
-    surveyor_silence: Duration = Duration.of_s(5)
+    surveyor_silence_s: float = 5.0
     #: The first replacement starts at once; those of a crew member that is lost again and again
     #: before it has done anything useful wait, from this time, doubling, to the longest.
-    backoff_first: Duration = _ms(50)
-    backoff_max: Duration = Duration.of_s(5)
+    backoff_first_s: float = 0.05
+    backoff_max_s: float = 5.0
 
     # -- sources ------------------------------------------------------------------------------
 
@@ -106,9 +103,9 @@ class FrontSettings:
     # -- ending and telling -------------------------------------------------------------------
 
     #: Everything open is answered this long after a stop was asked for.
-    drain_max: Duration = _ms(1800)
+    drain_max_s: float = 1.8
     #: Between two health records on `events`.
-    health_every: Duration = Duration.of_s(1)
+    health_every_s: float = 1.0
 
     def __post_init__(self) -> None:
         invariant(self.workers >= 1, "there is at least one worker")
