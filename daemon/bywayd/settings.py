@@ -26,6 +26,7 @@ from pydantic_settings import (
     SettingsError,
 )
 
+from byway import limits
 from bywayd.settings_vehicles import VEHICLE_MODELS, VehicleSection
 from bywayd.toml_places import lines_of_keys
 
@@ -36,7 +37,7 @@ NESTED: Final = "__"
 IPC_PATH_BYTES_MAX: Final = 107
 
 Location = tuple[int | str, ...]
-Name = Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9_.-]{0,63}$")]
+Name = Annotated[str, Field(pattern=limits.name_pattern)]
 AnyVehicle = Annotated[VehicleSection, Field(discriminator="model")]
 Metres = Annotated[float, Field(allow_inf_nan=False)]
 
@@ -65,7 +66,6 @@ class SiteSection(Section):
 class LayerSection(Section):
     unknown_blocks: bool = False
     outlines_only: bool = False
-    lease_s: float | None = Field(None, gt=0.0, le=86_400.0)
 
 
 class SocketsSection(Section):
@@ -282,7 +282,7 @@ def _plain(error: Any, key: Location, merged: Mapping[str, Any]) -> str:
         told = str(error["msg"]).partition(" after validation")[0].replace("Tuple", "the list")
         return f"{told}, not {error['ctx']['actual_length']}"
     if kind == "string_pattern_mismatch":
-        return "a name begins with a letter or digit; then also _ . and -, 64 characters at most"
+        return "a name begins with a letter or digit; then also _ . : / # -; 64 characters at most"
     told = str(error["msg"]).removeprefix("Value error, ")
     told = told.replace("Input should be", "must be").replace("Input should have", "must have")
     shown = isinstance(value, int | float | str | bool) and kind != "value_error"

@@ -1,0 +1,257 @@
+"""
+Drawings of a site with vehicles and routes, in the manner of a printed site plan.
+
+Ink on paper: masses are hatched, routes are lines in few strong inks, drawn out when the vehicle
+goes forward and dashed when it reverses. Everything is in metres of the site. matplotlib is
+used without its global state and loads only when a drawing is made.
+"""
+
+from collections.abc import Iterable, Mapping, Sequence
+from pathlib import Path
+from typing import Any, Final
+
+import numpy as np
+import numpy.typing as npt
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.collections import LineCollection
+from matplotlib.figure import Figure
+from matplotlib.patches import Circle, Polygon
+
+Points = npt.NDArray[np.float64]
+Pose = tuple[float, float, float]
+Box = tuple[float, float, float, float]
+
+PAPER: Final = "#f6f1e4"
+INK: Final = "#2b2a28"
+GRID: Final = "#ded5c0"
+UNKNOWN: Final = "#cfc6b2"
+#: How a kind of mass is printed: face, edge, hatch.
+PRINTS: Final[dict[str, tuple[str, str, str]]] = {
+    "building": ("#d9b8a4", INK, "////"),
+    "stack": ("#e3cd97", "#6b5a2c", "xx"),
+    "vehicle": ("#efe7d3", INK, "...."),
+    "other": ("#cdbfa8", INK, "\\\\\\\\"),
+}
+#: Inks for routes and units, told apart in print and by most colour-blind readers.
+INKS: Final = ("#8c2f39", "#1f5673", "#5b7b3a", "#7a4b8f", "#a8642a")
+
+_PIXELS_PER_INCH: Final = 110
+_WIDTH_INCHES: Final = 11.0
+#: The margin around the ground that is shown, as a share of its width.
+_EDGE_RATIO: Final = 0.03
+
+
+def placed(outline_m: npt.ArrayLike, pose: Sequence[float]) -> Points:
+    """Return an outline of shape (n, 2), given in the vehicle's frame, at a pose on the site."""
+    x_m, y_m, heading_rad = (float(value) for value in pose[:3])
+    c, s = np.cos(heading_rad), np.sin(heading_rad)
+    turned: Points = np.asarray(outline_m, np.float64) @ np.array([[c, s], [-s, c]])
+    return turned + np.array([x_m, y_m])
+
+
+def disc_outline(radius_m: float, corners: int = 48) -> Points:
+    """Return a polygon that stands for a disc around the origin in drawings."""
+    turn_rad = np.arange(corners) * (2 * np.pi / corners)
+    return radius_m * np.column_stack((np.cos(turn_rad), np.sin(turn_rad)))
+
+
+class Plan:
+    """
+    One drawing. Draw what lies below first; `save` writes the file.
+
+    Args:
+        title: Printed in the corner, with `notes` below it.
+        box_m: The ground to show: x_min, y_min, x_max, y_max.
+        notes: Further lines of the title block.
+    """
+
+    def __init__(self, title: str, box_m: Box, notes: Iterable[str] = ()) -> None:
+        x_m_min, y_m_min, x_m_max, y_m_max = box_m
+        edge_m = _EDGE_RATIO * (x_m_max - x_m_min)
+        width_m, height_m = x_m_max - x_m_min + 2 * edge_m, y_m_max - y_m_min + 2 * edge_m
+        self._title, self._notes = title, list(notes)
+        # The strip below the ground holds the title block; it does not grow with the site.
+        strip_inches = 1.15
+        height_inches = min(3 * _WIDTH_INCHES, _WIDTH_INCHES * height_m / width_m) + strip_inches
+        self._figure = Figure((_WIDTH_INCHES, height_inches), _PIXELS_PER_INCH, facecolor=PAPER)
+        FigureCanvasAgg(self._figure)
+        strip_ratio = strip_inches / height_inches
+        self._axes = self._figure.add_axes((0.045, strip_ratio, 0.94, 0.985 - strip_ratio))
+        self._axes.set(
+            xlim=(x_m_min - edge_m, x_m_max + edge_m),
+            ylim=(y_m_min - edge_m, y_m_max + edge_m),
+            aspect="equal",
+            facecolor=PAPER,
+        )
+        self._axes.set_axisbelow(True)
+        self._axes.grid(True, color=GRID, linewidth=0.6)
+        self._axes.tick_params(colors=INK, labelsize=7, direction="in")
+        for spine in self._axes.spines.values():
+            spine.set(color=INK, linewidth=1.2)
+        self._legend: dict[str, dict[str, Any]] = {}
+
+    def limits(self, box_m: Box) -> None:
+        """Draw the border of the site."""
+        x_m_min, y_m_min, x_m_max, y_m_max = box_m
+        corners = [(x_m_min, y_m_min), (x_m_max, y_m_min), (x_m_max, y_m_max), (x_m_min, y_m_max)]
+        self._axes.add_patch(Polygon(corners, fill=False, edgecolor=INK, linewidth=2.2, zorder=2))
+
+    def cells(self, corner_m: tuple[float, float], cell_m: float, cells: npt.ArrayLike) -> None:
+        """Draw cells (0 free, 1 occupied, 2 unknown), row 0 at the lowest y."""
+        values = np.asarray(cells)
+        rows, columns = values.shape
+        colours = np.zeros((rows, columns, 4))
+        for value, colour in ((1, INK), (2, UNKNOWN)):
+            rgb = [int(colour[i : i + 2], 16) / 255 for i in (1, 3, 5)]
+            colours[values == value] = (*rgb, 1.0)
+        x_m, y_m = corner_m
+        extent = (x_m, x_m + columns * cell_m, y_m, y_m + rows * cell_m)
+        limits = (*self._axes.get_xlim(), *self._axes.get_ylim())
+        self._axes.imshow(colours, extent=extent, origin="lower", interpolation="nearest", zorder=1)
+        self._axes.axis(limits)  # imshow would zoom in on the cells
+
+    def polygons(
+        self, polygons: Mapping[str, npt.ArrayLike], kind: str = "other", *, named: bool = False
+    ) -> None:
+        """Draw masses of one of the kinds in `PRINTS`, with their ids when `named`."""
+        face, edge, hatch = PRINTS[kind]
+        for name, corners_m in polygons.items():
+            ring = np.asarray(corners_m, np.float64)
+            self._axes.add_patch(
+                Polygon(ring, facecolor=face, edgecolor=edge, hatch=hatch, linewidth=0.9, zorder=3)
+            )
+            if named:
+                self._label(name, _inside(ring))
+
+    def discs(
+        self,
+        discs: Mapping[str, tuple[float, float, float]],
+        kind: str = "other",
+        *,
+        named: bool = False,
+    ) -> None:
+        """Draw discs (x, y, radius), with their ids when `named`."""
+        face, edge, hatch = PRINTS[kind]
+        for name, (x_m, y_m, radius_m) in discs.items():
+            style = {"facecolor": face, "edgecolor": edge, "hatch": hatch, "linewidth": 0.9}
+            self._axes.add_patch(Circle((x_m, y_m), radius_m, zorder=3, **style))
+            if named:
+                self._label(name, (x_m, y_m))
+
+    def path(
+        self, points_m: npt.ArrayLike, ink: str, label: str = "", *, width: float = 1.1
+    ) -> None:
+        """Draw where something went."""
+        points = np.asarray(points_m, np.float64)
+        self._axes.plot(
+            points[:, 0], points[:, 1], color=ink, linewidth=width, alpha=0.85, zorder=5,
+            solid_capstyle="round",
+        )  # fmt: skip
+        if label:
+            self._legend[label] = {"color": ink, "linewidth": 2.0}
+
+    def route(self, table: npt.NDArray[Any], ink: str = INKS[0], label: str = "route") -> None:
+        """Draw a route table: forward drawn out, reverse dashed, an arrow now and then."""
+        points = np.column_stack((table["x_m"], table["y_m"]))
+        segments = np.stack((points[:-1], points[1:]), axis=1)
+        backward = table["gear"][:-1] < 0
+        for chosen, style, name in (
+            (~backward, "-", f"{label}, forward"),
+            (backward, (0, (2.2, 1.2)), f"{label}, in reverse"),
+        ):
+            if chosen.any():
+                self._axes.add_collection(
+                    LineCollection(
+                        list(segments[chosen]),
+                        colors=ink,
+                        linewidths=2.0,
+                        linestyles=style,
+                        zorder=6,
+                    )
+                )
+                self._legend[name] = {"color": ink, "linewidth": 2.0, "linestyle": style}
+        self._arrows(points, ink)
+
+    def vehicle(
+        self,
+        outline_m: npt.ArrayLike,
+        pose: Sequence[float],
+        ink: str = INK,
+        *,
+        ghost: bool = False,
+    ) -> None:
+        """Draw a vehicle at a pose; a ghost is where it may be, not where it is."""
+        ring = placed(outline_m, pose)
+        width = 0.7 if ghost else 1.5
+        self._axes.add_patch(
+            Polygon(
+                ring, facecolor=PAPER, fill=not ghost, edgecolor=ink, linewidth=width, zorder=5,
+                alpha=0.5 if ghost else 1.0,
+            )
+        )  # fmt: skip
+        if ghost:
+            return
+        # A bar from the rear axle to the front says which way it looks.
+        x_m, y_m, heading_rad = (float(value) for value in pose[:3])
+        nose_m = 0.7 * float(np.asarray(outline_m, np.float64)[:, 0].max())
+        tip = (x_m + nose_m * np.cos(heading_rad), y_m + nose_m * np.sin(heading_rad))
+        self._axes.plot((x_m, tip[0]), (y_m, tip[1]), color=ink, linewidth=1.3, zorder=8)
+        self._axes.plot(x_m, y_m, marker="o", markersize=3.0, color=ink, zorder=8)
+
+    def goal(self, outline_m: npt.ArrayLike, pose: Sequence[float], ink: str = INK) -> None:
+        """Draw where a vehicle is to stand: its outline dashed, a cross on its origin."""
+        ring = placed(outline_m, pose)
+        self._axes.add_patch(
+            Polygon(ring, fill=False, edgecolor=ink, linewidth=1.3, linestyle=(0, (4, 2)), zorder=7)
+        )
+        self._axes.plot(pose[0], pose[1], marker="+", markersize=9, color=ink, zorder=8)
+
+    def save(self, file: Path) -> None:
+        """Write the drawing; the suffix says the format (png, svg, pdf)."""
+        self._title_block()
+        self._figure.savefig(file, facecolor=PAPER)
+
+    def _label(self, text: str, place_m: Sequence[float]) -> None:
+        box = {"boxstyle": "round,pad=0.15", "facecolor": PAPER, "edgecolor": "none", "alpha": 0.85}
+        self._axes.text(
+            place_m[0], place_m[1], text, fontsize=7, color=INK, ha="center", va="center",
+            zorder=9, bbox=box,
+        )  # fmt: skip
+
+    def _arrows(self, points: Points, ink: str) -> None:
+        steps_m = np.hypot(*np.diff(points, axis=0).T)
+        along_m = np.concatenate(([0.0], np.cumsum(steps_m)))
+        every_m = max(2.0, along_m[-1] / 8)
+        for at_m in np.arange(every_m / 2, along_m[-1], every_m):
+            row = int(np.searchsorted(along_m, at_m))
+            (x0, y0), (x1, y1) = points[row - 1], points[row]
+            if np.hypot(x1 - x0, y1 - y0) > 1e-3:
+                style = {"arrowstyle": "-|>", "color": ink, "mutation_scale": 11}
+                self._axes.annotate("", xy=(x1, y1), xytext=(x0, y0), arrowprops=style, zorder=8)
+
+    def _title_block(self) -> None:
+        figure = self._figure
+        inches = figure.get_figheight()
+        top = 0.78 / inches
+        figure.text(0.045, top, self._title, fontsize=13, color=INK, weight="bold", va="top")
+        for row, note in enumerate(self._notes[:3]):
+            at = top - (0.26 + 0.17 * row) / inches
+            figure.text(0.045, at, note, fontsize=8, color=INK, va="top")
+        figure.text(
+            0.985, 0.12 / inches, "metres from the origin of the site", fontsize=7, color=INK,
+            ha="right",
+        )  # fmt: skip
+        if self._legend:
+            lines = [
+                self._axes.plot([], [], label=label, **style)[0]
+                for label, style in self._legend.items()
+            ]
+            figure.legend(
+                handles=lines, loc="upper right", bbox_to_anchor=(0.985, top + 0.06 / inches),
+                ncols=min(4, len(lines)), fontsize=8, frameon=False, labelcolor=INK,
+            )  # fmt: skip
+
+
+def _inside(ring: Points) -> tuple[float, float]:
+    x_m, y_m = ring.mean(axis=0)
+    return float(x_m), float(y_m)
