@@ -46,7 +46,8 @@ def placed(outline_m: npt.ArrayLike, pose: Sequence[float]) -> Points:
     x_m, y_m, heading_rad = (float(value) for value in pose[:3])
     c, s = np.cos(heading_rad), np.sin(heading_rad)
     turned: Points = np.asarray(outline_m, np.float64) @ np.array([[c, s], [-s, c]])
-    return turned + np.array([x_m, y_m])
+    turned += (x_m, y_m)
+    return turned
 
 
 def disc_outline(radius_m: float, corners: int = 48) -> Points:

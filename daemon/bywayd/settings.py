@@ -164,7 +164,7 @@ def load(file: Path | None = None) -> Settings:
     """
     Return the settings of a file, or the embedded ones, with the environment on top.
 
-    Sections that the file does not have keep their embedded values, except `vehicles`: a file
+    Keys that the file does not have keep their embedded values, except in `vehicles`: a file
     with vehicles has all of them, so that no invented vehicle is offered on a real site.
 
     Raises:
@@ -177,6 +177,9 @@ def load(file: Path | None = None) -> Settings:
     except tomllib.TOMLDecodeError as fault:
         raise BadSettings([Mistake(str(file), "", f"not TOML: {fault}")]) from None
     merged = {**embedded, **told}
+    for section in {"site", "sockets", "workers", "log"} & embedded.keys() & told.keys():
+        if isinstance(told[section], dict):
+            merged[section] = {**embedded[section], **told[section]}
     mistakes = _unknown_variables()
     try:
         settings = Settings(**merged)
@@ -185,7 +188,7 @@ def load(file: Path | None = None) -> Settings:
     except SettingsError as fault:
         mistakes.append(Mistake("environment", "", str(fault)))
     if mistakes:
-        raise BadSettings(mistakes)
+        raise BadSettings(sorted(mistakes, key=_reading_order))
     return settings
 
 
@@ -232,7 +235,7 @@ def _unknown_variables() -> list[Mistake]:
             continue
         if head.lower() not in Settings.model_fields:
             text = f"no section of this name{_meant(head.lower(), list(Settings.model_fields))}"
-            mistakes.append(Mistake("environment", variable, text))
+            mistakes.append(Mistake(f"environment {variable}", "", text))
     return mistakes
 
 
@@ -241,12 +244,25 @@ def _mistakes_of(
 ) -> list[Mistake]:
     lines = lines_of_keys(text)
     mistakes = []
-    for error in fault.errors():
+    errors = fault.errors()
+    for error in errors:
+        inner = any(_is_above(error["loc"], other["loc"]) for other in errors)
+        if error["type"] == "too_short" and inner:
+            continue  # only because an entry is wrong, and that is told already
         key = tuple(part for part in error["loc"] if part != "[key]")
         if len(key) > 2 and key[0] == "vehicles" and key[2] in VEHICLE_MODELS:
             key = (*key[:2], *key[3:])  # the model's name is in the location, but not in the file
         mistakes.append(Mistake(_place(key, file, lines), _dotted(key), _plain(error, key, merged)))
     return mistakes
+
+
+def _is_above(outer: Location, inner: Location) -> bool:
+    return len(outer) < len(inner) and inner[: len(outer)] == outer
+
+
+def _reading_order(mistake: Mistake) -> tuple[str, int, str]:
+    file, _, line = mistake.place.rpartition(":")
+    return (file, int(line), "") if line.isdigit() else (mistake.place, 0, mistake.key)
 
 
 def _place(key: Location, file: Path | None, lines: Mapping[tuple[str, ...], int]) -> str:
