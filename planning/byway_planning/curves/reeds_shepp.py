@@ -228,7 +228,7 @@ def _other_side(
             best = _quarter_other(best, side + flip, distance, t, f, plus, minus, change)
             if square >= 20.0:
                 best = _two_quarters(best, side + flip, tangent, t + lean, f, plus, minus, change)
-            else:
+            if square <= 36.0:
                 best = _four_arcs_out(best, side + flip, square, t, f, plus, minus, change)
         else:
             best = _four_arcs_in(best, side + flip, distance, t, f, plus, minus, change)
@@ -316,7 +316,7 @@ def _four_arcs_out(
     if room <= 0.0 or 0.5 * (square - 4.0) >= room * room:
         return best
     tolerance = turn_tolerance(math.sqrt(square))
-    cosine = min(1.0, (20.0 - square) / 16.0)
+    cosine = min(1.0, max(-1.0, (20.0 - square) / 16.0))
     bend = math.acos(cosine)
     first = ahead(theta + HALF_PI + math.atan2(math.sin(bend), 2.0 - cosine), tolerance)
     last = ahead(first - phi, tolerance)
