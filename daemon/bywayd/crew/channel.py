@@ -73,8 +73,11 @@ class Channel:
 
     @property
     def has_message(self) -> bool:
-        """Whether `take` would hand out a message without reading the socket."""
-        return self._whole_message() is not None
+        """Whether `take` has something to hand out, or to complain of, without reading on."""
+        try:
+            return self._whole_message() is not None
+        except ChannelBroken:
+            return True
 
     def put(self, message: Mapping[str, Any]) -> None:
         """

@@ -55,21 +55,14 @@ class SiteMemory:
         See to it that the first `bytes_needed` bytes exist.
 
         Raises:
-            MemoryError: If there is no more, by the size of the file or by the system.
+            OSError: ENOSPC if the file may not grow so far, or the system has no more.
         """
         if bytes_needed <= self._taken_bytes:
             return
         if bytes_needed > self.bytes_max:
-            raise MemoryError(
-                f"the site needs {bytes_needed} bytes; site memory is limited to {self.bytes_max}"
-            )
+            raise OSError(errno.ENOSPC, f"the site memory is limited to {self.bytes_max} bytes")
         goal_bytes = min(-(-bytes_needed // extent_bytes) * extent_bytes, self.bytes_max)
-        try:
-            os.posix_fallocate(self.descriptor, self._taken_bytes, goal_bytes - self._taken_bytes)
-        except OSError as fault:
-            if fault.errno in (errno.ENOSPC, errno.ENOMEM, errno.EFBIG):
-                raise MemoryError(f"the system has no {goal_bytes} bytes for the site") from fault
-            raise
+        os.posix_fallocate(self.descriptor, self._taken_bytes, goal_bytes - self._taken_bytes)
         self._taken_bytes = goal_bytes
 
     def map_writable(self) -> mmap.mmap:

@@ -28,7 +28,7 @@ def test_growth_comes_in_extents_and_stops_at_the_end(memory):
     assert memory.taken_bytes == extent_bytes
     memory.grow(memory.bytes_max)
     assert memory.taken_bytes == memory.bytes_max
-    with pytest.raises(MemoryError, match=str(memory.bytes_max)):
+    with pytest.raises(OSError, match=str(memory.bytes_max)):
         memory.grow(memory.bytes_max + 1)
 
 

@@ -1,0 +1,171 @@
+"""
+The surveyor: the one process that owns the site and writes to the shared memory.
+
+It takes batches of changes, one at a time and in order, makes each change whole or refuses it
+whole, publishes once per batch, and says which revision that made. It is not niced: what it
+does, acknowledgements wait for.
+"""
+
+import time
+import traceback
+from collections import deque
+from collections.abc import Mapping
+from typing import Any, Final
+
+from bywayd.crew.channel import Channel
+from bywayd.crew.memory import SiteMemory
+from bywayd.crew.skills import Published, Refused, SiteKeeping, Skills
+
+#: How often a busy surveyor says that it is alive; it owes a sign every 500 ms.
+alive_every_s: Final = 0.2
+
+
+class Surveyor:
+    """The life of one surveyor process; `run` does not return."""
+
+    def __init__(self, channel: Channel, memory: SiteMemory, skills: Skills) -> None:
+        self._channel = channel
+        self._memory = memory
+        self._mapped = memory.map_writable()
+        self._skills = skills
+        self._waiting: deque[dict[str, Any]] = deque()
+        self._alive_s = 0.0
+        self._settings: dict[str, Any] = {}
+        #: The current snapshot, and the handles of all that somebody may still be reading.
+        self._published = Published(0, {})
+        self._in_use: dict[int, dict[str, Any]] = {}
+
+    def run(self) -> None:
+        """Take up the site, say ready, then do what comes until the channel is closed."""
+        site = self._begin(self._next())
+        self._say("ready")
+        while True:
+            message = self._next()
+            what = message["do"]
+            if what == "apply":
+                site = self._apply(site, message)
+            elif what == "release":
+                self._release(site, message["revision"])
+            elif what == "describe":
+                self._describe(site, message)
+            elif what == "ping":
+                self._channel.wait_put({"say": "alive"})
+
+    def _next(self) -> dict[str, Any]:
+        while not self._waiting:
+            self._waiting.extend(self._channel.wait_take())
+        return self._waiting.popleft()
+
+    def _begin(self, order: dict[str, Any]) -> SiteKeeping:
+        self._settings = order["settings"]
+        if order["revision"] is None:
+            site = self._skills.new_site(self._settings, self._mapped, self._memory.grow)
+            self._publish(site)
+            return site
+        self._published = Published(order["revision"], order["handle"])
+        self._in_use = {handle["revision"]: handle for handle in order["in_use"]}
+        self._in_use[order["revision"]] = order["handle"]
+        return self._take_up_again()
+
+    def _take_up_again(self) -> SiteKeeping:
+        """Return the site as it was published last, whatever has been done to it since."""
+        return self._skills.recover_site(
+            self._settings,
+            self._mapped,
+            self._memory.grow,
+            self._published.handle,
+            list(self._in_use.values()),
+        )
+
+    def _publish(self, site: SiteKeeping) -> None:
+        self._published = site.publish()
+        self._in_use[self._published.revision] = self._published.handle
+
+    def _release(self, site: SiteKeeping, revision: int) -> None:
+        self._in_use = {number: h for number, h in self._in_use.items() if number >= revision}
+        site.release_before(revision)
+
+    def _apply(self, site: SiteKeeping, message: Mapping[str, Any]) -> SiteKeeping:
+        """
+        Apply a batch and publish it; return the site to go on with.
+
+        A change that the site does not understand (`Refused`) leaves no trace. One that breaks
+        something, or finds no room, may have: then the site is taken up again as it was
+        published last, and the batch is gone through once more without that change.
+        """
+        changes: list[Mapping[str, Any]] = message["changes"]
+        refusals: dict[int, Refused] = {}
+        while (breaking := self._go_through(site, changes, refusals)) is not None:
+            index, refused = breaking
+            refusals[index] = refused
+            site = self._take_up_again()
+        try:
+            self._publish(site)
+        except MemoryError as fault:
+            refusals |= {i: _no_room(fault) for i in range(len(changes)) if i not in refusals}
+            site = self._take_up_again()
+        told = [_refusal(index, refused) for index, refused in sorted(refusals.items())]
+        self._say("snapshot", batch=message["batch"], refusals=told, obstacles=site.obstacles())
+        return site
+
+    def _go_through(
+        self, site: SiteKeeping, changes: list[Mapping[str, Any]], refusals: dict[int, Refused]
+    ) -> tuple[int, Refused] | None:
+        """Make the changes that are not refused yet; return the one that breaks the site."""
+        for index, change in enumerate(changes):
+            if index in refusals:
+                continue
+            try:
+                for _ in site.apply(change):
+                    self._sign_of_life()
+            except Refused as refused:
+                refusals[index] = refused
+            except MemoryError as fault:
+                return index, _no_room(fault)
+            except Exception as fault:
+                self._channel.wait_put({"say": "trouble", "text": traceback.format_exc()})
+                text = f"the site failed at this change: {type(fault).__name__}"
+                return index, Refused("internal", text)
+            self._sign_of_life()
+        return None
+
+    def _describe(self, site: SiteKeeping, message: Mapping[str, Any]) -> None:
+        fields, packed = site.describe(message["question"])
+        self._channel.wait_put(
+            {"say": "site", "ticket": message["ticket"], "fields": fields, "packed": packed}
+        )
+
+    def _sign_of_life(self) -> None:
+        now_s = time.monotonic()
+        if now_s >= self._alive_s:
+            self._alive_s = now_s + alive_every_s
+            self._channel.wait_put({"say": "alive"})
+
+    def _say(self, what: str, **more: Any) -> None:
+        self._channel.wait_put(
+            {
+                "say": what,
+                "revision": self._published.revision,
+                "handle": self._published.handle,
+                "memory_bytes": self._memory.taken_bytes,
+                **more,
+            }
+        )
+
+
+def _no_room(fault: MemoryError) -> Refused:
+    return Refused("too_large", f"the site has no room for this: {fault}")
+
+
+def _refusal(index: int, refused: Refused) -> dict[str, Any]:
+    return {
+        "index": index,
+        "code": refused.code,
+        "text": refused.text,
+        "facts": refused.facts,
+    }
+
+
+def survey(channel: Channel, memory: SiteMemory, skills: Skills) -> None:
+    """Be the surveyor until the front closes the channel."""
+    Surveyor(channel, memory, skills).run()
