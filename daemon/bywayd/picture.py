@@ -17,8 +17,8 @@ from matplotlib.collections import LineCollection
 from matplotlib.figure import Figure
 from matplotlib.patches import Circle, Polygon
 
-Points = npt.NDArray[np.float64]
-Pose = tuple[float, float, float]
+from bywayd.outlines import Points, placed
+
 Box = tuple[float, float, float, float]
 
 PAPER: Final = "#f6f1e4"
@@ -39,21 +39,6 @@ _PIXELS_PER_INCH: Final = 110
 _WIDTH_INCHES: Final = 11.0
 #: The margin around the ground that is shown, as a share of its width.
 _EDGE_RATIO: Final = 0.03
-
-
-def placed(outline_m: npt.ArrayLike, pose: Sequence[float]) -> Points:
-    """Return an outline of shape (n, 2), given in the vehicle's frame, at a pose on the site."""
-    x_m, y_m, heading_rad = (float(value) for value in pose[:3])
-    c, s = np.cos(heading_rad), np.sin(heading_rad)
-    turned: Points = np.asarray(outline_m, np.float64) @ np.array([[c, s], [-s, c]])
-    turned += (x_m, y_m)
-    return turned
-
-
-def disc_outline(radius_m: float, corners: int = 48) -> Points:
-    """Return a polygon that stands for a disc around the origin in drawings."""
-    turn_rad = np.arange(corners) * (2 * np.pi / corners)
-    return radius_m * np.column_stack((np.cos(turn_rad), np.sin(turn_rad)))
 
 
 class Plan:

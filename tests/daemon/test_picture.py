@@ -1,6 +1,5 @@
 """Drawings: what is where on the paper. Pixels are read back from the file."""
 
-import math
 from pathlib import Path
 
 import numpy as np
@@ -38,16 +37,6 @@ class Drawn:
 @pytest.fixture
 def plan() -> picture.Plan:
     return picture.Plan("a test", BOX_M, ["one line"])
-
-
-def test_an_outline_is_turned_and_moved() -> None:
-    ring = picture.placed(BOX_OUTLINE_M, (10.0, 5.0, math.pi / 2))
-    assert ring == pytest.approx(np.array([(11, 4), (11, 8), (9, 8), (9, 4)]))
-
-
-def test_a_disc_is_drawn_with_its_radius() -> None:
-    ring = picture.disc_outline(2.5)
-    assert np.hypot(*ring.T) == pytest.approx(np.full(len(ring), 2.5))
 
 
 def test_cells_lie_with_their_lowest_row_at_the_lowest_y(
