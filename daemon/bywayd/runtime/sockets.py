@@ -37,7 +37,6 @@ OPTIONS_OF_ALL: Final[Mapping[zmq.SocketOption, int]] = {
     zmq.HEARTBEAT_TTL: 4000,
     zmq.HANDSHAKE_IVL: 5000,
     zmq.TCP_MAXRT: 5000,
-    zmq.BACKLOG: 100,
 }
 
 OPTIONS: Final[Mapping[SocketName, Mapping[zmq.SocketOption, int]]] = {
@@ -84,24 +83,6 @@ def open_socket(context: "zmq.Context[zmq.Socket[bytes]]", name: SocketName) -> 
     for option, value in {**OPTIONS_OF_ALL, **OPTIONS[name]}.items():
         sock.setsockopt(option, value)
     return sock
-
-
-def bind(sock: "zmq.Socket[bytes]", endpoint: str) -> str:
-    """
-    Bind, and return the endpoint as others can use it (port 0 becomes the port taken).
-
-    Raises:
-        DoorFault: If the address is not of this host alone, or cannot be had.
-    """
-    check_private(endpoint)
-    wish = f"{endpoint[:-2]}:*" if endpoint.endswith(":0") else endpoint
-    try:
-        sock.bind(wish)
-    except zmq.ZMQError as fault:
-        hint = "another daemon there?" if fault.errno == zmq.EADDRINUSE else "check the address"
-        raise DoorFault(f"cannot listen on {endpoint}: {fault} ({hint})") from fault
-    taken: bytes = sock.getsockopt(zmq.LAST_ENDPOINT)  # type: ignore[assignment]
-    return taken.rstrip(b"\0").decode()
 
 
 def check_private(endpoint: str) -> None:
