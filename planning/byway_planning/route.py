@@ -129,7 +129,7 @@ def _put_row(
 
 
 @kernel()
-def _put_phase(rows: Floats, row: int, path: Floats, j: int, part: Any, speeds: Any) -> int:
+def _put_phase(rows: Floats, row: int, path: Floats, j: int, part: Any, speeds: Any) -> Any:
     """
     Rows of one phase of constant acceleration: part (from, to) of element j, its first row
     included, its last one left to what follows. Returns the next free row, with its time set.
