@@ -1,0 +1,368 @@
+"""
+Is there room for the body: at a pose, and all along a motion.
+
+Everything here is about the *excess*: how much farther than its hard clearance the body stays
+from every obstacle, never overstated. The distance field answers most questions; where it
+cannot decide, the outline is tested exactly against the items nearby. Motions are checked by
+conservative advancement (Mirtich 1996, common practice since): the excess at one pose proves
+the next stretch free, because no point of the body moves faster than a known rate, so nothing is
+missed between samples.
+"""
+
+import math
+from typing import Final
+
+import numpy as np
+import numpy.typing as npt
+
+from byway_planning.curves.word import advance
+from byway_planning.kernel import kernel
+from byway_planning.site.scene import OPEN, SOLID, Scene
+from byway_planning.vehicles.body import Body
+
+Points = npt.NDArray[np.float64]
+
+#: An excess up to this counts as contact. It bounds the steps of a motion check from below.
+CONTACT_M: Final = 0.001
+#: Above this excess a motion makes progress on the field alone; below, the exact test is worth it.
+NEAR_M: Final = 0.12
+#: The exact test looks this far; more would not make a motion check quicker.
+EXACT_M: Final = 0.6
+#: Between the corners of a cell the bilinear value exceeds the distance by less than this, in
+#: cells: a distance is convex around each obstacle point, and a cone's worst case is
+#: (1 + 1 + sqrt 2) / 4 - sqrt(1/2) = 0.147.
+INTERPOLATION_CELLS: Final = 0.15
+#: A distance of the raster is below the true one plus this many cells: half a diagonal for the
+#: interpolation, a whole one because an obstacle may touch only the far corner of a cell.
+RASTER_CELLS: Final = 2.13
+
+
+@kernel()
+def field_at(scene: Scene, x: float, y: float) -> float:
+    """Interpolated distance to the raster, cut off at the reach; inf beyond, 0 outside."""
+    u = (x - scene.corner_x_m) / scene.cell_m
+    v = (y - scene.corner_y_m) / scene.cell_m
+    if not (x > scene.x_m_min and x < scene.x_m_max and y > scene.y_m_min and y < scene.y_m_max):
+        return 0.0
+    side = scene.tile_cells
+    column, row = int(u), int(v)
+    tr, tc = row // side, column // side
+    offset = scene.field_of[tr, tc]
+    if offset == OPEN:
+        return math.inf
+    if offset == SOLID:
+        return 0.0
+    fu, fv = u - column, v - row
+    at = offset + (row - tr * side) * (side + 1) + (column - tc * side)
+    low = scene.floats[at] * (1.0 - fu) + scene.floats[at + 1] * fu
+    at += side + 1
+    high = scene.floats[at] * (1.0 - fu) + scene.floats[at + 1] * fu
+    return float(low * (1.0 - fv) + high * fv)
+
+
+@kernel()
+def free_around(scene: Scene, x: float, y: float) -> float:
+    """A distance within which a point has no rastered obstacle; never overstated."""
+    d = field_at(scene, x, y)
+    if d < scene.reach_m - scene.cell_m:
+        return d - INTERPOLATION_CELLS * scene.cell_m
+    coarse = scene.tile_cells * scene.cell_m / 4.0
+    far = scene.far_m[int((y - scene.corner_y_m) / coarse), int((x - scene.corner_x_m) / coarse)]
+    near = scene.reach_m - scene.cell_m if d < math.inf else scene.reach_m
+    return max(float(far), near)
+
+
+@kernel()
+def _point_segment2(
+    px: float, py: float, ax: float, ay: float, dx: float, dy: float, length2: float
+) -> float:
+    """Squared distance of a point to the segment from a along d."""
+    ex, ey = px - ax, py - ay
+    t = ex * dx + ey * dy
+    if t > 0.0:
+        if t >= length2:
+            ex -= dx
+            ey -= dy
+        else:
+            t /= length2
+            ex -= t * dx
+            ey -= t * dy
+    return ex * ex + ey * ey
+
+
+@kernel()
+def segment_outline(outline: Points, ax: float, ay: float, bx: float, by: float) -> float:
+    """Distance of a segment to a polygon (n, 2), or to a point (n = 1); 0 where they overlap."""
+    n = outline.shape[0]
+    dx, dy = bx - ax, by - ay
+    d2 = dx * dx + dy * dy
+    if n == 1:
+        return math.sqrt(_point_segment2(outline[0, 0], outline[0, 1], ax, ay, dx, dy, d2))
+    inside = False
+    best = math.inf
+    px, py = outline[n - 1, 0], outline[n - 1, 1]
+    sp = dx * (py - ay) - dy * (px - ax)
+    for i in range(n):
+        qx, qy = outline[i, 0], outline[i, 1]
+        ex, ey = qx - px, qy - py
+        e2 = ex * ex + ey * ey
+        sq = dx * (qy - ay) - dy * (qx - ax)
+        sa = ex * (ay - py) - ey * (ax - px)
+        sb = ex * (by - py) - ey * (bx - px)
+        if sp * sq < 0.0 and sa * sb < 0.0:
+            return 0.0
+        if (py > ay) != (qy > ay) and (sa > 0.0) == (qy > py):
+            inside = not inside
+        best = min(best, _point_segment2(ax, ay, px, py, ex, ey, e2))
+        if d2 > 0.0:
+            best = min(best, _point_segment2(bx, by, px, py, ex, ey, e2))
+        best = min(best, _point_segment2(qx, qy, ax, ay, dx, dy, d2))
+        px, py, sp = qx, qy, sq
+    return 0.0 if inside else math.sqrt(best)
+
+
+@kernel()
+def _item_distance(
+    body: Body,
+    box: tuple[float, float, float, float],
+    pose: tuple[float, float, float, float],
+    item: tuple[float, float, float, float, float],
+    best: float,
+) -> float:
+    """
+    The smaller of `best` and the distance of a body at a pose to an item.
+
+    Args:
+        box: Bounding box of the outline in its own frame: x_min, y_min, x_max, y_max.
+        pose: x, y, cosine and sine of the heading.
+        item: x0, y0, x1, y1, radius.
+    """
+    x, y, c, s = pose
+    grow = item[4] + body.skin_m
+    dx, dy = item[0] - x, item[1] - y
+    ax, ay = c * dx + s * dy, c * dy - s * dx
+    dx, dy = item[2] - x, item[3] - y
+    bx, by = c * dx + s * dy, c * dy - s * dx
+    reach = best + grow
+    if (
+        max(ax, bx) < box[0] - reach
+        or min(ax, bx) > box[2] + reach
+        or max(ay, by) < box[1] - reach
+        or min(ay, by) > box[3] + reach
+    ):
+        return best
+    return min(best, segment_outline(body.outline_m, ax, ay, bx, by) - grow)
+
+
+@kernel()
+def _outline_box(outline: Points) -> tuple[float, float, float, float]:
+    low_x, low_y, high_x, high_y = math.inf, math.inf, -math.inf, -math.inf
+    for i in range(outline.shape[0]):
+        low_x, high_x = min(low_x, outline[i, 0]), max(high_x, outline[i, 0])
+        low_y, high_y = min(low_y, outline[i, 1]), max(high_y, outline[i, 1])
+    return low_x, low_y, high_x, high_y
+
+
+@kernel()
+def _exact_raster(
+    scene: Scene, body: Body, x: float, y: float, c: float, s: float, best: float
+) -> float:
+    """The smaller of `best` and the distance of the body to the items in the buckets around."""
+    box = _outline_box(body.outline_m)
+    pose = (x, y, c, s)
+    wx0, wy0, wx1, wy1 = math.inf, math.inf, -math.inf, -math.inf
+    for i in range(body.outline_m.shape[0]):
+        px, py = body.outline_m[i, 0], body.outline_m[i, 1]
+        wx, wy = x + c * px - s * py, y + s * px + c * py
+        wx0, wx1 = min(wx0, wx), max(wx1, wx)
+        wy0, wy1 = min(wy0, wy), max(wy1, wy)
+    skin = body.skin_m
+    best = min(best, wx0 - skin - scene.x_m_min, wy0 - skin - scene.y_m_min)
+    best = min(best, scene.x_m_max - wx1 - skin, scene.y_m_max - wy1 - skin)
+    if best <= 0.0:
+        return best
+    grow = best + skin
+    per = scene.bucket_side
+    bucket = scene.tile_cells * scene.cell_m / per
+    tile_rows, tile_columns = scene.edges_of.shape
+    c0 = max(math.floor((wx0 - grow - scene.corner_x_m) / bucket), 0)
+    r0 = max(math.floor((wy0 - grow - scene.corner_y_m) / bucket), 0)
+    c1 = min(math.floor((wx1 + grow - scene.corner_x_m) / bucket), tile_columns * per - 1)
+    r1 = min(math.floor((wy1 + grow - scene.corner_y_m) / bucket), tile_rows * per - 1)
+    for r in range(r0, r1 + 1):
+        tr = r // per
+        for q in range(c0, c1 + 1):
+            tc = q // per
+            offset = scene.edges_of[tr, tc]
+            if offset < 0:
+                continue
+            b = offset + (r - tr * per) * per + (q - tc * per)
+            first, last = scene.wholes[b], scene.wholes[b + 1]
+            base = offset + per * per + 1
+            for i in range(first, last):
+                at = base + 5 * i
+                item = (
+                    scene.numbers[at],
+                    scene.numbers[at + 1],
+                    scene.numbers[at + 2],
+                    scene.numbers[at + 3],
+                    scene.numbers[at + 4],
+                )
+                best = _item_distance(body, box, pose, item, best)
+                if best <= 0.0:
+                    return best
+    return best
+
+
+@kernel()
+def _exact_outlines(
+    scene: Scene, body: Body, x: float, y: float, c: float, s: float, best: float
+) -> float:
+    """The same for obstacles that are never rastered; a body inside one counts as overlap."""
+    box = _outline_box(body.outline_m)
+    pose = (x, y, c, s)
+    ox = x + c * body.outer_x_m - s * body.outer_y_m
+    oy = y + s * body.outer_x_m + c * body.outer_y_m
+    ix = x + c * body.inner_x_m - s * body.inner_y_m
+    iy = y + s * body.inner_x_m + c * body.inner_y_m
+    for k in range(scene.outline_discs.shape[0]):
+        disc = scene.outline_discs[k]
+        away = math.hypot(disc[0] - ox, disc[1] - oy) - disc[2] - body.outer_radius_m
+        if away >= best:
+            continue
+        inside = False
+        for i in range(scene.outline_starts[k], scene.outline_starts[k + 1]):
+            item = scene.outline_items[i]
+            if (item[1] > iy) != (item[3] > iy):
+                cut = item[0] + (item[2] - item[0]) * (iy - item[1]) / (item[3] - item[1])
+                if ix < cut:
+                    inside = not inside
+            place = (item[0], item[1], item[2], item[3], item[4])
+            best = _item_distance(body, box, pose, place, best)
+        if inside:
+            return 0.0
+        if best <= 0.0:
+            return best
+    return best
+
+
+@kernel()
+def pose_excess(scene: Scene, body: Body, x: float, y: float, heading: float) -> float:
+    """
+    How much more than its hard clearance the body keeps at a pose; never overstated.
+
+    Exact when small, a lower bound when large; at most 0 in a collision (not its depth).
+    """
+    c, s = math.cos(heading), math.sin(heading)
+    ox = x + c * body.outer_x_m - s * body.outer_y_m
+    oy = y + s * body.outer_x_m + c * body.outer_y_m
+    hard = body.clearance_m
+    limit = min(
+        min(ox - scene.x_m_min, scene.x_m_max - ox), min(oy - scene.y_m_min, scene.y_m_max - oy)
+    )
+    if limit <= 0.0:
+        return 0.0
+    quick = min(free_around(scene, ox, oy), limit) - body.outer_radius_m - hard
+    if quick <= NEAR_M:
+        ix = x + c * body.inner_x_m - s * body.inner_y_m
+        iy = y + s * body.inner_x_m + c * body.inner_y_m
+        if field_at(scene, ix, iy) + RASTER_CELLS * scene.cell_m < body.inner_radius_m + hard:
+            return 0.0
+        quick = math.inf
+        for i in range(body.cover_m.shape[0]):
+            dx, dy = body.cover_m[i, 0], body.cover_m[i, 1]
+            px, py = x + c * dx - s * dy, y + s * dx + c * dy
+            limit = min(
+                min(px - scene.x_m_min, scene.x_m_max - px),
+                min(py - scene.y_m_min, scene.y_m_max - py),
+            )
+            free = min(free_around(scene, px, py), limit) - body.cover_m[i, 2]
+            if free < quick:
+                quick = free
+                if quick - hard <= NEAR_M:
+                    break
+        quick -= hard
+        if quick <= NEAR_M:
+            quick = _exact_raster(scene, body, x, y, c, s, hard + EXACT_M) - hard
+    if scene.outline_discs.shape[0] > 0 and quick > 0.0:
+        quick = _exact_outlines(scene, body, x, y, c, s, hard + quick) - hard
+    return quick
+
+
+@kernel()
+def fastest_point(body: Body, curvature: float) -> float:
+    """How far, at most, a point of the body moves while its origin moves one metre."""
+    fastest = 1.0
+    if curvature != 0.0:
+        for i in range(body.outline_m.shape[0]):
+            px, py = body.outline_m[i, 0], body.outline_m[i, 1]
+            fastest = max(fastest, math.hypot(1.0 - curvature * py, curvature * px))
+    return fastest
+
+
+@kernel()
+def motion_reach(
+    scene: Scene, body: Body, x: float, y: float, heading: float, curvature: float, length: float
+) -> float:
+    """
+    How far an arc can be driven, in metres of arc length >= 0, before contact.
+
+    The whole |length| when it is free. Both ends are checked.
+    """
+    total = abs(length)
+    sign = 1.0 if length >= 0.0 else -1.0
+    rate = fastest_point(body, curvature)
+    at = 0.0
+    while True:
+        px, py, ph = advance(x, y, heading, curvature, sign * at)
+        excess = pose_excess(scene, body, px, py, ph)
+        if excess <= CONTACT_M:
+            return at if at == 0.0 else min(at, total)
+        if at >= total:
+            return total
+        at = min(at + excess / rate, total)
+
+
+@kernel()
+def motion_free(
+    scene: Scene, body: Body, x: float, y: float, heading: float, curvature: float, length: float
+) -> bool:
+    """Is an arc free from end to end? The pose at its start is taken for checked."""
+    total = abs(length)
+    sign = 1.0 if length >= 0.0 else -1.0
+    rate = fastest_point(body, curvature)
+    at = 0.0
+    # The far end first: an obstacle is as likely there as anywhere, and children of a search
+    # share their start.
+    px, py, ph = advance(x, y, heading, curvature, length)
+    ahead = pose_excess(scene, body, px, py, ph)
+    if ahead <= CONTACT_M:
+        return False
+    total -= ahead / rate
+    px, py, ph = x, y, heading
+    while at < total:
+        excess = pose_excess(scene, body, px, py, ph)
+        if excess <= CONTACT_M:
+            return False
+        at += excess / rate
+        px, py, ph = advance(x, y, heading, curvature, sign * at)
+    return True
+
+
+@kernel()
+def segments_free(
+    scene: Scene, body: Body, x: float, y: float, heading: float, segments: Points, count: int
+) -> bool:
+    """Are the segments (curvature, signed length) of a curve free, driven from a pose?"""
+    for i in range(count):
+        if not motion_free(scene, body, x, y, heading, segments[i, 0], segments[i, 1]):
+            return False
+        x, y, heading = advance(x, y, heading, segments[i, 0], segments[i, 1])
+    return True
+
+
+@kernel(Scene, Body, "rf8[:, ::1]", "f8[::1]")
+def excesses_kernel(scene: Scene, body: Body, poses: Points, out: Points) -> None:
+    """`pose_excess` of many poses (n, 3)."""
+    for i in range(poses.shape[0]):
+        out[i] = pose_excess(scene, body, poses[i, 0], poses[i, 1], poses[i, 2])
