@@ -60,12 +60,15 @@ def numba_type(part: Part) -> Any:
     scalar, bracket, shape = text.removeprefix("r").partition("[")
     if not bracket:
         return _SCALARS[scalar]
-    return types.Array(_SCALARS[scalar], shape.count(":") - shape.count("::"), "C", readonly=read_only)
+    return types.Array(
+        _SCALARS[scalar], shape.count(":") - shape.count("::"), "C", readonly=read_only
+    )
 
 
 def describe(cls: type, *fields: Part) -> None:
     """Declare the numba types of the fields of a NamedTuple class, in their order."""
-    _NAMED[cls] = types.NamedTuple([numba_type(part) for part in fields], cls)
+    # from_types, because numba knows a tuple whose fields are all alike as another type
+    _NAMED[cls] = types.BaseTuple.from_types([numba_type(part) for part in fields], cls)
 
 
 def kernel(*signature: Part) -> Callable[[F], F]:
@@ -152,5 +155,7 @@ def warm(progress: Callable[[int, int, str], None] | None = None) -> None:
 def ensure_warm() -> None:
     """For scripts that did not call `warm()`: do it now and say so once."""
     if not is_warm():
-        log.warning("compiling the planning kernels; call byway_planning.warm() ahead to avoid this")
+        log.warning(
+            "compiling the planning kernels; call byway_planning.warm() ahead to avoid this"
+        )
         warm()
