@@ -90,7 +90,7 @@ ROUNDS: Final = (
     Round(
         *("loader-2", "loader", 1),
         (
-            (Station("timber 1", (65.0, 14.4, NORTH)), Station("saw yard", (61.0, 50.5, EAST))),
+            (Station("timber 1", (63.0, 14.4, NORTH)), Station("saw yard", (61.0, 50.5, EAST))),
             (
                 Station("shed-2 east", (50.6, 19.0, WEST)),
                 Station("kiln-2 east", (35.8, 45.0, WEST)),
