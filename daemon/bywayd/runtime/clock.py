@@ -27,3 +27,8 @@ class SystemClock:
     def host_ns(self, instant: Instant) -> int:
         """Return the reading of CLOCK_MONOTONIC at this instant, in nanoseconds."""
         return instant.ns - self._origin_ns
+
+    @staticmethod
+    def wall_s() -> float:
+        """Return the wall clock, in seconds since 1970: for people, never for a deadline."""
+        return time.time_ns() * 1e-9

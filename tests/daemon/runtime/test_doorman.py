@@ -1,4 +1,4 @@
-"""When too many are inside, the entrances are shut; those inside are served, the rest get in later."""
+"""Too many inside: the entrances are shut, those inside are served, the rest get in later."""
 
 import time
 

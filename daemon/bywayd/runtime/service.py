@@ -1,0 +1,169 @@
+"""
+One life of the daemon, from the settings to the exit status.
+
+The order matters. The template is started before the first ZeroMQ context exists, so that
+nothing of a socket can get into it; the entrances are bound before anybody is told that the
+daemon is there; the crew ends last, and with the front whatever happens.
+"""
+
+import contextlib
+import gc
+import secrets
+import signal
+import socket
+from collections.abc import Iterator
+from importlib import metadata
+from pathlib import Path
+from typing import Any, Final
+
+import structlog
+
+from bywayd.core.effects import LayerFlags
+from bywayd.core.front import Front
+from bywayd.core.front_settings import FrontSettings, KnownVehicle
+from bywayd.core.invariant import Defect
+from bywayd.crew.kinship import adopt_orphans, call_oneself
+from bywayd.crew.memory import SiteMemory
+from bywayd.crew.skills import default_skills
+from bywayd.runtime.clock import SystemClock
+from bywayd.runtime.logs import start_logging
+from bywayd.runtime.loop import Loop
+from bywayd.runtime.outside import Outside
+from bywayd.runtime.sockets import DoorFault, IpcFolder, SocketName, ipc_folders
+from bywayd.runtime.staff import Staff, StaffSettings, TemplateFailed, signals_of_the_front
+from bywayd.runtime.watch import Watch
+from bywayd.settings import Settings
+
+#: How far the site's memory may grow. Nothing of it exists before it is needed, and a full site
+#: of 400 x 400 m takes some hundred megabytes.
+site_memory_bytes_max: Final = 8 * 1024**3
+
+# Exit statuses, as in sysexits.h where it has one.
+ended_well: Final = 0
+cannot_work: Final = 1
+cannot_listen: Final = 69
+broke_a_rule: Final = 70
+
+log = structlog.get_logger()
+
+
+def serve(settings: Settings, *, skills: str = default_skills) -> int:
+    """
+    Serve until SIGTERM or SIGINT, and return the exit status.
+
+    Args:
+        skills: Module with what surveyor and workers can do; tests name one of their own.
+    """
+    style = None if settings.log.form == "auto" else settings.log.form
+    logs = start_logging(style=style, level=settings.log.level)
+    try:
+        return _serve(settings, skills, logs)
+    except DoorFault as fault:
+        log.error("daemon.cannot_listen", why=str(fault))
+        return cannot_listen
+    except TemplateFailed as fault:
+        log.error("daemon.cannot_work", why=str(fault))
+        return cannot_work
+    except Defect as defect:
+        # Whatever state this was, nobody has thought about it. The supervisor starts us again,
+        # with a new epoch, and the sources send their layers.
+        log.critical("daemon.defect", rule=defect.rule, story=list(defect.story))
+        return broke_a_rule
+    finally:
+        logs.close()
+
+
+def _serve(settings: Settings, skills: str, logs: Any) -> int:
+    call_oneself("byway-front")
+    adopt_orphans()
+    clock, watch = SystemClock(), Watch()
+    epoch = secrets.token_hex(8)
+    endpoints: dict[SocketName, tuple[str, ...]] = {
+        "requests": settings.sockets.requests,
+        "updates": settings.sockets.updates,
+        "events": settings.sockets.events,
+    }
+    with contextlib.ExitStack() as closing:
+        for folder in sorted(ipc_folders([e for each in endpoints.values() for e in each])):
+            closing.callback(_hold(folder).release)
+        signals = closing.enter_context(_signals())
+        memory = SiteMemory.create(site_memory_bytes_max)
+        closing.callback(memory.close)
+        loop = Loop(clock, watch, _site_settings(settings), logs)
+        staff_settings = StaffSettings(skills, settings.workers.nice)
+        staff = Staff(staff_settings, memory, watch, loop.reports())
+        closing.callback(staff.end)
+        staff.start()
+        outside = Outside(endpoints, epoch)
+        closing.callback(outside.close)
+        core = Front(_front_settings(settings, outside), epoch, secrets.randbits(63))
+        log.info("daemon.listening", epoch=epoch, **outside.endpoints)
+        # What exists now stays; the collector need not go through it in the middle of a turn.
+        gc.collect()
+        gc.freeze()
+        why = loop.run(core, outside, staff, signals)
+        log.info("daemon.ended", why=why)
+    return ended_well
+
+
+def _hold(folder: Path) -> IpcFolder:
+    return IpcFolder(folder)
+
+
+@contextlib.contextmanager
+def _signals() -> Iterator[int]:
+    """Return a descriptor from which the numbers of arrived signals can be read."""
+    ours, systems = socket.socketpair()
+    ours.setblocking(False)
+    systems.setblocking(False)
+    before = signal.set_wakeup_fd(systems.fileno(), warn_on_full_buffer=False)
+    handlers = {number: signal.signal(number, _do_nothing) for number in signals_of_the_front}
+    try:
+        yield ours.fileno()
+    finally:
+        for number, handler in handlers.items():
+            signal.signal(number, handler)
+        signal.set_wakeup_fd(before)
+        ours.close()
+        systems.close()
+
+
+def _do_nothing(_number: int, _frame: object) -> None:
+    # A handler must exist for the system to tell us; the loop reads the number.
+    return
+
+
+def _site_settings(settings: Settings) -> dict[str, Any]:
+    return {
+        "site": settings.site.model_dump(mode="json"),
+        "layers": {
+            name: {"unknown_blocks": layer.unknown_blocks, "outlines_only": layer.outlines_only}
+            for name, layer in settings.layers.items()
+        },
+    }
+
+
+def _front_settings(settings: Settings, outside: Outside) -> FrontSettings:
+    return FrontSettings(
+        vehicles={
+            name: KnownVehicle(
+                section.model, {"model": section.model, **_plain(section.arguments())}
+            )
+            for name, section in settings.vehicles.items()
+        },
+        layers={
+            name: LayerFlags(layer.unknown_blocks, layer.outlines_only)
+            for name, layer in settings.layers.items()
+        },
+        updates_endpoints=tuple(outside.endpoints["updates"]),
+        events_endpoints=tuple(outside.endpoints["events"]),
+        software=f"bywayd {metadata.version('byway')}",
+        workers=settings.workers.count,
+    )
+
+
+def _plain(arguments: dict[str, Any]) -> dict[str, Any]:
+    return {
+        name: [list(point) for point in value] if isinstance(value, tuple) else value
+        for name, value in arguments.items()
+    }

@@ -1,0 +1,156 @@
+"""
+Between the core's events and effects and what travels on the channels of the crew.
+
+Plain maps on the one side, the core's records on the other; nothing is decided here. What the
+core calls opaque passes through as it is.
+"""
+
+from collections.abc import Callable, Mapping
+from typing import Any, Final, TypeAlias, get_args
+
+from byway import frames, messages
+from byway.errors import BywayError
+from bywayd.core import effects, events
+from bywayd.core.instants import Instant
+from bywayd.runtime.staff import Role
+
+Message: TypeAlias = dict[str, Any]
+
+
+class Nonsense(Exception):
+    """A message that no healthy process of the crew would send."""
+
+
+# -- what the crew says --------------------------------------------------------------------------
+
+
+def event_of(role: Role, number: int, message: Message) -> events.Event:
+    """
+    Return the core's event for a message of the crew.
+
+    Raises:
+        Nonsense: If it is not one; a wild write in a kernel can do that.
+    """
+    make = (_WORKER_SAYS if role == "worker" else _SURVEYOR_SAYS).get(str(message.get("say")))
+    if make is None:
+        raise Nonsense(f"said {str(message.get('say'))[:40]!r}")
+    try:
+        return make(number, message)
+    except (KeyError, TypeError, ValueError, BywayError) as fault:
+        said = f"said {message['say']!r} in a way that makes no sense"
+        raise Nonsense(f"{said}: {fault!r}") from fault
+
+
+def _outcome(found: Mapping[str, Any]) -> events.Outcome:
+    if found["kind"] not in get_args(events.OutcomeKind):
+        raise ValueError(f"no outcome is called {found['kind']!r}")
+    return events.Outcome(
+        kind=found["kind"],
+        cost=float(found["cost"]),
+        body=_bytes(found["body"]),
+        packed=_bytes(found["packed"]),
+        path=found["path"],
+    )
+
+
+def _bytes(value: object) -> bytes:
+    if not isinstance(value, bytes):
+        raise TypeError(f"bytes were due, not {type(value).__name__}")
+    return value
+
+
+def _snapshot_ready(number: int, message: Message) -> events.Event:
+    return events.SnapshotReady(
+        number,
+        int(message["batch"]),
+        int(message["revision"]),
+        message["handle"],
+        tuple(
+            events.Refusal(int(r["index"]), str(r["code"]), str(r["text"]), dict(r["facts"]))
+            for r in message["refusals"]
+        ),
+        int(message["memory_bytes"]),
+        {str(layer): int(count) for layer, count in message["obstacles"].items()},
+    )
+
+
+def _site_described(number: int, message: Message) -> events.Event:
+    described = frames.build(messages.SiteIs, message["fields"])
+    return events.SiteDescribed(
+        number, int(message["ticket"]), described, _bytes(message["packed"])
+    )
+
+
+_Maker: TypeAlias = Callable[[int, Message], events.Event]
+
+_WORKER_SAYS: Final[Mapping[str, _Maker]] = {
+    "ready": lambda number, _: events.WorkerReady(number),
+    "alive": lambda number, _: events.WorkerAlive(number),
+    "better": lambda number, m: events.WorkerBetter(number, int(m["job"]), _outcome(m["outcome"])),
+    "done": lambda number, m: events.WorkerDone(number, int(m["job"]), _outcome(m["outcome"])),
+    "failed": lambda number, m: events.WorkerFailed(
+        number, int(m["job"]), str(m["code"]), str(m["text"]), dict(m["facts"])
+    ),
+    "checked": lambda number, m: events.WorkerChecked(
+        number, int(m["job"]), bool(m["good"]), str(m["text"])
+    ),
+}
+
+_SURVEYOR_SAYS: Final[Mapping[str, _Maker]] = {
+    "ready": lambda number, m: events.SurveyorReady(
+        number, int(m["revision"]), m["handle"], int(m["memory_bytes"])
+    ),
+    "alive": lambda number, _: events.SurveyorAlive(number),
+    "snapshot": _snapshot_ready,
+    "site": _site_described,
+}
+
+
+# -- what the crew is told -----------------------------------------------------------------------
+
+
+def job_message(job: effects.Job, host_ns: Callable[[Instant], int]) -> Message:
+    """Return a job for a worker; the deadline becomes one of the host's own clock."""
+    return {
+        "job": job.job,
+        "vehicle": job.vehicle,
+        "start": job.start,
+        "goal": job.goal,
+        "deadline_ns": host_ns(job.deadline),
+        "seed": job.seed,
+        "method": job.method,
+        "left_out": job.left_out,
+        "clearance_m": job.clearance_m,
+        "start_speed_mps": job.start_speed_mps,
+        "start_curvature_per_m": job.start_curvature_per_m,
+        "gap_wanted": job.gap_wanted,
+        "revision": job.revision,
+        "handle": job.handle,
+    }
+
+
+def outcome_message(outcome: events.Outcome) -> Message:
+    """Return an outcome as a worker sent it."""
+    return {
+        "kind": outcome.kind,
+        "cost": outcome.cost,
+        "body": outcome.body,
+        "packed": bytes(outcome.packed),
+        "path": outcome.path,
+    }
+
+
+def change_message(change: effects.Change) -> Message:
+    """Return a change for the surveyor; its geometry is not looked at."""
+    told = change.message
+    return {
+        "what": change.what,
+        "layer": change.layer,
+        "settings": {
+            "unknown_blocks": change.settings.unknown_blocks,
+            "outlines_only": change.settings.outlines_only,
+        },
+        "message": None if told is None else told.model_dump(),
+        "packed": bytes(change.packed),
+        "ids": change.ids,
+    }
