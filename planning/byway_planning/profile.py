@@ -17,6 +17,7 @@ from typing import Any, Final
 import numpy as np
 import numpy.typing as npt
 
+from byway_planning.curves.word import wrap
 from byway_planning.kernel import kernel
 from byway_planning.vehicles.body import DISC, Limits
 
@@ -35,13 +36,6 @@ class StartTooFast(ValueError):
 
 
 @kernel()
-def wrapped(angle_rad: float) -> float:
-    """The same angle in [-pi, pi)."""
-    turn = angle_rad - 2.0 * math.pi * math.floor((angle_rad + math.pi) / (2.0 * math.pi))
-    return turn if turn < math.pi else turn - 2.0 * math.pi
-
-
-@kernel()
 def speed_cap_mps(curvature_per_m: float, length_m: float, limits: Limits) -> float:
     """Highest speed on a path element of this curvature and signed length."""
     cap = limits.speed_mps_max if length_m >= 0.0 else limits.reverse_speed_mps_max
@@ -56,7 +50,7 @@ def stops_between(path: Floats, i: int, kind: int) -> Any:
     if kind != DISC:
         return (path[i - 1, 4] < 0.0) != (path[i, 4] < 0.0)
     before_rad = path[i - 1, 2] + path[i - 1, 3] * path[i - 1, 4]
-    return abs(wrapped(path[i, 2] - before_rad)) > CORNER_RAD
+    return abs(wrap(path[i, 2] - before_rad)) > CORNER_RAD
 
 
 @kernel("rf8[:, ::1]", "i8", Limits, "f8", "f8[::1]")

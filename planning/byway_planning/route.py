@@ -15,15 +15,15 @@ from typing import Any, Final, Protocol
 import numpy as np
 import numpy.typing as npt
 
+from byway_planning.curves.word import advance, wrap
 from byway_planning.kernel import kernel
 from byway_planning.profile import (
     check_profile,
     node_speeds,
     peak_between,
     speed_cap_mps,
-    wrapped,
 )
-from byway_planning.vehicles.body import DISC, Body, Limits
+from byway_planning.vehicles.body import CAR, Body, Limits
 
 Floats = npt.NDArray[np.float64]
 
@@ -112,18 +112,11 @@ def _put_row(
     rows: Floats, i: int, path: Floats, j: int, s_m: float, t_s: float, v_mps: float
 ) -> None:
     """Row i: the pose of path element j after the unsigned arc length s_m."""
-    heading, curvature = path[j, 2], path[j, 3]
     gear = 1.0 if path[j, 4] >= 0.0 else -1.0
-    half_turn = 0.5 * curvature * s_m * gear
-    # chord of an arc: exact for a straight line, and nothing is lost near one
-    chord = s_m * gear
-    if half_turn != 0.0:
-        chord *= math.sin(half_turn) / half_turn
+    x, y, heading = advance(path[j, 0], path[j, 1], path[j, 2], path[j, 3], s_m * gear)
     rows[i, 0] = t_s
-    rows[i, 1] = path[j, 0] + chord * math.cos(heading + half_turn)
-    rows[i, 2] = path[j, 1] + chord * math.sin(heading + half_turn)
-    rows[i, 3] = wrapped(heading + 2.0 * half_turn)
-    rows[i, 4] = curvature
+    rows[i, 1], rows[i, 2], rows[i, 3] = x, y, wrap(heading)
+    rows[i, 4] = path[j, 3]
     rows[i, 5] = v_mps * gear + 0.0  # + 0.0: a standing row never shows -0
     rows[i, 6] = 0.0
 
@@ -222,8 +215,8 @@ def make_route(path: Floats, vehicle: Drivable, start_speed_mps: float = 0.0) ->
     kind, limits = vehicle.body().kind, vehicle.limits
     lengths_m = np.abs(path[:, 4])
     driven = path if lengths_m.min() > ELEMENT_M_MIN else path[lengths_m > ELEMENT_M_MIN]
-    if kind == DISC and path[:, 4].min() < 0.0:
-        raise ValueError("a disc drives forward only, got an element of negative length_m")
+    if kind != CAR and path[:, 4].min() < 0.0:
+        raise ValueError("this vehicle drives forward only, got an element of negative length_m")
     if start_speed_mps != 0.0 and (len(driven) == 0 or start_speed_mps * driven[0, 4] < 0.0):
         raise ValueError(
             f"start_speed_mps {start_speed_mps} does not fit the path's first element "

@@ -12,7 +12,7 @@ import numpy.typing as npt
 from byway_planning.site.solids import Solids
 from byway_planning.vehicles.body import DISC, Body, Limits
 from byway_planning.verify.body import Hull, Notes
-from byway_planning.verify.drive import FREE, START_NEAR, creep_out, drive, pose_clearance
+from byway_planning.verify.drive import FREE, drive
 from byway_planning.verify.rows import JUMP, RULES, SPACING, TIME, check_rows
 
 Floats = npt.NDArray[np.float64]
@@ -207,20 +207,12 @@ def _check_motion(
     start_overlap_m: float,
 ) -> None:
     need_m = max(clearance_m, NEED_M_MIN)
-    hull = _hull_of(body, TOLERANCE_M)
-    notes = _notes_for(solids, hull, max(need_m + start_overlap_m, CLEARANCE_TOLD_M))
-    found = np.zeros(8)
-    found[0] = max(CLEARANCE_TOLD_M, need_m)
-    code = drive(solids, notes, hull, rows, arcs, need_m, 0.0, found)
-    if code == START_NEAR:
-        depth_m = _depth_allowed(body, start_overlap_m)
-        inner = _hull_of(body, depth_m + TOLERANCE_M)
-        code = creep_out(solids, notes, hull, inner, rows, arcs, need_m, depth_m, found)
-        if code == FREE:
-            least_m = found[0]
-            found[0] = max(CLEARANCE_TOLD_M, need_m)
-            code = drive(solids, notes, hull, rows, arcs, need_m, found[1], found)
-            found[0] = min(found[0], least_m)
+    depth_m = _depth_allowed(body, start_overlap_m)
+    hull, drawn_in = _hull_of(body, TOLERANCE_M), _hull_of(body, depth_m + TOLERANCE_M)
+    told_m = max(CLEARANCE_TOLD_M, need_m)
+    notes = _notes_for(solids, hull, told_m + depth_m)
+    found = np.array([told_m, *[0.0] * 7])
+    code = drive(solids, notes, hull, drawn_in, depth_m, rows, arcs, need_m, found)
     faults.clearance_m = min(float(found[0]) - TOLERANCE_M, CLEARANCE_TOLD_M)
     if code != FREE:
         faults.append(_collision(found, need_m))
@@ -288,10 +280,11 @@ def clearance_m(solids: Solids, vehicle: Checkable, pose: Pose) -> Nearest:
 def _nearest(
     solids: Solids, hull: Hull, x: float, y: float, heading: float, care_m: float
 ) -> Nearest:
-    found = np.zeros(8)
     notes = _notes_for(solids, hull, care_m)
-    pose_clearance(solids, notes, hull, x, y, heading, care_m, found)
-    return Nearest(float(found[0]), KINDS[int(found[6])], int(found[7]))
+    found = np.array([care_m, *[0.0] * 7])
+    rows = np.array([[0.0, x, y, heading, 0.0, 0.0, 0.0]])
+    drive(solids, notes, hull, hull, 0.0, rows, np.zeros(1), -np.inf, found)
+    return Nearest(float(found[5]), KINDS[int(found[6])], int(found[7]))
 
 
 def _depth_allowed(body: Body, start_overlap_m: float) -> float:

@@ -5,6 +5,7 @@ Rows that lie on one arc are joined into stretches of at most STRETCH_M and STRE
 near is chosen by boxes: once for every PART_M of the way, then for each stretch.
 """
 
+import math
 from typing import Any, Final
 
 import numpy as np
@@ -29,7 +30,6 @@ BULGE_M: Final = 0.3  # arcs between rows leave the box of the rows by less
 
 FREE: Final = 0
 BLOCKED: Final = 1
-START_NEAR: Final = 2
 
 
 @kernel()
@@ -101,30 +101,71 @@ def _report(found: Floats, s_m: float, pose: Any, distance: float, kind: int, in
     found[5], found[6], found[7] = distance, kind, index
 
 
-@kernel(Solids, Notes, Hull, "f8", "f8", "f8", "f8", "f8[::1]")
-def pose_clearance(
-    solids: Solids,
-    notes: Notes,
-    hull: Hull,
-    x: float,
-    y: float,
-    heading: float,
-    care: float,
-    found: Floats,
-) -> None:
-    """Report (see `_report`) what is nearest to the body at a pose, if nearer than `care`."""
-    margin = hull.reach_m + hull.skin_m + care
-    near = note_near(solids, notes, (x - margin, y - margin, x + margin, y + margin))
-    pose = (x, y, heading)
+@kernel()
+def _near_rows(solids: Solids, notes: Notes, rows: Floats, arcs: Floats, i: int, m: float) -> Any:
+    """Note what is nearer than m to the rows from i on for PART_M. Returns them, and their end."""
+    end, box = _part_box(rows, arcs, i, m)
+    return note_near(solids, notes, box), end
+
+
+@kernel()
+def _creep_out(
+    solids: Solids, notes: Notes, hulls: Any, rows: Floats, arcs: Floats, need: Any, found: Floats
+) -> Any:
+    """
+    Drive from a start that is too near until the clearance is kept; see `drive`.
+
+    `hulls` are the body and the body drawn in by a depth, `need` the clearance and the depth.
+    The distance of the second less the depth is a clearance that is negative in an overlap;
+    it may never fall below the highest one reached so far. Returns (FREE, arc length at which
+    the clearance is kept) or (BLOCKED, anything), then reported.
+    """
+    body, drawn_in = hulls
+    need_m, depth = need
+    care = need_m + depth + CREEP_M
+    margin = body.reach_m + body.skin_m + care + BULGE_M
+    near, part_end = _near_rows(solids, notes, rows, arcs, 0, margin)
+    pose = (rows[0, 1], rows[0, 2], rows[0, 3])
     distance, kind, index = stretch_clearance(
-        solids, notes, near, hull, pose, (0.0, 0.0), care, True
+        solids, notes, near, drawn_in, pose, (0.0, 0.0), care, True
     )
-    _report(found, 0.0, pose, distance, kind, index)
-    found[0] = distance
+    top = distance - depth
+    _report(found, 0.0, pose, top, kind, index)
+    found[0] = min(found[0], top)
+    if distance <= 0.0:
+        return BLOCKED, 0.0
+    s_m = 0.0
+    for i in range(rows.shape[0] - 1):
+        if i >= part_end:
+            near, part_end = _near_rows(solids, notes, rows, arcs, i, margin)
+        curvature = rows[i, 4]
+        steps = max(math.ceil(abs(arcs[i]) / CREEP_M), 1)
+        step = arcs[i] / steps
+        for k in range(steps):
+            middle = driven(rows[i, 1], rows[i, 2], rows[i, 3], curvature, (k + 0.5) * step)
+            end = driven(rows[i, 1], rows[i, 2], rows[i, 3], curvature, (k + 1) * step)
+            s_m += abs(step)
+            distance, kind, index = stretch_clearance(
+                solids, notes, near, drawn_in, middle, (curvature, 0.5 * abs(step)), care, False
+            )
+            _report(found, s_m, end, distance - depth, kind, index)
+            if distance - depth < top - FALL_M:
+                return BLOCKED, 0.0
+            _, kind, index = stretch_clearance(
+                solids, notes, near, body, end, (0.0, 0.0), need_m, True
+            )
+            if kind == NOTHING:
+                return FREE, s_m
+            reached, _, _ = stretch_clearance(
+                solids, notes, near, drawn_in, end, (0.0, 0.0), care, False
+            )
+            top = max(top, reached - depth)
+    found[6], found[7] = kind, index
+    return BLOCKED, 0.0
 
 
-@kernel(Solids, Notes, Hull, "f8[:, ::1]", "f8[::1]", "f8", "f8", "f8[::1]")
-def drive(
+@kernel()
+def _keep_clear(
     solids: Solids,
     notes: Notes,
     hull: Hull,
@@ -134,121 +175,80 @@ def drive(
     from_m: float,
     found: Floats,
 ) -> int:
-    """
-    Drive a table from the arc length `from_m` on, and keep `need` from everything.
-
-    `found[0]` says up to where clearances matter and becomes the least one met. Returns FREE,
-    START_NEAR (nearer than `need` already where it begins) or BLOCKED; then the rest of
-    `found` tells where and by what.
-    """
+    """Drive from the arc length `from_m` on and keep `need` from everything; see `drive`."""
     n = rows.shape[0]
     s_m, i, part_end = 0.0, 0, 0
     near = (0, 0)
-    begun = False
-    while i < n - 1 or not begun:
+    while i < n - 1:
         if i >= part_end:
             margin = hull.reach_m + hull.skin_m + max(found[0], need) + BULGE_M
-            part_end, box = _part_box(rows, arcs, i, margin)
-            near = note_near(solids, notes, box)
+            near, part_end = _near_rows(solids, notes, rows, arcs, i, margin)
+        j, length = _stretch_at(rows, arcs, i, part_end)
         curvature = rows[i, 4]
-        j, length = i + 1, 0.0
-        if i < n - 1:
-            j, length = _stretch_at(rows, arcs, i, part_end)
-        if i < n - 1 and s_m + abs(length) < from_m:
-            s_m += abs(length)
-            i = j
-            continue
-        skipped = min(max(from_m - s_m, 0.0), abs(length))
-        if length < 0.0:
-            skipped = -skipped
-        first = driven(rows[i, 1], rows[i, 2], rows[i, 3], curvature, skipped)
-        if not begun:
-            begun = True
-            distance, kind, index = stretch_clearance(
-                solids, notes, near, hull, first, (0.0, 0.0), max(found[0], need), True
-            )
-            found[0] = min(found[0], distance)
-            if distance < need:
-                _report(found, s_m + abs(skipped), first, distance, kind, index)
-                return START_NEAR
-        half = 0.5 * (length - skipped)
-        middle = driven(first[0], first[1], first[2], curvature, half)
-        arc = (curvature, abs(half))
-        distance, kind, index = stretch_clearance(
-            solids, notes, near, hull, middle, arc, max(found[0], need), False
-        )
-        found[0] = min(found[0], distance)
-        if distance < need:
-            arc = (curvature, length - skipped)
-            there = _begin_below(solids, notes, near, hull, first, arc, need)
-            pose = driven(first[0], first[1], first[2], curvature, there)
-            _report(found, s_m + abs(skipped + there), pose, distance, kind, index)
-            return BLOCKED
+        if s_m + abs(length) > from_m:
+            skipped = math.copysign(max(from_m - s_m, 0.0), length)
+            pieces = max(math.ceil(abs(curvature * (length - skipped)) / STRETCH_RAD), 1)
+            piece = (length - skipped) / pieces
+            for k in range(pieces):
+                at = skipped + k * piece
+                middle = driven(rows[i, 1], rows[i, 2], rows[i, 3], curvature, at + 0.5 * piece)
+                distance, kind, index = stretch_clearance(
+                    solids,
+                    notes,
+                    near,
+                    hull,
+                    middle,
+                    (curvature, 0.5 * abs(piece)),
+                    max(found[0], need),
+                    False,
+                )
+                found[0] = min(found[0], distance)
+                if distance < need:
+                    first = driven(rows[i, 1], rows[i, 2], rows[i, 3], curvature, at)
+                    arc = (curvature, piece)
+                    there = _begin_below(solids, notes, near, hull, first, arc, need)
+                    pose = driven(first[0], first[1], first[2], curvature, there)
+                    _report(found, s_m + abs(at + there), pose, distance, kind, index)
+                    return BLOCKED
         s_m += abs(length)
         i = j
     return FREE
 
 
-@kernel(Solids, Notes, Hull, Hull, "f8[:, ::1]", "f8[::1]", "f8", "f8", "f8[::1]")
-def creep_out(
+@kernel(Solids, Notes, Hull, Hull, "f8", "f8[:, ::1]", "f8[::1]", "f8", "f8[::1]")
+def drive(
     solids: Solids,
     notes: Notes,
-    hull: Hull,
+    body: Hull,
     drawn_in: Hull,
+    depth: float,
     rows: Floats,
     arcs: Floats,
     need: float,
-    depth: float,
     found: Floats,
 ) -> int:
     """
-    Drive a table from a start nearer than `need`, until `need` is reached.
+    Drive a table and keep `need` from everything.
 
-    `drawn_in` is the body drawn in by `depth`; its distance less `depth` is the clearance,
-    negative in an overlap, and may never fall below the highest one reached so far. Returns
-    FREE, with `found[0]` the least clearance and `found[1]` the arc length at which `need` is
-    kept, or BLOCKED, reported as by `drive`.
+    A start that is nearer is left as `_creep_out` says, if the body drawn in by `depth` is
+    free there. `found[0]` says up to where clearances matter and becomes the least one met.
+    Returns FREE or BLOCKED; then, or where there is one row only, the rest of `found` tells
+    where and by what (see `_report`).
     """
-    care = need + depth + CREEP_M
-    x, y, heading = rows[0, 1], rows[0, 2], rows[0, 3]
-    margin = hull.reach_m + hull.skin_m + care + PART_M
-    near = note_near(solids, notes, (x - margin, y - margin, x + margin, y + margin))
-    pose = (x, y, heading)
+    care = max(found[0], need)
+    near, _ = _near_rows(solids, notes, rows, arcs, 0, body.reach_m + body.skin_m + care)
+    pose = (rows[0, 1], rows[0, 2], rows[0, 3])
     distance, kind, index = stretch_clearance(
-        solids, notes, near, drawn_in, pose, (0.0, 0.0), care, True
+        solids, notes, near, body, pose, (0.0, 0.0), care, True
     )
-    top = distance - depth
-    found[0] = top
-    if distance <= 0.0:
-        _report(found, 0.0, pose, top, kind, index)
-        return BLOCKED
-    s_m = 0.0
-    for i in range(rows.shape[0] - 1):
-        if abs(rows[i, 1] - x) + abs(rows[i, 2] - y) > PART_M - BULGE_M:
-            x, y = rows[i, 1], rows[i, 2]
-            near = note_near(solids, notes, (x - margin, y - margin, x + margin, y + margin))
-        curvature = rows[i, 4]
-        steps = max(int(np.ceil(abs(arcs[i]) / CREEP_M)), 1)
-        step = arcs[i] / steps
-        for k in range(steps):
-            middle = driven(rows[i, 1], rows[i, 2], rows[i, 3], curvature, (k + 0.5) * step)
-            end = driven(rows[i, 1], rows[i, 2], rows[i, 3], curvature, (k + 1) * step)
-            s_m += abs(step)
-            distance, kind, index = stretch_clearance(
-                solids, notes, near, drawn_in, middle, (curvature, 0.5 * abs(step)), care, False
-            )
-            if distance - depth < top - FALL_M:
-                _report(found, s_m, end, distance - depth, kind, index)
-                return BLOCKED
-            distance, kind, index = stretch_clearance(
-                solids, notes, near, hull, end, (0.0, 0.0), need, True
-            )
-            if kind == NOTHING:
-                found[1] = s_m
-                return FREE
-            reached, _, _ = stretch_clearance(
-                solids, notes, near, drawn_in, end, (0.0, 0.0), care, False
-            )
-            top = max(top, reached - depth)
-    _report(found, s_m, (rows[-1, 1], rows[-1, 2], rows[-1, 3]), top, kind, index)
-    return BLOCKED
+    found[0] = distance
+    _report(found, 0.0, pose, distance, kind, index)
+    from_m = 0.0
+    if distance < need:
+        if rows.shape[0] == 1:
+            return BLOCKED
+        found[0] = care
+        code, from_m = _creep_out(solids, notes, (body, drawn_in), rows, arcs, (need, depth), found)
+        if code == BLOCKED:
+            return BLOCKED
+    return _keep_clear(solids, notes, body, rows, arcs, need, from_m, found)
