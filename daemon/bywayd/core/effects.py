@@ -58,9 +58,8 @@ class Job:
     """Everything that a worker needs for one replan. Numbers are never used twice."""
 
     job: int
-    #: The name of the vehicle, and its definition (`KnownVehicle`). Opaque.
-    vehicle: str
-    definition: object
+    #: The vehicle's `KnownVehicle.settings`. Opaque.
+    vehicle: object
     start: tuple[float, float, float]
     goal: tuple[float, float, float]
     #: When the worker must have sent its `WorkerDone`. Time for the front is already set aside.

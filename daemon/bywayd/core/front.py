@@ -1,15 +1,37 @@
 """
 The front: every decision of the daemon behind one method.
 
-`Front(settings, epoch, seed).handle(event, now) -> effects`.
+`Front(settings, epoch, seed).handle(event, now) -> effects`. It routes events to the part that
+owns what they are about, lets each part do what time has made due, and says when it has to be
+called again. The parts:
+
+    intake --> dispatch --> answering --> outbox
+       \\          \\--> room, roster (workers), snapshots
+        \\--> surveying --> ledger --> sources, layers, expiries
 """
 
 from __future__ import annotations
 
-from bywayd.core.effects import Effect
-from bywayd.core.events import Event
+from collections.abc import Callable
+from typing import Any, Final
+
+from byway import frames, messages
+from bywayd.core import events, reports
+from bywayd.core.alarms import Alarms
+from bywayd.core.answering import Answering
+from bywayd.core.dispatch import Dispatch
+from bywayd.core.effects import Effect, PingWorker, SpawnWorker, Stop, Wake
+from bywayd.core.events import Event, Peer
 from bywayd.core.front_settings import FrontSettings
-from bywayd.core.instants import Instant
+from bywayd.core.health import Health
+from bywayd.core.instants import Duration, Instant
+from bywayd.core.intake import Intake
+from bywayd.core.invariant import invariant
+from bywayd.core.ledger import Ledger
+from bywayd.core.outbox import Outbox
+from bywayd.core.roster import Manners, Order, Roster
+from bywayd.core.snapshots import Snapshots
+from bywayd.core.surveying import Surveying
 
 __all__ = ["Front", "FrontSettings"]
 
@@ -26,10 +48,318 @@ class Front:
     """
 
     def __init__(self, settings: FrontSettings, epoch: str, seed: int) -> None:
-        self.settings = settings
-        self.epoch = epoch
-        self._seed = seed
+        # -- fixed -----------------------------------------------------------------------------
+        self.settings: Final = settings
+        self.epoch: Final = epoch
+        self._drain_max = Duration.of_s(settings.drain_max_s)
+        self._health_every = Duration.of_s(settings.health_every_s)
+        # -- parts -----------------------------------------------------------------------------
+        self.outbox = Outbox(epoch, settings.units_max)
+        self.health = Health()
+        self.snapshots = Snapshots()
+        self.workers = Roster("worker", settings.workers, _manners(settings, surveyor=False))
+        self.surveyors = Roster("surveyor", 1, _manners(settings, surveyor=True))
+        self.ledger = Ledger(settings, self.outbox, self.health)
+        self.surveying = Surveying(
+            settings, self.outbox, self.health, self.snapshots, self.surveyors, self.ledger
+        )
+        self.answering = Answering(settings, self.outbox, self.health, self.snapshots)
+        self.dispatch = Dispatch(
+            settings, self.outbox, self.health, self.snapshots, self.workers, self.answering
+        )
+        self.intake = Intake(
+            settings,
+            seed,
+            self.outbox,
+            self.health,
+            self.snapshots,
+            self.workers,
+            self.answering,
+            self.dispatch,
+            self.ledger,
+            self.surveying,
+        )
+        # -- what the runtime measured last ---------------------------------------------------
+        self.vitals: events.Vitals | None = None
+        #: The wall clock and the front's own, read at the same moment; and when it all began.
+        self.wall: tuple[float, Instant] | None = None
+        self.began: Instant | None = None
+        # -- state -----------------------------------------------------------------------------
+        #: "health" and "drain".
+        self._alarms: Alarms[str] = Alarms()
+        self._now: Instant | None = None
+        #: The last `Wake` that was given and has not come.
+        self._wake: Instant | None = None
+        #: Why the daemon is ending, once it is.
+        self._stop_why = ""
+        self._stopped = False
+        self._on: Final[dict[type, Callable[[Any, Instant], None]]] = {
+            events.Received: self._received,
+            events.Unreadable: self._unreadable,
+            events.Undeliverable: self._undeliverable,
+            events.WorkerReady: self._worker_ready,
+            events.WorkerAlive: self._worker_alive,
+            events.WorkerBetter: self._worker_better,
+            events.WorkerDone: self._worker_done,
+            events.WorkerFailed: self._worker_failed,
+            events.WorkerChecked: self._worker_checked,
+            events.WorkerLost: self._worker_lost,
+            events.SurveyorReady: self._surveyor_ready,
+            events.SurveyorAlive: self._surveyor_alive,
+            events.SnapshotReady: self._snapshot_ready,
+            events.SiteDescribed: self._site_described,
+            events.SurveyorLost: self._surveyor_lost,
+            events.Started: self._started,
+            events.Tick: self._tick,
+            events.Vitals: self._vitals,
+            events.StopAsked: self._stop_asked,
+        }
 
     def handle(self, event: Event, now: Instant) -> list[Effect]:
-        """Take in one event and return what is to be done about it, in order."""
-        raise NotImplementedError
+        """
+        Take in one event and return what is to be done about it, in order.
+
+        Raises:
+            Defect: If a rule of our own is broken. Nothing may be done after that but to end.
+        """
+        invariant(self._now is None or now >= self._now, "time does not go back")
+        self._now = now
+        if self._stopped:
+            return []
+        if self._wake is not None and now >= self._wake:
+            self._wake = None
+        self._on[type(event)](event, now)
+        self._settle(now)
+        return self.outbox.take()
+
+    # -- from clients and sources -------------------------------------------------------------
+
+    def _received(self, event: events.Received, now: Instant) -> None:
+        if event.peer.channel == "updates":
+            self._change(event.peer, event.came, now)
+        else:
+            self._request(event.peer, event.came, now)
+
+    def _change(self, peer: Peer, came: frames.Received, now: Instant) -> None:
+        if self._stop_why:
+            # Not taken in, so not acknowledged: the source sends it again, to our successor.
+            self.outbox.error(peer, came.header.id, "stopping", "the daemon is on its way out")
+        else:
+            self.ledger.take(peer, came, now)
+
+    def _request(self, peer: Peer, came: frames.Received, now: Instant) -> None:
+        id, message = came.header.id, came.message
+        match message:
+            case messages.Replan():
+                self.intake.replan(peer, came, message, now)
+            case messages.Cancel() | messages.Finish():
+                self.intake.end(peer, id, message, now)
+            case messages.Site():
+                self.intake.site(peer, id, message)
+            case messages.Vehicles():
+                self.intake.vehicles(peer, id)
+            case messages.Health():
+                self.outbox.reply(peer, id, reports.health(self, now))
+            case messages.Hello():
+                self.outbox.reply(peer, id, reports.welcome(self, message, now))
+            case _:
+                text = f"{message.kind} is no request"
+                self.outbox.error(peer, id, "unknown_kind", text, {"kind": message.kind})
+
+    def _unreadable(self, event: events.Unreadable, now: Instant) -> None:
+        self.health.count("unreadable_total")
+        peer, fault = event.peer, event.fault
+        if (
+            peer.channel == "updates"
+            and not self._stop_why
+            and self.ledger.take_fault(peer, fault, now)
+        ):
+            return
+        id = "" if fault.header is None else fault.header.id
+        self.outbox.reply(peer, id, frames.error_message(fault))
+
+    def _undeliverable(self, event: events.Undeliverable, now: Instant) -> None:
+        self.health.count("undeliverable_total")
+
+    # -- from the workers ---------------------------------------------------------------------
+
+    def _worker_ready(self, event: events.WorkerReady, now: Instant) -> None:
+        if self.workers.ready(event.worker, now):
+            self.outbox.log("info", "worker.ready", worker=event.worker)
+            self.dispatch.look_again()
+        else:
+            self.dispatch.kill(event.worker, "spoke nonsense: ready a second time", now)
+
+    def _worker_alive(self, event: events.WorkerAlive, now: Instant) -> None:
+        self.workers.heard(event.worker, now)
+
+    def _worker_better(self, event: events.WorkerBetter, now: Instant) -> None:
+        self.workers.heard(event.worker, now)
+        self.dispatch.better(event, now)
+
+    def _worker_done(self, event: events.WorkerDone, now: Instant) -> None:
+        self.workers.heard(event.worker, now)
+        self.dispatch.done(event, now)
+
+    def _worker_failed(self, event: events.WorkerFailed, now: Instant) -> None:
+        self.workers.heard(event.worker, now)
+        self.dispatch.failed(event, now)
+
+    def _worker_checked(self, event: events.WorkerChecked, now: Instant) -> None:
+        self.workers.heard(event.worker, now)
+        self.dispatch.checked(event, now)
+
+    def _worker_lost(self, event: events.WorkerLost, now: Instant) -> None:
+        self.dispatch.lost(event.worker, event.why, now)
+
+    # -- from the surveyor --------------------------------------------------------------------
+
+    def _surveyor_ready(self, event: events.SurveyorReady, now: Instant) -> None:
+        self.surveying.ready(event, now)
+
+    def _surveyor_alive(self, event: events.SurveyorAlive, now: Instant) -> None:
+        self.surveyors.heard(event.surveyor, now)
+
+    def _snapshot_ready(self, event: events.SnapshotReady, now: Instant) -> None:
+        self.surveyors.heard(event.surveyor, now)
+        self.surveying.snapshot(event, now)
+
+    def _site_described(self, event: events.SiteDescribed, now: Instant) -> None:
+        self.surveyors.heard(event.surveyor, now)
+        self.surveying.described(event, now)
+
+    def _surveyor_lost(self, event: events.SurveyorLost, now: Instant) -> None:
+        self.surveying.lost(event.surveyor, event.why, now)
+
+    # -- from the runtime ---------------------------------------------------------------------
+
+    def _started(self, event: events.Started, now: Instant) -> None:
+        invariant(self.began is None, "the front is started once")
+        self.began = now
+        self.wall = (event.wall_s, now)
+        self.surveyors.open(now)
+        self.workers.open(now)
+        self._alarms.set("health", now + self._health_every)
+
+    def _tick(self, event: events.Tick, now: Instant) -> None:
+        pass  # what is due is done after every event
+
+    def _vitals(self, event: events.Vitals, now: Instant) -> None:
+        self.vitals = event
+        self.wall = (event.wall_s, now)
+
+    def _stop_asked(self, event: events.StopAsked, now: Instant) -> None:
+        if self._stop_why:
+            return
+        self._stop_why = event.why
+        self.intake.stopping = True
+        self.outbox.log(
+            "info",
+            "front.draining",
+            why=event.why,
+            open=len(self.answering.open),
+            pending=self.ledger.pending,
+        )
+        self.dispatch.drain(now)
+        self.surveying.stop()
+        self._alarms.set("drain", now + self._drain_max)
+
+    # -- what time does -----------------------------------------------------------------------
+
+    def _settle(self, now: Instant) -> None:
+        for order in self.workers.due(now):
+            self._carry_out(order, now)
+        for order in self.surveyors.due(now):
+            self._carry_out_surveyor(order)
+        self.ledger.settle(now)
+        self.dispatch.settle(now)
+        self.surveying.settle(now)
+        while (alarm := self._alarms.pop_due(now)) is not None:
+            if alarm == "health":
+                self._alarms.set("health", now + self._health_every)
+                self.outbox.publish("health", reports.health(self, now))
+            else:
+                self._end(now)
+        if self._stop_why and not self.answering.open and self.ledger.pending == 0:
+            self._end(now)
+        if not self._stopped:
+            self._set_wake()
+
+    def _carry_out(self, order: Order, now: Instant) -> None:
+        if order.what == "spawn":
+            self.outbox.add(SpawnWorker(order.number))
+        elif order.what == "ping":
+            self.outbox.add(PingWorker(order.number))
+        else:
+            self.dispatch.kill(order.number, order.why, now)
+
+    def _carry_out_surveyor(self, order: Order) -> None:
+        if order.what == "spawn":
+            self.surveying.spawn(order.number)
+        elif order.what == "ping":
+            self.surveying.ping(order.number)
+        else:
+            self.surveying.kill(order.number, order.why)
+
+    def _end(self, now: Instant) -> None:
+        if self._stopped:
+            return
+        self.dispatch.stop(now)
+        self._stopped = True
+        self.outbox.log("info", "front.stopped", why=self._stop_why, pending=self.ledger.pending)
+        self.outbox.add(Stop(self._stop_why))
+
+    def _set_wake(self) -> None:
+        found = (
+            self.workers.next_alarm(),
+            self.surveyors.next_alarm(),
+            self.ledger.next_alarm(),
+            self.dispatch.next_alarm(),
+            self._alarms.next(),
+        )
+        at = min((alarm for alarm in found if alarm is not None), default=None)
+        # One that is too early does no harm, and saves telling the runtime at every event.
+        if at is not None and (self._wake is None or at < self._wake):
+            self._wake = at
+            self.outbox.add(Wake(at))
+
+    # -- looking at it ------------------------------------------------------------------------
+
+    @property
+    def state(self) -> str:
+        """What `welcome` and the health record say: warming, ready, or stopping."""
+        if self._stop_why:
+            return "stopping"
+        return "ready" if self.intake.is_warm else "warming"
+
+    def check(self) -> None:
+        """
+        Stop with a `Defect` if any part is in a state that it must never be in.
+
+        For tests, the simulated world, and about once a minute in service: it looks at everything.
+        """
+        for part in (
+            self.snapshots,
+            self.workers,
+            self.surveyors,
+            self.ledger,
+            self.surveying,
+            self.answering,
+            self.dispatch,
+            self.health,
+            self._alarms,
+        ):
+            part.check()
+        self.dispatch.check_pins()
+
+
+def _manners(settings: FrontSettings, *, surveyor: bool) -> Manners:
+    silence_s = settings.surveyor_silence_s if surveyor else settings.worker_silence_s
+    return Manners(
+        start_time_max=Duration.of_s(settings.start_time_max_s),
+        silence=Duration.of_s(silence_s),
+        grace=Duration.of_s(settings.worker_grace_s),
+        ping_every=Duration.of_s(settings.ping_every_s),
+        backoff_first=Duration.of_s(settings.backoff_first_s),
+        backoff_max=Duration.of_s(settings.backoff_max_s),
+    )

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
+from byway import limits
 from bywayd.core.effects import LayerFlags
 from bywayd.core.invariant import invariant
 
@@ -15,7 +16,7 @@ class KnownVehicle:
 
     #: Its motion model, for `vehicles_are`.
     model: str
-    #: Opaque: what defines it, as in the settings (msgpack can carry it).
+    #: What defines it, as in the settings, the model included. Opaque; msgpack can carry it.
     settings: Mapping[str, object]
 
 
@@ -26,7 +27,7 @@ class FrontSettings:
     milliseconds to some seconds.
     """
 
-    # -- what is served -----------------------------------------------------------------------
+    # -- what is served ------------------------------------------------------------------------
 
     #: Vehicles by name.
     vehicles: Mapping[str, KnownVehicle] = field(default_factory=dict)
@@ -38,7 +39,7 @@ class FrontSettings:
     #: The daemon's name and version, for `welcome`.
     software: str = ""
 
-    # -- planning -----------------------------------------------------------------------------
+    # -- planning ------------------------------------------------------------------------------
 
     #: Worker processes.
     workers: int = 2
@@ -52,13 +53,15 @@ class FrontSettings:
     start_left_min_s: float = 0.0015
     #: A replan whose worker was lost or whose route was blocked is tried again if this is left.
     retry_left_min_s: float = 0.003
+    #: How often a replan is tried: one that kills its workers must not go through the whole crew.
+    attempts_max: int = 3
     #: The share of its budget that a replan may wait before running ones are cut short for it.
     patience_ratio: float = 0.25
     #: Waiting replans per worker before new ones are refused: a longer queue only makes answers
     #: late (at 1.5 times capacity a bounded or unbounded queue of 16 completes next to nothing).
     waiting_per_worker_max: int = 2
 
-    # -- the crew -----------------------------------------------------------------------------
+    # -- the crew ------------------------------------------------------------------------------
 
     #: A worker that has not ended its job this long after the job's deadline is killed.
     worker_grace_s: float = 0.05
@@ -76,31 +79,42 @@ class FrontSettings:
     backoff_first_s: float = 0.05
     backoff_max_s: float = 5.0
 
-    # -- sources ------------------------------------------------------------------------------
+    # -- sources -------------------------------------------------------------------------------
 
     #: Sources known at a time; the silent ones are forgotten first.
     sources_max: int = 256
     #: Layers known at a time.
     layers_max: int = 256
-    #: Changes of one source that may wait to become visible.
-    source_window: int = 256
-    #: Changes of one batch for the surveyor: a snapshot should not be long in the making.
+    #: Changes of one source that may wait to become visible; it keeps the same bound itself.
+    source_window: int = limits.unacknowledged_max
+    #: Bytes of all changes that wait to become visible. The surveyor gets through more in a
+    #: second, so this much waits only while it is being replaced.
+    pending_bytes_max: int = 64 * 1024 * 1024
+    #: One batch for the surveyor: a snapshot should not be long in the making.
     batch_changes_max: int = 256
+    batch_bytes_max: int = 16 * 1024 * 1024
+    #: A source that left a gap is told so once in this time, whatever it sends beyond the gap.
+    resend_every_s: float = 0.05
     #: Obstacles that may have an expiry at a time.
     expiries_max: int = 100_000
 
-    # -- memory of answers --------------------------------------------------------------------
+    # -- memory of answers ---------------------------------------------------------------------
 
     #: Answered requests that are remembered, so that a repeat gets the same answer again.
     answers_max: int = 1024
     #: ... and no more than so many bytes of them.
     answers_bytes_max: int = 16 * 1024 * 1024
+    #: ... nor for longer than this.
+    answers_kept_s: float = limits.answers_kept_s
     #: Units whose stream of better routes is numbered at a time.
     units_max: int = 4096
     #: Descriptions of the site that may be in the making.
     descriptions_max: int = 8
 
-    # -- ending and telling -------------------------------------------------------------------
+    #: Who asks before the daemon is ready is told to try again after this time.
+    warming_retry_s: float = 0.5
+
+    # -- ending and telling --------------------------------------------------------------------
 
     #: Everything open is answered this long after a stop was asked for.
     drain_max_s: float = 1.8

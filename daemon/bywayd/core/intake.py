@@ -1,0 +1,222 @@
+"""
+What clients ask for, and the checks before anything is promised.
+
+A replan is taken in, or refused at once with the reason. A request that is repeated is answered
+as before, or left alone if its answer is still to come; a message never changes anything before
+all checks have passed.
+"""
+
+from __future__ import annotations
+
+from byway import frames, messages
+from byway.messages import Accepted, Noted, VehicleIs, VehiclesAre
+from bywayd.core.answering import Answering
+from bywayd.core.dispatch import Dispatch
+from bywayd.core.docket import Docket, times_of
+from bywayd.core.events import Peer
+from bywayd.core.front_settings import FrontSettings
+from bywayd.core.health import Health
+from bywayd.core.instants import Duration, Instant
+from bywayd.core.ledger import Ledger
+from bywayd.core.outbox import Outbox
+from bywayd.core.roster import Roster
+from bywayd.core.snapshots import Snapshots
+from bywayd.core.surveying import Surveying
+
+_MASK_64 = 2**64 - 1
+
+
+def spread(seed: int, serial: int) -> int:
+    """
+    Return the seed of one of many, from 0 to 2**63 - 1.
+
+    The output function of SplitMix64 (Steele, Lea, Flood 2014: Fast splittable pseudorandom
+    number generators) at the serial-th step from the seed.
+    """
+    z = (seed + serial * 0x9E3779B97F4A7C15) & _MASK_64
+    z = ((z ^ (z >> 30)) * 0xBF58476D1CE4E5B9) & _MASK_64
+    z = ((z ^ (z >> 27)) * 0x94D049BB133111EB) & _MASK_64
+    return (z ^ (z >> 31)) >> 1
+
+
+class Intake:
+    """Owned by the front."""
+
+    def __init__(
+        self,
+        settings: FrontSettings,
+        seed: int,
+        outbox: Outbox,
+        health: Health,
+        snapshots: Snapshots,
+        workers: Roster,
+        answering: Answering,
+        dispatch: Dispatch,
+        ledger: Ledger,
+        surveying: Surveying,
+    ) -> None:
+        # -- fixed -----------------------------------------------------------------------------
+        self._settings = settings
+        self._seed = seed
+        # -- shared with the rest of the front -------------------------------------------------
+        self._outbox = outbox
+        self._health = health
+        self._snapshots = snapshots
+        self._workers = workers
+        self._answering = answering
+        self._dispatch = dispatch
+        self._ledger = ledger
+        self._surveying = surveying
+        # -- state -----------------------------------------------------------------------------
+        #: Replans taken in since the start.
+        self._serial = 0
+        self.stopping = False
+
+    # -- replans -------------------------------------------------------------------------------
+
+    def replan(self, peer: Peer, came: frames.Received, ask: messages.Replan, now: Instant) -> None:
+        """Take a replan in, or say why not."""
+        header = came.header
+        if self._is_repeat(peer, came, now):
+            return
+        self._health.count("replans_total")
+        refused = self._why_not(header, ask)
+        if refused is not None:
+            code, text, facts, retry_after_s = refused
+            self._health.count(f"refused_{code}_total")
+            self._outbox.error(peer, header.id, code, text, facts, retry_after_s=retry_after_s)
+            return
+        settings = self._settings
+        times = times_of(
+            now,
+            Duration.of_s(ask.budget_s),
+            Duration.of_s(settings.margin_s),
+            settings.margin_ratio_max,
+            Duration.of_s(settings.start_left_min_s),
+        )
+        self._serial += 1
+        docket = Docket(
+            id=header.id,
+            ask=ask,
+            body=came.body,
+            times=times,
+            seed=spread(self._seed, self._serial) if ask.seed is None else ask.seed,
+            traceparent=header.traceparent,
+            attempts_max=settings.attempts_max,
+            retry_left_min=Duration.of_s(settings.retry_left_min_s),
+            peer=peer,
+        )
+        revision = self._snapshots.revision
+        accepted = Accepted(unit=ask.unit, budget_s=ask.budget_s, revision=revision)
+        self._outbox.reply(peer, header.id, accepted, traceparent=header.traceparent)
+        self._dispatch.enter(docket, now)
+
+    def _is_repeat(self, peer: Peer, came: frames.Received, now: Instant) -> bool:
+        id = came.header.id
+        docket = self._answering.open.get(id)
+        answered = self._answering.answers.get(id)
+        known = docket or answered
+        if known is None:
+            return False
+        if known.body != came.body:
+            self._health.count("conflicts_total")
+            text = f"request {id} was asked before with another body"
+            self._outbox.error(peer, id, "conflict", text)
+            return True
+        self._health.count("repeats_total")
+        if docket is not None:
+            # The answer goes to where the asker is now.
+            docket.peer = peer
+        if answered is not None:
+            traceparent = came.header.traceparent
+            self._outbox.reply(peer, id, answered.message, answered.packed, traceparent=traceparent)
+        return True
+
+    def _why_not(
+        self, header: frames.Header, ask: messages.Replan
+    ) -> tuple[str, str, dict[str, object], float | None] | None:
+        """Return why a replan cannot be taken in: code, text, facts, when to try again."""
+        if self.stopping:
+            return "stopping", "the daemon is on its way out", {}, None
+        if header.epoch and header.epoch != self._outbox.epoch:
+            text = "the daemon was started again since; the site may not be complete yet"
+            return "new_epoch", text, {"epoch": self._outbox.epoch}, None
+        if ask.vehicle not in self._settings.vehicles:
+            known = sorted(self._settings.vehicles)
+            text = f"no vehicle is called {ask.vehicle}"
+            return "unknown_vehicle", text, {"vehicle": ask.vehicle, "vehicles": known}, None
+        for name in ask.leave_out:
+            layer = self._ledger.layers.get(name)
+            if layer is None or not layer.is_visible:
+                text = f"the site has no layer {name}"
+                return "unknown_layer", text, {"layer": name}, None
+            if not layer.flags.outlines_only:
+                text = f"layer {name} holds more than outlines and cannot be left out"
+                return "bad_value", text, {"field": "leave_out", "layer": name}, None
+        budget_max_s = self._settings.budget_max_s
+        if ask.budget_s > budget_max_s:
+            text = f"budget_s is {ask.budget_s}, the most is {budget_max_s}"
+            facts: dict[str, object] = {"field": "budget_s", "value": ask.budget_s}
+            return "bad_value", text, facts, None
+        if not self.is_warm:
+            return "warming", "the daemon is not ready yet", {}, self._settings.warming_retry_s
+        if self._dispatch.room.of_unit(ask.unit) is None and not self._dispatch.has_room:
+            waiting = len(self._dispatch.room)
+            text = f"{waiting} replans wait for {self._settings.workers} workers already"
+            retry_after_s = self._answering.retry_after_s(waiting)
+            return "overloaded", text, {"waiting": waiting}, retry_after_s
+        return None
+
+    @property
+    def is_warm(self) -> bool:
+        """Whether there has ever been a snapshot, and a worker to plan on it."""
+        return self._snapshots.current is not None and self._workers.was_ready
+
+    def end(
+        self, peer: Peer, id: str, wanted: messages.Cancel | messages.Finish, now: Instant
+    ) -> None:
+        """Cancel or finish what a client names."""
+        if wanted.replan is not None:
+            docket = self._answering.open.get(wanted.replan)
+            found = [] if docket is None else [docket]
+        else:
+            found = self._dispatch.of_unit(wanted.unit or "")
+        if not found:
+            facts: dict[str, object] = {"replan": wanted.replan, "unit": wanted.unit}
+            text = f"no replan is open under {wanted.replan or wanted.unit}"
+            self._outbox.error(peer, id, "unknown_request", text, facts)
+            return
+        for docket in found:
+            if isinstance(wanted, messages.Cancel):
+                self._dispatch.cancel(docket, now)
+            else:
+                self._dispatch.finish(docket, now)
+        self._outbox.reply(peer, id, Noted(replans=[docket.id for docket in found]))
+
+    # -- the rest ------------------------------------------------------------------------------
+
+    def site(self, peer: Peer, id: str, wanted: messages.Site) -> None:
+        """Have the site described."""
+        for name in wanted.layers or ():
+            if self._ledger.layers.get(name) is None:
+                text = f"the site has no layer {name}"
+                self._outbox.error(peer, id, "unknown_layer", text, {"layer": name})
+                return
+        if self.stopping:
+            self._outbox.error(peer, id, "stopping", "the daemon is on its way out")
+        elif self._snapshots.current is None:
+            retry = self._settings.warming_retry_s
+            text = "the daemon is not ready yet"
+            self._outbox.error(peer, id, "warming", text, retry_after_s=retry)
+        elif not self._surveying.ask(peer, id, wanted):
+            text = "too many descriptions of the site are being made"
+            retry = self._settings.warming_retry_s
+            self._outbox.error(peer, id, "overloaded", text, retry_after_s=retry)
+
+    def vehicles(self, peer: Peer, id: str) -> None:
+        """Tell which vehicles there are."""
+        known = [
+            VehicleIs(vehicle=name, model=vehicle.model, settings=dict(vehicle.settings))
+            for name, vehicle in self._settings.vehicles.items()
+        ]
+        self._outbox.reply(peer, id, VehiclesAre(vehicles=known))

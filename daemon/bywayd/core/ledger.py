@@ -1,0 +1,441 @@
+"""
+What sources have sent, what has become visible, and what they are told about it.
+
+Changes are taken in by number and without gaps, wait in one line for the surveyor, go to it in
+batches, and are acknowledged, cumulatively for each source, when the snapshot that contains them
+is current: so every replan sent after an acknowledgement sees what was acknowledged. A change
+that is refused, here or by the surveyor, counts as decided like any other, and the source is told
+which one and why before the acknowledgement passes it.
+
+A batch whose surveyor died is handed out again as it was; changes can be applied twice.
+"""
+
+from __future__ import annotations
+
+from collections import deque
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from byway import frames, limits, messages, obstacles
+from byway.errors import SenderFault
+from byway.messages import Acknowledged, Refused, Resend
+from byway.packed import Bytes
+from bywayd.core.effects import Change
+from bywayd.core.events import Peer, Refusal
+from bywayd.core.expiries import Expiries
+from bywayd.core.front_settings import FrontSettings
+from bywayd.core.health import Health
+from bywayd.core.instants import Duration, Instant
+from bywayd.core.invariant import invariant
+from bywayd.core.layers import Layer, Layers, No
+from bywayd.core.outbox import Outbox
+from bywayd.core.sources import Source, Sources
+
+#: Obstacles that expire together and go to the surveyor in one change.
+_DROP_IDS_MAX = 1000
+
+
+@dataclass(frozen=True, slots=True)
+class Entry:
+    """One change in the line: of a source, or of the ledger itself when something expires."""
+
+    arrived: Instant
+    #: None for the ledger's own.
+    source: str | None
+    number: int
+    #: What the surveyor is to do; None when it is refused already.
+    change: Change | None
+    no: No | None = None
+    #: Obstacles put by it, if its layer has expiries.
+    ids: tuple[str, ...] = ()
+    expires_at: Instant | None = None
+    size_bytes: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class Batch:
+    """Entries that are decided together, in order."""
+
+    entries: tuple[Entry, ...]
+
+    @property
+    def changes(self) -> tuple[Change, ...]:
+        """What the surveyor is to do, in order."""
+        return tuple(entry.change for entry in self.entries if entry.change is not None)
+
+
+@dataclass(frozen=True, slots=True)
+class LedgerStatistics:
+    """How much the ledger holds."""
+
+    sources: int
+    layers: int
+    expiries: int
+    pending: int
+    pending_bytes: int
+
+
+class Ledger:
+    """Owned by the front."""
+
+    def __init__(self, settings: FrontSettings, outbox: Outbox, health: Health) -> None:
+        # -- fixed -----------------------------------------------------------------------------
+        self._settings = settings
+        self._resend_every = Duration.of_s(settings.resend_every_s)
+        # -- shared with the rest of the front -------------------------------------------------
+        self._outbox = outbox
+        self._health = health
+        # -- state -----------------------------------------------------------------------------
+        self.sources = Sources(settings.sources_max, limits.refusals_kept)
+        self.layers = Layers(settings.layers, settings.layers_max, self._heard_at)
+        self._expiries = Expiries(settings.expiries_max)
+        #: Taken in and not handed out yet, in order of arrival over all sources.
+        self._line: deque[Entry] = deque()
+        #: Handed out and not decided.
+        self._out: Batch | None = None
+        #: Of everything undecided.
+        self._pending_bytes = 0
+        #: That of the last batch decided.
+        self._revision = 0
+
+    # -- what sources send ---------------------------------------------------------------------
+
+    def take(self, peer: Peer, came: frames.Received, now: Instant) -> None:
+        """Take in a change, or say why not."""
+        source = self._next_in_turn(peer, came.header, now)
+        if source is None:
+            return
+        size = len(came.body) + len(came.packed)
+        if not self._has_room(source, size):
+            self._ask_again(source, "full", now, self._settings.resend_every_s)
+            return
+        source.have = came.header.number
+        made = self._entry(source, came.message, came.packed, size, now)
+        if isinstance(made, No):
+            made = Entry(now, source.name, source.have, None, made)
+        self._append(made)
+
+    def take_fault(self, peer: Peer, fault: SenderFault, now: Instant) -> bool:
+        """
+        Refuse a change that the door would not let through; False if nobody knows whose it is.
+
+        Its number is used up: the source would otherwise repeat it for ever.
+        """
+        header = fault.header
+        if header is None or not header.source or not header.number:
+            return False
+        source = self._next_in_turn(peer, header, now)
+        if source is not None and self._has_room(source, 0):
+            source.have = header.number
+            no = No(fault.code, fault.text, fault.facts)
+            self._append(Entry(now, source.name, source.have, None, no))
+        return True
+
+    def _next_in_turn(self, peer: Peer, header: frames.Header, now: Instant) -> Source | None:
+        """Return the source if this is its next number; otherwise it is told what is."""
+        source = self.sources.heard(header.source, peer, now)
+        if source is None:
+            self._health.count("sources_refused_total")
+            text = f"{len(self.sources)} sources have changes under way, no more can be taken"
+            retry = self._settings.resend_every_s
+            self._outbox.error(peer, header.id, "overloaded", text, retry_after_s=retry)
+            return None
+        if header.epoch and header.epoch != self._outbox.epoch:
+            self._ask_again(source, "epoch", now)
+            return None
+        if header.number <= source.have:
+            self._tell_again(source, header.number)
+            return None
+        if header.number > source.have + 1:
+            self._health.count("gaps_total")
+            self._ask_again(source, "gap", now)
+            return None
+        return source
+
+    def _has_room(self, source: Source, size: int) -> bool:
+        settings = self._settings
+        return (
+            source.undecided < settings.source_window
+            and self._pending_bytes + size <= settings.pending_bytes_max
+        )
+
+    def _ask_again(
+        self, source: Source, reason: str, now: Instant, retry_after_s: float | None = None
+    ) -> None:
+        """Tell a source from where to go on; once for all that it has sent beyond that."""
+        wanted = source.have + 1
+        lately = source.asked_at is not None and now.since(source.asked_at) < self._resend_every
+        if source.asked_for == wanted and lately:
+            return
+        source.asked_for, source.asked_at = wanted, now
+        self._health.count("resends_total")
+        self._reply(
+            source,
+            Resend(
+                source=source.name, reason=reason, have=source.have, retry_after_s=retry_after_s
+            ),
+        )
+
+    def _tell_again(self, source: Source, number: int) -> None:
+        """A repeat: say again what has become of it, if that is decided."""
+        self._health.count("repeated_changes_total")
+        if number > source.decided:
+            return
+        refused = source.refusals.get(number)
+        if refused is not None:
+            self._reply(source, refused)
+        self._acknowledge(source, self._revision)
+
+    # -- from a message to a change ------------------------------------------------------------
+
+    def _entry(
+        self, source: Source, message: messages.Message, packed: Bytes, size: int, now: Instant
+    ) -> Entry | No:
+        match message:
+            case messages.Claim() | messages.ReplaceLayer():
+                layer = self.layers.claim(
+                    source.name,
+                    message.layer,
+                    message.unknown_blocks,
+                    message.outlines_only,
+                    message.lease_s,
+                    now,
+                )
+            case messages.Change():
+                layer = self.layers.to_change(source.name, message.layer, now)
+            case _:
+                return No("unknown_kind", f"{message.kind} is no change", {"kind": message.kind})
+        if isinstance(layer, No):
+            return layer
+        return self._entry_for(layer, source, message, packed, size, now)
+
+    def _entry_for(
+        self,
+        layer: Layer,
+        source: Source,
+        message: messages.Change,
+        packed: Bytes,
+        size: int,
+        now: Instant,
+    ) -> Entry | No:
+        name, flags, number = layer.name, layer.flags, source.have
+        match message:
+            case messages.Put() | messages.ReplaceLayer():
+                ids = self._ids(message, packed)
+                if isinstance(ids, No):
+                    return ids
+                replaces = isinstance(message, messages.ReplaceLayer)
+                change = Change("replace" if replaces else "put", name, flags, message, packed)
+                after_s = message.expires_in_s
+                expires_at = None if after_s is None else now + Duration.of_s(after_s)
+                expires = expires_at is not None
+                self._expiries.coming(name, ids, replaces=replaces, expires=expires)
+                return Entry(
+                    now,
+                    source.name,
+                    number,
+                    change,
+                    ids=ids,
+                    expires_at=expires_at,
+                    size_bytes=size,
+                )
+            case messages.Drop():
+                change = Change("drop", name, flags, ids=tuple(message.ids))
+            case messages.Patch():
+                change = Change("patch", name, flags, message, packed)
+            case _:
+                change = Change("claim", name, flags)
+        return Entry(now, source.name, number, change, size_bytes=size)
+
+    def _ids(
+        self, message: messages.Put | messages.ReplaceLayer, packed: Bytes
+    ) -> tuple[str, ...] | No:
+        """Return the ids of obstacles that are put, if they matter here."""
+        layer, count = message.layer, message.polygons + message.discs
+        if message.expires_in_s is None:
+            if not self._expiries.is_timed(layer):
+                return ()
+        elif count > self._expiries.room_left:
+            most = self._settings.expiries_max
+            return No(
+                "too_large",
+                f"{count} more obstacles with an expiry would be too many, the most is {most}",
+                {"obstacles": count, "expiries_max": most},
+            )
+        try:
+            ids = tuple(obstacles.ids_of(message.columns, packed, count))
+        except SenderFault as fault:
+            return No(fault.code, fault.text, fault.facts)
+        if message.expires_in_s is not None:
+            self._expiries.begin(layer)
+        return ids
+
+    # -- to the surveyor and back --------------------------------------------------------------
+
+    def next_batch(self, now: Instant) -> Batch | None:
+        """
+        Hand out what waits, up to a limit, if nothing is out.
+
+        A batch without changes (all refused here) has nothing for the surveyor to do.
+        """
+        self._expire(now)
+        if self._out is not None or not self._line:
+            return None
+        entries: list[Entry] = []
+        size = 0
+        while self._line and len(entries) < self._settings.batch_changes_max:
+            size += self._line[0].size_bytes
+            if entries and size > self._settings.batch_bytes_max:
+                break
+            entries.append(self._line.popleft())
+        self._out = Batch(tuple(entries))
+        return self._out
+
+    @property
+    def out(self) -> Batch | None:
+        """The batch that is handed out and not decided."""
+        return self._out
+
+    def decide(self, refusals: Sequence[Refusal], revision: int, now: Instant) -> None:
+        """The batch that is out has become visible with this revision, but for the refused."""
+        batch, self._out = self._out, None
+        invariant(batch is not None, "what is decided was handed out")
+        if batch is None:
+            return
+        refused = {refusal.index: refusal for refusal in refusals}
+        last: dict[str, int] = {}
+        index = 0
+        for entry in batch.entries:
+            no = entry.no
+            if entry.change is not None:
+                found = refused.get(index)
+                no = None if found is None else No(found.code, found.text, found.facts)
+                self._settle_change(entry, entry.change, no, now)
+                index += 1
+            if entry.source is not None:
+                last[entry.source] = entry.number
+                self._tell(entry.source, entry, no, now)
+        self._revision = revision
+        for name, number in last.items():
+            source = self.sources.get(name)
+            invariant(source is not None, "a source with changes under way is known")
+            if source is not None:
+                source.decided = number
+                self._acknowledge(source, revision)
+
+    def _settle_change(self, entry: Entry, change: Change, no: No | None, now: Instant) -> None:
+        self._pending_bytes -= entry.size_bytes
+        name = change.layer
+        if change.what in ("put", "replace"):
+            self._expiries.decided(
+                name,
+                entry.ids,
+                replaces=change.what == "replace",
+                expires_at=entry.expires_at,
+                applied=no is None,
+            )
+        elif change.what == "drop":
+            self._expiries.dropped(name, change.ids)
+        layer = self.layers.get(name)
+        if no is None and layer is not None:
+            layer.is_visible = True
+            layer.changed_at = now
+
+    def _tell(self, name: str, entry: Entry, no: No | None, now: Instant) -> None:
+        if no is None:
+            self._health.count("changes_total")
+            self._health.observe("visible_s", now.since(entry.arrived))
+            return
+        self._health.count("changes_refused_total")
+        source = self.sources.get(name)
+        if source is None:
+            return
+        refused = Refused(
+            source=name,
+            number=entry.number,
+            code=no.code,
+            text=no.text[: limits.text_chars_max],
+            facts=dict(no.facts),
+        )
+        source.remember_refusal(refused, limits.refusals_kept)
+        self._reply(source, refused)
+        self._outbox.log(
+            "info", "change.refused", source=name, number=entry.number, code=no.code, text=no.text
+        )
+
+    def _acknowledge(self, source: Source, revision: int) -> None:
+        told = Acknowledged(source=source.name, number=source.decided, revision=revision)
+        self._reply(source, told)
+
+    def _reply(self, source: Source, message: messages.Message) -> None:
+        self._outbox.reply(source.peer, "", message)
+
+    # -- time ----------------------------------------------------------------------------------
+
+    def settle(self, now: Instant) -> None:
+        """Take layers away whose owners have been silent for too long."""
+        while (layer := self.layers.pop_forfeited(now)) is not None:
+            self._health.count("leases_ended_total")
+            self._outbox.log("warning", "layer.forfeited", layer=layer.name)
+
+    def _expire(self, now: Instant) -> None:
+        for name, ids in self._expiries.pop_due(now).items():
+            layer = self.layers.get(name)
+            invariant(layer is not None, "an obstacle that expires has a layer")
+            self._health.count("obstacles_expired_total", len(ids))
+            if layer is None:
+                continue
+            for first in range(0, len(ids), _DROP_IDS_MAX):
+                some = tuple(ids[first : first + _DROP_IDS_MAX])
+                self._append(Entry(now, None, 0, Change("drop", name, layer.flags, ids=some)))
+
+    def next_alarm(self) -> Instant | None:
+        """Return when something expires, or a lease may end."""
+        found = (self._expiries.next_alarm(), self.layers.next_alarm())
+        return min((at for at in found if at is not None), default=None)
+
+    # -- within --------------------------------------------------------------------------------
+
+    def _append(self, entry: Entry) -> None:
+        self._line.append(entry)
+        self._pending_bytes += entry.size_bytes
+
+    def _heard_at(self, name: str) -> Instant | None:
+        source = self.sources.get(name)
+        return None if source is None else source.heard_at
+
+    @property
+    def pending(self) -> int:
+        """Changes that are not decided."""
+        return len(self._line) + (0 if self._out is None else len(self._out.entries))
+
+    def statistics(self) -> LedgerStatistics:
+        """Return how much is held."""
+        return LedgerStatistics(
+            len(self.sources),
+            len(self.layers),
+            len(self._expiries),
+            self.pending,
+            self._pending_bytes,
+        )
+
+    def check(self) -> None:
+        """Stop with a `Defect` if a change could be lost, or memory is not bounded."""
+        self.sources.check()
+        self.layers.check()
+        self._expiries.check()
+        entries = [*(() if self._out is None else self._out.entries), *self._line]
+        invariant(
+            self._pending_bytes == sum(entry.size_bytes for entry in entries),
+            "the size of what is pending is known",
+        )
+        undecided: dict[str, list[int]] = {}
+        for entry in entries:
+            if entry.source is not None:
+                undecided.setdefault(entry.source, []).append(entry.number)
+        for source in self.sources:
+            numbers = list(range(source.decided + 1, source.have + 1))
+            invariant(
+                undecided.pop(source.name, []) == numbers, "every number taken in is decided once"
+            )
+        invariant(not undecided, "a source with changes under way is known")
