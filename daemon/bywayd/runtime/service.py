@@ -34,6 +34,10 @@ from bywayd.runtime.staff import Staff, StaffSettings, TemplateFailed, signals_o
 from bywayd.runtime.watch import Watch
 from bywayd.settings import Settings
 
+#: A worker owes a sign of life every 100 ms. When the machine is full it is niced and may have to
+#: wait its turn; longer than this, something is wrong with it, and most budgets are not over yet.
+worker_silence_s: Final = 0.25
+
 #: How far the site's memory may grow. Nothing of it exists before it is needed, and a full site
 #: of 400 x 400 m takes some hundred megabytes.
 site_memory_bytes_max: Final = 8 * 1024**3
@@ -159,6 +163,7 @@ def _front_settings(settings: Settings, outside: Outside) -> FrontSettings:
         events_endpoints=tuple(outside.endpoints["events"]),
         software=f"bywayd {metadata.version('byway')}",
         workers=settings.workers.count,
+        worker_silence_s=worker_silence_s,
     )
 
 

@@ -111,6 +111,8 @@ class Staff:
     _template: _Template | None = None
     _failures: int = 0
     _ended: bool = False
+    #: What was written to the common pipe after its last line feed.
+    _said_rest: bytes = b""
 
     def __post_init__(self) -> None:
         # Everybody of the crew writes errors of last resort into one pipe, which the loop
@@ -357,10 +359,14 @@ class Staff:
 
     def _read_said(self) -> None:
         with contextlib.suppress(BlockingIOError):
-            text = os.read(self._said_from, 16384).decode(errors="replace")
-            for line in text.splitlines():
-                if line.strip():
-                    self.reports.said(line.rstrip())
+            self._said_rest += os.read(self._said_from, 16384)
+            *lines, self._said_rest = self._said_rest.split(b"\n")
+            if len(self._said_rest) > 4096:
+                lines, self._said_rest = [*lines, self._said_rest], b""
+            for line in lines:
+                text = line.decode(errors="replace").rstrip()
+                if text:
+                    self.reports.said(text)
 
     def end(self) -> None:
         """Kill everybody and take leave of them."""
