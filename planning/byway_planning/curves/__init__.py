@@ -14,6 +14,7 @@ from byway_planning.curves.steer import steer
 from byway_planning.curves.word import SEGMENTS_MAX, Segments, advance
 from byway_planning.kernel import kernel
 from byway_planning.vehicles.body import CAR, DISC, FORWARD_CAR
+from byway_planning.vehicles.models import Vehicle
 
 __all__ = ["Curve", "Pose", "pose_at", "shortest_curve"]
 
@@ -31,7 +32,7 @@ class Curve(NamedTuple):
 
 
 def shortest_curve(
-    kind: str,
+    vehicle: Vehicle | str,
     start: Sequence[float],
     goal: Sequence[float],
     *,
@@ -43,7 +44,9 @@ def shortest_curve(
     Return the cheapest curve between two poses in an empty world.
 
     Args:
-        kind: "car" (Reeds and Shepp 1990), "forward_car" (Dubins 1957) or "disc" (straight).
+        vehicle: A vehicle, which brings its turning radius and costs; or one of "car" (Reeds
+            and Shepp 1990), "forward_car" (Dubins 1957), "disc" (straight), with the
+            following given.
         start: x_m, y_m, heading_rad.
         goal: The same; a disc does not look at the headings.
         turn_radius_m: Least turning radius, above 0 except for a disc.
@@ -56,8 +59,14 @@ def shortest_curve(
     Raises:
         ValueError: If a value is not finite or out of its range.
     """
+    if isinstance(vehicle, str):
+        kind = vehicle
+    else:
+        body = vehicle.body()
+        kind, turn_radius_m = vehicle.model, body.turn_radius_m
+        reverse_factor, direction_change_m = body.reverse_factor, body.direction_change_m
     if kind not in _KINDS:
-        raise ValueError(f"kind must be one of {', '.join(_KINDS)}, got {kind!r}")
+        raise ValueError(f"the vehicle must be one of {', '.join(_KINDS)}, got {kind!r}")
     a = _checked_pose("start", start)
     b = _checked_pose("goal", goal)
     if kind != "disc" and not 0.0 < turn_radius_m < math.inf:

@@ -29,8 +29,24 @@ backward L R L of Dubins with a long middle arc are in the set when cost is not 
 """
 
 import math
-from typing import Final
 
+from byway_planning.curves.reeds_shepp_words import (
+    HALF_PI,
+    L_R_L,
+    L_RL,
+    L_RL_R,
+    L_RSL,
+    L_RSL_R,
+    L_RSR,
+    LR_L,
+    LR_LR,
+    LRL,
+    LSL,
+    LSL_R,
+    LSR,
+    LSR_L,
+    spell,
+)
 from byway_planning.curves.word import (
     NOTHING,
     TWO_PI,
@@ -38,7 +54,6 @@ from byway_planning.curves.word import (
     ahead,
     behind,
     finish,
-    put,
     turn_tolerance,
     wrap,
 )
@@ -46,24 +61,6 @@ from byway_planning.kernel import kernel
 
 # (cost, word, first, middle, last): lengths of the pieces, all >= 0
 Found = tuple[float, int, float, float, float]
-
-HALF_PI: Final = 0.5 * math.pi
-
-# Shapes, written for a word that begins with a left arc driven forward. A word is
-# 4 * shape + 2 * (begins with R) + (begins in reverse).
-_LSL: Final = 0
-_LSR: Final = 1
-_L_R_L: Final = 2  # L+ R- L+
-_L_RL: Final = 3  # L+ R- L-
-_LR_L: Final = 4  # L+ R+ L-
-_LRL: Final = 5  # L+ R+ L+, long middle arc
-_LR_LR: Final = 6  # L+ R+ L- R-
-_L_RL_R: Final = 7  # L+ R- L- R+
-_L_RSL: Final = 8  # L+ R-(90) S- L-
-_L_RSR: Final = 9  # L+ R-(90) S- R-
-_LSL_R: Final = 10  # L+ S+ L+(90) R-
-_LSR_L: Final = 11  # L+ S+ R+(90) L-
-_L_RSL_R: Final = 12  # L+ R-(90) S- L-(90) R+
 
 
 @kernel()
@@ -77,10 +74,11 @@ def _same_side(
         distance, theta = 0.0, 0.0
     else:
         theta = math.atan2(north, east)
+    tolerance = turn_tolerance(distance)
     for flip in range(2):  # flipped in time: phi and the eastward distance change sign
         plus, minus = (1.0, factor) if flip == 0 else (factor, 1.0)
         t = theta if flip == 0 or distance == 0.0 else math.pi - theta
-        best = _lsl(best, side + flip, distance, t, phi if flip == 0 else -phi, plus)
+        best = _lsl(best, side + flip, distance, t, phi if flip == 0 else -phi, plus, tolerance)
     if abs(phi) + change >= best[0]:
         return best
     if distance <= 4.0:
@@ -89,7 +87,7 @@ def _same_side(
             plus, minus = (1.0, factor) if flip == 0 else (factor, 1.0)
             t = theta if flip == 0 else math.pi - theta
             f = phi if flip == 0 else -phi
-            best = _three_arcs(best, side + flip, distance, bend, t, f, plus, minus, change)
+            best = _three_arcs(best, side + flip, tolerance, bend, t, f, plus, minus, change)
     # Both words with a quarter arc need a straight piece of root(square - 4) - 2.
     room = best[0] - change - HALF_PI + 2.0
     if square >= 8.0 and square - 4.0 < room * room:
@@ -98,20 +96,27 @@ def _same_side(
             plus, minus = (1.0, factor) if flip == 0 else (factor, 1.0)
             t = theta if flip == 0 else math.pi - theta
             f = phi if flip == 0 else -phi
-            best = _quarter_same(best, side + flip, reach, t, f, plus, minus, change)
+            best = _quarter_same(best, side + flip, tolerance, reach, t, f, plus, minus, change)
     return best
 
 
 @kernel()
-def _lsl(best: Found, image: int, distance: float, theta: float, phi: float, plus: float) -> Found:
-    tolerance = turn_tolerance(distance)
+def _lsl(
+    best: Found,
+    image: int,
+    distance: float,
+    theta: float,
+    phi: float,
+    plus: float,
+    tolerance: float,
+) -> Found:
     if plus * (distance + ahead(phi, tolerance)) >= best[0]:
         return best
     first = ahead(theta, tolerance)
     last = ahead(phi - first, tolerance)
     cost = plus * (first + distance + last)
     if cost < best[0]:
-        best = (cost, 4 * _LSL + image, first, distance, last)
+        best = (cost, 4 * LSL + image, first, distance, last)
     return best
 
 
@@ -119,7 +124,7 @@ def _lsl(best: Found, image: int, distance: float, theta: float, phi: float, plu
 def _three_arcs(
     best: Found,
     image: int,
-    distance: float,
+    tolerance: float,
     bend: float,
     theta: float,
     phi: float,
@@ -127,7 +132,6 @@ def _three_arcs(
     minus: float,
     change: float,
 ) -> Found:
-    tolerance = turn_tolerance(distance)
     # L+ R- and then on to the left, forward or back
     if bend + abs(wrap(phi - bend)) + change < best[0]:
         first = ahead(theta + math.pi - 0.5 * bend, tolerance)
@@ -135,18 +139,18 @@ def _three_arcs(
         begun = plus * first + minus * bend
         cost = begun + plus * last + 2.0 * change
         if cost < best[0]:
-            best = (cost, 4 * _L_R_L + image, first, bend, last)
+            best = (cost, 4 * L_R_L + image, first, bend, last)
         last = behind(last)
         cost = begun + minus * last + change
         if cost < best[0]:
-            best = (cost, 4 * _L_RL + image, first, bend, last)
+            best = (cost, 4 * L_RL + image, first, bend, last)
     # L+ R+ and then L-
     if bend + abs(wrap(phi + bend)) + change < best[0]:
         first = ahead(theta + 0.5 * bend, tolerance)
         last = ahead(first - bend - phi, tolerance)
         cost = plus * (first + bend) + minus * last + change
         if cost < best[0]:
-            best = (cost, 4 * _LR_L + image, first, bend, last)
+            best = (cost, 4 * LR_L + image, first, bend, last)
     return best
 
 
@@ -171,7 +175,7 @@ def _long_arc(
             last = ahead(f - first + middle, tolerance)
             cost = plus * (first + middle + last)
             if cost < best[0]:
-                best = (cost, 4 * _LRL + side + flip, first, middle, last)
+                best = (cost, 4 * LRL + side + flip, first, middle, last)
     return best
 
 
@@ -179,6 +183,7 @@ def _long_arc(
 def _quarter_same(
     best: Found,
     image: int,
+    tolerance: float,
     reach: float,
     theta: float,
     phi: float,
@@ -187,7 +192,6 @@ def _quarter_same(
     change: float,
 ) -> Found:
     middle = max(0.0, reach - 2.0)
-    tolerance = turn_tolerance(reach)
     lean = math.atan2(2.0, reach)
     least = HALF_PI + middle + change
     if least + abs(wrap(phi - HALF_PI)) < best[0]:
@@ -195,13 +199,13 @@ def _quarter_same(
         last = ahead(first + HALF_PI - phi, tolerance)
         cost = plus * first + minus * (HALF_PI + middle + last) + change
         if cost < best[0]:
-            best = (cost, 4 * _L_RSL + image, first, middle, last)
+            best = (cost, 4 * L_RSL + image, first, middle, last)
     if least + abs(wrap(phi + HALF_PI)) < best[0]:
         first = ahead(theta + lean, tolerance)
         last = ahead(first - HALF_PI - phi, tolerance)
         cost = plus * (first + middle + HALF_PI) + minus * last + change
         if cost < best[0]:
-            best = (cost, 4 * _LSR_L + image, first, middle, last)
+            best = (cost, 4 * LSR_L + image, first, middle, last)
     return best
 
 
@@ -217,34 +221,39 @@ def _other_side(
     outside = inner >= -NOTHING
     turned = abs(phi)
     tangent = math.sqrt(inner) if inner > NOTHING * NOTHING else 0.0
-    lean = math.atan2(2.0, tangent)
+    # both words with an inner tangent: its lean is worth an arc tangent only if one may win
+    lean = math.atan2(2.0, tangent) if tangent + turned < best[0] + 0.9 else 0.0
+    tolerance = turn_tolerance(distance)
     for flip in range(2):
         plus, minus = (1.0, factor) if flip == 0 else (factor, 1.0)
         t = theta if flip == 0 else math.pi - theta
         f = phi if flip == 0 else -phi
         if outside:
             if plus * (tangent + turned) < best[0]:
-                best = _lsr(best, side + flip, distance, tangent, t + lean, f, plus)
-            best = _quarter_other(best, side + flip, distance, t, f, plus, minus, change)
+                best = _lsr(best, side + flip, tolerance, tangent, t + lean, f, plus)
+            best = _quarter_other(best, side + flip, tolerance, distance, t, f, plus, minus, change)
             if square >= 20.0:
-                best = _two_quarters(best, side + flip, tangent, t + lean, f, plus, minus, change)
+                best = _two_quarters(
+                    best, side + flip, tolerance, tangent, t + lean, f, plus, minus, change
+                )
             if square <= 36.0:
-                best = _four_arcs_out(best, side + flip, square, t, f, plus, minus, change)
+                best = _four_arcs_out(
+                    best, side + flip, tolerance, square, t, f, plus, minus, change
+                )
         else:
-            best = _four_arcs_in(best, side + flip, distance, t, f, plus, minus, change)
+            best = _four_arcs_in(best, side + flip, tolerance, distance, t, f, plus, minus, change)
     return best
 
 
 @kernel()
 def _lsr(
-    best: Found, image: int, distance: float, tangent: float, angle: float, phi: float, plus: float
+    best: Found, image: int, tolerance: float, tangent: float, angle: float, phi: float, plus: float
 ) -> Found:
-    tolerance = turn_tolerance(distance)
     first = ahead(angle, tolerance)
     last = ahead(first - phi, tolerance)
     cost = plus * (first + tangent + last)
     if cost < best[0]:
-        best = (cost, 4 * _LSR + image, first, tangent, last)
+        best = (cost, 4 * LSR + image, first, tangent, last)
     return best
 
 
@@ -252,6 +261,7 @@ def _lsr(
 def _quarter_other(
     best: Found,
     image: int,
+    tolerance: float,
     distance: float,
     theta: float,
     phi: float,
@@ -260,7 +270,6 @@ def _quarter_other(
     change: float,
 ) -> Found:
     middle = max(0.0, distance - 2.0)
-    tolerance = turn_tolerance(distance)
     # In both words the first and the last arc add up to the same angle.
     if HALF_PI + middle + ahead(phi - HALF_PI, tolerance) + change >= best[0]:
         return best
@@ -268,12 +277,12 @@ def _quarter_other(
     last = ahead(phi - HALF_PI - first, tolerance)
     cost = plus * first + minus * (HALF_PI + middle + last) + change
     if cost < best[0]:
-        best = (cost, 4 * _L_RSR + image, first, middle, last)
+        best = (cost, 4 * L_RSR + image, first, middle, last)
     first = ahead(theta, tolerance)
     last = ahead(phi - HALF_PI - first, tolerance)
     cost = plus * (first + middle + HALF_PI) + minus * last + change
     if cost < best[0]:
-        best = (cost, 4 * _LSL_R + image, first, middle, last)
+        best = (cost, 4 * LSL_R + image, first, middle, last)
     return best
 
 
@@ -281,6 +290,7 @@ def _quarter_other(
 def _two_quarters(
     best: Found,
     image: int,
+    tolerance: float,
     tangent: float,
     angle: float,
     phi: float,
@@ -291,12 +301,11 @@ def _two_quarters(
     middle = max(0.0, tangent - 4.0)
     if math.pi + middle + abs(phi) + 2.0 * change >= best[0]:
         return best
-    tolerance = turn_tolerance(tangent)
     first = ahead(angle + HALF_PI, tolerance)
     last = ahead(first - phi, tolerance)
     cost = plus * (first + last) + minus * (math.pi + middle) + 2.0 * change
     if cost < best[0]:
-        best = (cost, 4 * _L_RSL_R + image, first, middle, last)
+        best = (cost, 4 * L_RSL_R + image, first, middle, last)
     return best
 
 
@@ -304,6 +313,7 @@ def _two_quarters(
 def _four_arcs_out(
     best: Found,
     image: int,
+    tolerance: float,
     square: float,
     theta: float,
     phi: float,
@@ -315,14 +325,13 @@ def _four_arcs_out(
     room = best[0] - abs(phi) - 2.0 * change
     if room <= 0.0 or 0.5 * (square - 4.0) >= room * room:
         return best
-    tolerance = turn_tolerance(math.sqrt(square))
     cosine = min(1.0, max(-1.0, (20.0 - square) / 16.0))
     bend = math.acos(cosine)
     first = ahead(theta + HALF_PI + math.atan2(math.sin(bend), 2.0 - cosine), tolerance)
     last = ahead(first - phi, tolerance)
     cost = plus * (first + last) + 2.0 * minus * bend + 2.0 * change
     if cost < best[0]:
-        best = (cost, 4 * _L_RL_R + image, first, bend, last)
+        best = (cost, 4 * L_RL_R + image, first, bend, last)
     return best
 
 
@@ -330,6 +339,7 @@ def _four_arcs_out(
 def _four_arcs_in(
     best: Found,
     image: int,
+    tolerance: float,
     distance: float,
     theta: float,
     phi: float,
@@ -339,7 +349,6 @@ def _four_arcs_in(
 ) -> Found:
     if abs(phi) + change >= best[0]:
         return best
-    tolerance = turn_tolerance(distance)
     bend = math.acos(0.25 * (2.0 + distance))
     if 2.0 * bend + ahead(phi + 2.0 * bend, tolerance) + change >= best[0]:
         return best
@@ -347,7 +356,7 @@ def _four_arcs_in(
     last = ahead(phi + 2.0 * bend - first, tolerance)
     cost = plus * (first + bend) + minus * (bend + last) + change
     if cost < best[0]:
-        best = (cost, 4 * _LR_LR + image, first, bend, last)
+        best = (cost, 4 * LR_LR + image, first, bend, last)
     return best
 
 
@@ -399,42 +408,5 @@ def reeds_shepp(
         reverse_factor,
         direction_change_m / radius_m,
     )
-    count = _spell(word, first, middle, last, out)
+    count = spell(word, first, middle, last, out)
     return finish(out, count, radius_m, dheading, reverse_factor, direction_change_m)
-
-
-@kernel()
-def _spell(word: int, first: float, middle: float, last: float, out: Segments) -> int:
-    """Write a word as segments of unit radius; returns their number."""
-    left = -1.0 if word & 2 else 1.0
-    right = -left
-    plus = -1.0 if word & 1 else 1.0
-    minus = -plus
-    shape = word >> 2
-    n = put(out, 0, left, plus * first)
-    if shape <= _LSR:
-        n = put(out, n, 0.0, plus * middle)
-        return put(out, n, left if shape == _LSL else right, plus * last)
-    if shape <= _LRL:
-        n = put(out, n, right, (plus if shape >= _LR_L else minus) * middle)
-        return put(out, n, left, (plus if shape in (_L_R_L, _LRL) else minus) * last)
-    if shape == _LR_LR:
-        n = put(out, n, right, plus * middle)
-        n = put(out, n, left, minus * middle)
-        return put(out, n, right, minus * last)
-    if shape == _L_RL_R:
-        n = put(out, n, right, minus * middle)
-        n = put(out, n, left, minus * middle)
-        return put(out, n, right, plus * last)
-    if shape <= _L_RSR:
-        n = put(out, n, right, minus * HALF_PI)
-        n = put(out, n, 0.0, minus * middle)
-        return put(out, n, left if shape == _L_RSL else right, minus * last)
-    if shape <= _LSR_L:
-        n = put(out, n, 0.0, plus * middle)
-        n = put(out, n, left if shape == _LSL_R else right, plus * HALF_PI)
-        return put(out, n, right if shape == _LSL_R else left, minus * last)
-    n = put(out, n, right, minus * HALF_PI)
-    n = put(out, n, 0.0, minus * middle)
-    n = put(out, n, left, minus * HALF_PI)
-    return put(out, n, right, plus * last)

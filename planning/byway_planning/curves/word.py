@@ -28,7 +28,7 @@ NOTHING: Final = 1e-11
 @kernel()
 def wrap(angle: float) -> float:
     """The same angle in [-pi, pi)."""
-    wrapped = angle - TWO_PI * math.floor((angle + math.pi) / TWO_PI)
+    wrapped = angle - TWO_PI * math.floor((angle + math.pi) * (1.0 / TWO_PI))
     # the quotient may round across the edge
     if wrapped >= math.pi:
         wrapped -= TWO_PI
@@ -40,7 +40,7 @@ def wrap(angle: float) -> float:
 @kernel()
 def ahead(angle: float, tolerance: float) -> float:
     """The same angle in [0, 2 pi); within the tolerance of a full turn, or of none, it is 0."""
-    turned = angle - TWO_PI * math.floor(angle / TWO_PI)
+    turned = angle - TWO_PI * math.floor(angle * (1.0 / TWO_PI))
     if turned < tolerance or turned > TWO_PI - tolerance:
         return 0.0
     return turned

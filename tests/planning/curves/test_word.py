@@ -9,6 +9,7 @@ from hypothesis import strategies as st
 
 from byway_planning.curves import pose_at, shortest_curve
 from byway_planning.curves.word import advance, ahead, put, wrap
+from byway_planning.vehicles import Car, Disc
 
 few = settings(max_examples=60, deadline=None)
 
@@ -93,6 +94,24 @@ def test_a_script_gets_segments_and_poses():
     assert 0.99 < math.hypot(x - 2.0, y - 2.0) <= 1.0
 
 
+def test_a_vehicle_brings_its_radius_and_costs():
+    box = [(-1.0, -0.5), (2.0, -0.5), (2.0, 0.5), (-1.0, 0.5)]
+    car = Car(footprint_m=box, turn_radius_m_min=4.0, reverse_factor=2.0, direction_change_m=3.0)
+    for goal in ((-6.0, 0.5, 0.2), (0.0, 5.0, 0.0)):
+        by_name = shortest_curve(
+            "car",
+            (0, 0, 0),
+            goal,
+            turn_radius_m=4.0,
+            reverse_factor=2.0,
+            direction_change_m=3.0,
+        )
+        own = shortest_curve(car, (0, 0, 0), goal)
+        assert own.segments.tolist() == by_name.segments.tolist()
+        assert own.cost_m == by_name.cost_m > own.length_m
+    assert shortest_curve(Disc(radius_m=1.0), (0, 0, 0), (0, 2, 0)).length_m == 2.0
+
+
 def test_a_pose_in_a_reverse_piece_lies_behind():
     segments = np.array([[0.0, 2.0], [0.0, -3.0]])
     assert pose_at((0.0, 0.0, 0.0), segments, 3.5) == (0.5, 0.0, 0.0)
@@ -108,7 +127,7 @@ def test_forward_and_disc_curves_by_name():
 @pytest.mark.parametrize(
     ("change", "said"),
     [
-        ({"kind": "hovercraft"}, "kind must be one of car, forward_car, disc"),
+        ({"vehicle": "hovercraft"}, "the vehicle must be one of car, forward_car, disc"),
         ({"start": (0.0, math.nan, 0.0)}, "start must be three finite numbers"),
         ({"goal": (0.0, 0.0)}, "goal must be three finite numbers"),
         ({"turn_radius_m": 0.0}, "turn_radius_m must be above 0"),
@@ -118,7 +137,7 @@ def test_forward_and_disc_curves_by_name():
     ],
 )
 def test_senseless_arguments_are_named(change, said):
-    arguments = {"kind": "car", "start": (0, 0, 0), "goal": (1, 2, 3), "turn_radius_m": 5.0}
+    arguments = {"vehicle": "car", "start": (0, 0, 0), "goal": (1, 2, 3), "turn_radius_m": 5.0}
     arguments |= change
     with pytest.raises(ValueError, match=said):
         shortest_curve(**arguments)
