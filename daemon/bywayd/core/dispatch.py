@@ -10,8 +10,6 @@ route stop improving it for those that have none.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
-from dataclasses import dataclass
 from typing import Literal
 
 from byway.errors import CODES
@@ -28,28 +26,14 @@ from bywayd.core.events import (
 )
 from bywayd.core.front_settings import FrontSettings
 from bywayd.core.health import Health
-from bywayd.core.instants import Duration, Instant
+from bywayd.core.instants import Instant
 from bywayd.core.invariant import invariant
 from bywayd.core.outbox import Outbox
+from bywayd.core.pressure import improving, pressure
 from bywayd.core.roster import Roster
-from bywayd.core.snapshots import Snapshot, Snapshots
+from bywayd.core.snapshots import Snapshots
+from bywayd.core.tasks import Kind, Task, Tasks
 from bywayd.core.waiting import WaitingRoom
-
-#: A replan whose unit has asked again gets no more than this share of the newer one's budget.
-_NEWER_WAITS_RATIO = 0.5
-
-
-@dataclass(slots=True)
-class Task:
-    """What one worker was given: a job, or a route to check. It reads one snapshot."""
-
-    number: int
-    kind: Literal["plan", "check"]
-    worker: int
-    revision: int
-    since: Instant
-    #: None once nobody is interested in how it ends.
-    docket: Docket | None
 
 
 class Dispatch:
@@ -75,12 +59,10 @@ class Dispatch:
         self.room = WaitingRoom(settings.workers, settings.waiting_max, settings.patience_ratio)
         #: The replan of each unit that a worker is at, or that has lost its worker.
         self._at_work: dict[str, Docket] = {}
-        #: What workers were given and have not ended, by task number.
-        self._tasks: dict[int, Task] = {}
+        self._tasks = Tasks(workers, snapshots)
         #: By request id, when an open replan must be answered; "" for when somebody who waits
         #: runs out of patience.
         self._alarms: Alarms[str] = Alarms()
-        self._task_serial = 0
         self._draining = False
         #: Whether anything has changed that may let somebody go on.
         self._restless = False
@@ -135,16 +117,16 @@ class Dispatch:
 
     def better(self, event: WorkerBetter, now: Instant) -> None:
         """A better route has come."""
-        task = self._tasks.get(event.job)
+        task = self._tasks.find(event.worker, event.job, "plan")
         outcome = event.outcome
-        if task is None or task.worker != event.worker or task.kind != "plan":
+        if task is None:
             self._nonsense(event.worker, f"a better route for job {event.job}", now)
         elif outcome.kind != "route" or not math.isfinite(outcome.cost):
             self._nonsense(event.worker, f"a better route that is none: {outcome.kind}", now)
         elif task.docket is not None:
             docket = task.docket
             self._restless = self._restless or docket.best is None
-            if docket.hold(outcome, task.revision, now):
+            if docket.hold(outcome, task.snapshot.revision, now):
                 self._act(docket, docket.move("better", now), now)
 
     def done(self, event: WorkerDone, now: Instant) -> None:
@@ -157,7 +139,7 @@ class Dispatch:
         if task is None or task.docket is None:
             return
         docket = task.docket
-        docket.ended(outcome, task.revision, now)
+        docket.ended(outcome, task.snapshot.revision, now)
         best = docket.best
         stale = best is not None and best.revision < self._snapshots.revision
         if stale and now < docket.times.answer_by:
@@ -193,7 +175,7 @@ class Dispatch:
             best = docket.best
             invariant(best is not None, "what was checked is a route", docket.story)
             if best is not None:
-                docket.best = Held(best.outcome, task.revision)
+                docket.best = Held(best.outcome, task.snapshot.revision)
             self._act(docket, docket.move("stood", now), now)
             return
         self._health.count("rechecks_failed_total")
@@ -206,9 +188,7 @@ class Dispatch:
         """A worker is gone; what it was at goes to another, or is answered."""
         self._health.count("workers_lost_total")
         self._outbox.log("warning", "worker.lost", worker=worker, why=why)
-        for number in self._workers.lost(worker, why, now):
-            task = self._tasks.pop(number)
-            self._snapshots.unpin(task.revision)
+        for task in self._tasks.lost(worker, why, now):
             self._disown(task, now)
         self._restless = True
 
@@ -220,7 +200,7 @@ class Dispatch:
         self._outbox.add(KillWorker(worker, why))
         self._outbox.log("warning", "worker.killed", worker=worker, why=why)
         # Its snapshot stays pinned until it is certainly gone.
-        for task in self._tasks_of(worker):
+        for task in self._tasks.of_worker(worker):
             self._disown(task, now)
 
     # -- what time does ------------------------------------------------------------------------
@@ -250,38 +230,21 @@ class Dispatch:
                 return
             self.room.leave(docket)
             self._at_work[docket.ask.unit] = docket
-            snapshot = self._snapshots.pin()
-            task = self._task("plan", docket, worker, snapshot, now)
             if docket.begun_at is None:
                 self._health.observe("waited_s", now.since(docket.times.arrived))
+            deadline = docket.times.work_by
+            task = self._tasks.begin("plan", docket, worker, deadline, now)
             docket.begin(task.number, worker, now)
             self._alarms.set(docket.id, docket.times.answer_by)
-            deadline = docket.times.work_by
-            self._workers.give(worker, task.number, deadline, now)
-            self._outbox.add(StartJob(worker, self._job(task, docket, snapshot, deadline)))
+            self._outbox.add(StartJob(worker, self._job(task, docket, deadline)))
 
     def _recheck(self, docket: Docket, worker: int, outcome: Outcome, now: Instant) -> None:
-        snapshot = self._snapshots.pin()
-        task = self._task("check", docket, worker, snapshot, now)
-        docket.task, docket.worker = task.number, worker
         deadline = docket.times.answer_by
-        self._workers.give(worker, task.number, deadline, now)
-        self._outbox.add(Recheck(worker, self._job(task, docket, snapshot, deadline), outcome))
+        task = self._tasks.begin("check", docket, worker, deadline, now)
+        docket.task, docket.worker = task.number, worker
+        self._outbox.add(Recheck(worker, self._job(task, docket, deadline), outcome))
 
-    def _task(
-        self,
-        kind: Literal["plan", "check"],
-        docket: Docket,
-        worker: int,
-        snapshot: Snapshot,
-        now: Instant,
-    ) -> Task:
-        self._task_serial += 1
-        task = Task(self._task_serial, kind, worker, snapshot.revision, now, docket)
-        self._tasks[task.number] = task
-        return task
-
-    def _job(self, task: Task, docket: Docket, snapshot: Snapshot, deadline: Instant) -> Job:
+    def _job(self, task: Task, docket: Docket, deadline: Instant) -> Job:
         ask = docket.ask
         return Job(
             job=task.number,
@@ -296,22 +259,17 @@ class Dispatch:
             start_speed_mps=ask.start_speed_mps,
             start_curvature_per_m=ask.start_curvature_per_m,
             gap_wanted=ask.gap_wanted,
-            revision=snapshot.revision,
-            handle=snapshot.handle,
+            revision=task.snapshot.revision,
+            handle=task.snapshot.handle,
         )
 
-    def _end(
-        self, worker: int, number: int, kind: Literal["plan", "check"] | None, now: Instant
-    ) -> Task | None:
+    def _end(self, worker: int, number: int, kind: Kind | None, now: Instant) -> Task | None:
         """Take a task from its worker; None if the worker talks nonsense."""
-        task = self._tasks.get(number)
-        mine = task is not None and task.worker == worker and kind in (None, task.kind)
-        if task is None or not mine:
+        task = self._tasks.find(worker, number, kind)
+        if task is None:
             self._nonsense(worker, f"the end of job {number}", now)
             return None
-        del self._tasks[number]
-        self._workers.done(worker, number, now)
-        self._snapshots.unpin(task.revision)
+        self._tasks.end(task, now)
         self._answering.note_hold(now.since(task.since))
         if task.docket is not None:
             task.docket.leave_worker()
@@ -335,9 +293,6 @@ class Dispatch:
     def _has_another_try(self, docket: Docket, now: Instant) -> bool:
         newer = self.room.of_unit(docket.ask.unit)
         return newer is None and not self._draining and docket.has_another_try(now)
-
-    def _tasks_of(self, worker: int) -> list[Task]:
-        return [task for task in self._tasks.values() if task.worker == worker]
 
     # -- acts ----------------------------------------------------------------------------------
 
@@ -368,9 +323,9 @@ class Dispatch:
         if self._at_work.get(docket.ask.unit) is docket:
             del self._at_work[docket.ask.unit]
         self._alarms.clear(docket.id)
-        if docket.task is not None:
+        task = self._tasks.of_docket(docket)
+        if task is not None:
             # A worker is still at it: it is wanted elsewhere.
-            task = self._tasks[docket.task]
             task.docket = None
             if task.kind == "plan":
                 self._steer(docket, "cancel", now)
@@ -388,78 +343,21 @@ class Dispatch:
         docket.hurry = why
         self._act(docket, docket.move("finish" if why == "finish" else "shorten", now), now)
 
-    # -- pressure ------------------------------------------------------------------------------
-
     def _press(self, now: Instant) -> None:
         """Cut short whoever has a route already, for those who have waited long enough."""
         self._alarms.clear("")
         if self._draining:
-            for docket in self._improving():
+            for docket in improving(self._at_work):
                 self._hasten(docket, "finish", now)
-            return
-        impatient = 0
-        for docket in self.room:
-            older = self._at_work.get(docket.ask.unit)
-            if older is None:
-                impatient += self._is_impatient(docket, now)
-            elif older is not docket:
-                self._make_way(older, docket, now)
-            else:
-                impatient += 1  # it has lost its worker
-        coming = sum(
-            task.docket is None or task.docket.phase != "planning" for task in self._live()
-        )
-        for docket in self._improving():
-            if impatient <= coming:
-                return
-            self._health.count("shortened_total")
-            self._hasten(docket, "shorten", now)
-            impatient -= 1
-
-    def _is_impatient(self, docket: Docket, now: Instant) -> bool:
-        ends = self.room.patience_ends(docket, Duration.of_s(docket.ask.budget_s))
-        if ends > now:
-            self._wake_by(ends)
-        return ends <= now
-
-    def _make_way(self, older: Docket, newer: Docket, now: Instant) -> None:
-        """What a unit asked before is of little use to it once it has asked again."""
-        budget = Duration.of_s(newer.ask.budget_s)
-        limit = newer.times.arrived + budget.times(_NEWER_WAITS_RATIO)
-        if older.phase == "planning" and (older.best is not None or limit <= now):
-            self._health.count("shortened_total")
-            self._hasten(older, "newer", now)
-        elif older.phase == "planning":
-            self._wake_by(limit)
-
-    def _wake_by(self, at: Instant) -> None:
-        known = self._alarms.at("")
-        if known is None or at < known:
-            self._alarms.set("", at)
-
-    def _improving(self) -> list[Docket]:
-        """Replans that have a route and a worker that tries to better it, the longest first."""
-        found = [
-            (docket.first_at.ns, docket.id, docket)
-            for docket in self._at_work.values()
-            if docket.phase == "planning"
-            and docket.best is not None
-            and docket.first_at is not None
-        ]
-        return [docket for _, _, docket in sorted(found, key=lambda entry: entry[:2])]
-
-    def _live(self) -> Iterator[Task]:
-        """Tasks whose workers have not been killed."""
-        for task in self._tasks.values():
-            if self._workers.phase(task.worker) != "killed":
-                yield task
+        elif len(self.room) > 0:
+            found = pressure(self.room, self._at_work, self._tasks.coming_free(), now)
+            for docket, why in found.hasten:
+                self._health.count("shortened_total")
+                self._hasten(docket, why, now)
+            if found.look_again_at is not None:
+                self._alarms.set("", found.look_again_at)
 
     # -- looking at it -------------------------------------------------------------------------
-
-    @property
-    def planning_count(self) -> int:
-        """Open replans that a worker is at."""
-        return len(self._answering.open) - len(self.room)
 
     def check(self) -> None:
         """Stop with a `Defect` if somebody could be forgotten."""
@@ -475,28 +373,10 @@ class Dispatch:
                 "who waits is in the room",
                 docket.story,
             )
-            if docket.task is not None:
-                task = self._tasks[docket.task]
-                invariant(
-                    task.docket is docket and task.worker == docket.worker,
-                    "a replan and its task know each other",
-                    docket.story,
-                )
         for unit, docket in self._at_work.items():
             invariant(
                 self._answering.open.get(docket.id) is docket and docket.ask.unit == unit,
                 "who is at work is open",
                 docket.story,
             )
-        for task in self._tasks.values():
-            invariant(
-                task.docket is None or task.docket.task == task.number,
-                "a task knows its replan",
-            )
-
-    def check_pins(self) -> None:
-        """Stop with a `Defect` unless every task, and nobody else, pins the snapshot it reads."""
-        pins: dict[int, int] = {}
-        for task in self._tasks.values():
-            pins[task.revision] = pins.get(task.revision, 0) + 1
-        invariant(pins == self._snapshots.pins(), "tasks and pins agree")
+        self._tasks.check()

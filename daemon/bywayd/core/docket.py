@@ -180,10 +180,6 @@ class Docket:
         self.phase = after
         return act
 
-    def can_move(self, move: Move) -> bool:
-        """Whether the table has a row for this move in this phase."""
-        return (self.phase, move) in MOVES
-
     def hold(self, outcome: Outcome, revision: int, now: Instant) -> bool:
         """
         Keep a verified route if it is the better one; False if it is not.

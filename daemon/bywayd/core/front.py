@@ -267,10 +267,10 @@ class Front:
     # -- what time does -----------------------------------------------------------------------
 
     def _settle(self, now: Instant) -> None:
-        for order in self.workers.due(now):
-            self._carry_out(order, now)
         for order in self.surveyors.due(now):
             self._carry_out_surveyor(order)
+        for order in self.workers.due(now):
+            self._carry_out(order, now)
         self.ledger.settle(now)
         self.dispatch.settle(now)
         self.surveying.settle(now)
@@ -350,7 +350,6 @@ class Front:
             self._alarms,
         ):
             part.check()
-        self.dispatch.check_pins()
 
 
 def _manners(settings: FrontSettings, *, surveyor: bool) -> Manners:
