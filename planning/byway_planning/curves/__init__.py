@@ -5,7 +5,7 @@ Kernels for searches are in the modules; here are the checked functions for scri
 """
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from typing import NamedTuple
 
 import numpy as np
@@ -19,6 +19,9 @@ from byway_planning.vehicles.models import Vehicle
 __all__ = ["Curve", "Pose", "pose_at", "shortest_curve"]
 
 Pose = tuple[float, float, float]
+
+# interpreted: a script that asks for one pose should not wait for the compiler
+_advance: Callable[[float, float, float, float, float], Pose] = getattr(advance, "py_func", advance)
 
 _KINDS = {"car": CAR, "forward_car": FORWARD_CAR, "disc": DISC}
 
@@ -107,7 +110,7 @@ def pose_at(start: Sequence[float], segments: Segments, at_m: float) -> Pose:
         driven_m = min(abs(float(piece_m)), max(0.0, left_m))
         left_m -= driven_m
         signed_m = math.copysign(driven_m, float(piece_m))
-        x, y, heading = advance.py_func(x, y, heading, float(curvature), signed_m)  # type: ignore[attr-defined]
+        x, y, heading = _advance(x, y, heading, float(curvature), signed_m)
     return x, y, heading
 
 

@@ -20,7 +20,7 @@ from byway_planning.vehicles import footprint
 from byway_planning.vehicles.body import CAR, DISC, FORWARD_CAR, Body, Limits
 
 Points = npt.NDArray[np.float64]
-Footprint = tuple[tuple[float, float], ...]
+Footprint = Sequence[Sequence[float]]  # kept as a tuple of pairs, so that vehicles can be hashed
 
 #: Corners of the polygon drawn around a disc.
 DISC_CORNERS: Final = 32
@@ -81,9 +81,7 @@ class _Common:
         Raises:
             ValueError: If the clearance is negative or not finite.
         """
-        if clearance_m is None or clearance_m == self.clearance_m:
-            return _body_of(self)
-        return _body_of(self.with_clearance(clearance_m))
+        return _body_of(self, self.clearance_m if clearance_m is None else clearance_m)
 
     @property
     def inner_radius_m(self) -> float:
@@ -327,8 +325,10 @@ def vehicle_from_settings(settings: Mapping[str, Any]) -> Vehicle:
 
 
 @lru_cache(maxsize=256)
-def _body_of(vehicle: _Common) -> Body:
-    return vehicle._make_body()
+def _body_of(vehicle: _Common, clearance_m: float) -> Body:
+    if not 0.0 <= clearance_m < math.inf:
+        raise ValueError(f"clearance_m must be a finite number, at least 0, got {clearance_m!r}")
+    return vehicle._make_body()._replace(clearance_m=float(clearance_m))
 
 
 @lru_cache(maxsize=256)

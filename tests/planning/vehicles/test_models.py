@@ -63,7 +63,8 @@ def test_another_clearance_changes_nothing_else(vehicle):
     assert vehicle.body() is vehicle.body(vehicle.clearance_m)
     tight = vehicle.body(0.0)
     assert tight.clearance_m == 0.0
-    assert tight is vehicle.with_clearance(0.0).body()
+    assert tight is vehicle.body(0)
+    assert vehicle.with_clearance(0.0).body().clearance_m == 0.0
     for name, value in vehicle.body()._asdict().items():
         if name != "clearance_m":
             assert np.array_equal(getattr(tight, name), value)
