@@ -29,7 +29,7 @@ UNKNOWN: Final = "#cfc6b2"
 PRINTS: Final[dict[str, tuple[str, str, str]]] = {
     "building": ("#d9b8a4", INK, "////"),
     "stack": ("#e3cd97", "#6b5a2c", "xx"),
-    "vehicle": ("#efe7d3", INK, "...."),
+    "pack": ("#c9d3b4", "#4d5a2c", "++"),
     "other": ("#cdbfa8", INK, "\\\\\\\\"),
 }
 #: Inks for routes and units, told apart in print and by most colour-blind readers.
@@ -239,5 +239,19 @@ class Plan:
 
 
 def _inside(ring: Points) -> tuple[float, float]:
-    x_m, y_m = ring.mean(axis=0)
-    return float(x_m), float(y_m)
+    """Return a place well inside a polygon, for its label: the best of a grid of 15 x 15."""
+    low, high = ring.min(axis=0), ring.max(axis=0)
+    shares = (np.arange(15) + 0.5) / 15
+    grid = np.stack(np.meshgrid(*(low + (high - low) * shares[:, None]).T), axis=-1).reshape(-1, 2)
+    inside = grid[Polygon(ring).get_path().contains_points(grid)]
+    if len(inside) == 0:
+        inside = ring.mean(axis=0)[None]
+    ends = np.roll(ring, -1, axis=0)
+    along = ends - ring
+    to_place = inside[:, None] - ring
+    share = np.clip((to_place * along).sum(-1) / np.maximum((along**2).sum(-1), 1e-12), 0, 1)
+    off_m = np.hypot(*np.moveaxis(to_place - share[..., None] * along, -1, 0)).min(axis=1)
+    # Long shapes have many such places; the one nearest to the middle reads best.
+    best = inside[off_m >= 0.98 * off_m.max()]
+    x_m, y_m = best[np.hypot(*(best - ring.mean(axis=0)).T).argmin()].tolist()
+    return x_m, y_m

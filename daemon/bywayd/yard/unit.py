@@ -98,8 +98,8 @@ class Unit:
         self.driver = Driver(round_.unit, vehicle, round_.stations[0].pose, ground)
         self.tally = Tally()
         self._rank = round_.rank
-        self._reverse_factor = float(vehicle.get("reverse_factor", 1.0))
-        self._direction_change_m = float(vehicle.get("direction_change_m", 0.0))
+        self._reverse_factor = float(vehicle["reverse_factor"])
+        self._direction_change_m = float(vehicle["direction_change_m"])
         self._ground = ground
         self._dice = random.Random(seed)
         # The round begins loaded, at the first station.

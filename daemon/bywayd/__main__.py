@@ -1,0 +1,5 @@
+"""`python -m bywayd` is `byway`."""
+
+from bywayd.commands import main
+
+main()
