@@ -2,9 +2,13 @@
 The nearest nodes of a tree to a pose, by looking at all of them or through a grid.
 
 Distance is Euclidean plus `heading_weight_m` metres for every radian between the headings: a
-cheap stand-in for the length of a curve, and with weight 0 (or up to the turning radius) not
-above it, so a few nearest by this are the ones to try a curve from. Both ways give the same
-nodes in the same order: by distance, then by index.
+cheap stand-in for the length of a curve, so a few nearest by this are the ones to try a curve
+from. With weight 0 it is a lower bound of that length; otherwise it is not. Both ways give the
+same nodes in the same order: by distance, then by index.
+
+Measured with 4 nearest of nodes spread over 60 x 40 m, in microseconds: 100 nodes 1.1 by
+looking at all, 0.8 through a grid of 4 m; 1000 nodes 2.8 and 1.2; 3000 nodes 5.0 and 1.6 (2 m);
+20000 nodes 19 and 2.6 (1 m).
 
 Nodes are rows of an array whose first columns are x_m, y_m, heading_rad.
 """
