@@ -138,11 +138,9 @@ class _Wheeled(_Common):
     @property
     def turn_radius_m(self) -> float:
         """Least turning radius of the middle of the rear axle."""
-        if self.turn_radius_m_min is not None:
-            return self.turn_radius_m_min
-        assert self.wheelbase_m is not None
-        assert self.steer_rad_max is not None
-        return self.wheelbase_m / math.tan(self.steer_rad_max)
+        if self.wheelbase_m is not None and self.steer_rad_max is not None:
+            return self.wheelbase_m / math.tan(self.steer_rad_max)
+        return float(self.turn_radius_m_min or 0.0)  # one or the other is given: checked
 
     def outline_at(self, pose: Sequence[float]) -> Points:
         """The footprint at a pose x_m, y_m, heading_rad; shape (n, 2), counter-clockwise."""
