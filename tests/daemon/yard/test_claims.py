@@ -7,28 +7,15 @@ import pytest
 import shapely
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from tests.daemon.yard.lines import arc
 
 from bywayd.outlines import outline_of, placed
 from bywayd.settings import load
 from bywayd.yard.claims import GAP_M, STEP_M, Ground, apart, claim_ahead, claim_here
-from bywayd.yard.shapes import Pose, advanced, as_points, rectangle
-from bywayd.yard.tracking import Line
+from bywayd.yard.shapes import as_points, rectangle
 
-COLUMNS = np.dtype(
-    [
-        *(("x_m", "f8"), ("y_m", "f8"), ("heading_rad", "f8")),
-        *(("curvature_per_m", "f8"), ("speed_mps", "f8"), ("gear", "i1")),
-    ]
-)
 BOX_M = as_points([(-1, -0.7), (2, -0.7), (2, 0.7), (-1, 0.7)])
 VEHICLES = {name: vehicle.arguments() for name, vehicle in load().vehicles.items()}
-
-
-def arc(start: Pose, curvature: float, signed_m: float) -> Line:
-    count = math.ceil(abs(signed_m) / 0.25)
-    gear = 1 if signed_m > 0 else -1
-    poses = [advanced(start, curvature, signed_m * k / count) for k in range(count + 1)]
-    return Line(np.array([(*pose, curvature, gear, gear) for pose in poses], COLUMNS))
 
 
 @pytest.mark.parametrize(("name", "radius_m"), [("flatbed", 6.85), ("loader", 4.0), ("tug", 2.6)])

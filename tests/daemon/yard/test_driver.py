@@ -2,41 +2,14 @@
 
 import math
 
-import numpy as np
 import pytest
+from tests.daemon.yard.lines import CART, arc
 
 from bywayd.yard.claims import Ground
 from bywayd.yard.driver import Driver, abilities_of
-from bywayd.yard.shapes import Mass, Masses, Pose, advanced, distance_m, rectangle
-from bywayd.yard.tracking import Line
+from bywayd.yard.shapes import Mass, Masses, advanced, distance_m, rectangle
 
-COLUMNS = np.dtype(
-    [
-        *(("x_m", "f8"), ("y_m", "f8"), ("heading_rad", "f8")),
-        *(("curvature_per_m", "f8"), ("speed_mps", "f8"), ("gear", "i1")),
-    ]
-)
-CART = {
-    "footprint_m": [(-0.5, -0.5), (1.5, -0.5), (1.5, 0.5), (-0.5, 0.5)],
-    "turn_radius_m_min": 2.0,
-    "speed_mps_max": 2.0,
-    "acceleration_mps2_max": 1.0,
-    "deceleration_mps2_max": 1.0,
-}
 DT_S = 0.02
-
-
-def straight(start: Pose, length_m: float, from_mps: float = 0.0, curvature: float = 0.0) -> Line:
-    """A route that begins with a speed and ends at rest."""
-    count = math.ceil(length_m / 0.25)
-    rows = []
-    for k in range(count + 1):
-        done_m = length_m * k / count
-        up = math.sqrt(from_mps**2 + 2 * done_m)
-        down = math.sqrt(2 * (length_m - done_m))
-        pose = advanced(start, curvature, done_m)
-        rows.append((*pose, curvature, min(2.0, up, down), 0 if k == count else 1))
-    return Line(np.array(rows, COLUMNS))
 
 
 def drive(driver: Driver, until_s: float, from_s: float = 0.0) -> float:
@@ -56,7 +29,7 @@ def test_what_a_vehicle_can_do_follows_from_its_settings() -> None:
 def test_a_driver_arrives_and_holds_only_the_ground_it_stands_on() -> None:
     ground = Ground()
     driver = Driver("a", CART, (0.0, 0.0, 0.0), ground)
-    driver.follow(straight((0.0, 0.0, 0.0), 10.0))
+    driver.follow(arc((0.0, 0.0, 0.0), 0.0, 10.0))
     drive(driver, 9.0)
     assert driver.has_arrived
     assert driver.pose == pytest.approx((10.0, 0.0, 0.0), abs=1e-3)
@@ -69,12 +42,12 @@ def test_a_driver_stops_before_ground_that_another_holds_and_goes_on_when_it_is_
     ground = Ground()
     driver = Driver("a", CART, (0.0, 0.0, 0.0), ground)
     other = Driver("b", CART, (8.0, 0.5, 0.0), ground)
-    driver.follow(straight((0.0, 0.0, 0.0), 15.0))
+    driver.follow(arc((0.0, 0.0, 0.0), 0.0, 15.0))
     now_s = drive(driver, 8.0)
     assert driver.speed_mps == 0.0
     assert driver.held_since_s is not None
     assert 0.29 < distance_m(driver.ring_m, other.ring_m) < 1.6
-    other.follow(straight((8.0, 0.5, 0.0), 20.0))
+    other.follow(arc((8.0, 0.5, 0.0), 0.0, 20.0))
     while now_s < 22.0:
         now_s += DT_S
         other.step(now_s, DT_S)
@@ -87,8 +60,8 @@ def test_two_that_meet_head_on_both_stop_apart() -> None:
     ground = Ground()
     a = Driver("a", CART, (0.0, 0.0, 0.0), ground)
     b = Driver("b", CART, (16.0, 0.0, math.pi), ground)
-    a.follow(straight(a.pose, 15.0))
-    b.follow(straight(b.pose, 15.0))
+    a.follow(arc(a.pose, 0.0, 15.0))
+    b.follow(arc(b.pose, 0.0, 15.0))
     for step in range(500):
         a.step(step * DT_S, DT_S)
         b.step(step * DT_S, DT_S)
@@ -99,7 +72,7 @@ def test_two_that_meet_head_on_both_stop_apart() -> None:
 
 def test_a_pack_on_the_route_is_seen_and_stopped_for() -> None:
     driver = Driver("a", CART, (0.0, 0.0, 0.0), Ground())
-    driver.follow(straight((0.0, 0.0, 0.0), 15.0))
+    driver.follow(arc((0.0, 0.0, 0.0), 0.0, 15.0))
     now_s = drive(driver, 1.0)
     pack = rectangle(9.0, 0.2, 1.0, 1.0)
     driver.see(Masses([Mass("pack", pack)]))
@@ -113,14 +86,14 @@ def test_a_pack_on_the_route_is_seen_and_stopped_for() -> None:
 
 def test_a_pack_beside_the_route_is_not_in_the_way() -> None:
     driver = Driver("a", CART, (0.0, 0.0, 0.0), Ground())
-    driver.follow(straight((0.0, 0.0, 0.0), 15.0))
+    driver.follow(arc((0.0, 0.0, 0.0), 0.0, 15.0))
     driver.see(Masses([Mass("pack", rectangle(9.0, 1.2, 1.0, 1.0))]))
     assert driver.blocked_at_m == math.inf
 
 
 def test_the_predicted_state_is_the_one_that_comes() -> None:
     driver = Driver("a", CART, (0.0, 0.0, 0.0), Ground())
-    driver.follow(straight((0.0, 0.0, 0.0), 15.0))
+    driver.follow(arc((0.0, 0.0, 0.0), 0.0, 15.0))
     now_s = drive(driver, 1.0)
     state = driver.predicted(0.8)
     assert state is not None
@@ -132,19 +105,19 @@ def test_the_predicted_state_is_the_one_that_comes() -> None:
 def test_nothing_is_predicted_where_the_vehicle_stands_by_then() -> None:
     driver = Driver("a", CART, (0.0, 0.0, 0.0), Ground())
     assert driver.predicted(0.5) is None
-    driver.follow(straight((0.0, 0.0, 0.0), 2.0))
+    driver.follow(arc((0.0, 0.0, 0.0), 0.0, 2.0))
     drive(driver, 1.5)
     assert driver.predicted(1.5) is None
 
 
 def test_a_route_that_fits_is_taken_over_on_the_move() -> None:
     driver = Driver("a", CART, (0.0, 0.0, 0.0), Ground())
-    old = straight((0.0, 0.0, 0.0), 20.0)
+    old = arc((0.0, 0.0, 0.0), 0.0, 20.0)
     driver.follow(old)
     now_s = drive(driver, 1.5)
     state = driver.predicted(0.4)
     assert state is not None
-    new = straight(old.pose_at(state[0]), 12.0, from_mps=state[1], curvature=0.1)
+    new = arc(old.pose_at(state[0]), 0.1, 12.0, state[1])
     driver.take_over_later(new, state[0])
     came_of_it = None
     while came_of_it is None:
@@ -165,12 +138,12 @@ def test_a_route_that_begins_in_another_state_is_not_taken_over(
     offset_m: float, turned_rad: float, from_mps: float
 ) -> None:
     driver = Driver("a", CART, (0.0, 0.0, 0.0), Ground())
-    old = straight((0.0, 0.0, 0.0), 20.0)
+    old = arc((0.0, 0.0, 0.0), 0.0, 20.0)
     driver.follow(old)
     now_s = drive(driver, 3.0)
     x_m, y_m, heading_rad = old.pose_at(driver.at_m)
     start = (x_m, y_m + offset_m, heading_rad + turned_rad)
-    driver.take_over_later(straight(start, 12.0, from_mps), driver.at_m)
+    driver.take_over_later(arc(start, 0.0, 12.0, from_mps), driver.at_m)
     assert driver.step(now_s, DT_S) == "not fitting"
     assert driver.line is old
 
@@ -178,11 +151,11 @@ def test_a_route_that_begins_in_another_state_is_not_taken_over(
 def test_a_route_over_ground_that_another_holds_is_not_taken_over() -> None:
     ground = Ground()
     driver = Driver("a", CART, (0.0, 0.0, 0.0), ground)
-    old = straight((0.0, 0.0, 0.0), 20.0)
+    old = arc((0.0, 0.0, 0.0), 0.0, 20.0)
     driver.follow(old)
     now_s = drive(driver, 3.0)
     Driver("b", CART, advanced(driver.pose, 0.3, 3.5), ground)
-    new = straight(old.pose_at(driver.at_m), 12.0, driver.speed_mps, curvature=0.3)
+    new = arc(old.pose_at(driver.at_m), 0.3, 12.0, driver.speed_mps)
     driver.take_over_later(new, driver.at_m)
     assert driver.step(now_s, DT_S) == "not fitting"
     assert driver.line is old

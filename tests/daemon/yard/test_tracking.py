@@ -4,42 +4,19 @@ import math
 
 import numpy as np
 import pytest
+from tests.daemon.yard.lines import COLUMNS, table
 
 from bywayd.yard.shapes import Pose, advanced
 from bywayd.yard.tracking import Abilities, Line, next_step, steer
 
-COLUMNS = np.dtype(
-    [
-        *(("t_s", "f8"), ("x_m", "f8"), ("y_m", "f8"), ("heading_rad", "f8")),
-        *(("curvature_per_m", "f8"), ("speed_mps", "f8"), ("gear", "i1")),
-    ]
-)
 CAN = Abilities(
     speed_mps_max=3.0, acceleration_mps2=1.0, deceleration_mps2=1.5, curvature_per_m_max=0.4
 )
 DT_S = 0.02
 
 
-def table(
-    *pieces: tuple[float, float], start: Pose = (0.0, 0.0, 0.0), top_mps: float = 3.0
-) -> object:
-    """A route of arcs (curvature, signed length), rows 0.25 m apart, speeds from rest to rest."""
-    rows: list[tuple[float, ...]] = []
-    pose = start
-    for number, (curvature, signed_m) in enumerate(pieces):
-        gear = 1 if signed_m > 0 else -1
-        last = number == len(pieces) - 1
-        joins = not last and (pieces[number + 1][1] > 0) == (signed_m > 0)
-        count = math.ceil(abs(signed_m) / 0.25)
-        for k in range(count + (1 if last else 0)):
-            done_m = abs(signed_m) * k / count
-            left_m = math.inf if joins else abs(signed_m) - done_m
-            from_rest_m = done_m if not rows or not joins else math.inf
-            speed = min(top_mps, math.sqrt(2 * 1.0 * from_rest_m), math.sqrt(2 * 1.5 * left_m))
-            at = advanced(pose, curvature, gear * done_m)
-            rows.append((0.0, *at, curvature, gear * speed, 0 if last and k == count else gear))
-        pose = advanced(pose, curvature, signed_m)
-    return np.array([tuple(row) for row in rows], COLUMNS)
+def line_of(*pieces: tuple[float, float]) -> Line:
+    return Line(table(*pieces, top_mps=3.0, deceleration_mps2=1.5))
 
 
 def drive(
@@ -59,7 +36,7 @@ def drive(
 
 
 def test_a_line_knows_its_length_poses_and_stops() -> None:
-    line = Line(table((0.0, 5.0), (0.3, 4.0), (-0.3, -3.0), (0.0, 2.0)))
+    line = line_of((0.0, 5.0), (0.3, 4.0), (-0.3, -3.0), (0.0, 2.0))
     assert line.length_m == pytest.approx(14.0, abs=1e-9)
     assert line.stops_m == pytest.approx([9.0, 12.0, 14.0], abs=1e-9)
     corner = advanced((5.0, 0.0, 0.0), 0.3, 4.0)
@@ -73,13 +50,13 @@ def test_a_line_knows_its_length_poses_and_stops() -> None:
 
 
 def test_speed_between_rows_is_that_of_even_acceleration() -> None:
-    line = Line(table((0.0, 5.0)))
+    line = line_of((0.0, 5.0))
     assert line.speed_at(0.1) == pytest.approx(math.sqrt(2 * 1.0 * 0.1))
     assert line.speed_at(4.9) == pytest.approx(math.sqrt(2 * 1.5 * 0.1))
 
 
 def test_what_is_left_costs_reverse_and_changes_of_direction() -> None:
-    line = Line(table((0.0, 5.0), (0.1, -3.0), (0.0, 2.0)))
+    line = line_of((0.0, 5.0), (0.1, -3.0), (0.0, 2.0))
     assert line.cost_left(0.0, 1.0, 0.0) == pytest.approx(10.0)
     assert line.cost_left(0.0, 2.0, 4.0) == pytest.approx(5 + 6 + 2 + 8)
     assert line.cost_left(4.0, 2.0, 4.0) == pytest.approx(1 + 6 + 2 + 8)
@@ -99,7 +76,7 @@ def test_a_route_of_one_row_is_a_line_without_length() -> None:
 def test_a_vehicle_on_the_line_stays_on_it_and_stops_at_its_end(
     pieces: tuple[tuple[float, float], ...],
 ) -> None:
-    line = Line(table(*pieces))
+    line = line_of(*pieces)
     trace = drive(line, (0.0, 0.0, 0.0))
     offsets = [math.dist(pose[:2], line.pose_at(at_m)[:2]) for at_m, pose, _ in trace]
     # A jump of 0.4 per metre inside a step of 6 cm puts it off by 0.4 mm at most.
@@ -113,7 +90,7 @@ def test_a_vehicle_on_the_line_stays_on_it_and_stops_at_its_end(
 def test_a_vehicle_beside_the_line_comes_back_in_both_gears(
     gear: int, offset_m: float, turned_rad: float
 ) -> None:
-    line = Line(table((0.0, gear * 12.0)))
+    line = line_of((0.0, gear * 12.0))
     trace = drive(line, (0.0, offset_m, turned_rad))
     _, (_, y_m, heading_rad), _ = trace[-1]
     assert abs(y_m) < 0.01
@@ -122,7 +99,7 @@ def test_a_vehicle_beside_the_line_comes_back_in_both_gears(
 
 
 def test_speed_and_deceleration_stay_within_the_limits() -> None:
-    line = Line(table((0.0, 20.0)))
+    line = line_of((0.0, 20.0))
     speeds = [speed for _, _, speed in drive(line, (0.0, 0.0, 0.0))]
     changes = np.diff([0.0, *speeds]) / DT_S
     assert max(speeds) <= 3.0 + 1e-9
@@ -132,7 +109,7 @@ def test_speed_and_deceleration_stay_within_the_limits() -> None:
 
 @pytest.mark.parametrize("stop_at_m", [0.5, 3.7, 9.0, 14.0])
 def test_a_vehicle_stops_before_the_place_that_it_may_go_to(stop_at_m: float) -> None:
-    line = Line(table((0.0, 20.0)))
+    line = line_of((0.0, 20.0))
     reached_m = drive(line, (0.0, 0.0, 0.0), stop_at_m)[-1][0]
     assert stop_at_m - 0.002 <= reached_m <= stop_at_m + 1e-9
 
@@ -140,7 +117,7 @@ def test_a_vehicle_stops_before_the_place_that_it_may_go_to(stop_at_m: float) ->
 @pytest.mark.parametrize("going_m", [2.0, 6.0, 11.0])
 def test_a_stop_that_comes_at_full_speed_is_kept_when_braking_can_keep_it(going_m: float) -> None:
     """The permission shrinks to the braking distance at that moment, and is not overrun."""
-    line = Line(table((0.0, 30.0)))
+    line = line_of((0.0, 30.0))
     at_m = speed = 0.0
     while at_m < going_m:
         speed, moved_m = next_step(line, at_m, speed, math.inf, CAN, DT_S)
