@@ -31,6 +31,10 @@ END_M: Final = 1e-3
 END_RAD: Final = 1e-3
 #: Clearances are told up to this; farther is not looked for.
 CLEARANCE_TOLD_M: Final = 1.0
+#: How closely the depth of an overlap is found.
+DEPTH_M: Final = 1e-6
+#: Nobody's site is larger: what is not met by then is not there.
+NOWHERE_M: Final = 1e5
 #: What counts as standing, and as the start speed asked for.
 SPEED_MPS: Final = 1e-6
 
@@ -207,19 +211,26 @@ def _check_motion(
     start_overlap_m: float,
 ) -> None:
     need_m = max(clearance_m, NEED_M_MIN)
-    depth_m = _depth_allowed(body, start_overlap_m)
-    hull, drawn_in = _hull_of(body, TOLERANCE_M), _hull_of(body, depth_m + TOLERANCE_M)
+    hull = _drawn_in(body, TOLERANCE_M) or _whole(body)
+    depth_m = start_overlap_m
+    while (drawn_in := _drawn_in(body, depth_m + TOLERANCE_M)) is None:
+        # stricter, where an arm of the outline is too thin for what is allowed
+        depth_m = 0.5 * depth_m if depth_m > TOLERANCE_M else -TOLERANCE_M
     told_m = max(CLEARANCE_TOLD_M, need_m)
-    notes = _notes_for(solids, hull, told_m + depth_m)
+    notes = _notes_for(solids, hull, told_m + start_overlap_m)
     found = np.array([told_m, *[0.0] * 7])
     code = drive(solids, notes, hull, drawn_in, depth_m, rows, arcs, need_m, found)
+    if found[5] < 0.0 and code != FREE:  # an overlap is only told as such: how deep is it?
+        found[5] = _clearance(solids, body, *found[2:5].tolist()).distance_m
+        found[0] = min(max(found[0], -body.inner_radius_m), found[5])
     faults.clearance_m = min(float(found[0]) - TOLERANCE_M, CLEARANCE_TOLD_M)
     if code != FREE:
         faults.append(_collision(found, need_m))
 
 
 def _collision(found: Floats, need_m: float) -> Fault:
-    at_m, x_m, y_m, heading_rad, distance_m = (float(v) for v in found[1:6])
+    at_m, x_m, y_m, heading_rad, distance_m = found[1:6].tolist()
+    heading_rad = math.remainder(heading_rad, 2.0 * math.pi)
     kind, index = KINDS[int(found[6])], int(found[7])
     what = kind if index < 0 else f"{kind} {index}"
     near = "overlaps" if distance_m <= 0.0 else f"comes within {distance_m:.6f} m of"
@@ -231,7 +242,7 @@ def _collision(found: Floats, need_m: float) -> Fault:
         "x_m": x_m,
         "y_m": y_m,
         "heading_rad": heading_rad,
-        "distance_m": max(distance_m, -1.0) if distance_m < -1e6 else distance_m,
+        "distance_m": distance_m,
         "kind": kind,
         "index": index,
     }
@@ -251,29 +262,29 @@ def clearance_m(solids: Solids, vehicle: Checkable, pose: Pose) -> Nearest:
     x, y, heading = (float(v) for v in pose)
     if not (math.isfinite(x) and math.isfinite(y) and math.isfinite(heading)):
         raise ValueError(f"a pose must be finite, got {tuple(pose)}")
-    body = vehicle.body()
+    return _clearance(solids, vehicle.body(), x, y, heading)
+
+
+def _clearance(solids: Solids, body: Body, x: float, y: float, heading: float) -> Nearest:
     care_m = 1.0
     while True:
-        nearest = _nearest(solids, _hull_of(body, 0.0), x, y, heading, care_m)
-        if nearest.kind != "nothing" or care_m > 1e5:
+        nearest = _nearest(solids, _whole(body), x, y, heading, care_m)
+        if nearest.kind != "nothing":
             break
+        if care_m > NOWHERE_M:
+            return Nearest(math.inf, "nothing", -1)
         care_m *= 8.0
-    if nearest.kind == "nothing":
-        return Nearest(math.inf, "nothing", -1)
     if nearest.distance_m > 0.0:
         return nearest
     free_m, stuck_m = body.inner_radius_m, 0.0
-    for _ in range(30):
+    while free_m - stuck_m > DEPTH_M:
         half_m = 0.5 * (free_m + stuck_m)
-        outline_m, skin_m = _drawn_in(body, half_m)
-        if outline_m is None:
+        inner = _drawn_in(body, half_m)
+        found = None if inner is None else _nearest(solids, inner, x, y, heading, DEPTH_M)
+        if found is None or found.distance_m > 0.0:
             free_m = half_m
-            continue
-        inner = _nearest(solids, _hull(outline_m.tobytes(), skin_m), x, y, heading, 1e-3)
-        if inner.distance_m <= 0.0:
-            stuck_m, nearest = half_m, inner
         else:
-            free_m = half_m
+            stuck_m, nearest = half_m, found
     return Nearest(-free_m, nearest.kind, nearest.number)
 
 
@@ -287,43 +298,30 @@ def _nearest(
     return Nearest(float(found[5]), KINDS[int(found[6])], int(found[7]))
 
 
-def _depth_allowed(body: Body, start_overlap_m: float) -> float:
-    """`start_overlap_m`, or less where the outline cannot be drawn in so far."""
-    depth_m = start_overlap_m
-    while depth_m > TOLERANCE_M and _drawn_in(body, depth_m + TOLERANCE_M)[0] is None:
-        depth_m *= 0.5
-    return depth_m
+def _whole(body: Body) -> Hull:
+    return _hull(body.outline_m.tobytes(), body.skin_m)
 
 
-def _hull_of(body: Body, depth_m: float) -> Hull:
-    outline_m, skin_m = _drawn_in(body, depth_m)
-    if outline_m is None:
-        raise ValueError(f"the outline cannot be drawn in by {depth_m} m")
-    return _hull(outline_m.tobytes(), skin_m)
+def _drawn_in(body: Body, depth_m: float) -> Hull | None:
+    """The body with its skin, and then its edges, moved inwards; None where one turns round."""
+    from_skin_m = min(depth_m, body.skin_m)
+    moved = _mitred(body.outline_m.tobytes(), depth_m - from_skin_m)
+    return None if moved is None else _hull(moved, body.skin_m - from_skin_m)
 
 
 @functools.lru_cache(maxsize=256)
 def _hull(outline: bytes, skin_m: float) -> Hull:
-    outline_m = np.frombuffer(outline, np.float64).reshape(-1, 2)
+    outline_m = np.frombuffer(outline, np.float64).reshape(-1, 2)  # read-only, as kernels want
     return Hull(outline_m, skin_m, float(np.hypot(outline_m[:, 0], outline_m[:, 1]).max()))
 
 
-def _drawn_in(body: Body, depth_m: float) -> tuple[Floats | None, float]:
-    """The skin and then the edges of a body moved inwards; None where an edge turns round."""
-    from_skin_m = min(depth_m, body.skin_m)
-    outline_m = body.outline_m
-    rest_m = depth_m - from_skin_m
-    if rest_m <= 0.0:
-        return outline_m, body.skin_m - from_skin_m
-    if len(outline_m) < 3:
-        return None, 0.0
-    moved = _mitred(outline_m.tobytes(), rest_m)
-    return moved, 0.0
-
-
 @functools.lru_cache(maxsize=256)
-def _mitred(outline: bytes, depth_m: float) -> Floats | None:
+def _mitred(outline: bytes, depth_m: float) -> bytes | None:
+    if depth_m <= 0.0:
+        return outline
     outline_m = np.frombuffer(outline, np.float64).reshape(-1, 2)
+    if len(outline_m) < 3:
+        return None
     edges = np.roll(outline_m, -1, axis=0) - outline_m
     units = edges / np.hypot(edges[:, 0], edges[:, 1])[:, None]
     inward = np.column_stack([-units[:, 1], units[:, 0]])  # the outline is counter-clockwise
@@ -334,7 +332,7 @@ def _mitred(outline: bytes, depth_m: float) -> Floats | None:
         return None
     moved = outline_m + depth_m * (before + inward) / lean[:, None]
     kept = ((np.roll(moved, -1, axis=0) - moved) * units).sum(axis=1)
-    return np.ascontiguousarray(moved) if kept.min() > 0.0 else None
+    return moved.tobytes() if kept.min() > 0.0 else None
 
 
 def _notes_for(solids: Solids, hull: Hull, care_m: float) -> Notes:

@@ -131,7 +131,8 @@ def _creep_out(
     )
     top = distance - depth
     _report(found, 0.0, pose, top, kind, index)
-    found[0] = min(found[0], top)
+    if found[0] < 0.0:  # an overlap: by how much
+        found[0] = top
     if distance <= 0.0:
         return BLOCKED, 0.0
     s_m = 0.0
@@ -151,11 +152,13 @@ def _creep_out(
             _report(found, s_m, end, distance - depth, kind, index)
             if distance - depth < top - FALL_M:
                 return BLOCKED, 0.0
-            _, kind, index = stretch_clearance(
+            kept, kind, index = stretch_clearance(
                 solids, notes, near, body, end, (0.0, 0.0), need_m, True
             )
             if kind == NOTHING:
                 return FREE, s_m
+            if kept >= 0.0:
+                found[0] = min(found[0], kept)
             reached, _, _ = stretch_clearance(
                 solids, notes, near, drawn_in, end, (0.0, 0.0), care, False
             )
@@ -247,7 +250,6 @@ def drive(
     if distance < need:
         if rows.shape[0] == 1:
             return BLOCKED
-        found[0] = care
         code, from_m = _creep_out(solids, notes, (body, drawn_in), rows, arcs, (need, depth), found)
         if code == BLOCKED:
             return BLOCKED
