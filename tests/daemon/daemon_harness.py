@@ -21,10 +21,13 @@ ROOT = Path(__file__).resolve().parents[2]
 STANDIN = "tests.daemon.standin_skills"
 
 RUN = """
+import resource
 import sys
 from pathlib import Path
 from bywayd.runtime import serve
 from bywayd.settings import load
+if sys.argv[3]:
+    resource.setrlimit(resource.RLIMIT_NOFILE, (int(sys.argv[3]),) * 2)
 sys.exit(serve(load(Path(sys.argv[1])), skills=sys.argv[2]))
 """
 
@@ -58,6 +61,8 @@ class Daemon:
         workers: int = 2,
         environment: dict[str, str] | None = None,
         log_to: int | None = None,
+        new_group: bool = False,
+        descriptors_max: int | None = None,
     ) -> None:
         folder.mkdir(parents=True, exist_ok=True)
         self.folder = folder
@@ -66,10 +71,12 @@ class Daemon:
         self.settings_file.write_text(SETTINGS.format(folder=sockets, workers=workers))
         self.endpoints = {n: f"ipc://{sockets}/{n}" for n in ("requests", "updates", "events")}
         self.log_file = folder / "log.json"
+        command = [sys.executable, "-c", RUN]
         with self.log_file.open("ab") as log:
             self.process = subprocess.Popen(
-                [sys.executable, "-c", RUN, str(self.settings_file), skills],
+                [*command, str(self.settings_file), skills, str(descriptors_max or "")],
                 cwd=ROOT,
+                process_group=0 if new_group else None,
                 stderr=log if log_to is None else log_to,
                 stdout=subprocess.DEVNULL,
                 env={
@@ -82,7 +89,9 @@ class Daemon:
 
     def log_lines(self, event: str | None = None) -> list[dict[str, Any]]:
         """Return the log lines so far, or those of one event."""
-        lines = [json.loads(line) for line in self.log_file.read_text().splitlines()]
+        # The last one may be half written.
+        whole, _, _ = self.log_file.read_text().rpartition("\n")
+        lines = [json.loads(line) for line in whole.splitlines()]
         return [line for line in lines if event in (None, line["event"])]
 
     def family(self) -> dict[str, int]:

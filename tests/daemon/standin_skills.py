@@ -166,7 +166,8 @@ def _hang_with_a_route(job: Any, snapshot: Any, time_left_s: Any, on_better: Any
 def _once(job: Mapping[str, Any]) -> bool:
     """Whether this seed is met for the first time by any worker, as told by a file."""
     try:
-        os.close(os.open(f"{os.environ['STANDIN_ONCE']}-{job['seed']}", os.O_CREAT | os.O_EXCL))
+        mark = f"{os.environ['STANDIN_ONCE']}-{job['method']}-{job['seed']}"
+        os.close(os.open(mark, os.O_CREAT | os.O_EXCL))
     except FileExistsError:
         return False
     return True
@@ -191,7 +192,7 @@ def _wild(job: Any, snapshot: Any, time_left_s: Any, on_better: Any) -> Found:
 
 
 def _garbles(job: Any, snapshot: Any, time_left_s: Any, on_better: Any) -> Found:
-    for number in os.listdir("/proc/self/fd"):
+    for number in os.listdir("/proc/self/fd") if _once(job) else ():
         with contextlib.suppress(OSError):
             if stat.S_ISSOCK(os.fstat(int(number)).st_mode):
                 os.write(int(number), b"\xff" * 8)

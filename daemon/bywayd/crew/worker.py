@@ -21,8 +21,9 @@ from bywayd.crew.memory import SiteMemory
 from bywayd.crew.skills import Found, Refused, Skills
 
 #: From the end of the planner's time to the deadline of the job: a slice in progress (2 ms at
-#: most) and making and sending the last message.
+#: most) and making and sending the last message; but of a short job no more than this share.
 closing_time_ns: Final = 3_000_000
+closing_ratio_max: Final = 0.25
 
 #: How often the channel is looked at while a job runs. A look costs about 2 microseconds.
 look_every_ns: Final = 500_000
@@ -75,7 +76,8 @@ class Worker:
         self._channel.wait_put({"say": "alive"})
         now_ns = time.monotonic_ns()
         self._job = job["job"]
-        self._stop_ns = job["deadline_ns"] - closing_time_ns
+        left_ns = max(0, job["deadline_ns"] - now_ns)
+        self._stop_ns = job["deadline_ns"] - min(closing_time_ns, int(left_ns * closing_ratio_max))
         self._look_ns = now_ns
         self._alive_ns = now_ns + alive_every_ns
         try:

@@ -20,6 +20,7 @@ import structlog
 
 from bywayd.core import effects, events
 from bywayd.core.instants import SECOND_NS, Instant
+from bywayd.runtime.alarm import Alarm
 from bywayd.runtime.clock import SystemClock
 from bywayd.runtime.logs import LogWriter
 from bywayd.runtime.outside import Outside
@@ -65,6 +66,7 @@ class Loop:
         self._crew: Staff
         self._do: dict[type, Callable[[Any], None]]
         # -- owned by the thread that runs -------------------------------------------------------
+        self._alarm = Alarm()
         self._inbox: deque[events.Event] = deque()
         self._handling = False
         self._wake: Instant | None = None
@@ -126,10 +128,15 @@ class Loop:
         self._watch.add(outside.sockets["events"], outside.receive_subscriptions)
         for monitor in outside.doorman.monitors:
             self._watch.add(monitor, self._look_at_doors)
+        self._watch.add(self._alarm, self._tick_if_due)
         self._watch.add(signals, lambda: self._note_signals(signals))
         self.hand_in(events.Started(self._clock.wall_s()))
-        while self._stopped is None:
-            self._turn()
+        try:
+            while self._stopped is None:
+                self._turn()
+        finally:
+            self._watch.remove(self._alarm)
+            self._alarm.close()
         return self._stopped
 
     def _turn(self) -> None:
@@ -147,13 +154,12 @@ class Loop:
     def _wait_ms(self) -> int:
         if self._crew.backlog:
             return 0
-        due = self._vitals_at if self._wake is None else min(self._wake, self._vitals_at)
-        # Rounded up: a millisecond late costs less than a turn for nothing.
-        return -(-self._clock.now().until(due).ns // 1_000_000)
+        return -(-self._clock.now().until(self._vitals_at).ns // 1_000_000)
 
     def _tick_if_due(self) -> None:
         if self._wake is not None and self._clock.now() >= self._wake:
             self._wake = None
+            self._alarm.clear()
             self.hand_in(events.Tick())
 
     # -- events in --------------------------------------------------------------------------
@@ -260,6 +266,7 @@ class Loop:
 
     def _set_wake(self, effect: effects.Wake) -> None:
         self._wake = effect.at
+        self._alarm.set(self._clock.host_ns(effect.at))
 
     def _stop(self, effect: effects.Stop) -> None:
         self._stopped = effect.why

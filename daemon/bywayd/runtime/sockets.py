@@ -166,8 +166,8 @@ def connections_allowed(reserve: int = 200) -> int:
     Return how many peers may be connected at once, and raise the limit of descriptors first.
 
     libzmq ends the whole process when an ipc listener runs out of descriptors, and spins a
-    core when a TCP listener does. A quarter is kept for those that are accepted between two
-    looks, `reserve` for everything that is not a peer.
+    core when a TCP listener does. Half is kept for those that are accepted between two looks,
+    `reserve` for everything that is not a peer.
     """
     soft, hard = resource.getrlimit(resource.RLIMIT_NOFILE)
     if soft < hard:
@@ -176,4 +176,4 @@ def connections_allowed(reserve: int = 200) -> int:
             soft = hard
     if soft == resource.RLIM_INFINITY:
         soft = 1_000_000
-    return max(1, min(10_000, (soft - min(reserve, soft // 2)) * 3 // 4))
+    return max(1, min(10_000, (soft - min(reserve, soft // 2)) // 2))
