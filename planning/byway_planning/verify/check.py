@@ -216,7 +216,7 @@ def _check_motion(
     while (drawn_in := _drawn_in(body, depth_m + TOLERANCE_M)) is None:
         # stricter, where an arm of the outline is too thin for what is allowed
         depth_m = 0.5 * depth_m if depth_m > TOLERANCE_M else -TOLERANCE_M
-    told_m = max(CLEARANCE_TOLD_M, need_m)
+    told_m = max(CLEARANCE_TOLD_M + 2.0 * TOLERANCE_M, need_m)
     notes = _notes_for(solids, hull, told_m + start_overlap_m)
     found = np.array([told_m, *[0.0] * 7])
     code = drive(solids, notes, hull, drawn_in, depth_m, rows, arcs, need_m, found)

@@ -109,7 +109,8 @@ def _check_path(
         x, y, heading = driven(path[j, 0], path[j, 1], path[j, 2], path[j, 3], path[j, 4])
         way += abs(path[j, 4])
         while r < n - 1 and passed + 0.5 * abs(arcs[r]) < way:
-            if arcs[r] * path[j, 4] < 0.0 or rows[r, 4] != path[j, 3]:
+            other = arcs[r] * path[j, 4] < 0.0 or rows[r, 4] != path[j, 3]
+            if other and arcs[r] != 0.0:
                 _note(first, values, PATH, r, passed)
             passed += abs(arcs[r])
             r += 1
