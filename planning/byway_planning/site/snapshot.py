@@ -6,7 +6,7 @@ numbers, and is all that travels between processes. Views on the tables are made
 kept; nothing is copied but the few outlines that a request may leave out.
 """
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Hashable, Iterator, Mapping
 from dataclasses import asdict
 from typing import Any, Final, Literal, cast
 
@@ -64,6 +64,8 @@ class Snapshot:
             name: LayerSettings(unknown, outlines) for name, unknown, outlines in handle["layers"]
         }
         self._names = list(self._layers)
+        #: What others derive from this snapshot and want to find again; dies with it.
+        self.kept: dict[Hashable, object] = {}
         self._views: dict[str, Array] = {}
         self._scenes: dict[frozenset[str], Scene] = {}
         self._solids: dict[frozenset[str], Solids] = {}

@@ -1,0 +1,143 @@
+"""
+How a route has to begin, when it cannot begin freely.
+
+Two reasons: the vehicle moves, and keeps its gear until it could stop; or it stands nearer to an
+obstacle than its hard clearance (sensor noise, a dock), and may only get out of there. Both are
+answered with short opening motions from which the search then goes on.
+"""
+
+import math
+from typing import Final
+
+import numpy as np
+import numpy.typing as npt
+
+from byway_planning.collision import CONTACT_M, motion_reach, pose_excess
+from byway_planning.curves.word import advance
+from byway_planning.kernel import kernel
+from byway_planning.site.scene import Scene
+from byway_planning.vehicles.body import CAR, DISC, Body
+from byway_planning.vehicles.footprint import shrunk
+
+Floats = npt.NDArray[np.float64]
+
+#: An opening ends this much outside the hard clearance, so that the search has room to turn.
+ROOM_M: Final = 0.01
+STEP_M: Final = 0.01
+#: A clearance that grows may shrink by less than this between two steps (rounding).
+ROUNDING_M: Final = 1e-7
+
+
+@kernel(Scene, Body, Body, "f8", "rf8[::1]", "f8", "f8", "f8")
+def leave_kernel(
+    scene: Scene,
+    body: Body,
+    core: Body,
+    overlap: float,
+    pose: Floats,
+    curvature: float,
+    sign: float,
+    longest: float,
+) -> float:
+    """
+    How far to drive along an arc until the hard clearance is kept, or -1.
+
+    Args:
+        core: The body drawn in by `overlap`, without clearance: its distance, less the
+            overlap, is the signed distance of the body, which must not fall on the way.
+    """
+    best = -math.inf
+    at = 0.0
+    while at <= longest:
+        x, y, h = advance(pose[0], pose[1], pose[2], curvature, sign * at)
+        signed = pose_excess(scene, core, x, y, h) - overlap
+        if signed <= -overlap or signed < best - ROUNDING_M:
+            return -1.0
+        best = max(best, signed)
+        if pose_excess(scene, body, x, y, h) > CONTACT_M + ROOM_M:
+            return at
+        at += STEP_M
+    return -1.0
+
+
+@kernel(Scene, Body, "rf8[::1]", "f8", "f8")
+def reach_kernel(scene: Scene, body: Body, pose: Floats, curvature: float, length: float) -> float:
+    """`motion_reach` from a pose."""
+    return float(motion_reach(scene, body, pose[0], pose[1], pose[2], curvature, length))
+
+
+def _curvatures(body: Body) -> list[float]:
+    if body.kind == DISC:
+        return [0.0]
+    k = 1.0 / body.turn_radius_m
+    return [0.0, 0.5 * k, -0.5 * k, k, -k]
+
+
+def leaving(scene: Scene, body: Body, pose: Floats, overlap_m: float) -> list[Floats]:
+    """
+    Return opening paths (1, 5) out of a place that is too near to obstacles, shortest first.
+
+    Args:
+        overlap_m: How deep the body may overlap at the start.
+    """
+    core = _core_of(body, overlap_m)
+    longest = 2.0 * body.outer_radius_m + 2.0 * body.turn_radius_m
+    found: list[tuple[float, Floats]] = []
+    headings = [float(pose[2])]
+    if body.kind == DISC:
+        headings = [i * math.pi / 8 for i in range(16)]
+    for heading in headings:
+        at = np.array([pose[0], pose[1], heading])
+        at.flags.writeable = False
+        for k in _curvatures(body):
+            for sign in (1.0, -1.0) if body.kind == CAR else (1.0,):
+                length = float(leave_kernel(scene, body, core, overlap_m, at, k, sign, longest))
+                if length > 0.0:
+                    found.append((length, np.array([[*at, k, sign * length]])))
+    return [path for _, path in sorted(found, key=lambda entry: entry[0])]
+
+
+def _core_of(body: Body, overlap_m: float) -> Body:
+    if overlap_m == 0.0:
+        return body._replace(clearance_m=0.0)
+    if body.kind == DISC:
+        return body._replace(clearance_m=0.0, skin_m=body.skin_m - overlap_m)
+    outline = np.ascontiguousarray(shrunk(body.outline_m, overlap_m), np.float64)
+    outline.flags.writeable = False
+    return body._replace(
+        clearance_m=0.0, outline_m=outline, inner_radius_m=body.inner_radius_m - overlap_m
+    )
+
+
+def rolling(
+    scene: Scene, body: Body, pose: Floats, speed_mps: float, curvature_per_m: float, stop_m: float
+) -> list[Floats]:
+    """
+    Return opening paths (1, 5) along which a moving vehicle could still stop.
+
+    Args:
+        speed_mps: Signed. curvature_per_m: the steering as it stands, tried first.
+        stop_m: Distance in which the vehicle stops.
+    """
+    sign = 1.0 if speed_mps > 0.0 else -1.0
+    found = []
+    for k in dict.fromkeys([curvature_per_m, *_curvatures(body)]):
+        if reach_kernel(scene, body, pose, k, sign * stop_m) >= stop_m:
+            found.append(np.array([[*pose, k, sign * stop_m]]))
+    return found
+
+
+def end_of(path: Floats) -> Floats:
+    """Return the pose (3,) at the end of a path."""
+    x, y, h, k, length = (float(v) for v in path[-1])
+    end = np.array(end_kernel(x, y, h, k, length))
+    end.flags.writeable = False
+    return end
+
+
+@kernel("f8", "f8", "f8", "f8", "f8")
+def end_kernel(
+    x: float, y: float, heading: float, curvature: float, length: float
+) -> tuple[float, float, float]:
+    """`advance`, for callers outside the kernels."""
+    return advance(x, y, heading, curvature, length)

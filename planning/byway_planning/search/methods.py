@@ -1,0 +1,88 @@
+"""The search methods by name."""
+
+from collections.abc import Callable
+from typing import Final
+
+import numpy as np
+import numpy.typing as npt
+
+from byway_planning.search.lattice import (
+    STATES,
+    advance_lattice_kernel,
+    new_lattice,
+    path_of,
+    restart,
+)
+from byway_planning.search.method import Method
+from byway_planning.search.question import Question
+from byway_planning.search.race import FINE, NODES_MAX, Auto, scale_of
+from byway_planning.search.sampling import SAMPLERS
+from byway_planning.search.trees import ConnectedTrees, SingleTree
+
+
+class LatticeSearch:
+    """`lattice`: one weighted search from the start; ends with its first path."""
+
+    name = "lattice"
+
+    def __init__(self, question: Question, weight: float = 1.5) -> None:
+        self._q = question
+        self._lattice = new_lattice(4 * NODES_MAX)
+        cell_m, headings, arc_m = FINE
+        scale = scale_of(question)
+        restart(
+            self._lattice,
+            backward=False,
+            start=question.start,
+            goal=question.goal,
+            cell_m=cell_m * scale,
+            headings=headings,
+            arc_m=arc_m * scale,
+            weight=weight,
+            change_m=question.body.direction_change_m,
+        )
+
+    def advance(self, iterations: int) -> int:
+        q = self._q
+        return int(
+            advance_lattice_kernel(q.scene, q.body, self._lattice, q.to_goal, q.lengths, iterations)
+        )
+
+    def path(self) -> npt.NDArray[np.float64]:
+        return path_of(self._lattice, self._q.body)
+
+    @property
+    def states_checked(self) -> int:
+        return int(self._lattice.marks[STATES])
+
+
+#: Methods that a replan may name, and what they are good for.
+METHODS: Final[dict[str, str]] = {
+    "auto": "lattices from both ends, then other corridors and polishing; the best answers",
+    "lattice": "one weighted A* over position and heading; few changes of direction, no polishing",
+    "rrt": "one rapidly exploring tree; simple, explores everywhere, long detours",
+    "rrt_connect": "a tree from each end; finds ways that a lattice is too coarse for",
+}
+
+
+def make_method(name: str, question: Question, sampler: str | None) -> Method:
+    """
+    Make a search by its published name.
+
+    Args:
+        sampler: One of SAMPLERS, for the methods that sample; None for the method's own.
+
+    Raises:
+        ValueError: For an unknown name, or a sampler that the method has no use for.
+    """
+    if name not in METHODS:
+        raise ValueError(f"there is no method {name!r}; known: {', '.join(sorted(METHODS))}")
+    if sampler is not None and sampler not in SAMPLERS:
+        raise ValueError(f"there is no sampler {sampler!r}; known: {', '.join(sorted(SAMPLERS))}")
+    samplers: dict[str, Callable[..., Method]] = {"rrt": SingleTree, "rrt_connect": ConnectedTrees}
+    if name in samplers:
+        make = samplers[name]
+        return make(question) if sampler is None else make(question, sampler)
+    if sampler is not None:
+        raise ValueError(f"method {name!r} does not sample; leave the sampler out")
+    return Auto(question) if name == "auto" else LatticeSearch(question)
