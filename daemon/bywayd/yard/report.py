@@ -16,9 +16,8 @@ from bywayd.yard.world import World
 if TYPE_CHECKING:
     from rich.table import Table
 
-#: One delivery takes about a quarter of a minute and there are three vehicles; a run in which
-#: they get a quarter of that done has not gone well.
-SECONDS_PER_DELIVERY_MAX: Final = 20.0
+#: The three vehicles need about twelve seconds a delivery between them.
+SECONDS_PER_DELIVERY_MAX: Final = 15.0
 
 
 @dataclass(frozen=True)

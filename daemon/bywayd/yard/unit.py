@@ -154,6 +154,16 @@ class Unit:
         """Look at the packs on the yard; those that the route knows of are not in its way."""
         self.driver.see(Masses(pack.mass for pack in packs if pack.told_s >= self._known_s))
 
+    @property
+    def doing(self) -> str:
+        """What it does now, in a few words."""
+        where = (self._aside or self.goal).name
+        if self.pending is not None and self.pending.goes_on_at_m is None:
+            return f"asking the way to {where}"
+        if self.driver.line is None:
+            return "loading" if self._is_loaded else "unloading"
+        return f"held up on the way to {where}" if self.driver.held_since_s else f"to {where}"
+
     # -- time ------------------------------------------------------------------------------
 
     def step(self, packs: Iterable[Pack], now_s: float, dt_s: float) -> Ask | None:

@@ -97,6 +97,11 @@ class World:
                 unit.see(self.crane.packs)
 
     @property
+    def claims(self) -> Mapping[str, Claim]:
+        """What ground the vehicles claim now."""
+        return self._ground.claims
+
+    @property
     def deliveries(self) -> int:
         """How many loads have reached their place."""
         return sum(unit.tally.deliveries for unit in self.units.values())
