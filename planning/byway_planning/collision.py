@@ -1,12 +1,10 @@
 """
-Is there room for the body: at a pose, and all along a motion.
+Is there room for the body at a pose?
 
 Everything here is about the *excess*: how much farther than its hard clearance the body stays
 from every obstacle, never overstated. The distance field answers most questions; where it
-cannot decide, the outline is tested exactly against the items nearby. Motions are checked by
-conservative advancement (Mirtich 1996, common practice since): the excess at one pose proves
-the next stretch free, because no point of the body moves faster than a known rate, so nothing is
-missed between samples.
+cannot decide, the outline is tested exactly against the items nearby. `motion` asks the same
+along an arc.
 """
 
 import math
@@ -15,7 +13,6 @@ from typing import Final
 import numpy as np
 import numpy.typing as npt
 
-from byway_planning.curves.word import advance
 from byway_planning.kernel import kernel
 from byway_planning.site.scene import OPEN, SOLID, Scene
 from byway_planning.vehicles.body import Body
@@ -123,14 +120,15 @@ def segment_outline(outline: Points, ax: float, ay: float, bx: float, by: float)
 
 @kernel()
 def _item_distance(
-    body: Body,
+    outline: Points,
+    skin: float,
     box: tuple[float, float, float, float],
     pose: tuple[float, float, float, float],
     item: tuple[float, float, float, float, float],
     best: float,
 ) -> float:
     """
-    The smaller of `best` and the distance of a body at a pose to an item.
+    The smaller of `best` and the distance of an outline at a pose to an item.
 
     Args:
         box: Bounding box of the outline in its own frame: x_min, y_min, x_max, y_max.
@@ -138,7 +136,7 @@ def _item_distance(
         item: x0, y0, x1, y1, radius.
     """
     x, y, c, s = pose
-    grow = item[4] + body.skin_m
+    grow = item[4] + skin
     dx, dy = item[0] - x, item[1] - y
     ax, ay = c * dx + s * dy, c * dy - s * dx
     dx, dy = item[2] - x, item[3] - y
@@ -151,7 +149,7 @@ def _item_distance(
         or min(ay, by) > box[3] + reach
     ):
         return best
-    return min(best, segment_outline(body.outline_m, ax, ay, bx, by) - grow)
+    return min(best, segment_outline(outline, ax, ay, bx, by) - grow)
 
 
 @kernel()
@@ -164,19 +162,29 @@ def _outline_box(outline: Points) -> tuple[float, float, float, float]:
 
 
 @kernel()
-def _exact_raster(
-    scene: Scene, body: Body, x: float, y: float, c: float, s: float, best: float
+def exact_raster(
+    scene: Scene,
+    outline: Points,
+    skin: float,
+    x: float,
+    y: float,
+    c: float,
+    s: float,
+    best: float,
 ) -> float:
-    """The smaller of `best` and the distance of the body to the items in the buckets around."""
-    box = _outline_box(body.outline_m)
+    """
+    The smaller of `best` and the distance of an outline to the items around and to the limits.
+
+    Items farther than `best` are not looked at, so a small one makes a quick yes or no.
+    """
+    box = _outline_box(outline)
     pose = (x, y, c, s)
     wx0, wy0, wx1, wy1 = math.inf, math.inf, -math.inf, -math.inf
-    for i in range(body.outline_m.shape[0]):
-        px, py = body.outline_m[i, 0], body.outline_m[i, 1]
+    for i in range(outline.shape[0]):
+        px, py = outline[i, 0], outline[i, 1]
         wx, wy = x + c * px - s * py, y + s * px + c * py
         wx0, wx1 = min(wx0, wx), max(wx1, wx)
         wy0, wy1 = min(wy0, wy), max(wy1, wy)
-    skin = body.skin_m
     best = min(best, wx0 - skin - scene.x_m_min, wy0 - skin - scene.y_m_min)
     best = min(best, scene.x_m_max - wx1 - skin, scene.y_m_max - wy1 - skin)
     if best <= 0.0:
@@ -208,19 +216,34 @@ def _exact_raster(
                     scene.numbers[at + 3],
                     scene.numbers[at + 4],
                 )
-                best = _item_distance(body, box, pose, item, best)
+                best = _item_distance(outline, skin, box, pose, item, best)
                 if best <= 0.0:
                     return best
     return best
 
 
 @kernel()
-def _exact_outlines(
-    scene: Scene, body: Body, x: float, y: float, c: float, s: float, best: float
+def exact_outlines(
+    scene: Scene,
+    body: Body,
+    outline: Points,
+    x: float,
+    y: float,
+    c: float,
+    s: float,
+    reach: float,
+    best: float,
 ) -> float:
-    """The same for obstacles that are never rastered; a body inside one counts as overlap."""
-    box = _outline_box(body.outline_m)
+    """
+    The same for obstacles that are never rastered; a body inside one counts as overlap.
+
+    Args:
+        outline: The body's own, or what it sweeps.
+        reach: How far the outline goes beyond the disc around the body.
+    """
+    box = _outline_box(outline)
     pose = (x, y, c, s)
+    skin = body.skin_m
     ox = x + c * body.outer_x_m - s * body.outer_y_m
     oy = y + s * body.outer_x_m + c * body.outer_y_m
     ix = x + c * body.inner_x_m - s * body.inner_y_m
@@ -228,7 +251,7 @@ def _exact_outlines(
     for k in range(scene.outline_discs.shape[0]):
         disc = scene.outline_discs[k]
         away = math.hypot(disc[0] - ox, disc[1] - oy) - disc[2] - body.outer_radius_m
-        if away >= best:
+        if away - reach >= best:
             continue
         inside = False
         for i in range(scene.outline_starts[k], scene.outline_starts[k + 1]):
@@ -238,12 +261,59 @@ def _exact_outlines(
                 if ix < cut:
                     inside = not inside
             place = (item[0], item[1], item[2], item[3], item[4])
-            best = _item_distance(body, box, pose, place, best)
+            best = _item_distance(outline, skin, box, pose, place, best)
         if inside:
             return 0.0
         if best <= 0.0:
             return best
     return best
+
+
+@kernel()
+def _limit_distance(scene: Scene, x: float, y: float) -> float:
+    return min(min(x - scene.x_m_min, scene.x_m_max - x), min(y - scene.y_m_min, scene.y_m_max - y))
+
+
+@kernel()
+def quick_excess(
+    scene: Scene, body: Body, x: float, y: float, c: float, s: float, enough: float
+) -> float:
+    """
+    A lower bound of the excess at a pose from the distance field alone.
+
+    Above 0 it is proved room; -inf is a proved collision; anything else decides nothing.
+
+    Args:
+        enough: The disc around the body answers when it gives more than this; otherwise the
+            discs that cover it are asked.
+    """
+    hard = body.clearance_m
+    ox = x + c * body.outer_x_m - s * body.outer_y_m
+    oy = y + s * body.outer_x_m + c * body.outer_y_m
+    limit = _limit_distance(scene, ox, oy)
+    if limit <= 0.0:
+        return -math.inf
+    near = math.inf
+    for k in range(scene.outline_discs.shape[0]):
+        disc = scene.outline_discs[k]
+        near = min(near, math.hypot(disc[0] - ox, disc[1] - oy) - disc[2])
+    near -= body.outer_radius_m + hard
+    quick = min(free_around(scene, ox, oy), limit) - body.outer_radius_m - hard
+    if quick > enough:
+        return min(quick, near)
+    ix = x + c * body.inner_x_m - s * body.inner_y_m
+    iy = y + s * body.inner_x_m + c * body.inner_y_m
+    if field_at(scene, ix, iy) + RASTER_CELLS * scene.cell_m < body.inner_radius_m + hard:
+        return -math.inf
+    free = math.inf
+    for i in range(body.cover_m.shape[0]):
+        dx, dy = body.cover_m[i, 0], body.cover_m[i, 1]
+        px, py = x + c * dx - s * dy, y + s * dx + c * dy
+        around = min(free_around(scene, px, py), _limit_distance(scene, px, py))
+        free = min(free, around - body.cover_m[i, 2] - hard)
+        if free <= 0.0:
+            break
+    return min(max(free, quick), near)
 
 
 @kernel()
@@ -254,111 +324,33 @@ def pose_excess(scene: Scene, body: Body, x: float, y: float, heading: float) ->
     Exact when small, a lower bound when large; at most 0 in a collision (not its depth).
     """
     c, s = math.cos(heading), math.sin(heading)
-    ox = x + c * body.outer_x_m - s * body.outer_y_m
-    oy = y + s * body.outer_x_m + c * body.outer_y_m
-    hard = body.clearance_m
-    limit = min(
-        min(ox - scene.x_m_min, scene.x_m_max - ox), min(oy - scene.y_m_min, scene.y_m_max - oy)
-    )
-    if limit <= 0.0:
+    quick = quick_excess(scene, body, x, y, c, s, NEAR_M)
+    if quick > NEAR_M:
+        return quick
+    if quick == -math.inf:
         return 0.0
-    quick = min(free_around(scene, ox, oy), limit) - body.outer_radius_m - hard
-    if quick <= NEAR_M:
-        ix = x + c * body.inner_x_m - s * body.inner_y_m
-        iy = y + s * body.inner_x_m + c * body.inner_y_m
-        if field_at(scene, ix, iy) + RASTER_CELLS * scene.cell_m < body.inner_radius_m + hard:
-            return 0.0
-        quick = math.inf
-        for i in range(body.cover_m.shape[0]):
-            dx, dy = body.cover_m[i, 0], body.cover_m[i, 1]
-            px, py = x + c * dx - s * dy, y + s * dx + c * dy
-            limit = min(
-                min(px - scene.x_m_min, scene.x_m_max - px),
-                min(py - scene.y_m_min, scene.y_m_max - py),
-            )
-            free = min(free_around(scene, px, py), limit) - body.cover_m[i, 2]
-            if free < quick:
-                quick = free
-                if quick - hard <= NEAR_M:
-                    break
-        quick -= hard
-        if quick <= NEAR_M:
-            quick = _exact_raster(scene, body, x, y, c, s, hard + EXACT_M) - hard
-    if scene.outline_discs.shape[0] > 0 and quick > 0.0:
-        quick = _exact_outlines(scene, body, x, y, c, s, hard + quick) - hard
-    return quick
+    hard, outline = body.clearance_m, body.outline_m
+    best = exact_raster(scene, outline, body.skin_m, x, y, c, s, hard + EXACT_M)
+    if scene.outline_discs.shape[0] > 0 and best > 0.0:
+        best = exact_outlines(scene, body, outline, x, y, c, s, 0.0, best)
+    return best - hard
 
 
 @kernel()
-def fastest_point(body: Body, curvature: float) -> float:
-    """How far, at most, a point of the body moves while its origin moves one metre."""
-    fastest = 1.0
-    if curvature != 0.0:
-        for i in range(body.outline_m.shape[0]):
-            px, py = body.outline_m[i, 0], body.outline_m[i, 1]
-            fastest = max(fastest, math.hypot(1.0 - curvature * py, curvature * px))
-    return fastest
-
-
-@kernel()
-def motion_reach(
-    scene: Scene, body: Body, x: float, y: float, heading: float, curvature: float, length: float
-) -> float:
-    """
-    How far an arc can be driven, in metres of arc length >= 0, before contact.
-
-    The whole |length| when it is free. Both ends are checked.
-    """
-    total = abs(length)
-    sign = 1.0 if length >= 0.0 else -1.0
-    rate = fastest_point(body, curvature)
-    at = 0.0
-    while True:
-        px, py, ph = advance(x, y, heading, curvature, sign * at)
-        excess = pose_excess(scene, body, px, py, ph)
-        if excess <= CONTACT_M:
-            return at if at == 0.0 else min(at, total)
-        if at >= total:
-            return total
-        at = min(at + excess / rate, total)
-
-
-@kernel()
-def motion_free(
-    scene: Scene, body: Body, x: float, y: float, heading: float, curvature: float, length: float
-) -> bool:
-    """Is an arc free from end to end? The pose at its start is taken for checked."""
-    total = abs(length)
-    sign = 1.0 if length >= 0.0 else -1.0
-    rate = fastest_point(body, curvature)
-    at = 0.0
-    # The far end first: an obstacle is as likely there as anywhere, and children of a search
-    # share their start.
-    px, py, ph = advance(x, y, heading, curvature, length)
-    ahead = pose_excess(scene, body, px, py, ph)
-    if ahead <= CONTACT_M:
+def pose_free(scene: Scene, body: Body, x: float, y: float, heading: float) -> bool:
+    """Is the excess at a pose above CONTACT_M? The same answer as `pose_excess`, sooner."""
+    c, s = math.cos(heading), math.sin(heading)
+    quick = quick_excess(scene, body, x, y, c, s, CONTACT_M)
+    if quick > CONTACT_M:
+        return True
+    if quick == -math.inf:
         return False
-    total -= ahead / rate
-    px, py, ph = x, y, heading
-    while at < total:
-        excess = pose_excess(scene, body, px, py, ph)
-        if excess <= CONTACT_M:
-            return False
-        at += excess / rate
-        px, py, ph = advance(x, y, heading, curvature, sign * at)
-    return True
-
-
-@kernel()
-def segments_free(
-    scene: Scene, body: Body, x: float, y: float, heading: float, segments: Points, count: int
-) -> bool:
-    """Are the segments (curvature, signed length) of a curve free, driven from a pose?"""
-    for i in range(count):
-        if not motion_free(scene, body, x, y, heading, segments[i, 0], segments[i, 1]):
-            return False
-        x, y, heading = advance(x, y, heading, segments[i, 0], segments[i, 1])
-    return True
+    wanted, outline = body.clearance_m + CONTACT_M, body.outline_m
+    cap = wanted * (1.0 + 1e-12)
+    best = exact_raster(scene, outline, body.skin_m, x, y, c, s, cap)
+    if scene.outline_discs.shape[0] > 0 and best > wanted:
+        best = exact_outlines(scene, body, outline, x, y, c, s, 0.0, best)
+    return bool(best > wanted)
 
 
 @kernel(Scene, Body, "rf8[:, ::1]", "f8[::1]")

@@ -22,6 +22,7 @@ from byway_planning.search.floods import FloodGround
 from byway_planning.search.method import EXHAUSTED, FOUND, FULL
 from byway_planning.search.methods import make_method
 from byway_planning.search.question import Question, excess_kernel
+from byway_planning.search.workshop import Workshop, borrowed
 from byway_planning.site.site import Site
 from byway_planning.site.snapshot import Snapshot
 from byway_planning.vehicles.body import CAR, DISC, Body
@@ -185,11 +186,18 @@ def plan(
         on_better,
         began_s=time_left(),
     )
-    return _planned(run, method, sampler, gap_wanted, math.inf if work_max is None else work_max)
+    work = math.inf if work_max is None else work_max
+    with borrowed() as workshop:
+        return _planned(run, workshop, method, sampler, gap_wanted, work)
 
 
 def _planned(
-    run: _Run, method: str, sampler: str | None, gap_wanted: float, work_max: float
+    run: _Run,
+    workshop: Workshop,
+    method: str,
+    sampler: str | None,
+    gap_wanted: float,
+    work_max: float,
 ) -> Outcome:
     scene = run.snapshot.scene(run.left_out)
     blocked = _blockages(run, run.goal, 0.0)
@@ -224,7 +232,7 @@ def _planned(
     )
     for length_m, i in ranked:
         if length_m < math.inf and _searched(
-            run, questions[i], openings[i], method, sampler, gap_wanted, work_max
+            run, workshop, questions[i], openings[i], method, sampler, gap_wanted, work_max
         ):
             break
     if run.best is None:
@@ -234,6 +242,7 @@ def _planned(
 
 def _searched(
     run: _Run,
+    workshop: Workshop,
     question: Question,
     opening: Floats | None,
     method: str,
@@ -254,7 +263,7 @@ def _searched(
         run.offer(whole(direct))
         if good_enough():
             return True
-    search = make_method(method, question, sampler)
+    search = make_method(method, question, sampler, workshop)
     told = math.inf if run.best is None else run.best.cost
     newest: Floats | None = None
     work = 0

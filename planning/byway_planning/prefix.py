@@ -12,9 +12,10 @@ from typing import Final
 import numpy as np
 import numpy.typing as npt
 
-from byway_planning.collision import CONTACT_M, motion_reach, pose_excess
+from byway_planning.collision import CONTACT_M, pose_excess
 from byway_planning.curves.word import advance
 from byway_planning.kernel import kernel
+from byway_planning.motion import motion_reach
 from byway_planning.site.scene import Scene
 from byway_planning.vehicles.body import CAR, DISC, Body
 from byway_planning.vehicles.footprint import shrunk

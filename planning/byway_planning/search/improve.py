@@ -13,11 +13,12 @@ from typing import Final, NamedTuple
 import numpy as np
 import numpy.typing as npt
 
-from byway_planning.collision import CONTACT_M, pose_excess, segments_free
+from byway_planning.collision import pose_free
 from byway_planning.curves.steer import steer
 from byway_planning.curves.word import advance
 from byway_planning.dice import Dice, normal, uniform
 from byway_planning.kernel import describe, kernel
+from byway_planning.motion import segments_free
 from byway_planning.search.paths import (
     ELEMENTS_MAX,
     Course,
@@ -193,7 +194,7 @@ def _try_once(scene: Scene, body: Body, polish: Polish) -> bool:
         cost += _change_cost(body, last, course.rows[ib, 4])
     if cost >= before - GAIN_M or course.used[0] + 12 > ELEMENTS_MAX:
         return False
-    if n2 > 0 and pose_excess(scene, body, vx, vy, vh) <= CONTACT_M:
+    if n2 > 0 and not pose_free(scene, body, vx, vy, vh):
         return False
     h1 = _toward(body.kind, ax, ay, ah, vx, vy)
     if not segments_free(scene, body, ax, ay, h1, polish.first, n1):

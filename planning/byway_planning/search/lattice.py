@@ -14,10 +14,11 @@ from typing import Final, NamedTuple
 import numpy as np
 import numpy.typing as npt
 
-from byway_planning.collision import CONTACT_M, motion_free, pose_excess, segments_free
+from byway_planning.collision import pose_free
 from byway_planning.curves.steer import steer
 from byway_planning.curves.word import advance, wrap
 from byway_planning.kernel import describe, kernel
+from byway_planning.motion import motion_free, segments_free
 from byway_planning.search.floods import Flood, flood_m
 from byway_planning.search.heap import pop, push
 from byway_planning.search.lengths import Lengths, guessed_length
@@ -254,7 +255,7 @@ def _expand(
         if cost + knobs[TRUST] * ahead >= knobs[BOUND]:
             continue
         marks[STATES] += 1
-        if pose_excess(scene, body, cx, cy, ch) <= CONTACT_M:
+        if not pose_free(scene, body, cx, cy, ch):
             continue
         child = int(marks[NODES])
         lattice.poses[child, 0], lattice.poses[child, 1], lattice.poses[child, 2] = cx, cy, ch

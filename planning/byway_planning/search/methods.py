@@ -9,15 +9,15 @@ import numpy.typing as npt
 from byway_planning.search.lattice import (
     STATES,
     advance_lattice_kernel,
-    new_lattice,
     path_of,
     restart,
 )
 from byway_planning.search.method import Method
 from byway_planning.search.question import Question
-from byway_planning.search.race import FINE, NODES_MAX, Auto, scale_of
+from byway_planning.search.race import FINE, Auto, scale_of
 from byway_planning.search.sampling import SAMPLERS
 from byway_planning.search.trees import ConnectedTrees, SingleTree
+from byway_planning.search.workshop import Workshop
 
 
 class LatticeSearch:
@@ -25,9 +25,9 @@ class LatticeSearch:
 
     name = "lattice"
 
-    def __init__(self, question: Question, weight: float = 1.5) -> None:
+    def __init__(self, question: Question, workshop: Workshop, weight: float = 1.5) -> None:
         self._q = question
-        self._lattice = new_lattice(4 * NODES_MAX)
+        self._lattice = workshop.lattice()
         cell_m, headings, arc_m = FINE
         scale = scale_of(question)
         restart(
@@ -65,7 +65,7 @@ METHODS: Final[dict[str, str]] = {
 }
 
 
-def make_method(name: str, question: Question, sampler: str | None) -> Method:
+def make_method(name: str, question: Question, sampler: str | None, workshop: Workshop) -> Method:
     """
     Make a search by its published name.
 
@@ -85,4 +85,4 @@ def make_method(name: str, question: Question, sampler: str | None) -> Method:
         return make(question) if sampler is None else make(question, sampler)
     if sampler is not None:
         raise ValueError(f"method {name!r} does not sample; leave the sampler out")
-    return Auto(question) if name == "auto" else LatticeSearch(question)
+    return Auto(question, workshop) if name == "auto" else LatticeSearch(question, workshop)

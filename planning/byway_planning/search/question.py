@@ -6,10 +6,11 @@ from dataclasses import dataclass, field
 import numpy as np
 import numpy.typing as npt
 
-from byway_planning.collision import pose_excess, segments_free
+from byway_planning.collision import pose_excess
 from byway_planning.curves.steer import steer
 from byway_planning.curves.word import advance
 from byway_planning.kernel import kernel
+from byway_planning.motion import segments_free
 from byway_planning.search.floods import GUIDE_CELLS, PROOF_CELLS, Flood, FloodGround
 from byway_planning.search.lengths import Lengths, lengths_of
 from byway_planning.site.scene import Scene

@@ -14,14 +14,12 @@ from typing import Final
 import numpy as np
 import numpy.typing as npt
 
-from byway_planning.dice import new_dice
-from byway_planning.search.improve import IDLE, Polish, improve_kernel, new_polish
+from byway_planning.search.improve import IDLE, Polish, improve_kernel
 from byway_planning.search.lattice import (
     EXPANSIONS,
     STATES,
     Lattice,
     advance_lattice_kernel,
-    new_lattice,
     path_of,
     restart,
 )
@@ -29,11 +27,11 @@ from byway_planning.search.method import EXHAUSTED, FOUND, FULL, RUNNING
 from byway_planning.search.paths import cost_of, load_course_kernel, path_from
 from byway_planning.search.question import Question
 from byway_planning.search.trees import ConnectedTrees
+from byway_planning.search.workshop import Workshop
 from byway_planning.vehicles.body import DISC
 
 Floats = npt.NDArray[np.float64]
 
-NODES_MAX: Final = 250_000
 #: cell_m, headings, arc_m of the lattices, for a turning radius of 2 to 6 m.
 COARSE: Final = (1.0, 48, 1.6)
 FINE: Final = (0.5, 72, 0.8)
@@ -66,12 +64,13 @@ class Auto:
 
     name = "auto"
 
-    def __init__(self, question: Question) -> None:
+    def __init__(self, question: Question, workshop: Workshop) -> None:
         self._q = question
+        self._workshop = workshop
         self._lattices: list[Lattice] = []
         self._scale = scale_of(question)
-        self._polish = new_polish(new_dice(question.seed))
-        self._other = new_polish(new_dice(question.seed + 1))
+        self._polish = workshop.polish(question.seed)
+        self._other = workshop.polish(question.seed + 1)
         self._trees: ConnectedTrees | None = None
         self._winner_backward = False
         self._work = 0
@@ -128,7 +127,7 @@ class Auto:
             yield status
 
     def _lattice(self) -> Lattice:
-        self._lattices.append(new_lattice(NODES_MAX))
+        self._lattices.append(self._workshop.lattice())
         return self._lattices[-1]
 
     def _set_up(
@@ -177,7 +176,7 @@ class Auto:
                     lattice = self._lattice()
                     self._set_up(lattice, level, WEIGHT, backward=backward, change_m=change_m)
                     runners.append((lattice, backward))
-            for runner in list(runners):
+            for runner in tuple(runners):
                 lattice, backward = runner
                 status = self._advance(lattice, backward=backward, iterations=size)
                 if status == FOUND:
@@ -189,7 +188,7 @@ class Auto:
                     yield FOUND
                     return True
                 if status in (EXHAUSTED, FULL):
-                    runners.remove(runner)
+                    runners = [other for other in runners if other is not runner]
                 yield RUNNING
             size = min(int(size * SLICE_GROWTH), SLICE_MAX)
             if not runners and not waiting:

@@ -16,11 +16,12 @@ from typing import Final, NamedTuple
 import numpy as np
 import numpy.typing as npt
 
-from byway_planning.collision import CONTACT_M, fastest_point, pose_excess
+from byway_planning.collision import CONTACT_M, pose_excess
 from byway_planning.curves.steer import steer
 from byway_planning.curves.word import advance
 from byway_planning.dice import Dice, new_dice, normal, uniform
 from byway_planning.kernel import describe, kernel
+from byway_planning.motion import fastest_point
 from byway_planning.search.floods import UNREACHED, Flood, flood_m
 from byway_planning.search.method import FOUND, FULL, RUNNING
 from byway_planning.search.neighbours import NodeGrid, clear, insert, nearest_k_grid, new_grid

@@ -357,7 +357,9 @@ class SiteModel:
             model.put(layer, name, shape)
         for name, owner in model._layers.items():
             for corner, cells in snapshot.cells(name):
-                tile = model._tiles_in(*corner, corner[0] + 1e-6, corner[1] + 1e-6)[0]
+                # By its middle: a corner belongs to its neighbours as well.
+                x, y = (c + snapshot.settings.tile_m / 2 for c in corner)
+                tile = model._tiles_in(x, y, x, y)[0]
                 owner.cells[tile] = cells.copy()
                 model._dirty.add(tile)
                 model._dirty_cells.add((name, tile))
