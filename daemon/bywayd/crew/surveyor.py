@@ -130,10 +130,18 @@ class Surveyor:
         return None
 
     def _describe(self, site: SiteKeeping, message: Mapping[str, Any]) -> None:
-        fields, packed = site.describe(message["question"])
-        self._channel.wait_put(
-            {"say": "site", "ticket": message["ticket"], "fields": fields, "packed": packed}
-        )
+        told: dict[str, Any]
+        try:
+            fields, packed = site.describe(message["question"])
+            told = {"fields": fields, "packed": packed}
+        except Refused as refused:
+            told = {"refusal": _refusal(0, refused)}
+        except Exception as fault:
+            # Somebody wants to look at the site; that must not cost it its keeper.
+            self._channel.wait_put({"say": "trouble", "text": traceback.format_exc()})
+            text = f"the site could not be described: {type(fault).__name__}"
+            told = {"refusal": _refusal(0, Refused("internal", text))}
+        self._channel.wait_put({"say": "site", "ticket": message["ticket"], **told})
 
     def _sign_of_life(self) -> None:
         now_s = time.monotonic()

@@ -15,6 +15,7 @@ import zmq
 from zmq.utils.monitor import parse_monitor_message
 
 from bywayd.runtime.entrances import Entrance
+from bywayd.runtime.sockets import can_read
 
 _watched: Final = zmq.EVENT_ACCEPTED | zmq.EVENT_DISCONNECTED | zmq.EVENT_ACCEPT_FAILED
 _room_again: Final = 0.9
@@ -61,7 +62,7 @@ class Doorman:
         """Take note of who came and went, act on it, and tell whether the entrances moved."""
         looked = 0
         for monitor in self.monitors:
-            while looked < events_per_turn_max and _has_news(monitor):
+            while looked < events_per_turn_max and can_read(monitor):
                 self._note(parse_monitor_message(monitor.recv_multipart(zmq.DONTWAIT))["event"])
                 looked += 1
         if self.is_open and self.peers >= self.peers_max:
@@ -96,8 +97,3 @@ class Doorman:
             sock.disable_monitor()
         for monitor in self.monitors:
             monitor.close()
-
-
-def _has_news(monitor: "zmq.Socket[bytes]") -> bool:
-    events: int = monitor.getsockopt(zmq.EVENTS)  # type: ignore[assignment]
-    return bool(events & zmq.POLLIN)

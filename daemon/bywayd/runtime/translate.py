@@ -75,10 +75,15 @@ def _snapshot_ready(number: int, message: Message) -> events.Event:
 
 
 def _site_described(number: int, message: Message) -> events.Event:
+    ticket = int(message["ticket"])
+    if "refusal" in message:
+        told = message["refusal"]
+        error = messages.ErrorMessage(
+            code=str(told["code"]), text=str(told["text"]), facts=dict(told["facts"])
+        )
+        return events.SiteDescribed(number, ticket, error, b"")
     described = frames.build(messages.SiteIs, message["fields"])
-    return events.SiteDescribed(
-        number, int(message["ticket"]), described, _bytes(message["packed"])
-    )
+    return events.SiteDescribed(number, ticket, described, _bytes(message["packed"]))
 
 
 _Maker: TypeAlias = Callable[[int, Message], events.Event]

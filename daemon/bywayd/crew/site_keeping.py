@@ -1,0 +1,195 @@
+"""
+The site as the surveyor keeps it: changes as they came over the wire, made in a `SiteModel`.
+
+Everything from outside is in the coordinates of the sources; the model is in the site's own
+frame. The difference, `origin_m`, is taken off and put back here.
+"""
+
+from collections.abc import Callable, Iterator, Mapping
+from functools import partial
+from mmap import mmap
+from typing import Any, Final
+
+from byway import messages, obstacles
+from byway.errors import BywayError
+from byway.packed import read
+from byway_planning.site import (
+    DiscShape,
+    LayerSettings,
+    Memory,
+    PolygonShape,
+    Shape,
+    SiteError,
+    SiteModel,
+    SiteSettings,
+    Snapshot,
+)
+from bywayd.crew.site_tables import describe
+from bywayd.crew.skills import Published, Refused
+
+#: Metres around the origin for a site without limits: every revision has tables of all tiles,
+#: 100 kB for this, so "no limits" cannot be taken at its word.
+limits_m_if_none: Final = 250.0
+
+#: Obstacles checked between two signs of life; one takes some 50 microseconds.
+shapes_per_pause: Final = 200
+
+#: What the site finds wrong, in the words of the protocol. The site's own word is in the facts.
+_CODES: Final[Mapping[str, str]] = {
+    "crossing_polygon": "bad_geometry",
+    "too_few_vertices": "bad_geometry",
+    "not_finite": "bad_geometry",
+    "bad_cells": "bad_geometry",
+    "bad_radius": "bad_geometry",
+    "outside_limits": "outside_limits",
+    "too_large": "too_large",
+    "unknown_layer": "unknown_layer",
+    "outlines_only": "conflict",
+    "layer_mismatch": "conflict",
+}
+
+
+class SiteKeeper:
+    """Owns the model; see `bywayd.crew.skills.SiteKeeping`."""
+
+    def __init__(self, model: SiteModel) -> None:
+        self._model = model
+        #: Ids in each layer.
+        self._ids: dict[str, set[str]] = {}
+
+    def remember(self, snapshot: Snapshot) -> None:
+        """Take note of what is in a snapshot that the model was recovered from."""
+        self._ids = {layer: set() for layer in snapshot.layers()}
+        for layer, obstacle_id, _ in snapshot.obstacles():
+            self._ids[layer].add(obstacle_id)
+
+    # -- changes ----------------------------------------------------------------------------
+
+    def apply(self, change: Mapping[str, Any]) -> Iterator[None]:
+        """Make one change whole, or raise Refused and make nothing of it."""
+        try:
+            yield from self._apply(change)
+        except SiteError as fault:
+            facts = {"layer": change["layer"], "problem": fault.code, **fault.facts}
+            raise Refused(_CODES[fault.code], fault.text, facts) from fault
+        except BywayError as fault:
+            raise Refused(
+                fault.code, fault.text, {"layer": change["layer"], **fault.facts}
+            ) from fault
+
+    def _apply(self, change: Mapping[str, Any]) -> Iterator[None]:
+        what, layer = change["what"], change["layer"]
+        # All checks come before the first change: it is made whole or not at all.
+        shapes: dict[str, Shape] = {}
+        if what in ("put", "replace"):
+            for obstacle_id, shape in self._shapes(change):
+                shapes[obstacle_id] = shape
+                if len(shapes) % shapes_per_pause == 0:
+                    yield
+        self._model.declare(layer, LayerSettings(**change["settings"]))
+        ids = self._ids.setdefault(layer, set())
+        if what == "replace":
+            self._model.clear(layer)
+            ids.clear()
+        for obstacle_id, shape in shapes.items():
+            self._model.put(layer, obstacle_id, shape)
+            ids.add(obstacle_id)
+        for obstacle_id in change["ids"]:
+            self._model.drop(layer, obstacle_id)
+            ids.discard(obstacle_id)
+        if what == "patch":
+            self._patch(layer, messages.Patch(layer=layer, **_fields(change)), change["packed"])
+
+    def _shapes(self, change: Mapping[str, Any]) -> Iterator[tuple[str, Shape]]:
+        model = messages.Put if change["what"] == "put" else messages.ReplaceLayer
+        message = model(layer=change["layer"], **_fields(change))
+        found = obstacles.unpack_shapes(message, change["packed"])
+        ox, oy = self._model.settings.origin_m
+        for obstacle_id, ring in found.polygons.items():
+            yield self._shape(obstacle_id, partial(PolygonShape, ring - (ox, oy)))
+        for obstacle_id, (x_m, y_m, radius_m) in found.discs.items():
+            yield self._shape(obstacle_id, partial(DiscShape, x_m - ox, y_m - oy, radius_m))
+
+    def _shape(self, obstacle_id: str, make: Callable[[], Shape]) -> tuple[str, Shape]:
+        """Return a shape that the site will take. Raises SiteError, with the id in it."""
+        try:
+            shape = make()
+            self._check_inside(shape)
+        except SiteError as fault:
+            text = f"{obstacle_id}: {fault.text}"
+            raise SiteError(fault.code, text, id=obstacle_id, **fault.facts) from fault
+        return obstacle_id, shape
+
+    def _check_inside(self, shape: Shape) -> None:
+        """Raise SiteError unless some of the shape lies within the limits of the site."""
+        x0, y0, x1, y1 = shape.box_m
+        a0, b0, a1, b1 = self._model.settings.limits_m
+        if x1 < a0 or x0 > a1 or y1 < b0 or y0 > b1:
+            ox, oy = self._model.settings.origin_m
+            raise SiteError(
+                "outside_limits",
+                "lies outside the limits of the site",
+                box_m=[x0 + ox, y0 + oy, x1 + ox, y1 + oy],
+                limits_m=[a0 + ox, b0 + oy, a1 + ox, b1 + oy],
+            )
+
+    def _patch(self, layer: str, message: messages.Patch, packed: bytes) -> None:
+        cells = read(message.columns["cells"], packed)
+        x_m, y_m = message.corner_m
+        ox, oy = self._model.settings.origin_m
+        self._model.patch(layer, (x_m - ox, y_m - oy), message.cell_m, cells)
+
+    # -- the rest ---------------------------------------------------------------------------
+
+    def publish(self) -> Published:
+        snapshot = self._model.publish()
+        return Published(snapshot.revision, snapshot.handle)
+
+    def release_before(self, revision: int) -> None:
+        self._model.release_before(revision)
+
+    def obstacles(self) -> dict[str, int]:
+        return {layer: len(ids) for layer, ids in self._ids.items()}
+
+    def describe(self, question: Mapping[str, Any]) -> tuple[dict[str, Any], bytes]:
+        return describe(self._model.publish(), question)
+
+
+def _fields(change: Mapping[str, Any]) -> dict[str, Any]:
+    return {name: value for name, value in change["message"].items() if name != "layer"}
+
+
+def new_site(settings: Mapping[str, Any], memory: mmap, grow: Callable[[int], None]) -> SiteKeeper:
+    """Return an empty site in this memory, with the layers of the settings declared."""
+    model = SiteModel(site_settings(settings["site"]), Memory.over(memory, grow))
+    keeper = SiteKeeper(model)
+    for name, layer in settings["layers"].items():
+        model.declare(name, LayerSettings(**layer))
+        keeper._ids[name] = set()
+    return keeper
+
+
+def recover_site(
+    settings: Mapping[str, Any],
+    memory: mmap,
+    grow: Callable[[int], None],
+    handle: Mapping[str, Any],
+    in_use: list[Mapping[str, Any]],
+) -> SiteKeeper:
+    """Return the site of a snapshot that a surveyor published before it died."""
+    shared = Memory.over(memory, grow)
+    keeper = SiteKeeper(SiteModel.recover(shared, dict(handle), [dict(each) for each in in_use]))
+    keeper.remember(Snapshot.attach(shared, dict(handle)))
+    return keeper
+
+
+def site_settings(told: Mapping[str, Any]) -> SiteSettings:
+    """Return the settings of the model for those of the file, in the site's own frame."""
+    ox, oy = told["origin_m"]
+    if told["limits_m"] is None:
+        reach = limits_m_if_none
+        limits_m = (-reach, -reach, reach, reach)
+    else:
+        x0, y0, x1, y1 = told["limits_m"]
+        limits_m = (x0 - ox, y0 - oy, x1 - ox, y1 - oy)
+    return SiteSettings(limits_m, told["cell_m"], (ox, oy))
