@@ -28,7 +28,7 @@ from typing import Literal, TypeAlias
 
 from byway import frames
 from byway.errors import SenderFault
-from byway.messages import SiteIs
+from byway.messages import ErrorMessage, SiteIs
 from byway.packed import Bytes
 
 #: What planning came to. Names as in the protocol; an outcome is never an error.
@@ -235,11 +235,11 @@ class SnapshotReady:
 
 @dataclass(frozen=True, slots=True)
 class SiteDescribed:
-    """The answer to one `DescribeSite`: goes to the asker as it is."""
+    """The answer to one `DescribeSite`, or why there is none: goes to the asker as it is."""
 
     surveyor: int
     ticket: int
-    message: SiteIs
+    message: SiteIs | ErrorMessage
     packed: Bytes
 
 
