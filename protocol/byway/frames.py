@@ -224,7 +224,7 @@ _VALUE_PROBLEMS: Final = frozenset(
 
 def _fault_of(exc: ValidationError) -> SenderFault:
     first = exc.errors(include_url=False, include_context=False)[0]
-    field = ".".join(str(part) for part in first["loc"]) or "body"
+    field = ".".join(str(part)[:80] for part in first["loc"]) or "body"
     value = first["input"] if isinstance(first["input"], str | int | float) else None
     facts = {"field": field, "problem": first["type"]}
     shown = "" if value is None else f" (got {str(value)[:80]!r})"

@@ -11,10 +11,10 @@ The models hold what is in the body of a message. What names and addresses it is
 
 from typing import Annotated, Any, ClassVar, Final, TypeAlias
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StringConstraints
+from pydantic import BaseModel, ConfigDict, Field, StringConstraints
 
 from byway import limits
-from byway.packed import Columns
+from byway.packed import Column, Columns
 
 # -- values ---------------------------------------------------------------------------------
 
@@ -50,14 +50,7 @@ Pose: TypeAlias = tuple[Metres, Metres, Heading]
 Box: TypeAlias = tuple[Metres, Metres, Metres, Metres]
 
 
-def _bytes_as_they_are(value: object) -> object:
-    # A view of the frame would keep the whole frame alive and cannot be compared or hashed.
-    return bytes(value) if isinstance(value, memoryview) else value
-
-
-Blob: TypeAlias = Annotated[
-    bytes, BeforeValidator(_bytes_as_they_are), Field(strict=True, max_length=limits.body_bytes_max)
-]
+Blob: TypeAlias = Annotated[bytes, Field(strict=True, max_length=limits.reply_bytes_max)]
 #: A value of `facts`, `statistics` and `settings`.
 Fact: TypeAlias = Any
 
@@ -289,7 +282,7 @@ class SiteIs(Reply):
     origin_m: tuple[Real, Real] = (0.0, 0.0)
     limits_m: tuple[Real, Real, Real, Real] | None = None
     layers: list[LayerIs]
-    columns: dict[str, Any]
+    columns: dict[str, Column]
 
 
 class VehicleIs(BaseModel):
