@@ -183,6 +183,10 @@ def gear_at_the_end(table: Table) -> None:
     table["gear"][-1] = 1
 
 
+def back_at_the_end(table: Table) -> None:
+    table["speed_mps"][-1] = -1e-3
+
+
 def bent_row(table: Table) -> None:
     table["curvature_per_m"][-1] = 0.21
 
@@ -196,16 +200,17 @@ def bent_row(table: Table) -> None:
         (no_time, "time", 9),
         (wrong_gear, "gear", 5),
         (unknown_gear, "gear", 5),
-        (gear_at_the_end, "gear", None),
-        (bent_row, "curvature", None),
+        (gear_at_the_end, "gear", -1),
+        (bent_row, "curvature", -1),
+        (back_at_the_end, "gear", -2),
     ],
 )
-def test_an_edited_table_is_faulted(edit: Edit, code: str, row: int | None) -> None:
+def test_an_edited_table_is_faulted(edit: Edit, code: str, row: int) -> None:
     case = the_car()
     edit(case.table)
     faults = {fault.code: fault for fault in case.check()}
     assert code in faults
-    assert faults[code].facts["row"] == (len(case.table) - 1 if row is None else row)
+    assert faults[code].facts["row"] == range(len(case.table))[row]
     assert str(faults[code].facts["row"]) in faults[code].text
 
 
@@ -348,6 +353,13 @@ def test_a_table_that_does_not_end_standing_is_faulted() -> None:
 def test_a_table_is_that_of_its_path(pieces: list[tuple[float, float]]) -> None:
     case = the_car()
     path, _ = path_of(START, pieces)
+    assert [fault.code for fault in case.check(path=path)] == ["path_mismatch"]
+
+
+def test_a_circle_the_other_way_round_is_another_path() -> None:
+    """Both begin and end at the same pose, after the same way."""
+    case = driven_by(car(), [(0.0, 2.0), (0.2, 10.0 * math.pi)])
+    path, _ = path_of(START, [(0.0, 2.0), (-0.2, 10.0 * math.pi)])
     assert [fault.code for fault in case.check(path=path)] == ["path_mismatch"]
 
 

@@ -199,6 +199,65 @@ def test_a_bend_swings_the_front_corner_out() -> None:
     assert codes(driven(solids_of(discs=[nearer]), car(), pieces)) == ["collides"]
 
 
+def test_nothing_hides_where_a_bend_bulges() -> None:
+    """
+    Between its ends a stretch reaches farther out than at them: here a clearance of a
+    millimetre was met before, so that little else is looked at, and then a post stands in the
+    way of the outer front corner, anywhere on its circle.
+    """
+    out_m = math.hypot(3.5, 5.0 + 0.95)
+    begin = math.atan2(-5.95, 3.5)
+    grazed = (0.0, 0.95 + 0.001 + 0.2, 0.2)  # on the inner side, at the start
+    for ahead_rad in np.linspace(0.3, 1.2, 19):
+        for inside_m, expected in ((-0.0005, []), (0.03, ["collides"])):
+            away_m = out_m + 0.05 - inside_m
+            angle = begin + ahead_rad
+            post = (away_m * math.cos(angle), 5.0 + away_m * math.sin(angle), 0.05)
+            faults = driven(solids_of(discs=[grazed, post]), car(), [(0.2, 7.0)])
+            assert codes(faults) == expected
+            if not expected:
+                assert faults.clearance_m == pytest.approx(0.0005, abs=2e-6)
+
+
+@pytest.mark.parametrize("side", range(4))
+def test_the_limits_are_kept_in_the_middle_of_a_bend(side: int) -> None:
+    out_m = math.hypot(3.5, 5.0 + 0.95)
+    circle = [-out_m, 5.0 - out_m, out_m, 5.0 + out_m]
+    limits = list(EVERYWHERE)
+    limits[side] = circle[side] + (-0.15 if side < 2 else 0.15)
+    faults = driven(solids_of(limits=limits), car(), [(0.2, 5.0 * 2.0 * math.pi)])
+    assert faults == []
+    assert faults.clearance_m == pytest.approx(0.15, abs=2e-6)
+
+
+@pytest.mark.parametrize("angle", np.linspace(-3.0, 3.0, 7))
+def test_a_vehicle_may_turn_round_and_round_between_two_rows(angle: float) -> None:
+    """Its turning radius is so small that one row's way is more than a circle."""
+    vehicle = car(
+        footprint_m=[(-0.1, -0.1), (0.1, -0.1), (0.1, 0.1), (-0.1, 0.1)],
+        turn_radius_m_min=0.03,
+        lateral_acceleration_mps2_max=900.0,
+    )
+    far_m = math.hypot(0.1, 0.1 + 0.03)
+    for gap_m, expected in ((0.001, []), (-0.001, ["collides"])):
+        away_m = far_m + 0.2 + gap_m
+        post = (away_m * math.cos(angle), 0.03 + away_m * math.sin(angle), 0.2)
+        faults = driven(solids_of(discs=[post]), vehicle, [(1.0 / 0.03, 2.0)])
+        assert codes(faults) == expected
+
+
+def test_a_clearance_may_be_wider_than_the_one_that_is_told() -> None:
+    path, goal = line_of([(0.0, 0.0), (9.0, 0.0)])
+    for gap_m, expected in ((2.001, []), (1.999, ["collides"])):
+        vehicle = disc(radius_m=0.5, clearance_m=2.0)
+        route = make_route(path, vehicle)
+        post = (12.0 * 0.5, 0.5 + gap_m + 0.1, 0.1)
+        wall = [(4.0, 0.5 + gap_m), (5.0, 0.5 + gap_m), (5.0, 9.0), (4.0, 9.0)]
+        for solids in (solids_of([wall]), solids_of(discs=[post])):
+            faults = verify(solids, vehicle, path, route, path[0, :3], goal)
+            assert codes(faults) == expected
+
+
 # -- containment -----------------------------------------------------------------------------
 
 
@@ -348,6 +407,23 @@ def test_along_a_wall_the_clearance_may_stay_what_it_was() -> None:
     assert 3.4 < fault.at_s_m < 3.52
 
 
+@pytest.mark.parametrize(("third_m", "expected"), [(0.07, []), (0.04, ["collides"])])
+def test_on_the_way_out_what_was_gained_is_not_given_back(
+    third_m: float, expected: list[str]
+) -> None:
+    vehicle = car(clearance_m=0.1, start_overlap_m=0.05)
+    walls = [
+        [(a, 0.95 + gap), (b, 0.95 + gap), (b, 4.0), (a, 4.0)]
+        for a, b, gap in ((-2.0, 0.5, 0.03), (0.6, 8.0, 0.06), (12.0, 13.0, third_m))
+    ]
+    # the first is passed after 1.5 m, and then 6 cm are kept when the third one comes
+    faults = driven(solids_of(walls), vehicle, [(0.0, 16.0)])
+    assert codes(faults) == expected
+    if expected:
+        assert faults[0].facts["index"] == 2
+        assert faults[0].at_s_m == pytest.approx(8.5, abs=0.07)
+
+
 def test_once_out_the_clearance_holds_again() -> None:
     vehicle = car(clearance_m=0.1, start_overlap_m=0.05)
 
@@ -455,12 +531,18 @@ def test_blocked_cells_are_squares(part: int) -> None:
     assert 2 <= blocked <= 10 * 3
 
 
-def test_a_wall_of_cells_is_passed_at_its_true_distance() -> None:
-    cells = np.zeros((40, 130), np.uint8)
-    cells[0:10, 20:100] = 1  # its upper edge is at y = -2 + 1
+@pytest.mark.parametrize("upright", [False, True])
+def test_a_wall_of_cells_is_passed_at_its_true_distance(upright: bool) -> None:
+    """Along it, a stretch sees neither of its ends."""
+    cells = np.zeros((40, 330), np.uint8)
+    cells[0:10, 5:325] = 1  # its face is 1 m from the corner
     for above_m, expected in ((0.96, []), (0.9499, ["collides"])):
-        solids = solids_of(cells=cells, cell_m=0.1, corner_m=(0.0, -1.0 - above_m))
-        faults = driven(solids, car(), STRAIGHT)
+        corner = (-10.0, -1.0 - above_m)
+        start = (0.0, 0.0, 0.0)
+        if upright:
+            corner, start = corner[::-1], (0.0, 0.0, math.pi / 2)
+        solids = solids_of(cells=cells.T if upright else cells, cell_m=0.1, corner_m=corner)
+        faults = driven(solids, car(), STRAIGHT, start)
         assert codes(faults) == expected
         if not expected:
             assert faults.clearance_m == pytest.approx(above_m - 0.95, abs=2e-6)

@@ -69,12 +69,10 @@ def swept_box(outline: Floats, traces: Floats, bend: Any, curvature: float) -> A
 
 
 @kernel()
-def edge_distance(hull: Hull, traces: Floats, bend: Any, edge: Any, ends: Any) -> float:
+def edge_distance(hull: Hull, traces: Floats, bend: Any, edge: Any, with_first: bool) -> float:
     """
-    Distance of the moving outline from one edge of an obstacle.
-
-    `ends` tells which of the edge's own ends are to be looked at from the body: an end that
-    two edges share is looked at once.
+    Distance of the moving outline from an edge: from its inside, its second end and, if asked
+    for, its first. In a ring the first end is the second one of the edge before.
     """
     outline = hull.outline_m
     n = outline.shape[0]
@@ -84,10 +82,9 @@ def edge_distance(hull: Hull, traces: Floats, bend: Any, edge: Any, ends: Any) -
         best = min(best, trace_to_segment(bend, outline[i, 0], outline[i, 1], trace, edge))
     if n > 1:
         px, py, qx, qy = edge
-        if ends[0]:
+        best = min(best, point_distance(hull, bend, qx, qy))
+        if with_first:
             best = min(best, point_distance(hull, bend, px, py))
-        if ends[1]:
-            best = min(best, point_distance(hull, bend, qx, qy))
     return best
 
 
@@ -132,7 +129,7 @@ def edge_if_near(
     bend: Any,
     box: Any,
     edge: Any,
-    ends: Any,
+    with_first: bool,
     care: float,
     standing: bool,
 ) -> Any:
@@ -146,7 +143,7 @@ def edge_if_near(
         return np.inf
     if standing and edge_overlaps(hull.outline_m, edge):
         return OVERLAP_M
-    return edge_distance(hull, traces, bend, edge, ends) - hull.skin_m
+    return edge_distance(hull, traces, bend, edge, with_first) - hull.skin_m
 
 
 @kernel()
@@ -163,16 +160,12 @@ def polygon_distance(
     best = np.inf
     dx, dy = solids.vertices_m[last - 1, 0] - x, solids.vertices_m[last - 1, 1] - y
     px, py = c * dx + s * dy, c * dy - s * dx
-    seen = False  # whether the edge's first end was looked at as the last end of the one before
     for i in range(first, last):
         dx, dy = solids.vertices_m[i, 0] - x, solids.vertices_m[i, 1] - y
         qx, qy = c * dx + s * dy, c * dy - s * dx
         edge = (px, py, qx, qy)
-        distance = edge_if_near(
-            hull, traces, bend, box, edge, (not seen, True), min(care, best), standing
-        )
-        seen = distance < np.inf
-        best = min(best, distance)
+        near = min(care, best)
+        best = min(best, edge_if_near(hull, traces, bend, box, edge, False, near, standing))
         px, py = qx, qy
     return best
 

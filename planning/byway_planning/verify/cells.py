@@ -38,7 +38,7 @@ def _run_distance(
     qx = solids.corner_x_m + run[3] * solids.cell_m - x
     qy = solids.corner_y_m + run[2] * solids.cell_m - y
     edge = (c * px + s * py, c * py - s * px, c * qx + s * qy, c * qy - s * qx)
-    return edge_if_near(hull, notes.traces, bend, box, edge, (True, True), care, standing)
+    return edge_if_near(hull, notes.traces, bend, box, edge, True, care, standing)
 
 
 @kernel()
