@@ -8,11 +8,12 @@ that somebody did not want the answer any more. A repeat of the request gets the
 from __future__ import annotations
 
 from byway import frames, messages
+from byway.frames import Header
 from byway.messages import AnswerMessage, ErrorMessage, OutcomeIs
 from byway.packed import Bytes
-from bywayd.core.answers import Answers
+from bywayd.core.answers import Answered, Answers
 from bywayd.core.docket import Act, Docket, Held
-from bywayd.core.events import Outcome
+from bywayd.core.events import Outcome, Peer
 from bywayd.core.front_settings import FrontSettings
 from bywayd.core.health import Health
 from bywayd.core.instants import Duration, Instant
@@ -37,11 +38,10 @@ class Answering:
         # -- state -----------------------------------------------------------------------------
         #: Every replan that was taken in and has no answer yet, by request id.
         self.open: dict[str, Docket] = {}
-        self.answers = Answers(
-            settings.answers_max,
-            settings.answers_bytes_max,
-            Duration.of_s(settings.answers_kept_s),
-        )
+        keep = Duration.of_s(settings.answers_kept_s)
+        self.answers = Answers(settings.answers_max, settings.answers_bytes_max, keep)
+        #: The same for requests that were not taken in; a flood of those must not push out answers.
+        self.refusals = Answers(settings.answers_max, settings.answers_bytes_max, keep)
         #: A running mean of how long a job holds its worker.
         self._hold_s = 0.0
         self._workers = settings.workers
@@ -50,6 +50,18 @@ class Answering:
         """Promise an answer."""
         invariant(docket.id not in self.open, "a request is taken in once")
         self.open[docket.id] = docket
+
+    def refuse(
+        self, peer: Peer, header: Header, body: bytes, refusal: ErrorMessage, now: Instant
+    ) -> None:
+        """Tell why a request is not taken in."""
+        self._health.count(f"refused_{refusal.code}_total")
+        self.refusals.keep(header.id, body, refusal, 0, b"", now)
+        self._outbox.reply(peer, header, refusal)
+
+    def known(self, id: str) -> Answered | None:
+        """Return what ended this request, if that is remembered."""
+        return self.answers.get(id) or self.refusals.get(id)
 
     def note_hold(self, held: Duration) -> None:
         """Take note of how long a job has held its worker."""
@@ -66,7 +78,7 @@ class Answering:
         del self.open[docket.id]
         size = len(message.outcome) if isinstance(message, AnswerMessage) else 0
         self.answers.keep(docket.id, docket.body, message, size, packed, now)
-        self._outbox.reply(docket.peer, docket.id, message, packed, traceparent=docket.traceparent)
+        self._outbox.reply(docket.peer, docket.header, message, packed)
         self._take_stock(docket, message, now)
 
     def _message(
@@ -151,6 +163,7 @@ class Answering:
     def check(self) -> None:
         """Stop with a `Defect` if somebody could wait for ever, or be answered twice."""
         self.answers.check()
+        self.refusals.check()
         for id, docket in self.open.items():
             invariant(id == docket.id, "open replans are known by their id")
             invariant(docket.phase != "answered", "who was answered is closed", docket.story)

@@ -21,6 +21,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Final, Literal, TypeAlias
 
+from byway.frames import Header
 from byway.messages import Replan
 from bywayd.core.events import Outcome, Peer
 from bywayd.core.instants import Duration, Instant
@@ -138,13 +139,13 @@ class Docket:
     """One replan. `move` is the only method that changes its phase."""
 
     # -- fixed ---------------------------------------------------------------------------------
-    id: str
     ask: Replan
     #: The body as it came, to tell a repeat from a conflict.
     body: bytes
     times: Times
     seed: int
-    traceparent: str
+    #: That of the request, for its replies.
+    header: Header
     #: Tries that are granted: a job that kills its workers must not go through the whole crew.
     attempts_max: int
     #: What must be left for another try.
@@ -169,6 +170,11 @@ class Docket:
     failure: tuple[str, str, Mapping[str, object]] | None = None
     #: What happened, newest last, for error messages.
     story: deque[str] = field(default_factory=lambda: deque(maxlen=50))
+
+    @property
+    def id(self) -> str:
+        """The id of the request."""
+        return self.header.id
 
     def move(self, move: Move, now: Instant) -> Act:
         """Go where the table says, and return what is to be done."""

@@ -143,28 +143,28 @@ class Front:
     def _change(self, peer: Peer, came: frames.Received, now: Instant) -> None:
         if self._stop_why:
             # Not taken in, so not acknowledged: the source sends it again, to our successor.
-            self.outbox.error(peer, came.header.id, "stopping", "the daemon is on its way out")
+            self.outbox.error(peer, came.header, "stopping", "the daemon is on its way out")
         else:
             self.ledger.take(peer, came, now)
 
     def _request(self, peer: Peer, came: frames.Received, now: Instant) -> None:
-        id, message = came.header.id, came.message
+        header, message = came.header, came.message
         match message:
             case messages.Replan():
                 self.intake.replan(peer, came, message, now)
             case messages.Cancel() | messages.Finish():
-                self.intake.end(peer, id, message, now)
+                self.intake.end(peer, header, message, now)
             case messages.Site():
-                self.intake.site(peer, id, message)
+                self.intake.site(peer, header, message)
             case messages.Vehicles():
-                self.intake.vehicles(peer, id)
+                self.intake.vehicles(peer, header)
             case messages.Health():
-                self.outbox.reply(peer, id, reports.health(self, now))
+                self.outbox.reply(peer, header, reports.health(self, now))
             case messages.Hello():
-                self.outbox.reply(peer, id, reports.welcome(self, message, now))
+                self.outbox.reply(peer, header, reports.welcome(self, message, now))
             case _:
                 text = f"{message.kind} is no request"
-                self.outbox.error(peer, id, "unknown_kind", text, {"kind": message.kind})
+                self.outbox.error(peer, header, "unknown_kind", text, {"kind": message.kind})
 
     def _unreadable(self, event: events.Unreadable, now: Instant) -> None:
         self.health.count("unreadable_total")
@@ -175,8 +175,7 @@ class Front:
             and self.ledger.take_fault(peer, fault, now)
         ):
             return
-        id = "" if fault.header is None else fault.header.id
-        self.outbox.reply(peer, id, frames.error_message(fault))
+        self.outbox.reply(peer, fault.header, frames.error_message(fault))
 
     def _undeliverable(self, event: events.Undeliverable, now: Instant) -> None:
         self.health.count("undeliverable_total")

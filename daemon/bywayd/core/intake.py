@@ -9,7 +9,7 @@ all checks have passed.
 from __future__ import annotations
 
 from byway import frames, messages
-from byway.messages import Accepted, Noted, VehicleIs, VehiclesAre
+from byway.messages import Accepted, ErrorMessage, Noted, VehicleIs, VehiclesAre
 from bywayd.core.answering import Answering
 from bywayd.core.dispatch import Dispatch
 from bywayd.core.docket import Docket, times_of
@@ -18,7 +18,7 @@ from bywayd.core.front_settings import FrontSettings
 from bywayd.core.health import Health
 from bywayd.core.instants import Duration, Instant
 from bywayd.core.ledger import Ledger
-from bywayd.core.outbox import Outbox
+from bywayd.core.outbox import Outbox, error_of
 from bywayd.core.roster import Roster
 from bywayd.core.snapshots import Snapshots
 from bywayd.core.surveying import Surveying
@@ -82,9 +82,7 @@ class Intake:
         self._health.count("replans_total")
         refused = self._why_not(header, ask)
         if refused is not None:
-            code, text, facts, retry_after_s = refused
-            self._health.count(f"refused_{code}_total")
-            self._outbox.error(peer, header.id, code, text, facts, retry_after_s=retry_after_s)
+            self._answering.refuse(peer, header, came.body, refused, now)
             return
         settings = self._settings
         times = times_of(
@@ -96,75 +94,76 @@ class Intake:
         )
         self._serial += 1
         docket = Docket(
-            id=header.id,
+            header=header,
             ask=ask,
             body=came.body,
             times=times,
             seed=spread(self._seed, self._serial) if ask.seed is None else ask.seed,
-            traceparent=header.traceparent,
             attempts_max=settings.attempts_max,
             retry_left_min=Duration.of_s(settings.retry_left_min_s),
             peer=peer,
         )
         revision = self._snapshots.revision
         accepted = Accepted(unit=ask.unit, budget_s=ask.budget_s, revision=revision)
-        self._outbox.reply(peer, header.id, accepted, traceparent=header.traceparent)
+        self._outbox.reply(peer, header, accepted)
         self._dispatch.enter(docket, now)
 
     def _is_repeat(self, peer: Peer, came: frames.Received, now: Instant) -> bool:
         id = came.header.id
         docket = self._answering.open.get(id)
-        answered = self._answering.answers.get(id)
+        answered = self._answering.known(id)
         known = docket or answered
         if known is None:
             return False
         if known.body != came.body:
             self._health.count("conflicts_total")
             text = f"request {id} was asked before with another body"
-            self._outbox.error(peer, id, "conflict", text)
+            self._outbox.error(peer, came.header, "conflict", text)
             return True
         self._health.count("repeats_total")
         if docket is not None:
             # The answer goes to where the asker is now.
             docket.peer = peer
         if answered is not None:
-            traceparent = came.header.traceparent
-            self._outbox.reply(peer, id, answered.message, answered.packed, traceparent=traceparent)
+            self._outbox.reply(peer, came.header, answered.message, answered.packed)
         return True
 
-    def _why_not(
-        self, header: frames.Header, ask: messages.Replan
-    ) -> tuple[str, str, dict[str, object], float | None] | None:
-        """Return why a replan cannot be taken in: code, text, facts, when to try again."""
+    def _why_not(self, header: frames.Header, ask: messages.Replan) -> ErrorMessage | None:
+        """Return why a replan cannot be taken in, the reasons that stay before those that pass."""
+        settings = self._settings
         if self.stopping:
-            return "stopping", "the daemon is on its way out", {}, None
+            return error_of("stopping", "the daemon is on its way out")
         if header.epoch and header.epoch != self._outbox.epoch:
             text = "the daemon was started again since; the site may not be complete yet"
-            return "new_epoch", text, {"epoch": self._outbox.epoch}, None
-        if ask.vehicle not in self._settings.vehicles:
-            known = sorted(self._settings.vehicles)
+            return error_of("new_epoch", text, {"epoch": self._outbox.epoch})
+        if ask.vehicle not in settings.vehicles:
+            known = sorted(settings.vehicles)
             text = f"no vehicle is called {ask.vehicle}"
-            return "unknown_vehicle", text, {"vehicle": ask.vehicle, "vehicles": known}, None
+            return error_of("unknown_vehicle", text, {"vehicle": ask.vehicle, "vehicles": known})
+        if ask.budget_s > settings.budget_max_s:
+            text = f"budget_s is {ask.budget_s}, the most is {settings.budget_max_s}"
+            return error_of("bad_value", text, {"field": "budget_s", "value": ask.budget_s})
         for name in ask.leave_out:
-            layer = self._ledger.layers.get(name)
-            if layer is None or not layer.is_visible:
-                text = f"the site has no layer {name}"
-                return "unknown_layer", text, {"layer": name}, None
-            if not layer.flags.outlines_only:
-                text = f"layer {name} holds more than outlines and cannot be left out"
-                return "bad_value", text, {"field": "leave_out", "layer": name}, None
-        budget_max_s = self._settings.budget_max_s
-        if ask.budget_s > budget_max_s:
-            text = f"budget_s is {ask.budget_s}, the most is {budget_max_s}"
-            facts: dict[str, object] = {"field": "budget_s", "value": ask.budget_s}
-            return "bad_value", text, facts, None
+            refused = self._why_not_leave_out(name)
+            if refused is not None:
+                return refused
         if not self.is_warm:
-            return "warming", "the daemon is not ready yet", {}, self._settings.warming_retry_s
+            text = "the daemon is not ready yet"
+            return error_of("warming", text, retry_after_s=settings.warming_retry_s)
         if self._dispatch.room.of_unit(ask.unit) is None and not self._dispatch.has_room:
             waiting = len(self._dispatch.room)
-            text = f"{waiting} replans wait for {self._settings.workers} workers already"
+            text = f"{waiting} replans wait for {settings.workers} workers already"
             retry_after_s = self._answering.retry_after_s(waiting)
-            return "overloaded", text, {"waiting": waiting}, retry_after_s
+            return error_of("overloaded", text, {"waiting": waiting}, retry_after_s)
+        return None
+
+    def _why_not_leave_out(self, name: str) -> ErrorMessage | None:
+        layer = self._ledger.layers.get(name)
+        if layer is None or not layer.is_visible:
+            return error_of("unknown_layer", f"the site has no layer {name}", {"layer": name})
+        if not layer.flags.outlines_only:
+            text = f"layer {name} holds more than outlines and cannot be left out"
+            return error_of("bad_value", text, {"field": "leave_out", "layer": name})
         return None
 
     @property
@@ -173,7 +172,11 @@ class Intake:
         return self._snapshots.current is not None and self._workers.was_ready
 
     def end(
-        self, peer: Peer, id: str, wanted: messages.Cancel | messages.Finish, now: Instant
+        self,
+        peer: Peer,
+        header: frames.Header,
+        wanted: messages.Cancel | messages.Finish,
+        now: Instant,
     ) -> None:
         """Cancel or finish what a client names."""
         if wanted.replan is not None:
@@ -184,39 +187,39 @@ class Intake:
         if not found:
             facts: dict[str, object] = {"replan": wanted.replan, "unit": wanted.unit}
             text = f"no replan is open under {wanted.replan or wanted.unit}"
-            self._outbox.error(peer, id, "unknown_request", text, facts)
+            self._outbox.error(peer, header, "unknown_request", text, facts)
             return
         for docket in found:
             if isinstance(wanted, messages.Cancel):
                 self._dispatch.cancel(docket, now)
             else:
                 self._dispatch.finish(docket, now)
-        self._outbox.reply(peer, id, Noted(replans=[docket.id for docket in found]))
+        self._outbox.reply(peer, header, Noted(replans=[docket.id for docket in found]))
 
     # -- the rest ------------------------------------------------------------------------------
 
-    def site(self, peer: Peer, id: str, wanted: messages.Site) -> None:
+    def site(self, peer: Peer, header: frames.Header, wanted: messages.Site) -> None:
         """Have the site described."""
         for name in wanted.layers or ():
             if self._ledger.layers.get(name) is None:
                 text = f"the site has no layer {name}"
-                self._outbox.error(peer, id, "unknown_layer", text, {"layer": name})
+                self._outbox.error(peer, header, "unknown_layer", text, {"layer": name})
                 return
         if self.stopping:
-            self._outbox.error(peer, id, "stopping", "the daemon is on its way out")
+            self._outbox.error(peer, header, "stopping", "the daemon is on its way out")
         elif self._snapshots.current is None:
             retry = self._settings.warming_retry_s
             text = "the daemon is not ready yet"
-            self._outbox.error(peer, id, "warming", text, retry_after_s=retry)
-        elif not self._surveying.ask(peer, id, wanted):
+            self._outbox.error(peer, header, "warming", text, retry_after_s=retry)
+        elif not self._surveying.ask(peer, header, wanted):
             text = "too many descriptions of the site are being made"
             retry = self._settings.warming_retry_s
-            self._outbox.error(peer, id, "overloaded", text, retry_after_s=retry)
+            self._outbox.error(peer, header, "overloaded", text, retry_after_s=retry)
 
-    def vehicles(self, peer: Peer, id: str) -> None:
+    def vehicles(self, peer: Peer, header: frames.Header) -> None:
         """Tell which vehicles there are."""
         known = [
             VehicleIs(vehicle=name, model=vehicle.model, settings=dict(vehicle.settings))
             for name, vehicle in self._settings.vehicles.items()
         ]
-        self._outbox.reply(peer, id, VehiclesAre(vehicles=known))
+        self._outbox.reply(peer, header, VehiclesAre(vehicles=known))

@@ -1,9 +1,9 @@
 """
 The layers of the site: what each is, who owns it, and for how long.
 
-Only its owner may change a layer. A claim may carry a lease: an owner that says nothing for so
-long loses the layer, but what it put there stays, for obstacles do not go away because a sensor
-has fallen silent; whoever claims the layer next takes it over as it is.
+Only its owner may change a layer. A claim may carry a lease: nobody else can have the layer until
+its owner has said nothing for so long. What an owner put there stays when it is gone, for obstacles
+do not go away because a sensor has fallen silent; whoever claims the layer next takes it over.
 """
 
 from __future__ import annotations
@@ -94,8 +94,8 @@ class Layers:
         """
         Give a layer to a source, making it if there is none of that name.
 
-        Flags that are None stay as they are; for a new layer they are off. Without a lease the
-        layer is kept until somebody drops the claim.
+        An owner without a lease loses it to whoever claims it next; one with a lease keeps it.
+        Flags that are None stay as they are; for a new layer they are off.
         """
         layer = self._layers.get(name)
         if layer is None:
@@ -104,7 +104,7 @@ class Layers:
                 return No("too_large", text, {"layers_max": self._count_max})
             layer = Layer(name, LayerFlags(bool(unknown_blocks), bool(outlines_only)))
             self._layers[name] = layer
-        elif layer.owner not in (None, source):
+        elif layer.owner not in (None, source) and layer.lease is not None:
             return self._not_owner(layer)
         for flag, told in (("unknown_blocks", unknown_blocks), ("outlines_only", outlines_only)):
             is_so = getattr(layer.flags, flag)
@@ -124,6 +124,8 @@ class Layers:
         layer = self._layers.get(name)
         if layer is not None and layer.owner == source:
             return layer
+        if layer is not None and layer.owner is not None:
+            return self._not_owner(layer)
         return self.claim(source, name, None, None, None, now)
 
     def _not_owner(self, layer: Layer) -> No:

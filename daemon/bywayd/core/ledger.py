@@ -138,7 +138,7 @@ class Ledger:
             self._health.count("sources_refused_total")
             text = f"{len(self.sources)} sources have changes under way, no more can be taken"
             retry = self._settings.resend_every_s
-            self._outbox.error(peer, header.id, "overloaded", text, retry_after_s=retry)
+            self._outbox.error(peer, header, "overloaded", text, retry_after_s=retry)
             return None
         if header.epoch and header.epoch != self._outbox.epoch:
             self._ask_again(source, "epoch", now)
@@ -242,6 +242,9 @@ class Ledger:
             case messages.Drop():
                 change = Change("drop", name, flags, ids=tuple(message.ids))
             case messages.Patch():
+                if flags.outlines_only:
+                    text = f"layer {name} holds outlines only, and no cells"
+                    return No("conflict", text, {"layer": name, "field": "outlines_only"})
                 change = Change("patch", name, flags, message, packed)
             case _:
                 change = Change("claim", name, flags)
@@ -272,13 +275,12 @@ class Ledger:
 
     # -- to the surveyor and back --------------------------------------------------------------
 
-    def next_batch(self, now: Instant) -> Batch | None:
+    def next_batch(self) -> Batch | None:
         """
         Hand out what waits, up to a limit, if nothing is out.
 
         A batch without changes (all refused here) has nothing for the surveyor to do.
         """
-        self._expire(now)
         if self._out is not None or not self._line:
             return None
         entries: list[Entry] = []
@@ -368,12 +370,13 @@ class Ledger:
         self._reply(source, told)
 
     def _reply(self, source: Source, message: messages.Message) -> None:
-        self._outbox.reply(source.peer, "", message)
+        self._outbox.reply(source.peer, None, message)
 
     # -- time ----------------------------------------------------------------------------------
 
     def settle(self, now: Instant) -> None:
-        """Take layers away whose owners have been silent for too long."""
+        """Drop what has expired; take layers away whose owners have been silent for too long."""
+        self._expire(now)
         while (layer := self.layers.pop_forfeited(now)) is not None:
             self._health.count("leases_ended_total")
             self._outbox.log("warning", "layer.forfeited", layer=layer.name)

@@ -38,30 +38,29 @@ class Outbox:
     def reply(
         self,
         peer: Peer,
-        id: str,
+        to: Header | None,
         message: Message,
         packed: Bytes = b"",
-        *,
-        traceparent: str = "",
     ) -> None:
-        """Answer a peer."""
-        header = Header(message.kind, id, epoch=self.epoch, traceparent=traceparent)
+        """Answer a peer; `to` is the header of what it sent, if that is answered as such."""
+        if to is None:
+            header = Header(message.kind, epoch=self.epoch)
+        else:
+            header = Header(message.kind, to.id, epoch=self.epoch, traceparent=to.traceparent)
         self._effects.append(Reply(peer, header, message, packed))
 
     def error(
         self,
         peer: Peer,
-        id: str,
+        to: Header | None,
         code: str,
         text: str,
         facts: Mapping[str, object] | None = None,
         *,
         retry_after_s: float | None = None,
-    ) -> ErrorMessage:
-        """Answer a peer with an error, and return what it was told."""
-        message = error_of(code, text, facts, retry_after_s)
-        self.reply(peer, id, message)
-        return message
+    ) -> None:
+        """Answer a peer with an error."""
+        self.reply(peer, to, error_of(code, text, facts, retry_after_s))
 
     def publish(self, topic: str, message: Message, packed: Bytes = b"", *, id: str = "") -> None:
         """Tell whoever listens to a topic."""

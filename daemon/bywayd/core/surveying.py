@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from byway.frames import Header
 from byway.messages import Site
 from bywayd.core.effects import (
     ApplyChanges,
@@ -38,7 +39,7 @@ class Ticket:
     """A question about the site that waits for its answer."""
 
     peer: Peer
-    id: str
+    header: Header
     message: Site
     tries: int = 0
     #: The surveyor that was asked, if any is at it.
@@ -78,18 +79,18 @@ class Surveying:
 
     # -- what clients want ---------------------------------------------------------------------
 
-    def ask(self, peer: Peer, id: str, message: Site) -> bool:
+    def ask(self, peer: Peer, header: Header, message: Site) -> bool:
         """Have the site described; False if too many are being answered."""
         if len(self._tickets) >= self._settings.descriptions_max:
             return False
         self._task_serial += 1
-        self._tickets[self._task_serial] = Ticket(peer, id, message)
+        self._tickets[self._task_serial] = Ticket(peer, header, message)
         return True
 
     def stop(self) -> None:
         """Answer every question that is open."""
         for ticket in self._tickets.values():
-            self._outbox.error(ticket.peer, ticket.id, "stopping", "the daemon ends")
+            self._outbox.error(ticket.peer, ticket.header, "stopping", "the daemon ends")
         self._tickets.clear()
 
     # -- what the surveyor says ----------------------------------------------------------------
@@ -141,7 +142,7 @@ class Surveying:
             self._nonsense(number, f"the answer to question {event.ticket}")
         elif ticket is not None:
             del self._tickets[event.ticket]
-            self._outbox.reply(ticket.peer, ticket.id, event.message, event.packed)
+            self._outbox.reply(ticket.peer, ticket.header, event.message, event.packed)
 
     def lost(self, number: int, why: str, now: Instant) -> None:
         """A surveyor is gone; what it owed is for its successor."""
@@ -176,7 +177,7 @@ class Surveying:
                 self._roster.give(number, task, None, now)
                 self._outbox.add(DescribeSite(number, task, ticket.message))
         while self._batch is None:
-            batch = self._ledger.out or self._ledger.next_batch(now)
+            batch = self._ledger.out or self._ledger.next_batch()
             if batch is None:
                 break
             if not batch.changes:
@@ -221,7 +222,7 @@ class Surveying:
                 if ticket.tries >= _TRIES_MAX:
                     del self._tickets[task]
                     text = f"{ticket.tries} surveyors were lost over this question"
-                    self._outbox.error(ticket.peer, ticket.id, "internal", text)
+                    self._outbox.error(ticket.peer, ticket.header, "internal", text)
 
     def check(self) -> None:
         """Stop with a `Defect` if something could be forgotten."""
