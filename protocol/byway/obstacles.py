@@ -6,6 +6,7 @@ Columns: `ids` (u1: the ids of the polygons, then of the discs, with line feeds 
 columns), `discs_m` (<f8: x, y, radius). The daemon's front looks at their sizes only.
 """
 
+import itertools
 import re
 from collections.abc import Iterable, Mapping, Sequence
 from typing import Any, Final, TypeAlias
@@ -175,31 +176,26 @@ def unpack_shapes(message: messages.Put | messages.ReplaceLayer, packed: Bytes) 
             or numbers that cannot be meant.
     """
     ids = ids_of(message.columns, packed, message.polygons + message.discs)
-    return shapes_of(message.columns, packed, ids, message.polygons)
+    rings, discs = shapes_in(message.columns, packed)
+    return Shapes(
+        dict(zip(ids[: message.polygons], rings, strict=True)),
+        dict(zip(ids[message.polygons :], discs, strict=True)),
+    )
 
 
-def shapes_of(
-    columns: Mapping[str, Column], packed: Bytes, ids: Sequence[str], polygon_count: int
-) -> Shapes:
-    """Return obstacles whose ids are known; see `unpack_shapes`."""
+def shapes_in(
+    columns: Mapping[str, Column], packed: Bytes
+) -> tuple[list[npt.NDArray[np.float64]], list[tuple[float, float, float]]]:
+    """Return polygons (views of the frame) and discs in their order; see `unpack_shapes`."""
     starts = read(columns["starts"], packed)
     vertices_m = read(columns["vertices_m"], packed)
     discs_m = read(columns["discs_m"], packed)
-    if starts[0] != 0 or starts[-1] != len(vertices_m) or (np.diff(starts) < 0).any():
+    if starts[0] != 0 or starts[-1] != len(vertices_m) or (starts[1:] < starts[:-1]).any():
         raise BadMessage(
             "starts must rise from 0 to the number of vertices", {"field": "columns.starts"}
         )
     check_coordinates("vertices_m", vertices_m)
     check_coordinates("discs_m", discs_m)
     bounds = starts.tolist()
-    polygons = {
-        obstacle_id: vertices_m[bounds[i] : bounds[i + 1]]
-        for i, obstacle_id in enumerate(ids[:polygon_count])
-    }
-    discs = {
-        obstacle_id: (x_m, y_m, radius_m)
-        for obstacle_id, (x_m, y_m, radius_m) in zip(
-            ids[polygon_count:], discs_m.tolist(), strict=True
-        )
-    }
-    return Shapes(polygons, discs)
+    rings = [vertices_m[begin:end] for begin, end in itertools.pairwise(bounds)]
+    return rings, [(x_m, y_m, radius_m) for x_m, y_m, radius_m in discs_m.tolist()]

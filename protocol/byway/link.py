@@ -1,0 +1,132 @@
+"""
+One socket of a client, with every option in this one place, and the knowledge whether it is lost.
+
+A socket that has lost its daemon is not used again: what was sent on it may have arrived or not,
+and nobody can tell. A fresh one is opened, and whoever waits for something sends it once more.
+
+The monitor of ZeroMQ tells of a lost connection within a millisecond when the daemon's process
+ends; heartbeats find a host that has fallen silent within four seconds.
+"""
+
+import math
+from collections.abc import Callable, Mapping, Sequence
+from typing import Any, Final, TypeAlias
+
+import zmq
+from zmq.utils.monitor import recv_monitor_message
+
+from byway import limits
+from byway.packed import Bytes
+
+Context: TypeAlias = "zmq.Context[zmq.Socket[bytes]]"
+Socket: TypeAlias = "zmq.Socket[bytes]"
+
+OPTIONS_OF_ALL: Final[Mapping[zmq.SocketOption, int]] = {
+    zmq.LINGER: 0,
+    zmq.MAXMSGSIZE: limits.reply_bytes_max,
+    # A peer is found to be gone after interval + timeout.
+    zmq.HEARTBEAT_IVL: 1000,
+    zmq.HEARTBEAT_TIMEOUT: 3000,
+    zmq.HANDSHAKE_IVL: 5000,
+    # A first try that comes too early is repeated soon, and one in vain does not keep a core busy.
+    zmq.RECONNECT_IVL: 10,
+    zmq.RECONNECT_IVL_MAX: 500,
+}
+#: Nothing is queued for a daemon that is not there: what is sent has a connection to go to.
+DEALER_OPTIONS: Final[Mapping[zmq.SocketOption, int]] = {zmq.IMMEDIATE: 1}
+#: Subscriptions are messages too, and one that is dropped would be missing for ever.
+SUB_OPTIONS: Final[Mapping[zmq.SocketOption, int]] = {zmq.SNDHWM: 0}
+
+
+class Link:
+    """
+    A DEALER, or a SUB with its subscriptions, connected to one endpoint.
+
+    Args:
+        context: Of the client.
+        endpoint: As ZeroMQ writes it.
+        topics: Prefixes to subscribe to; None for a DEALER.
+    """
+
+    def __init__(
+        self, context: Context, endpoint: str, topics: Sequence[str] | None = None
+    ) -> None:
+        self._context = context
+        self.endpoint: Final = endpoint
+        self._topics = None if topics is None else list(topics)
+        self.is_connected = False
+        #: The connection that this socket had is gone. Only a fresh socket helps.
+        self.is_lost = False
+        self._open()
+
+    def _open(self) -> None:
+        is_sub = self._topics is not None
+        self._socket = self._context.socket(zmq.SUB if is_sub else zmq.DEALER)
+        options = {**OPTIONS_OF_ALL, **(SUB_OPTIONS if is_sub else DEALER_OPTIONS)}
+        for option, value in options.items():
+            self._socket.setsockopt(option, value)
+        for topic in self._topics or ():
+            self._socket.subscribe(topic)
+        self._monitor: Socket = self._socket.get_monitor_socket(
+            zmq.EVENT_HANDSHAKE_SUCCEEDED | zmq.EVENT_DISCONNECTED
+        )
+        self.is_connected = self.is_lost = False
+        self._socket.connect(self.endpoint)
+
+    def reopen(self) -> None:
+        """Go on with a fresh socket."""
+        self.close()
+        self._open()
+
+    def close(self) -> None:
+        """Close the socket; what it still had to send is forgotten."""
+        self._socket.disable_monitor()
+        self._monitor.close(0)
+        self._socket.close(0)
+
+    def subscribe(self, topic: str) -> None:
+        """Listen to one prefix more."""
+        if self._topics is not None and topic not in self._topics:
+            self._topics.append(topic)
+            self._socket.subscribe(topic)
+
+    def send(self, frames: Sequence[Bytes]) -> bool:
+        """Send a message, if there is a connection; tell whether there was."""
+        try:
+            self._socket.send_multipart(frames, zmq.DONTWAIT)
+        except zmq.Again:
+            return False
+        return True
+
+    def receive(self) -> list[bytes] | None:
+        """Return the frames of a message that has come in, if one has."""
+        if self._socket.get(zmq.EVENTS) & zmq.POLLIN:
+            return self._socket.recv_multipart(zmq.DONTWAIT)
+        return None
+
+    def look(self) -> None:
+        """Take note of what has become of the connection."""
+        while self._monitor.get(zmq.EVENTS) & zmq.POLLIN:
+            event = recv_monitor_message(self._monitor, zmq.DONTWAIT)["event"]
+            if event == zmq.EVENT_HANDSHAKE_SUCCEEDED:
+                self.is_connected = True
+            elif self.is_connected:
+                self.is_connected, self.is_lost = False, True
+
+
+def wait(links: Sequence[tuple[Link, bool]], until_s: float, clock: Callable[[], float]) -> None:
+    """
+    Return as soon as something has happened on one of the links, at the given time at the latest.
+
+    Args:
+        links: Each with whether it has something to send and waits for a connection.
+        until_s: A reading of the clock.
+        clock: Seconds.
+    """
+    poller: Any = zmq.Poller()
+    for link, wants_to_send in links:
+        poller.register(link._socket, zmq.POLLIN | (zmq.POLLOUT if wants_to_send else 0))
+        poller.register(link._monitor, zmq.POLLIN)
+    left_s = until_s - clock()
+    # Rounded up: to wake a little early would mean to poll again and again.
+    poller.poll(max(0, math.ceil(1000.0 * left_s)))
