@@ -112,6 +112,14 @@ def test_a_change_under_way_when_the_surveyor_dies_is_made_by_its_successor(daem
     assert "slow-belt" in {layer.layer for layer in peer.ask(messages.Site()).layers}
 
 
+def test_a_change_that_no_surveyor_survives_is_refused_and_others_go_on(peer):
+    deadly, harmless = peer.put("killer", a=(1.0, 1.0, 0.5)), peer.put("quay", a=(1.0, 1.0, 0.5))
+    refused = peer.decided(deadly)
+    assert isinstance(refused, messages.Refused)
+    assert refused.code == "internal"
+    assert isinstance(peer.decided(harmless), messages.Acknowledged)
+
+
 def test_replans_go_on_while_there_is_no_surveyor(daemon, peer):
     peer.put("slow-lane", a=(1.0, 1.0, 0.5))
     os.kill(_surveyor(daemon), signal.SIGKILL)

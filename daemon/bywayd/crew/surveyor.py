@@ -12,6 +12,7 @@ from collections import deque
 from collections.abc import Mapping
 from typing import Any, Final
 
+from bywayd.crew.blackbox import BlackBox, deaths_until_refused
 from bywayd.crew.channel import Channel
 from bywayd.crew.memory import SiteMemory
 from bywayd.crew.skills import Published, Refused, SiteKeeping, Skills
@@ -26,7 +27,8 @@ class Surveyor:
     def __init__(self, channel: Channel, memory: SiteMemory, skills: Skills) -> None:
         self._channel = channel
         self._memory = memory
-        self._mapped = memory.map_writable()
+        self._box = BlackBox(memory.map_blackbox())
+        self._ground = memory.map_writable()
         self._skills = skills
         self._waiting: deque[dict[str, Any]] = deque()
         self._alive_s = 0.0
@@ -59,7 +61,7 @@ class Surveyor:
     def _begin(self, order: dict[str, Any]) -> SiteKeeping:
         self._settings = order["settings"]
         if order["revision"] is None:
-            site = self._skills.new_site(self._settings, self._mapped, self._memory.grow)
+            site = self._skills.new_site(self._settings, self._ground, self._memory.grow)
             self._publish(site)
             return site
         self._published = Published(order["revision"], order["handle"])
@@ -71,7 +73,7 @@ class Surveyor:
         """Return the site as it was published last, whatever has been done to it since."""
         return self._skills.recover_site(
             self._settings,
-            self._mapped,
+            self._ground,
             self._memory.grow,
             self._published.handle,
             list(self._in_use.values()),
@@ -94,19 +96,30 @@ class Surveyor:
         published last, and the batch is gone through once more without that change.
         """
         changes: list[Mapping[str, Any]] = message["changes"]
-        refusals: dict[int, Refused] = {}
+        refusals = self._refused_for_deaths(len(changes))
         while (breaking := self._go_through(site, changes, refusals)) is not None:
             index, refused = breaking
             refusals[index] = refused
             site = self._take_up_again()
         try:
+            self._box.note(len(changes))
             self._publish(site)
         except MemoryError as fault:
             refusals |= {i: _no_room(fault) for i in range(len(changes)) if i not in refusals}
             site = self._take_up_again()
+        self._box.batch_done()
         told = [_refusal(index, refused) for index, refused in sorted(refusals.items())]
         self._say("snapshot", batch=message["batch"], refusals=told, obstacles=site.obstacles())
         return site
+
+    def _refused_for_deaths(self, count: int) -> dict[int, Refused]:
+        """Refuse what has killed our predecessors: one change, or the publishing of them all."""
+        place = self._box.deadly_place
+        if place is None:
+            return {}
+        text = f"{deaths_until_refused} surveyors were lost over this"
+        deadly = [place] if place < count else range(count)
+        return {index: Refused("internal", text) for index in deadly}
 
     def _go_through(
         self, site: SiteKeeping, changes: list[Mapping[str, Any]], refusals: dict[int, Refused]
@@ -115,6 +128,7 @@ class Surveyor:
         for index, change in enumerate(changes):
             if index in refusals:
                 continue
+            self._box.note(index)
             try:
                 for _ in site.apply(change):
                     self._sign_of_life()

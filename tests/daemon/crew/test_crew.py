@@ -168,6 +168,20 @@ def test_a_surveyor_that_dies_is_followed_by_one_that_knows_the_site(crew):
     assert crew.lost("surveyor", 3) == "enough (killed by SIGKILL)"
 
 
+def test_a_change_that_kills_the_surveyor_again_and_again_is_refused(crew):
+    held = crew.spawn_surveyor(11)
+    for number in (11, 12):
+        crew.send_batch(number, 1, "stacks", "killer", "stacks")
+        crew.lost("surveyor", number)
+        crew.spawn_surveyor(number + 1, held)
+    after = crew.apply(13, 1, "stacks", "killer", "stacks")
+    assert [(r["index"], r["code"]) for r in after["refusals"]] == [(1, "internal")]
+    assert after["obstacles"] == {"stacks": 2}
+    # It is forgiven with the batch: the next one may have its place.
+    assert crew.apply(13, 2, "stacks", "kerb")["refusals"] == []
+    crew.staff.kill("surveyor", 13, "enough")
+
+
 def test_workers_step_back_and_the_surveyor_does_not(crew, published, worker):
     assert _niceness(crew.pid("worker", worker)) == 10 + _niceness(os.getpid())
     assert _niceness(crew.pid("surveyor", SURVEYOR)) == _niceness(os.getpid())

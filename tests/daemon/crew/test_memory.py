@@ -62,3 +62,14 @@ def test_a_successor_goes_on_where_the_memory_ends(memory):
 def test_a_size_of_nothing_is_refused():
     with pytest.raises(ValueError, match="> 0"):
         SiteMemory.create(0)
+
+
+def test_the_black_box_is_no_part_of_the_site(memory):
+    memory.grow(memory.bytes_max)
+    site, box = memory.map_writable(), memory.map_blackbox()
+    assert len(site) == memory.bytes_max
+    box[:4] = b"last"
+    assert site[-4:] == bytes(4)
+    assert memory.map_blackbox()[:4] == b"last"
+    site.close()
+    box.close()
