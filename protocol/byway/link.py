@@ -100,13 +100,13 @@ class Link:
 
     def receive(self) -> list[bytes] | None:
         """Return the frames of a message that has come in, if one has."""
-        if self._socket.get(zmq.EVENTS) & zmq.POLLIN:
+        if _can_read(self._socket):
             return self._socket.recv_multipart(zmq.DONTWAIT)
         return None
 
     def look(self) -> None:
         """Take note of what has become of the connection."""
-        while self._monitor.get(zmq.EVENTS) & zmq.POLLIN:
+        while _can_read(self._monitor):
             event = recv_monitor_message(self._monitor, zmq.DONTWAIT)["event"]
             if event == zmq.EVENT_HANDSHAKE_SUCCEEDED:
                 self.is_connected = True
