@@ -120,19 +120,24 @@ def _stretch_free(
     return best > wanted
 
 
-@kernel()
-def motion_free(
-    scene: Scene, body: Body, x: float, y: float, heading: float, curvature: float, length: float
-) -> bool:
-    """Is an arc free from end to end? The pose at its start is taken for checked."""
-    # The far end first: an obstacle is as likely there as anywhere, and children of a search
-    # share their start.
-    px, py, ph = advance(x, y, heading, curvature, length)
-    if not pose_free(scene, body, px, py, ph):
-        return False
+@kernel(allocates=True)
+def _near_free(
+    scene: Scene,
+    body: Body,
+    pose: tuple[float, float, float],
+    curvature: float,
+    length: float,
+    rate: float,
+) -> float:
+    """
+    Sweep an arc in stretches until it is through or there is much room again.
+
+    Returns:
+        The arc length that is proved free; -1 at a contact.
+    """
+    x, y, heading = pose
     total = abs(length)
     sign = 1.0 if length >= 0.0 else -1.0
-    rate = fastest_point(body, curvature)
     longest = math.inf
     if curvature != 0.0:
         # A point on a circle of radius rate / curvature swings out by about its chord squared
@@ -142,33 +147,63 @@ def motion_free(
     hull = np.empty((HULL_MAX + 2, 2))
     at = 0.0
     stretch = longest
-    while at < total:
-        px, py, ph = advance(x, y, heading, curvature, sign * at)
-        quick = quick_excess(scene, body, px, py, math.cos(ph), math.sin(ph), LEAP_M * rate)
-        if quick == -math.inf:
-            return False
-        left = total - at
-        if quick > CONTACT_M and quick / rate >= min(LEAP_M, left):
-            at += quick / rate
-            continue
-        stretch = min(stretch, left)
+    px, py, ph = x, y, heading
+    while True:
+        stretch = min(stretch, total - at)
         while True:
-            half = 0.5 * stretch * abs(curvature)
             swing = 0.0
             if curvature != 0.0:
-                swing = rate / abs(curvature) * 2.0 * math.sin(half / 2.0) ** 2
+                quarter = 0.25 * stretch * abs(curvature)
+                swing = rate / abs(curvature) * 2.0 * math.sin(quarter) ** 2
             if _stretch_free(
                 scene, body, (px, py, ph), curvature, sign * stretch, swing, points, hull
             ):
                 break
             if stretch <= STRETCH_M_MIN:
-                return False
+                return -1.0
             stretch *= 0.5
             qx, qy, qh = advance(x, y, heading, curvature, sign * (at + stretch))
             if not pose_free(scene, body, qx, qy, qh):
-                return False
+                return -1.0
         at += stretch
+        if at >= total:
+            return total
         stretch = min(2.0 * stretch, longest)
+        px, py, ph = advance(x, y, heading, curvature, sign * at)
+        if _room(scene, body, px, py, ph, rate) >= min(LEAP_M, total - at):
+            return at
+
+
+@kernel()
+def _room(scene: Scene, body: Body, x: float, y: float, heading: float, rate: float) -> float:
+    """How far the distance field alone proves a motion free; -inf where it proves a contact."""
+    quick = quick_excess(scene, body, x, y, math.cos(heading), math.sin(heading), LEAP_M * rate)
+    if quick > CONTACT_M:
+        return quick / rate
+    return quick if quick == -math.inf else 0.0
+
+
+@kernel()
+def motion_free(
+    scene: Scene, body: Body, x: float, y: float, heading: float, curvature: float, length: float
+) -> bool:
+    """Is an arc free between its ends? The poses at both ends are taken for checked."""
+    total = abs(length)
+    sign = 1.0 if length >= 0.0 else -1.0
+    rate = fastest_point(body, curvature)
+    at = 0.0
+    while at < total:
+        px, py, ph = advance(x, y, heading, curvature, sign * at)
+        room = _room(scene, body, px, py, ph, rate)
+        if room == -math.inf:
+            return False
+        if room >= min(LEAP_M, total - at):
+            at += room
+            continue
+        swept = _near_free(scene, body, (px, py, ph), curvature, sign * (total - at), rate)
+        if swept < 0.0:
+            return False
+        at += swept
     return True
 
 
@@ -199,7 +234,17 @@ def motion_reach(
 def segments_free(
     scene: Scene, body: Body, x: float, y: float, heading: float, segments: Points, count: int
 ) -> bool:
-    """Are the segments (curvature, signed length) of a curve free, driven from a pose?"""
+    """
+    Are the segments (curvature, signed length) of a curve free, driven from a pose?
+
+    The pose at its start is taken for checked, the one at its end is not.
+    """
+    # Ends of segments first: an obstacle is as likely there as anywhere else.
+    px, py, ph = x, y, heading
+    for i in range(count):
+        px, py, ph = advance(px, py, ph, segments[i, 0], segments[i, 1])
+        if not pose_free(scene, body, px, py, ph):
+            return False
     for i in range(count):
         if not motion_free(scene, body, x, y, heading, segments[i, 0], segments[i, 1]):
             return False

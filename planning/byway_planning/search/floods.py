@@ -80,7 +80,10 @@ def room_mask_kernel(scene: Scene, level: int, wanted_m: float, out: Mask) -> No
                         out[row, column] = 1 if room >= wanted_m else 0
 
 
-@kernel("ru1[:, ::1]", "i8", "i8", "i8", "i8", "f8", "i4[:, ::1]", "i4[::1]", "i4[::1]")
+@kernel(
+    *("ru1[:, ::1]", "i8", "i8", "i8", "i8", "f8", "i4[:, ::1]", "i4[::1]", "i4[::1]"),
+    allocates=True,
+)
 def flood_kernel(
     mask: Mask,
     row: int,

@@ -119,9 +119,12 @@ def copy_course(source: Course, target: Course) -> None:
     """Overwrite a path with another."""
     n = source.used[0]
     target.used[0] = n
-    target.rows[:n] = source.rows[:n]
-    target.lengths[: n + 1] = source.lengths[: n + 1]
-    target.costs[: n + 1] = source.costs[: n + 1]
+    for i in range(n):
+        for k in range(5):
+            target.rows[i, k] = source.rows[i, k]
+    for i in range(n + 1):
+        target.lengths[i] = source.lengths[i]
+        target.costs[i] = source.costs[i]
 
 
 @kernel("rf8[:, ::1]", Body, Course)
@@ -136,7 +139,8 @@ def load_course_kernel(path: Floats, body: Body, course: Course) -> None:
         append(course, path[i, 0], path[i, 1], heading, path[i, 3], path[i, 4])
         end = heading + path[i, 3] * path[i, 4]
     if course.used[0] == 0:
-        course.rows[0, :] = path[0, :]
+        for k in range(5):
+            course.rows[0, k] = path[0, k]
         course.rows[0, 4] = 0.0
         course.used[0] = 1
     sum_up(body, course)

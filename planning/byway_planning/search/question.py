@@ -19,7 +19,7 @@ from byway_planning.vehicles.body import DISC, Body
 Floats = npt.NDArray[np.float64]
 
 
-@kernel(Scene, Body, "rf8[::1]", "rf8[::1]", "f8[:, ::1]")
+@kernel(Scene, Body, "rf8[::1]", "rf8[::1]", "f8[:, ::1]", allocates=True)
 def direct_kernel(scene: Scene, body: Body, start: Floats, goal: Floats, out: Floats) -> int:
     """
     The cheapest curve from start to goal as a path (5, 5), if it is free.
@@ -48,7 +48,7 @@ def direct_kernel(scene: Scene, body: Body, start: Floats, goal: Floats, out: Fl
     return int(count)
 
 
-@kernel(Body, "rf8[::1]", "rf8[::1]")
+@kernel(Body, "rf8[::1]", "rf8[::1]", allocates=True)
 def direct_length_kernel(body: Body, start: Floats, goal: Floats) -> float:
     """Length of the shortest curve from start to goal in an empty world."""
     segments = np.empty((5, 2))

@@ -105,7 +105,8 @@ def _new_tree(bounds_m: tuple[float, float, float, float], nodes_max: int) -> Tr
 def plant_kernel(tree: Tree, root: Floats) -> None:
     """Make a tree of its root alone."""
     clear(tree.grid)
-    tree.poses[0, :] = root
+    for i in range(3):
+        tree.poses[0, i] = root[i]
     tree.costs[0] = 0.0
     tree.parents[0] = -1
     tree.counts[0] = 0

@@ -17,7 +17,7 @@ Mask = npt.NDArray[np.uint8]
 Floats4 = npt.NDArray[np.float32]
 
 
-@kernel("ru1[:, ::1]", "i8", "f4[:, ::1]")
+@kernel("ru1[:, ::1]", "i8", "f4[:, ::1]", allocates=True)
 def distances_kernel(mask: Mask, reach: int, out: Floats4) -> None:
     """
     Distance of each lattice point to the nearest marked one, in lattice steps.

@@ -127,7 +127,8 @@ def bucket_kernel(
                         if fill == 0:
                             starts[b + 1] += 1
                         else:
-                            out[starts[b + 1], :] = item
+                            for k in range(5):
+                                out[starts[b + 1], k] = item[k]
                             starts[b + 1] += 1
     return int(starts[buckets])
 
