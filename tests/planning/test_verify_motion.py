@@ -201,22 +201,28 @@ def test_a_bend_swings_the_front_corner_out() -> None:
 
 def test_nothing_hides_where_a_bend_bulges() -> None:
     """
-    Between its ends a stretch reaches farther out than at them: here a clearance of a
-    millimetre was met before, so that little else is looked at, and then a post stands in the
-    way of the outer front corner, anywhere on its circle.
+    Between its ends a stretch reaches farther out than at them: here a clearance of half a
+    millimetre was met before, so that little else is looked at, and then a post or a spike
+    stands in the way of a corner that points out of the bend, anywhere on its circle.
     """
-    out_m = math.hypot(3.5, 5.0 + 0.95)
-    begin = math.atan2(-5.95, 3.5)
-    grazed = (0.0, 0.95 + 0.001 + 0.2, 0.2)  # on the inner side, at the start
-    for ahead_rad in np.linspace(0.3, 1.2, 19):
-        for inside_m, expected in ((-0.0005, []), (0.03, ["collides"])):
-            away_m = out_m + 0.05 - inside_m
-            angle = begin + ahead_rad
-            post = (away_m * math.cos(angle), 5.0 + away_m * math.sin(angle), 0.05)
-            faults = driven(solids_of(discs=[grazed, post]), car(), [(0.2, 7.0)])
-            assert codes(faults) == expected
-            if not expected:
-                assert faults.clearance_m == pytest.approx(0.0005, abs=2e-6)
+    vehicle = car(footprint_m=[(-0.5, -0.5), (0.0, -2.0), (0.5, -0.5), (0.0, 1.0)])
+    grazed = (0.0, 1.0 + 0.0005 + 0.2, 0.2)  # on the inner side, at the start
+    for angle in -0.5 * math.pi + np.linspace(0.2, 1.3, 12):
+        c, s = math.cos(angle), math.sin(angle)
+        for inside_m, expected in ((-0.001, []), (0.03, ["collides"])):
+            tip_m = 7.0 - inside_m
+            post = ((tip_m + 0.05) * c, 5.0 + (tip_m + 0.05) * s, 0.05)
+            spike = [
+                (tip_m * c, 5.0 + tip_m * s),
+                (post[0] + 0.01 * s, post[1] - 0.01 * c),
+                (post[0] - 0.01 * s, post[1] + 0.01 * c),
+            ]
+            for solids in (solids_of(discs=[grazed, post]), solids_of([spike], discs=[grazed])):
+                faults = driven(solids, vehicle, [(0.2, 7.0)])
+                assert codes(faults) == expected
+                if not expected:
+                    # 5e-6: drawing the outline in by 1e-6 moves a sharp corner by more
+                    assert faults.clearance_m == pytest.approx(0.0005, abs=5e-6)
 
 
 @pytest.mark.parametrize("side", range(4))
@@ -234,15 +240,15 @@ def test_the_limits_are_kept_in_the_middle_of_a_bend(side: int) -> None:
 def test_a_vehicle_may_turn_round_and_round_between_two_rows(angle: float) -> None:
     """Its turning radius is so small that one row's way is more than a circle."""
     vehicle = car(
-        footprint_m=[(-0.1, -0.1), (0.1, -0.1), (0.1, 0.1), (-0.1, 0.1)],
+        footprint_m=[(-0.02, -0.02), (0.2, 0.0), (-0.02, 0.02)],  # one corner far from its centre
         turn_radius_m_min=0.03,
-        lateral_acceleration_mps2_max=900.0,
+        speed_mps_max=0.1,  # reached at once, so that nearly all of the way is one row's
     )
-    far_m = math.hypot(0.1, 0.1 + 0.03)
+    far_m = math.hypot(0.2, 0.03)
     for gap_m, expected in ((0.001, []), (-0.001, ["collides"])):
         away_m = far_m + 0.2 + gap_m
         post = (away_m * math.cos(angle), 0.03 + away_m * math.sin(angle), 0.2)
-        faults = driven(solids_of(discs=[post]), vehicle, [(1.0 / 0.03, 2.0)])
+        faults = driven(solids_of(discs=[post]), vehicle, [(1.0 / 0.03, 0.25)])
         assert codes(faults) == expected
 
 
