@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from byway import frames, messages, obstacles
-from byway.packed import Column, pack, read
+from byway.packed import pack, read
 from bywayd.crew import trade
 from bywayd.crew.memory import SiteMemory
 from bywayd.crew.skills import Refused
@@ -90,7 +90,7 @@ def _described(site, **question):
 
 
 def _column(described, packed, name):
-    return read(Column(**described.columns[name]), packed)
+    return read(described.columns[name], packed)
 
 
 def test_what_was_put_is_described_in_the_same_coordinates(site):
