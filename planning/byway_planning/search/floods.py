@@ -33,7 +33,7 @@ class Flood(NamedTuple):
     """
     A finished flood.
 
-    `cost` (rows, columns): cost to the flood's origin in steps of SIDE_STEP per side;
+    `cost` (rows, columns), one square of border included: cost to the origin, SIDE_STEP a side;
     UNREACHED where it did not come.
     """
 
@@ -54,8 +54,10 @@ def room_mask_kernel(scene: Scene, level: int, wanted_m: float, out: Mask) -> No
     Args:
         level: 0 for squares of `room_cells` cells, 1 for squares four times as wide.
         wanted_m: The distance that must be reached somewhere in a square.
-        out: Shape (rows, columns) of the whole site in such squares.
+        out: Shape (rows + 2, columns + 2): the whole site in such squares and a border of 0.
     """
+    out[:, :] = 0
+    rows, columns = out.shape[0] - 2, out.shape[1] - 2
     side = scene.tile_cells
     fine = side // scene.room_cells
     per = fine if level == 0 else side // (4 * scene.room_cells)
@@ -65,60 +67,58 @@ def room_mask_kernel(scene: Scene, level: int, wanted_m: float, out: Mask) -> No
             offset = scene.field_of[tr, tc]
             for r in range(per):
                 row = tr * per + r
-                if row >= out.shape[0]:
+                if row >= rows:
                     break
                 for c in range(per):
                     column = tc * per + c
-                    if column >= out.shape[1]:
+                    if column >= columns:
                         break
                     if offset == OPEN:
-                        out[row, column] = 1
-                    elif offset == SOLID:
-                        out[row, column] = 0
-                    else:
+                        out[row + 1, column + 1] = 1
+                    elif offset != SOLID:
                         room = scene.floats[offset + base + r * per + c]
-                        out[row, column] = 1 if room >= wanted_m else 0
+                        out[row + 1, column + 1] = 1 if room >= wanted_m else 0
 
 
-@kernel(
-    *("ru1[:, ::1]", "i8", "i8", "i8", "i8", "f8", "i4[:, ::1]", "i4[::1]", "i4[::1]"),
-    allocates=True,
-)
+@kernel("ru1[:, ::1]", "i8", "i8", "f8", "i4[:, ::1]", "i4[::1]", "i4[::1]", "i4[::1]")
 def flood_kernel(
     mask: Mask,
-    row: int,
-    column: int,
-    other_row: int,
-    other_column: int,
+    origin: int,
+    other: int,
     stretch: float,
     cost: Whole4,
+    heads: Whole4,
     entries: Whole4,
     links: Whole4,
 ) -> int:
     """
-    Fill `cost` from (row, column) until `stretch` times the cost of the other end is reached.
+    Fill `cost` from one square until `stretch` times the cost of the other is reached.
 
     Args:
-        mask: 1 where the disc may be. The two ends count as free.
-        entries, links: Room for 8 * cells entries.
+        mask: 1 where the disc may be, 0 all along the border. The two ends count as free.
+        origin, other: Squares, numbered row by row.
+        heads: Shape (BUCKETS,). entries, links: room for 8 entries a square.
 
     Returns:
         The cost of the other end, or UNREACHED: then there is no way over the mask.
     """
-    rows, columns = mask.shape
-    heads = np.full(BUCKETS, -1, np.int32)
-    cost[:, :] = UNREACHED
-    cost[row, column] = 0
-    entries[0] = row * columns + column
+    width = mask.shape[1]
+    free, costs = mask.reshape(-1), cost.reshape(-1)
+    for i in range(costs.shape[0]):
+        costs[i] = UNREACHED
+    for i in range(BUCKETS):
+        heads[i] = -1
+    costs[origin] = 0
+    entries[0] = origin
     links[0] = -1
     heads[0] = 0
     used = 1
+    spare = -1  # entries that were taken out, to be used again
     now = 0
     empty = 0
     until = UNREACHED
-    spare = -1  # entries that were taken out, to be used again
     while empty < BUCKETS and now <= until:
-        b = now % BUCKETS
+        b = now & (BUCKETS - 1)
         if heads[b] < 0:
             empty += 1
             now += 1
@@ -129,35 +129,34 @@ def flood_kernel(
             heads[b] = links[e]
             links[e] = spare
             spare = e
-            r, c = entries[e] // columns, entries[e] % columns
-            if cost[r, c] != now:
+            at = entries[e]
+            if costs[at] != now:
                 continue
-            if r == other_row and c == other_column:
+            if at == other:
                 until = min(until, int(now * stretch) + 4 * SIDE_STEP)
-            for dr in range(-1, 2):
-                i = r + dr
-                if i < 0 or i >= rows:
+            for turn in range(8):
+                if turn < 4:
+                    step = (1, -1, width, -width)[turn]
+                    to = now + SIDE_STEP
+                else:
+                    step = (width + 1, width - 1, -width + 1, -width - 1)[turn - 4]
+                    to = now + DIAGONAL_STEP
+                beside = at + step
+                if to >= costs[beside] or (free[beside] == 0 and beside != other):
                     continue
-                for dc in range(-1, 2):
-                    j = c + dc
-                    if j < 0 or j >= columns:
-                        continue
-                    if mask[i, j] == 0 and not (i == other_row and j == other_column):
-                        continue
-                    to = now + (DIAGONAL_STEP if dr != 0 and dc != 0 else SIDE_STEP)
-                    if to < cost[i, j]:
-                        cost[i, j] = to
-                        if spare >= 0:
-                            n = spare
-                            spare = links[n]
-                        else:
-                            n = used
-                            used += 1
-                        entries[n] = i * columns + j
-                        links[n] = heads[to % BUCKETS]
-                        heads[to % BUCKETS] = n
+                costs[beside] = to
+                if spare >= 0:
+                    n = spare
+                    spare = links[n]
+                else:
+                    n = used
+                    used += 1
+                entries[n] = beside
+                c = to & (BUCKETS - 1)
+                links[n] = heads[c]
+                heads[c] = n
         now += 1
-    return int(cost[other_row, other_column])
+    return int(costs[other])
 
 
 @kernel()
@@ -183,9 +182,10 @@ class FloodGround:
         width, height = scene.x_m_max - scene.x_m_min, scene.y_m_max - scene.y_m_min
         self.level = 0 if width * height / fine_m**2 <= FINE_CELLS_MAX else 1
         self.side_m = fine_m * (1 if self.level == 0 else 4)
-        self.shape = (math.ceil(height / self.side_m), math.ceil(width / self.side_m))
+        self.shape = (math.ceil(height / self.side_m) + 2, math.ceil(width / self.side_m) + 2)
         self._masks: dict[float, Mask] = {}
         cells = self.shape[0] * self.shape[1]
+        self._heads = np.empty(BUCKETS, np.int32)
         self._entries = np.empty(8 * cells, np.int32)
         self._links = np.empty(8 * cells, np.int32)
 
@@ -200,11 +200,12 @@ class FloodGround:
             self._masks[slack_cells] = found
         return found
 
-    def square_of(self, x: float, y: float) -> tuple[int, int]:
-        """Return row and column of the square that holds a point; clipped to the grid."""
-        r = int((y - self._scene.corner_y_m) / self.side_m)
-        c = int((x - self._scene.corner_x_m) / self.side_m)
-        return min(max(r, 0), self.shape[0] - 1), min(max(c, 0), self.shape[1] - 1)
+    def square_of(self, x: float, y: float) -> int:
+        """Return the number of the square that holds a point; clipped to the site."""
+        r = int((y - self._scene.corner_y_m) / self.side_m) + 1
+        c = int((x - self._scene.corner_x_m) / self.side_m) + 1
+        r, c = min(max(r, 1), self.shape[0] - 2), min(max(c, 1), self.shape[1] - 2)
+        return r * self.shape[1] + c
 
     def flood(
         self,
@@ -223,15 +224,17 @@ class FloodGround:
         cost = np.empty(self.shape, np.int32)
         steps = flood_kernel(
             self.mask(slack_cells),
-            *self.square_of(*origin),
-            *self.square_of(*other),
+            self.square_of(*origin),
+            self.square_of(*other),
             stretch,
             cost,
+            self._heads,
             self._entries,
             self._links,
         )
         cost.flags.writeable = False
-        flood = Flood(self._scene.corner_x_m, self._scene.corner_y_m, self.side_m, cost)
+        side = self.side_m  # the border is part of the grid
+        flood = Flood(self._scene.corner_x_m - side, self._scene.corner_y_m - side, side, cost)
         return flood, math.inf if steps >= UNREACHED else steps * self.side_m / SIDE_STEP
 
 
