@@ -10,8 +10,10 @@ import numpy.typing as npt
 import shapely
 from scipy import optimize
 
+from byway_planning.route import make_route
 from byway_planning.site.solids import Solids
 from byway_planning.vehicles.models import Car, Disc, ForwardCar
+from byway_planning.verify import Faults, verify
 
 Floats = npt.NDArray[np.float64]
 Pose = tuple[float, float, float]
@@ -206,3 +208,54 @@ class Twin:
             )
             best = min(best, float(found.fun))
         return best
+
+
+def driven(
+    solids: Solids,
+    vehicle: Car | ForwardCar | Disc,
+    pieces: list[tuple[float, float]],
+    start: Pose = (0.0, 0.0, 0.0),
+    **how: float,
+) -> Faults:
+    """The faults of driving pieces from a start as fast as possible."""
+    path, goal = path_of(start, pieces)
+    return verify(solids, vehicle, path, make_route(path, vehicle), start, goal, **how)
+
+
+def codes(faults: Faults) -> list[str]:
+    """What is wrong, in the order found."""
+    return [fault.code for fault in faults]
+
+
+def random_scene(rng: np.random.Generator, number: int) -> tuple[Any, ...]:
+    """A vehicle, a path, and a few shapes about as far from it as it is large."""
+    radius = rng.uniform(2.0, 6.0)
+    pieces = [
+        (float(rng.choice([0.0, 1.0, -1.0, rng.uniform(-1, 1)]) / radius), float(length))
+        for length in rng.uniform(0.3, 3.5, rng.integers(1, 4)) * rng.choice([-1.0, 1.0])
+    ]
+    if number % 4 == 3:
+        vehicle: Car | Disc = disc(radius_m=float(rng.uniform(0.2, 1.5)))
+        corners = np.cumsum(rng.uniform(-3.0, 3.0, (rng.integers(2, 5), 2)), axis=0)
+        path, goal = line_of([tuple(map(float, corner)) for corner in corners])
+    else:
+        outline = [BOX, U_SHAPE, star(rng, (0.3, 0.1), 2.0).tolist()][number % 4]
+        vehicle = car(footprint_m=outline, turn_radius_m_min=radius)
+        start = (*rng.uniform(-50.0, 50.0, 2).tolist(), float(rng.uniform(-9.0, 9.0)))
+        path, goal = path_of(start, pieces)
+    route = make_route(path, vehicle)
+    polygons, discs = [], []
+    for _ in range(rng.integers(1, 5)):
+        row, angle = rng.integers(len(route.table)), rng.uniform(0.0, 7.0)
+        middle = np.array([route.table["x_m"][row], route.table["y_m"][row]])
+        middle += rng.uniform(1.0, 6.0) * np.array([math.cos(angle), math.sin(angle)])
+        if rng.random() < 0.7:
+            polygons.append(star(rng, middle, rng.choice([0.1, 0.6, 2.0])))
+        else:
+            discs.append((*middle.tolist(), float(rng.uniform(0.02, 1.0))))
+    limits = EVERYWHERE
+    if rng.random() < 0.3:
+        room = rng.uniform(2.0, 7.0, 4)
+        x, y = route.table["x_m"], route.table["y_m"]
+        limits = (x.min() - room[0], y.min() - room[1], x.max() + room[2], y.max() + room[3])
+    return vehicle, path, goal, route, polygons, discs, limits
