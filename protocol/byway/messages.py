@@ -58,14 +58,14 @@ Fact: TypeAlias = Any
 class Message(BaseModel):
     """The body of one message; `kind` is how its header names it."""
 
-    model_config = ConfigDict(frozen=True, extra="ignore")
+    model_config = ConfigDict(frozen=True, extra="ignore", defer_build=True)
     kind: ClassVar[str] = ""
 
 
 class Request(Message):
     """What a client sends. Unknown fields are refused."""
 
-    model_config = ConfigDict(frozen=True, extra="forbid")
+    model_config = ConfigDict(frozen=True, extra="forbid", defer_build=True)
 
 
 class Change(Request):
@@ -256,7 +256,7 @@ class ErrorMessage(Reply):
 class CellsIs(BaseModel):
     """Cells of one layer in `site_is`: the column of that name, row 0 at the lowest y."""
 
-    model_config = ConfigDict(frozen=True)
+    model_config = ConfigDict(frozen=True, defer_build=True)
     column: Text
     corner_m: Point
     cell_m: Real
@@ -265,7 +265,7 @@ class CellsIs(BaseModel):
 class LayerIs(BaseModel):
     """One layer in `site_is`. Its obstacles lie in the columns after those of earlier layers."""
 
-    model_config = ConfigDict(frozen=True)
+    model_config = ConfigDict(frozen=True, defer_build=True)
     layer: Text
     unknown_blocks: Flag = False
     outlines_only: Flag = False
@@ -288,7 +288,7 @@ class SiteIs(Reply):
 class VehicleIs(BaseModel):
     """One vehicle in `vehicles_are`."""
 
-    model_config = ConfigDict(frozen=True)
+    model_config = ConfigDict(frozen=True, defer_build=True)
     vehicle: Text
     model: Text
     settings: dict[str, Fact] = {}
@@ -304,7 +304,7 @@ class VehiclesAre(Reply):
 class LayerHealth(BaseModel):
     """One layer in `health_is`."""
 
-    model_config = ConfigDict(frozen=True)
+    model_config = ConfigDict(frozen=True, defer_build=True)
     source: Text | None = None
     age_s: Seconds | None = None
     lease_left_s: Seconds | None = None
@@ -314,7 +314,7 @@ class LayerHealth(BaseModel):
 class Histogram(BaseModel):
     """How often a time fell between two bounds: counts[i] is of (bounds_s[i-1], bounds_s[i]]."""
 
-    model_config = ConfigDict(frozen=True)
+    model_config = ConfigDict(frozen=True, defer_build=True)
     bounds_s: list[Real]
     counts: list[Count]
     sum_s: Real
@@ -396,7 +396,7 @@ class Listening(Reply):
 class LegIs(BaseModel):
     """One stretch of a route without a change of direction."""
 
-    model_config = ConfigDict(frozen=True)
+    model_config = ConfigDict(frozen=True, defer_build=True)
     first: Count
     last: Count
     gear: Annotated[int, Field(strict=True, ge=-1, le=1)]
@@ -406,7 +406,7 @@ class LegIs(BaseModel):
 class BlockageIs(BaseModel):
     """One obstacle that the start or the goal overlaps."""
 
-    model_config = ConfigDict(frozen=True)
+    model_config = ConfigDict(frozen=True, defer_build=True)
     layer: Text
     id: Text
     depth_m: Real
@@ -415,7 +415,7 @@ class BlockageIs(BaseModel):
 class OutcomeIs(BaseModel):
     """What a worker found: the `outcome` of `answer` and `better`, packed by msgpack again."""
 
-    model_config = ConfigDict(frozen=True, extra="ignore")
+    model_config = ConfigDict(frozen=True, extra="ignore", defer_build=True)
     kind: Text
     cost: Real | None = None
     cost_unit: Text = "m"
@@ -448,3 +448,14 @@ def every_message() -> tuple[type[Message], ...]:
         for model in group:
             found[model.kind] = model
     return tuple(found.values())
+
+
+def build_all() -> None:
+    """
+    Build the validators of all messages now, some 50 ms in all.
+
+    Otherwise each is built when it is first used: a command that sends one question starts
+    sooner, but a daemon does not want to do it while somebody waits.
+    """
+    for model in (*every_message(), OutcomeIs):
+        model.model_rebuild()

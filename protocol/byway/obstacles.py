@@ -22,6 +22,9 @@ from byway.packed import Bytes, Column, check_columns, check_coordinates, pack, 
 Polygons: TypeAlias = Mapping[str, Sequence[Sequence[float]] | npt.NDArray[Any]]
 Discs: TypeAlias = Mapping[str, Sequence[float] | npt.NDArray[Any]]
 
+#: The fields `polygons`, `discs` and `columns` of a body.
+Fields: TypeAlias = dict[str, Any]
+
 _NAME: Final = re.compile(limits.name_pattern)
 
 
@@ -89,7 +92,7 @@ def _numbers(obstacle_id: str, values: object, shape: tuple[int, ...]) -> npt.ND
     return array
 
 
-def pack_shapes(found: Shapes) -> tuple[dict[str, Any], bytes]:
+def pack_shapes(found: Shapes) -> tuple[Fields, bytes]:
     """
     Return the fields `polygons`, `discs`, `columns` of a body, and the packed frame.
 
@@ -113,12 +116,17 @@ def pack_shapes(found: Shapes) -> tuple[dict[str, Any], bytes]:
             "discs_m": np.array(list(found.discs.values()), np.float64).reshape(-1, 3),
         }
     )
-    if len(packed) > limits.packed_bytes_max:
-        raise TooLarge(
-            f"the obstacles take {len(packed)} bytes, the most is {limits.packed_bytes_max}",
-            {"bytes": len(packed), "bytes_max": limits.packed_bytes_max},
-        )
+    check_packed_size("obstacles", len(packed))
     return {"polygons": len(rings), "discs": len(found.discs), "columns": columns}, packed
+
+
+def check_packed_size(what: str, size_bytes: int) -> None:
+    """Raise TooLarge if something does not fit into one change."""
+    if size_bytes > limits.packed_bytes_max:
+        raise TooLarge(
+            f"the {what} take {size_bytes} bytes, the most is {limits.packed_bytes_max}",
+            {"bytes": size_bytes, "bytes_max": limits.packed_bytes_max},
+        )
 
 
 def pack_ids(ids: Iterable[str]) -> npt.NDArray[np.uint8]:

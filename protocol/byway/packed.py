@@ -31,7 +31,7 @@ Bytes: TypeAlias = bytes | memoryview
 class Column(BaseModel):
     """Where one column lies in the packed frame, and how to read it."""
 
-    model_config = ConfigDict(frozen=True, extra="forbid")
+    model_config = ConfigDict(frozen=True, extra="forbid", defer_build=True)
 
     dtype: Annotated[str, StringConstraints(strict=True, max_length=8)]
     shape: Annotated[
