@@ -457,5 +457,6 @@ def build_all() -> None:
     Otherwise each is built when it is first used: a command that sends one question starts
     sooner, but a daemon does not want to do it while somebody waits.
     """
-    for model in (*every_message(), OutcomeIs):
+    models: tuple[type[BaseModel], ...] = (*every_message(), OutcomeIs)
+    for model in models:
         model.model_rebuild()
