@@ -84,7 +84,8 @@ class SocketsSection(Section):
         taken = [endpoint for others in info.data.values() for endpoint in others]
         for endpoint in resolved:
             _check_endpoint(endpoint)
-            if endpoint in taken:
+            # Port 0 is whichever is free, and so never the same one twice.
+            if endpoint in taken and not endpoint.endswith(":0"):
                 raise ValueError(f"{endpoint} stands for more than one socket")
             taken.append(endpoint)
         return resolved
@@ -97,6 +98,7 @@ def _usable_cores_but_one() -> int:
 class WorkersSection(Section):
     count: int = Field(default_factory=_usable_cores_but_one, ge=1, le=256)
     nice: Annotated[int, Field(ge=0, le=19)] = 10
+    cores: tuple[Annotated[int, Field(ge=0, le=4095)], ...] = ()
 
 
 class LogSection(Section):
@@ -217,7 +219,7 @@ def _check_endpoint(endpoint: str) -> None:
             raise ValueError(f"{endpoint}: an ipc path has 1 to {IPC_PATH_BYTES_MAX} bytes")
         return
     host, _, port = address.rpartition(":")
-    if transport != "tcp" or not re.fullmatch(r"\d{1,5}", port) or not 0 < int(port) < 65536:
+    if transport != "tcp" or not re.fullmatch(r"\d{1,5}", port) or not int(port) < 65536:
         raise ValueError(f"{endpoint}: expected tcp://127.0.0.1:PORT or ipc://PATH")
     # Anything else would let in whoever reaches the port: there are no keys yet.
     if not re.fullmatch(r"127(\.\d{1,3}){3}|\[::1\]|localhost", host):

@@ -35,9 +35,9 @@ SETTINGS = """
 [site]
 limits_m = [-100.0, -100.0, 100.0, 100.0]
 [sockets]
-requests = ["ipc://{folder}/requests"]
+requests = ["ipc://{folder}/requests", "tcp://127.0.0.1:0"]
 updates = ["ipc://{folder}/updates"]
-events = ["ipc://{folder}/events"]
+events = ["ipc://{folder}/events", "tcp://127.0.0.1:0"]
 [workers]
 count = {workers}
 [log]

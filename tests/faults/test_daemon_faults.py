@@ -178,6 +178,18 @@ def _crowd(daemon, count):
         context.term()
 
 
+def test_any_free_port_will_do_and_is_told(tmp_path):
+    with running(tmp_path) as (daemon, peer):
+        (line,) = daemon.log_lines("daemon.listening")
+        told = next(endpoint for endpoint in line["requests"] if endpoint.startswith("tcp"))
+        assert any(endpoint.startswith("tcp") for endpoint in peer.hello().events_endpoints)
+        with zmq.Context() as context, context.socket(zmq.DEALER) as sock:
+            sock.setsockopt(zmq.LINGER, 0)
+            sock.connect(told)
+            sock.send_multipart([b"\xff", b""])
+            assert sock.poll(5000)
+
+
 def test_garbage_is_answered_and_changes_nothing(tmp_path):
     with running(tmp_path) as (daemon, peer):
         context = zmq.Context()

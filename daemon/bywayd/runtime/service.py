@@ -94,7 +94,7 @@ def _serve(settings: Settings, skills: str, logs: Any) -> int:
         memory = SiteMemory.create(site_memory_bytes_max)
         closing.callback(memory.close)
         loop = Loop(clock, watch, _site_settings(settings), logs)
-        staff_settings = StaffSettings(skills, settings.workers.nice)
+        staff_settings = StaffSettings(skills, settings.workers.nice, settings.workers.cores)
         staff = Staff(staff_settings, memory, watch, loop.reports())
         closing.callback(staff.end)
         staff.start()
