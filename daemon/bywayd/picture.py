@@ -41,6 +41,14 @@ _WIDTH_INCHES: Final = 11.0
 _EDGE_RATIO: Final = 0.03
 
 
+def box_around(points_m: Iterable[Sequence[float]], margin_m: float) -> Box:
+    """Return the box around some points, grown on all sides."""
+    points = np.array(list(points_m), np.float64)
+    x_m_min, y_m_min = (points.min(axis=0) - margin_m).tolist()
+    x_m_max, y_m_max = (points.max(axis=0) + margin_m).tolist()
+    return x_m_min, y_m_min, x_m_max, y_m_max
+
+
 class Plan:
     """
     One drawing. Draw what lies below first; `save` writes the file.
@@ -157,6 +165,15 @@ class Plan:
                 )
                 self._legend[name] = {"color": ink, "linewidth": 2.0, "linestyle": style}
         self._arrows(points, ink)
+
+    def swath(
+        self, outline_m: npt.ArrayLike, table: npt.NDArray[Any], every_m: float = 1.5
+    ) -> None:
+        """Draw where the vehicle will stand on its way, as ghosts."""
+        along_m = np.hypot(np.diff(table["x_m"]), np.diff(table["y_m"])).cumsum()
+        rows = np.searchsorted(along_m, np.arange(0.0, along_m[-1:].sum(), every_m)) + 1
+        for row in table[rows]:
+            self.vehicle(outline_m, (row["x_m"], row["y_m"], row["heading_rad"]), ghost=True)
 
     def vehicle(
         self,

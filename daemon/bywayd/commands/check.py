@@ -63,11 +63,15 @@ def _print_settings(settings: "Settings", vehicles: dict[str, Any]) -> None:
     for title in ("length m", "width m", "turns within m", "clearance m"):
         table.add_column(title, justify="right")
     for name, vehicle in vehicles.items():
-        outline_m = vehicle.outline_at((0.0, 0.0, 0.0))
-        size_m = outline_m.max(axis=0) - outline_m.min(axis=0)
+        section = settings.vehicles[name]
         radius_m = getattr(vehicle, "turn_radius_m", None)
+        if radius_m is None:
+            size_m = (2 * vehicle.radius_m, 2 * vehicle.radius_m)
+        else:
+            outline_m = vehicle.outline_at((0.0, 0.0, 0.0))
+            size_m = outline_m.max(axis=0) - outline_m.min(axis=0)
         table.add_row(
-            *(name, settings.vehicles[name].model, f"{size_m[0]:.2f}", f"{size_m[1]:.2f}"),
+            *(name, section.model, f"{size_m[0]:.2f}", f"{size_m[1]:.2f}"),
             "on the spot" if radius_m is None else f"{radius_m:.2f}",
             f"{vehicle.clearance_m:.2f}",
         )

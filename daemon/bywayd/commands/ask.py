@@ -1,0 +1,192 @@
+"""`byway ask`: one replan from the shell."""
+
+import math
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any, Final
+
+import typer
+
+from bywayd.commands.shared import (
+    DEFAULT_ENDPOINT,
+    AsJson,
+    Endpoint,
+    Status,
+    console,
+    say_json,
+)
+
+if TYPE_CHECKING:
+    from rich.console import Console
+
+    import byway
+
+Pose = tuple[float, float, float]
+
+
+def _pose(text: str) -> Pose:
+    """`x,y,heading` in metres and radians; a heading may also end in `deg`."""
+    parts = [part.strip() for part in text.split(",")]
+    try:
+        x_m, y_m = float(parts[0]), float(parts[1])
+        heading = parts[2]
+        if heading.endswith("deg"):
+            heading_rad = math.radians(float(heading.removesuffix("deg")))
+        else:
+            heading_rad = float(heading)
+    except (IndexError, ValueError):
+        parts = []
+    if len(parts) != 3:
+        raise typer.BadParameter(
+            f"{text!r} is not x,y,heading, such as 2.5,-1,1.57 or 2.5,-1,90deg"
+        )
+    return x_m, y_m, heading_rad
+
+
+def ask(
+    vehicle: Annotated[str, typer.Argument(help="A vehicle that the daemon knows.")],
+    start: Annotated[str, typer.Option(help="x,y,heading: metres, radians (or 90deg).")],
+    goal: Annotated[str, typer.Option(help="x,y,heading.")],
+    budget: Annotated[float, typer.Option(help="Seconds to plan in.")] = 0.1,
+    unit: Annotated[str | None, typer.Option(help="The individual that asks.")] = None,
+    method: Annotated[str, typer.Option(help="Search method.")] = "auto",
+    seed: Annotated[int | None, typer.Option(help="Seed of the search.")] = None,
+    clearance: Annotated[
+        float | None, typer.Option(help="Metres kept around the footprint.")
+    ] = None,
+    leave_out: Annotated[
+        list[str] | None, typer.Option(help="A layer that does not count.")
+    ] = None,
+    picture: Annotated[
+        Path | None, typer.Option(help="Draw site and route into this file (png, svg, pdf).")
+    ] = None,
+    rows: Annotated[bool, typer.Option("--rows", help="Print the route's table as well.")] = False,
+    endpoint: Endpoint = DEFAULT_ENDPOINT,
+    as_json: AsJson = False,
+) -> None:
+    """Ask the daemon for a route, and show what it answers."""
+    import byway
+
+    start_pose, goal_pose = _pose(start), _pose(goal)
+    better: list[byway.Better] = []
+    with byway.Client(endpoint) as client:
+        answer = client.replan(
+            vehicle,
+            start=start_pose,
+            goal=goal_pose,
+            budget_s=budget,
+            unit=unit,
+            method=method,
+            seed=seed,
+            clearance_m=clearance,
+            leave_out=leave_out or (),
+            on_better=better.append,
+        )
+        if picture is not None:
+            _draw(client, vehicle, start_pose, goal_pose, answer, picture)
+    if as_json:
+        say_json(_as_dict(answer, better))
+    else:
+        _print(console(), answer, better, rows=rows)
+    raise typer.Exit(int(Status.WELL if answer.kind == "route" else Status.NO))
+
+
+def _as_dict(answer: "byway.Answer", better: "list[byway.Better]") -> dict[str, Any]:
+    names = ["kind", "unit", "cost", "cost_unit", "bound", "gap", "revision", "seed", "left_out"]
+    names += ["first_s", "waited_s", "total_s", "attempts", "statistics"]
+    told: dict[str, Any] = {name: getattr(answer, name) for name in names}
+    told["blocked_by"] = [
+        {"layer": one.layer, "obstacle": one.obstacle, "depth_m": one.depth_m}
+        for one in answer.blocked_by
+    ]
+    told["better"] = [{"elapsed_s": one.elapsed_s, "cost": one.cost} for one in better]
+    if answer.route is not None:
+        table = answer.route.table
+        told["length_m"] = answer.route.length_m
+        told["duration_s"] = answer.route.duration_s
+        told["route"] = {name: table[name].tolist() for name in table.dtype.names or ()}
+    return told
+
+
+#: What an answer without a route means, in a sentence.
+_MEANING: Final = {
+    "start_blocked": "The vehicle cannot stand where it starts.",
+    "goal_blocked": "The vehicle cannot stand at the goal.",
+    "start_too_fast": "At this speed it cannot stop before something is in its way.",
+    "no_route": "There is no route: not even the largest disc inside the vehicle gets through.",
+    "not_found": "No route was found in the time given; whether there is one is not known.",
+}
+
+
+def _print(
+    out: "Console", answer: "byway.Answer", better: "list[byway.Better]", *, rows: bool
+) -> None:
+    unit = answer.cost_unit
+    if answer.route is None:
+        out.print(f"[bold]{answer.kind}[/bold]: {_MEANING.get(answer.kind, '')}")
+        for one in answer.blocked_by:
+            out.print(f"  {one.obstacle} of layer {one.layer}, {one.depth_m:.3f} m deep")
+    else:
+        route = answer.route
+        out.print(
+            f"[bold]route[/bold] of {route.length_m:.2f} m in {route.duration_s:.1f} s, "
+            f"{route.direction_changes} changes of direction"
+        )
+        out.print(
+            f"  cost {answer.cost:.3f} {unit}, bound {answer.bound:.3f} {unit}, "
+            f"gap {100 * answer.gap:.1f} %"
+        )
+        for leg in route.legs:
+            way = "forward" if leg.gear > 0 else "reverse"
+            out.print(f"  {way:8s} {leg.length_m:8.2f} m  rows {leg.first_row} to {leg.last_row}")
+    first = "" if answer.first_s is None else f"first route after {1e3 * answer.first_s:.2f} ms, "
+    out.print(
+        f"  {first}answer after {1e3 * answer.total_s:.2f} ms, {len(better)} better ones heard, "
+        f"revision {answer.revision}, seed {answer.seed}"
+    )
+    if rows and answer.route is not None:
+        names = answer.route.table.dtype.names or ()
+        out.print("  ".join(f"{name:>15s}" for name in names))
+        for row in answer.route.table.tolist():
+            out.print("  ".join(f"{value:15.4f}" for value in row))
+
+
+def _draw(
+    client: "byway.Client",
+    vehicle: str,
+    start: Pose,
+    goal: Pose,
+    answer: "byway.Answer",
+    file: Path,
+) -> None:
+    from bywayd.outlines import outline_of
+    from bywayd.picture import INKS, Plan, box_around
+
+    site = client.site()
+    known = next(one for one in client.vehicles() if one.name == vehicle)
+    outline_m = outline_of(known.settings)
+    layers = {n: layer for n, layer in site.layers.items() if n not in answer.left_out}
+    table = None if answer.route is None else answer.route.table
+    shown = [start[:2], goal[:2]]
+    if table is not None:
+        shown += list(zip(table["x_m"].tolist(), table["y_m"].tolist(), strict=True))
+    box_m = site.limits_m or box_around(shown, margin_m=15.0)
+    notes = [f"{answer.kind}, revision {answer.revision}, seed {answer.seed}"]
+    if answer.route is not None:
+        notes.append(
+            f"{answer.route.length_m:.2f} m in {answer.route.duration_s:.1f} s, cost "
+            f"{answer.cost:.2f} {answer.cost_unit}, gap {100 * answer.gap:.1f} %"
+        )
+    plan = Plan(f"One replan for {vehicle}", box_m, notes)
+    for layer in layers.values():
+        for patch in layer.cells:
+            plan.cells(patch.corner_m, patch.cell_m, patch.cells)
+        plan.polygons(layer.polygons, "building", named=True)
+        plan.discs(layer.discs, "building", named=True)
+    if site.limits_m is not None:
+        plan.limits(site.limits_m)
+    if table is not None:
+        plan.swath(outline_m, table)
+        plan.route(table, INKS[0])
+    plan.vehicle(outline_m, start)
+    plan.goal(outline_m, goal)
+    plan.save(file)
