@@ -11,7 +11,7 @@ proposal to a vehicle controller.
 
 from byway.answer import ROUTE_TABLE, Answer, Better, Blockage, Leg, Route
 from byway.ask import Ask
-from byway.client import Client, Event, Vehicle, __version__
+from byway.client import Client, Event, Vehicle
 from byway.errors import (
     BadGeometry,
     BadMessage,
@@ -86,5 +86,4 @@ __all__ = [
     "Vehicle",
     "Warming",
     "Withdrawn",
-    "__version__",
 ]

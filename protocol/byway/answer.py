@@ -3,7 +3,7 @@
 import itertools
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any, Final
 
 import numpy as np
@@ -59,7 +59,7 @@ class Route:
         duration_s: Of the last row.
     """
 
-    table: npt.NDArray[np.void]
+    table: npt.NDArray[np.void] = field(repr=False)
     legs: tuple[Leg, ...]
     length_m: float
     duration_s: float
@@ -163,12 +163,15 @@ def answer_of(received: frames.Received) -> Answer:
     )
 
 
-def better_of(header: frames.Header, message: messages.BetterMessage, packed: Bytes) -> Better:
+def better_of(received: frames.Received) -> Better:
     """Return what a `better` says. Raises BadReply."""
+    message = received.message
+    if not isinstance(message, messages.BetterMessage):
+        raise BadReply(f"a {received.header.kind} where a better was due")
     return Better(
-        **_found(header, message.unit, message.revision, message.outcome, packed),
+        **_found(received.header, message.unit, message.revision, message.outcome, received.packed),
         elapsed_s=message.elapsed_s,
-        number=header.number,
+        number=received.header.number,
     )
 
 

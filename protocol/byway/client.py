@@ -2,44 +2,27 @@
 
 from __future__ import annotations
 
-import os
-import secrets
-import threading
 import time
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from types import TracebackType
-from typing import Any, Final, TypeVar
+from typing import Any, Final
 
 import numpy as np
 import numpy.typing as npt
-import zmq
 
 from byway import frames, limits, messages, obstacles
-from byway.answer import Answer, Better, answer_of, better_of
+from byway.answer import Answer, Better, better_of
 from byway.ask import Ask, OnBetter
-from byway.conversation import Clock, Patience, Question, Requests, Updates
-from byway.ear import Ear, Heard
-from byway.endpoints import sibling
-from byway.errors import (
-    BadReply,
-    BadValue,
-    BywayError,
-    DaemonLost,
-    NewEpoch,
-    TimedOut,
-    UnknownRequest,
-    from_code,
-)
-from byway.link import Context, Link, wait
-from byway.packed import Bytes, pack
+from byway.contact import Contact
+from byway.conversation import Clock, Patience
+from byway.ear import Heard
+from byway.errors import BadReply, BadValue, UnknownRequest
+from byway.link import wait
+from byway.packed import pack
 from byway.site_view import SiteView, site_view
-from byway.source import Sent, Source
-
-__version__: Final = "0.1.0"
 
 Pose = Sequence[float]
-Told = TypeVar("Told", bound=messages.Message)
 
 
 @dataclass(frozen=True, slots=True)
@@ -101,27 +84,8 @@ class Client:
         client_id: str | None = None,
         clock: Clock = time.monotonic,
     ) -> None:
-        # -- fixed ---------------------------------------------------------------------------------
-        self._endpoint: Final = endpoint
-        self._patience: Final = Patience(timeout_s, reconnect_s, repeat_s)
-        self._clock: Final = clock
-        #: In every request id: ids of two clients must never be the same.
-        self._token: Final = secrets.token_hex(8)
-        self.client_id: Final = self._token if client_id is None else client_id
-        # -- owned by the one thread that uses the client ------------------------------------------
-        self._owner: tuple[int, int] | None = None
-        self._is_closed = False
-        self._context: Context | None = None
-        self._requests: Requests | None = None
-        self._updates: Updates | None = None
-        self._source = Source(self._token)
-        self._ear: Ear | None = None
-        self._ears: list[Ear] = []
-        self._welcome: messages.Welcome | None = None
-        self._epoch = ""
-        self._serial = 0
-        #: The daemon's wall clock less ours, in seconds, from the last hello; for logs only.
-        self.clock_offset_s: float | None = None
+        patience = Patience(timeout_s, reconnect_s, repeat_s)
+        self._contact: Final = Contact(endpoint, patience, client_id, clock)
 
     def __enter__(self) -> Client:
         return self
@@ -136,45 +100,37 @@ class Client:
 
     def close(self) -> None:
         """Close all sockets. What the daemon has not acknowledged is forgotten here."""
-        if self._context is not None:
-            self._enter()
-            for conversation in (self._requests, self._updates):
-                if conversation is not None:
-                    conversation.close()
-            for ear in self._ears:
-                ear.link.close()
-            self._context.destroy(linger=0)
-            self._context = None
-        self._is_closed = True
+        self._contact.close()
 
     # -- questions -----------------------------------------------------------------------------
 
     def hello(self) -> messages.Welcome:
-        """Ask who the daemon is: state, epoch, vehicles, revision, limits."""
-        self._enter()
-        asked = messages.Hello(
-            versions=[limits.spec_version],
-            client=_name("client_id", self.client_id),
-            software=f"byway {__version__}",
-        )
-        sent_s = time.time_ns() * 1e-9
-        self._welcome = welcome = self._ask(asked, messages.Welcome)
-        self.clock_offset_s = welcome.wall_s - 0.5 * (sent_s + time.time_ns() * 1e-9)
-        return welcome
+        """Ask who the daemon is: state, vehicles, revision, limits."""
+        return self._contact.hello()
+
+    @property
+    def client_id(self) -> str:
+        """The name of the client: in logs, and the unit of replans that name none."""
+        return self._contact.client_id
 
     @property
     def epoch(self) -> str:
         """Which life of the daemon the client talks to; empty before the first call."""
-        return self._epoch
+        return self._contact.epoch
+
+    @property
+    def clock_offset_s(self) -> float | None:
+        """The daemon's wall clock less ours at the last hello, in seconds; for logs only."""
+        return self._contact.clock_offset_s
 
     def vehicles(self) -> list[Vehicle]:
         """Return the vehicles that the daemon knows."""
-        told = self._ask(messages.Vehicles(), messages.VehiclesAre)
+        told = self._contact.ask(messages.Vehicles(), messages.VehiclesAre)
         return [Vehicle(each.vehicle, each.model, each.settings) for each in told.vehicles]
 
     def health(self) -> messages.HealthIs:
         """Return how the daemon is."""
-        return self._ask(messages.Health(), messages.HealthIs)
+        return self._contact.ask(messages.Health(), messages.HealthIs)
 
     def site(
         self,
@@ -198,11 +154,11 @@ class Client:
             messages.Site,
             {
                 "layers": None if layers is None else list(layers),
-                "box_m": None if box_m is None else _floats(box_m),
+                "box_m": None if box_m is None else _floats("box_m", box_m),
                 "cells": cells,
             },
         )
-        return site_view(self._ask_raw(asked, messages.SiteIs))
+        return site_view(self._contact.ask_raw(asked))
 
     # -- replans -------------------------------------------------------------------------------
 
@@ -281,14 +237,14 @@ class Client:
         on_better: OnBetter | None = None,
     ) -> Ask:
         """Ask for a route and return at once; see `replan` for what it takes and raises."""
-        self._enter()
+        self._contact.enter()
         asked = frames.build(
             messages.Replan,
             {
                 "vehicle": vehicle,
                 "unit": self.client_id if unit is None else unit,
-                "start": _floats(start),
-                "goal": _floats(goal),
+                "start": _floats("start", start),
+                "goal": _floats("goal", goal),
                 "budget_s": budget_s,
                 "method": method,
                 "seed": None if seed is None else int(seed),
@@ -299,15 +255,10 @@ class Client:
                 "gap_wanted": gap_wanted,
             },
         )
-        self._meet()
         if on_better is not None:
-            self._listen_to(asked.unit)
-        requests = self._talk()
-        question = requests.ask(self._new_id(), asked, epoch=self._epoch, work_s=asked.budget_s)
-        deadline_s = self._deadline_s(asked.budget_s)
-        while not question.is_sent:
-            self._turn(question, deadline_s)
-        return Ask(self, question, asked.unit, deadline_s, on_better)
+            self._contact.listen_to(asked.unit)
+        question = self._contact.begin(asked)
+        return Ask(self._contact, question, asked.unit, on_better)
 
     def cancel(self, unit: str | None = None, *, replan: str | None = None) -> bool:
         """
@@ -338,40 +289,10 @@ class Client:
         if unit is not None and replan is not None:
             raise BadValue("name either the replan or the unit", {"field": "replan"})
         try:
-            self._ask(asked, messages.Noted)
+            self._contact.ask(asked, messages.Noted)
         except UnknownRequest:
             return False
         return True
-
-    def _wait_for(self, ask: Ask, on_better: OnBetter | None) -> Answer:
-        self._enter()
-        if ask.answer is not None:
-            return ask.answer
-        if on_better is not None:
-            self._listen_to(ask.unit)
-        try:
-            while True:
-                if on_better is not None:
-                    self._tell_better(ask, on_better)
-                while ask.question.replies:
-                    received = ask.question.replies.popleft()
-                    if isinstance(received.message, messages.Accepted):
-                        continue
-                    self._raise_if_error(received)
-                    ask.answer = answer_of(received)
-                    return ask.answer
-                self._turn(ask.question, ask.deadline_s)
-        finally:
-            self._talk().end(ask.question)
-
-    def _tell_better(self, ask: Ask, on_better: OnBetter) -> None:
-        if self._ear is None:
-            return
-        self._ear.look()
-        while (heard := self._ear.next()) is not None:
-            header, message = heard.received.header, heard.received.message
-            if header.id == ask.id and isinstance(message, messages.BetterMessage):
-                on_better(better_of(header, message, heard.received.packed))
 
     # -- changes of the site -------------------------------------------------------------------
 
@@ -402,7 +323,7 @@ class Client:
             "unknown_blocks": unknown_blocks,
             "outlines_only": outlines_only,
         }
-        return self._change(frames.build(messages.Claim, fields))
+        return self._contact.change(frames.build(messages.Claim, fields))
 
     def replace_layer(
         self,
@@ -428,7 +349,9 @@ class Client:
             "outlines_only": outlines_only,
             "expires_in_s": expires_in_s,
         }
-        return self._change(frames.build(messages.ReplaceLayer, {**settings, **fields}), packed)
+        return self._contact.change(
+            frames.build(messages.ReplaceLayer, {**settings, **fields}), packed
+        )
 
     def put(
         self,
@@ -453,7 +376,7 @@ class Client:
         """
         fields, packed = obstacles.pack_shapes(obstacles.shapes(polygons, discs))
         settings = {"layer": layer, "expires_in_s": expires_in_s}
-        return self._change(frames.build(messages.Put, {**settings, **fields}), packed)
+        return self._contact.change(frames.build(messages.Put, {**settings, **fields}), packed)
 
     def drop(self, layer: str, ids: Iterable[str]) -> int:
         """
@@ -465,7 +388,9 @@ class Client:
         revision = 0
         for first in range(0, max(1, len(names)), limits.drop_ids_max):
             some = names[first : first + limits.drop_ids_max]
-            revision = self._change(frames.build(messages.Drop, {"layer": layer, "ids": some}))
+            revision = self._contact.change(
+                frames.build(messages.Drop, {"layer": layer, "ids": some})
+            )
         return revision
 
     def patch(
@@ -497,49 +422,11 @@ class Client:
         columns, packed = pack({"cells": given})
         fields = {
             "layer": layer,
-            "corner_m": _floats(corner_m),
+            "corner_m": _floats("corner_m", corner_m),
             "cell_m": cell_m,
             "columns": columns,
         }
-        return self._change(frames.build(messages.Patch, fields), packed)
-
-    def _change(self, message: messages.Change, packed: Bytes = b"") -> int:
-        self._enter()
-        self._meet()
-        deadline_s = self._deadline_s()
-        source = self._source
-        if len(source.line) >= limits.unacknowledged_max:
-            # Nothing more is taken on before what is open is settled: the line is bounded.
-            self._settle(list(source.line), deadline_s)
-        made: list[Sent] = []
-        takes_over = isinstance(message, messages.Claim | messages.ReplaceLayer)
-        if not takes_over and not source.knows(message.layer):
-            made.append(source.add(messages.Claim(layer=message.layer), b"", self._clock()))
-        made.append(source.add(message, packed, self._clock()))
-        self._settle(made, deadline_s)
-        for sent in made:
-            if sent.error is not None:
-                raise sent.error
-        self._raise_losses()
-        return made[-1].revision
-
-    def _settle(self, made: Sequence[Sent], deadline_s: float) -> None:
-        """Wait until these changes are decided."""
-        if self._updates is None:
-            link = Link(self._zmq(), self._sibling("updates"))
-            self._updates = Updates(link, self._patience, self._clock, self._source)
-        while not all(sent.is_decided for sent in made):
-            if self._clock() >= deadline_s:
-                what = f"{len(self._source.line)} changes"
-                raise self._late(what, is_connected=self._updates.is_connected)
-            self._updates.turn(deadline_s)
-        self._epoch = self._source.epoch
-
-    def _raise_losses(self) -> None:
-        if self._source.losses:
-            loss, *_ = self._source.losses
-            self._source.losses.clear()
-            raise loss
+        return self._contact.change(frames.build(messages.Patch, fields), packed)
 
     # -- events --------------------------------------------------------------------------------
 
@@ -556,169 +443,40 @@ class Client:
         Raises:
             DaemonLost: If there is no connection for `reconnect_s`.
         """
-        self._enter()
-        self._meet()
-        wanted = tuple(topics)
-        ear = self._new_ear(wanted)
-        end_s = float("inf") if timeout_s is None else self._clock() + timeout_s
+        contact = self._contact
+        contact.enter()
+        contact.meet()
+        ear = contact.new_ear(tuple(topics))
+        end_s = float("inf") if timeout_s is None else contact.clock() + timeout_s
+        down_since_s: float | None = None
         try:
-            down_since_s: float | None = None
-            while (now_s := self._clock()) < end_s:
-                self._enter()
+            while contact.clock() < end_s:
+                contact.enter()
                 ear.look()
                 while (heard := ear.next()) is not None:
-                    yield self._event(heard)
-                down_since_s = self._check_down(ear, down_since_s, now_s)
-                # A timeout of infinity is no number that the poll understands.
-                wait([(ear.link, False)], min(end_s, now_s + 0.5), self._clock)
+                    yield _event(heard)
+                down_since_s = contact.check_ear(ear, down_since_s)
+                # Looked at now and then: a connection that is not there makes no noise.
+                wait([(ear.link, False)], min(end_s, contact.clock() + 0.1), contact.clock)
         finally:
-            self._ears.remove(ear)
-            ear.link.close()
-
-    def _check_down(self, ear: Ear, since_s: float | None, now_s: float) -> float | None:
-        if ear.link.is_connected:
-            return None
-        if since_s is not None and now_s - since_s >= self._patience.reconnect_s:
-            raise self._late("events", is_connected=False)
-        return now_s if since_s is None else since_s
-
-    def _event(self, heard: Heard) -> Event:
-        header, message = heard.received.header, heard.received.message
-        content: Better | messages.HealthIs
-        if isinstance(message, messages.BetterMessage):
-            content = better_of(header, message, heard.received.packed)
-        elif isinstance(message, messages.HealthIs):
-            content = message
-        else:
-            raise BadReply(f"a {header.kind} under the topic {heard.topic}")
-        return Event(heard.topic, header.epoch, header.number, heard.missed, content)
-
-    def _new_ear(self, topics: Sequence[str]) -> Ear:
-        ear = Ear(Link(self._zmq(), self._sibling("events"), topics))
-        self._ears.append(ear)
-        return ear
-
-    def _listen_to(self, unit: str) -> None:
-        """Be sure that the next better route of the unit will be heard, if that can be."""
-        topic = f"better.{unit}"
-        if self._ear is None:
-            self._ear = self._new_ear([])
-        ear = self._ear
-        ear.link.subscribe(topic)
-        until_s = self._clock() + self._patience.listen_s
-        while topic not in ear.confirmed and self._clock() < until_s:
-            wait([(ear.link, False)], until_s, self._clock)
-            ear.look()
-            while ear.next() is not None:
-                pass  # better routes of earlier replans
-
-    # -- within --------------------------------------------------------------------------------
-
-    def _enter(self) -> None:
-        if self._is_closed:
-            raise RuntimeError("the client is closed")
-        me = (os.getpid(), threading.get_ident())
-        if self._owner is None:
-            self._owner = me
-        elif self._owner != me:
-            raise RuntimeError(
-                "a client belongs to the thread that made its first call; make one for each thread"
-            )
-
-    def _zmq(self) -> Context:
-        if self._context is None:
-            self._context = zmq.Context()
-        return self._context
-
-    def _talk(self) -> Requests:
-        if self._requests is None:
-            link = Link(self._zmq(), self._endpoint)
-            self._requests = Requests(link, self._patience, self._clock)
-        return self._requests
-
-    def _meet(self) -> messages.Welcome:
-        return self._welcome or self.hello()
-
-    def _sibling(self, socket: str) -> str:
-        welcome = self._meet()
-        offered = welcome.updates_endpoints if socket == "updates" else welcome.events_endpoints
-        return sibling(self._endpoint, socket, offered)
-
-    def _new_id(self) -> str:
-        self._serial += 1
-        return f"{self._token}-{self._serial}"
-
-    def _deadline_s(self, work_s: float = 0.0) -> float:
-        return self._clock() + work_s + self._patience.timeout_s
-
-    def _ask(self, message: messages.Request, told: type[Told]) -> Told:
-        """Send a request and return what is in its one reply."""
-        found = self._ask_raw(message, told).message
-        if not isinstance(found, told):
-            raise BadReply(f"a {found.kind} in reply to {message.kind}")
-        return found
-
-    def _ask_raw(self, message: messages.Request, told: type[messages.Message]) -> frames.Received:
-        self._enter()
-        requests = self._talk()
-        question = requests.ask(self._new_id(), message)
-        deadline_s = self._deadline_s()
-        try:
-            while not question.replies:
-                self._turn(question, deadline_s)
-        finally:
-            requests.end(question)
-        received = question.replies.popleft()
-        self._raise_if_error(received)
-        self._meet_epoch(received.header.epoch)
-        return received
-
-    def _turn(self, question: Question, deadline_s: float) -> None:
-        requests = self._talk()
-        if self._clock() >= deadline_s:
-            requests.end(question)
-            raise self._late(f"request {question.id}", is_connected=requests.is_connected)
-        requests.turn(deadline_s, [] if self._ear is None else [self._ear.link])
-
-    def _raise_if_error(self, received: frames.Received) -> None:
-        message = received.message
-        if not isinstance(message, messages.ErrorMessage):
-            return
-        error = from_code(message.code, message.text, message.facts, message.retry_after_s)
-        if isinstance(error, NewEpoch):
-            self._meet_epoch(received.header.epoch)
-        raise error
-
-    def _meet_epoch(self, epoch: str) -> None:
-        """Take note of the daemon's life; give a new one the layers that the old one had."""
-        source = self._source
-        if epoch == self._epoch:
-            return
-        self._epoch = epoch
-        if source.epoch != epoch:
-            source.begin_again(epoch, 0, self._clock())
-        if source.line:
-            self._settle([sent for sent in source.line if sent.restores], self._deadline_s())
-        self._raise_losses()
-
-    def _late(self, what: str, *, is_connected: bool) -> BywayError:
-        facts = {"endpoint": self._endpoint}
-        if is_connected:
-            return TimedOut(f"{self._endpoint} has not replied to {what} in time", facts)
-        return DaemonLost(f"no connection to {self._endpoint} for {what}", facts)
+            contact.close_ear(ear)
 
 
-def _floats(values: Iterable[float]) -> list[float]:
-    """Return plain floats, of numpy's or other numbers."""
+def _event(heard: Heard) -> Event:
+    header, message = heard.received.header, heard.received.message
+    content: Better | messages.HealthIs
+    if isinstance(message, messages.BetterMessage):
+        content = better_of(heard.received)
+    elif isinstance(message, messages.HealthIs):
+        content = message
+    else:
+        raise BadReply(f"a {header.kind} under the topic {heard.topic}")
+    return Event(heard.topic, header.epoch, header.number, heard.missed, content)
+
+
+def _floats(field: str, values: Iterable[float]) -> list[float]:
+    """Return plain floats, of numpy's or other numbers. Raises BadValue."""
     try:
         return [float(value) for value in values]
     except (TypeError, ValueError) as fault:
-        raise BadValue(f"not a list of numbers: {values!r:.80}", {}) from fault
-
-
-def _name(field: str, value: str) -> str:
-    """Return a name. Raises BadValue, naming the argument that it came from."""
-    try:
-        return obstacles.check_id(value)
-    except BadValue as fault:
-        raise BadValue(fault.text, {"field": field}) from None
+        raise BadValue(f"{field} must be numbers, not {values!r:.80}", {"field": field}) from fault

@@ -6,9 +6,8 @@ number, so that the daemon does it once. Neither waits by itself: a turn sends w
 waits until something happens or a given time, and takes in what came.
 """
 
-from collections import deque
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import Final
 
 from byway import frames, messages
@@ -108,18 +107,20 @@ class _Line:
 @dataclass(slots=True, eq=False)
 class Question:
     """
-    One request and the replies to it.
+    One request and the reply to it.
 
     Attributes:
-        replies: Those that nobody has taken yet, in order.
         work_s: How long the daemon may take after it has said `accepted`.
+        deadline_s: When nobody waits for it any more.
+        reply: The one that ends it, once it is there.
     """
 
     id: str
     parts: list[Bytes]
     work_s: float
+    deadline_s: float
     repeat_s: float
-    replies: deque[frames.Received] = field(default_factory=deque)
+    reply: frames.Received | None = None
     is_sent: bool = False
     repeat_at_s: float = 0.0
 
@@ -129,16 +130,21 @@ class Requests(_Line):
 
     def __init__(self, link: Link, patience: Patience, clock: Clock) -> None:
         super().__init__(link, patience, clock)
+        #: Without a reply, and still waited for.
         self._open: dict[str, Question] = {}
-        #: Of the daemon, as its last message told it.
-        self.epoch = ""
 
     def ask(
-        self, id: str, message: messages.Request, *, epoch: str = "", work_s: float = 0.0
+        self,
+        id: str,
+        message: messages.Request,
+        deadline_s: float,
+        *,
+        epoch: str = "",
+        work_s: float = 0.0,
     ) -> Question:
-        """Open a question; the next turn sends it. `end` it afterwards."""
-        header = frames.Header(message.kind, id, epoch=epoch)
-        question = Question(id, frames.encode(header, message), work_s, self._patience.repeat_s)
+        """Open a question; the next turn sends it."""
+        parts = frames.encode(frames.Header(message.kind, id, epoch=epoch), message)
+        question = Question(id, parts, work_s, deadline_s, self._patience.repeat_s)
         self._open[id] = question
         return question
 
@@ -160,6 +166,8 @@ class Requests(_Line):
         # What came since the last turn counts, however long ago that was.
         self._take_in_all()
         now_s = self._clock()
+        for question in [each for each in self._open.values() if now_s >= each.deadline_s]:
+            self.end(question)
         if self._look(now_s) or self._is_silent(now_s):
             for question in self._open.values():
                 question.is_sent = False
@@ -192,13 +200,14 @@ class Requests(_Line):
             question.repeat_at_s = now_s + question.repeat_s
 
     def _take_in(self, received: frames.Received) -> None:
-        self.epoch = received.header.epoch or self.epoch
         question = self._open.get(received.header.id)
         if question is None:
             return  # a reply to a repeat, or to somebody who has given up
         if isinstance(received.message, messages.Accepted):
             question.repeat_at_s = self._clock() + question.work_s + question.repeat_s
-        question.replies.append(received)
+            return
+        question.reply = received
+        self.end(question)
 
 
 class Updates(_Line):

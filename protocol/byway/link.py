@@ -16,6 +16,7 @@ from typing import Any, Final, TypeAlias
 import zmq
 
 from byway import limits
+from byway.errors import BadValue
 from byway.packed import Bytes
 
 Context: TypeAlias = "zmq.Context[zmq.Socket[bytes]]"
@@ -48,6 +49,9 @@ class Link:
         context: Of the client.
         endpoint: As ZeroMQ writes it.
         topics: Prefixes to subscribe to; None for a DEALER.
+
+    Raises:
+        BadValue: The endpoint is none.
     """
 
     def __init__(
@@ -73,7 +77,14 @@ class Link:
             zmq.EVENT_HANDSHAKE_SUCCEEDED | zmq.EVENT_DISCONNECTED
         )
         self.is_connected = self.is_lost = False
-        self._socket.connect(self.endpoint)
+        try:
+            self._socket.connect(self.endpoint)
+        except zmq.ZMQError as fault:
+            self.close()
+            raise BadValue(
+                f"{self.endpoint!r} is no endpoint ({fault}); write tcp://HOST:PORT or ipc:///PATH",
+                {"field": "endpoint", "value": self.endpoint},
+            ) from fault
 
     def reopen(self) -> None:
         """Go on with a fresh socket."""

@@ -70,13 +70,18 @@ def shapes(polygons: Polygons | None, discs: Discs | None) -> Shapes:
 
 def check_id(obstacle_id: object) -> str:
     """Return an id if it is a name. Raises BadValue."""
-    if not isinstance(obstacle_id, str) or not _NAME.fullmatch(obstacle_id):
+    if not is_id(obstacle_id):
         raise BadValue(
             f"{str(obstacle_id)[:80]!r} is no id: 1 to {limits.name_chars_max} letters, digits "
             "and _.:/#-, beginning with a letter or digit",
             {"id": str(obstacle_id)[:80]},
         )
-    return obstacle_id
+    return str(obstacle_id)
+
+
+def is_id(name: object) -> bool:
+    """Whether this is a name: of an obstacle, a layer, a unit, a client."""
+    return isinstance(name, str) and _NAME.fullmatch(name) is not None
 
 
 def _numbers(obstacle_id: str, values: object, shape: tuple[int, ...]) -> npt.NDArray[np.float64]:

@@ -17,8 +17,8 @@ from byway.errors import BywayError, NewEpoch, from_code
 from byway.held import HeldLayer
 from byway.packed import Bytes
 
-#: Refusals that make a layer somebody else's business.
-_LOST_WITH: Final = frozenset({"not_owner", "conflict", "unknown_layer"})
+#: The refusal that makes a layer somebody else's business.
+_LOST_WITH: Final = "not_owner"
 
 
 @dataclass(slots=True, eq=False)
@@ -127,7 +127,7 @@ class Source:
                 sent.error = from_code(
                     message.code, message.text, message.facts, message.retry_after_s
                 )
-                if message.code in _LOST_WITH:
+                if message.code == _LOST_WITH:
                     self.layers.pop(sent.message.layer, None)
                 if sent.restores:
                     self.losses.append(sent.error)
