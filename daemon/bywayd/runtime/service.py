@@ -18,6 +18,7 @@ from typing import Any, Final
 
 import structlog
 
+from byway.messages import build_all
 from bywayd.core.effects import LayerFlags
 from bywayd.core.front import Front
 from bywayd.core.front_settings import FrontSettings, KnownVehicle
@@ -102,6 +103,7 @@ def _serve(settings: Settings, skills: str, logs: Any) -> int:
         closing.callback(outside.close)
         core = Front(_front_settings(settings, outside), epoch, secrets.randbits(63))
         log.info("daemon.listening", epoch=epoch, **outside.endpoints)
+        build_all()  # otherwise the first message of each kind would cost some milliseconds
         # What exists now stays; the collector need not go through it in the middle of a turn.
         gc.collect()
         gc.freeze()
