@@ -119,8 +119,8 @@ class WorkerAlive:
     """
     A sign of life, nothing else.
 
-    A worker says it when it takes a job, then at least every 100 ms while it is busy, and at
-    once as the answer to `PingWorker`. Any other event of a worker counts as one too.
+    A worker says it at least every 100 ms while it is busy, and at once as the answer to
+    `PingWorker`. Any other event of a worker counts as one too.
     """
 
     worker: int

@@ -40,8 +40,6 @@ vitals_every_ns: Final = SECOND_NS
 #: Lines from the crew's common pipe that are logged per second; a crashing crew can say a lot.
 said_lines_max: Final = 50
 
-log = structlog.get_logger()
-
 
 class Core(Protocol):
     """`bywayd.core.front.Front`, or whatever a test puts in its place."""
@@ -60,6 +58,8 @@ class Loop:
         self._watch = watch
         self._site_settings = site_settings
         self._logs = logs
+        # Bound once: the lazy one costs as much again at every line.
+        self._logger = structlog.get_logger().bind()
         # -- given to `run`; the staff tells us news before that already -------------------------
         self._core: Core
         self._outside: Outside
@@ -108,9 +108,9 @@ class Loop:
             message=self._hear,
             lost=self._lose,
             progress=self._note_progress,
-            warm=lambda: log.info("crew.warm"),
+            warm=lambda: self._logger.info("crew.warm"),
             said=self._note_said,
-            template_lost=lambda why: log.error("template.lost", why=why),
+            template_lost=lambda why: self._logger.error("template.lost", why=why),
         )
 
     def run(self, core: Core, outside: Outside, staff: Staff, signals: int) -> str:
@@ -179,7 +179,7 @@ class Loop:
 
     def _hear(self, role: Role, number: int, message: Message) -> None:
         if message.get("say") == "trouble":
-            log.error("crew.trouble", role=role, number=number, text=message.get("text"))
+            self._logger.error("crew.trouble", role=role, number=number, text=message.get("text"))
             return
         try:
             event = event_of(role, number, message)
@@ -198,7 +198,7 @@ class Loop:
         if self._outside.doorman.look():
             doorman = self._outside.doorman
             event = "doors.opened" if doorman.is_open else "doors.shut"
-            log.warning(event, peers=doorman.peers, peers_max=doorman.peers_max)
+            self._logger.warning(event, peers=doorman.peers, peers_max=doorman.peers_max)
 
     def _note_signals(self, descriptor: int) -> None:
         with contextlib.suppress(BlockingIOError):
@@ -215,12 +215,12 @@ class Loop:
         # From a warm cache all of them load within a second, and nobody needs to know each.
         if now_ns - self._progress_ns > SECOND_NS:
             self._progress_ns = now_ns
-            log.info("crew.warming", done=done, total=total, kernel=name)
+            self._logger.info("crew.warming", done=done, total=total, kernel=name)
 
     def _note_said(self, line: str) -> None:
         self._said_lines += 1
         if self._said_lines <= said_lines_max:
-            log.warning("crew.said", line=line[:500])
+            self._logger.warning("crew.said", line=line[:500])
 
     # -- effects out ------------------------------------------------------------------------
 
@@ -262,7 +262,7 @@ class Loop:
         self._tell("surveyor", effect.surveyor, "describe", ticket=effect.ticket, question=question)
 
     def _log(self, effect: effects.Log) -> None:
-        getattr(log, effect.level)(effect.event, **effect.facts)
+        getattr(self._logger, effect.level)(effect.event, **effect.facts)
 
     def _set_wake(self, effect: effects.Wake) -> None:
         self._wake = effect.at
@@ -277,7 +277,7 @@ class Loop:
         self._vitals_at = Instant(self._clock.now().ns + vitals_every_ns)
         self._crew.kill_silent()
         if self._said_lines > said_lines_max:
-            log.warning("crew.said.more", lines=self._said_lines - said_lines_max)
+            self._logger.warning("crew.said.more", lines=self._said_lines - said_lines_max)
         self._said_lines = 0
         processes = {"front": os.getpid()}
         if self._crew.template_pid is not None:
