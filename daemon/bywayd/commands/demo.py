@@ -9,7 +9,7 @@ import tempfile
 import time
 from collections.abc import Iterator
 from pathlib import Path
-from typing import IO, TYPE_CHECKING, Annotated, Any, Final
+from typing import TYPE_CHECKING, Annotated, Any, Final
 
 import typer
 
@@ -21,6 +21,8 @@ if TYPE_CHECKING:
 #: The first start compiles all kernels.
 READY_S_MAX: Final = 300.0
 STOP_S_MAX: Final = 5.0
+WORKERS_MIN: Final = 2
+LINE_EVERY_S: Final = 5.0
 
 
 def demo(
@@ -58,6 +60,8 @@ def _daemon(folder: Path) -> Iterator[subprocess.Popen[bytes]]:
         },
         "BYWAY_SITE__LIMITS_M": json.dumps(LIMITS_M),
         "BYWAY_LOG__FORM": "json",
+        # Three vehicles ask at the same time; workers give way to everything else.
+        "BYWAY_WORKERS__COUNT": str(max(WORKERS_MIN, len(os.sched_getaffinity(0)) - 1)),
     }
     with (folder / "daemon.log").open("wb") as log:
         process = subprocess.Popen(
@@ -104,13 +108,12 @@ def _run_yard(
     )
     report: dict[str, Any] | None = None
     try:
-        assert_pipe: IO[bytes] | None = yard.stdout
-        for line in assert_pipe or ():
-            told = json.loads(line)
-            if "progress" in told:
-                _show_progress(told["progress"], out)
-            else:
-                report = told["report"]
+        with _Progress(out, seconds) as progress:
+            for line in _lines_of(yard):
+                if "progress" in line:
+                    progress.show(line["progress"])
+                else:
+                    report = line["report"]
     finally:
         with contextlib.suppress(subprocess.TimeoutExpired):
             yard.wait(STOP_S_MAX)
@@ -122,15 +125,45 @@ def _run_yard(
     return report
 
 
-def _show_progress(progress: dict[str, Any], out: "Console") -> None:
-    first = "" if progress["first_ms"] is None else f", first route {progress['first_ms']:.1f} ms"
-    out.print(
-        f"{progress['seconds']:6.1f} s  {progress['deliveries']:2d} deliveries  "
-        f"{progress['replans']:4d} replans{first}  {progress['packs']} packs in the way  "
-        f"{progress['collisions']} collisions"
-    )
-    for name, doing in progress["units"].items():
-        out.print(f"          {name:10s} {doing}", style="dim")
+def _lines_of(yard: subprocess.Popen[bytes]) -> Iterator[dict[str, Any]]:
+    if yard.stdout is not None:
+        for line in yard.stdout:
+            yield json.loads(line)
+
+
+class _Progress:
+    """What goes on in the yard: a live display on a terminal, otherwise a line now and then."""
+
+    def __init__(self, out: "Console", seconds: float) -> None:
+        from rich.live import Live
+
+        self._out, self._seconds = out, seconds
+        self._live = Live(console=out, auto_refresh=False) if out.is_terminal else None
+        self._next_s = 0.0
+
+    def __enter__(self) -> "_Progress":
+        if self._live is not None:
+            self._live.start()
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        if self._live is not None:
+            self._live.stop()
+
+    def show(self, now: dict[str, Any]) -> None:
+        """Show the yard as it is now."""
+        first = "" if now["first_ms"] is None else f", first route {now['first_ms']:.1f} ms"
+        line = (
+            f"{now['seconds']:5.0f} of {self._seconds:.0f} s: {now['deliveries']} deliveries, "
+            f"{now['replans']} replans{first}, {now['packs']} packs in the way, "
+            f"{now['collisions']} collisions"
+        )
+        units = [f"        {name:10s} {doing}" for name, doing in now["units"].items()]
+        if self._live is not None:
+            self._live.update("\n".join([line, *units]), refresh=True)
+        elif now["seconds"] >= self._next_s:
+            self._next_s = now["seconds"] + LINE_EVERY_S
+            self._out.print(line)
 
 
 def _conclude(report: dict[str, Any], picture: Path, out: "Console") -> None:

@@ -21,6 +21,8 @@ from bywayd.yard.tracking import Line
 from bywayd.yard.unit import Ask, Reply
 
 SHOW_EVERY_S: Final = 0.2
+#: A route this near to the best possible is good enough to drive; the worker is free for others.
+GAP_WANTED: Final = 0.02
 BEGIN_S: Final = 10.0
 #: How long a thread may take to end: the longest budget, and the client's own patience.
 ENDING_S: Final = 5.0
@@ -138,6 +140,7 @@ class LiveDesk:
                 leave_out=[layer_of(ask.unit)],
                 start_speed_mps=ask.start_speed_mps,
                 start_curvature_per_m=ask.start_curvature_per_m,
+                gap_wanted=GAP_WANTED,
                 on_better=count,
             )
         except byway.BywayError as fault:

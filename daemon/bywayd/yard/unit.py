@@ -25,6 +25,8 @@ MOVING_BUDGET_S: Final = 0.12
 #: From the end of the budget to the hand-over: the way there and back, and a step.
 HANDOVER_SPARE_S: Final = 0.12
 ASK_EVERY_S: Final = 1.5
+#: Never more often than this, whatever happens: the workers are there for all units.
+ASK_PAUSE_S: Final = 0.3
 RETRY_S: Final = 0.4
 LOADING_S: Final = 1.0
 #: A new route must save this much, or a vehicle would swing between routes of the same cost.
@@ -111,7 +113,7 @@ class Unit:
         self._stands_until_s = LOADING_S
         self.pending: Ask | None = None
         self._ask_again_s = 0.0
-        self._asked_s = 0.0
+        self._asked_s = -ASK_PAUSE_S
         self._failures = 0
         #: Packs that the daemon knew before this moment are known to the route in use.
         self._known_s = 0.0
@@ -197,7 +199,7 @@ class Unit:
 
     def _question(self, now_s: float) -> Ask | None:
         driver = self.driver
-        if now_s < max(self._ask_again_s, self._stands_until_s):
+        if now_s < max(self._ask_again_s, self._stands_until_s, self._asked_s + ASK_PAUSE_S):
             return None
         if driver.line is None:
             return self._ask_from_here(now_s)
