@@ -39,6 +39,14 @@ from bywayd.settings import Settings
 #: wait its turn; longer than this, something is wrong with it, and most budgets are not over yet.
 worker_silence_s: Final = 0.25
 
+#: A worker that gives signs of life but is late is slow, not lost: on a full machine it may have
+#: been kept waiting, and a new one would have to make all that it knows of the site once more.
+worker_grace_s: Final = 0.2
+
+#: The surveyor says nothing while it publishes, and a square kilometre with 5,000 obstacles that
+#: arrives at once takes it 4 s on a full machine.
+surveyor_silence_s: Final = 20.0
+
 #: How far the site's memory may grow. Nothing of it exists before it is needed, and a full site
 #: of 400 x 400 m takes some hundred megabytes.
 site_memory_bytes_max: Final = 8 * 1024**3
@@ -166,6 +174,8 @@ def _front_settings(settings: Settings, outside: Outside) -> FrontSettings:
         software=f"bywayd {metadata.version('byway')}",
         workers=settings.workers.count,
         worker_silence_s=worker_silence_s,
+        worker_grace_s=worker_grace_s,
+        surveyor_silence_s=surveyor_silence_s,
     )
 
 
