@@ -336,7 +336,7 @@ class Ledger:
                 expires_at=entry.expires_at,
                 applied=no is None,
             )
-        elif change.what == "drop":
+        elif change.what == "drop" and no is None:
             self._expiries.dropped(name, change.ids)
         layer = self.layers.get(name)
         if no is None and layer is not None:

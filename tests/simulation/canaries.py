@@ -1,0 +1,123 @@
+"""
+Cores that are broken on purpose, one for each promise: the simulated world must catch them all.
+
+A checker that nobody has seen fail may be one that cannot.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any
+
+from byway.messages import Acknowledged
+from bywayd.core.answers import Answers
+from bywayd.core.dispatch import Dispatch
+from bywayd.core.docket import Docket, Held
+from bywayd.core.events import Outcome
+from bywayd.core.instants import Instant
+from bywayd.core.ledger import Entry, Ledger
+from bywayd.core.outbox import Outbox
+from bywayd.core.snapshots import Snapshot, Snapshots
+
+true_append = Ledger._append
+true_ended = Docket.ended
+true_decide = Ledger.decide
+true_publish = Outbox.publish
+
+
+@dataclass(frozen=True)
+class Canary:
+    """One method replaced by a broken one, and what must be said about it."""
+
+    owner: type
+    method: str
+    broken: Callable[..., Any]
+    caught: str
+
+
+def acknowledge_at_once(ledger: Ledger, entry: Entry) -> None:
+    true_append(ledger, entry)
+    source = None if entry.source is None else ledger.sources.get(entry.source)
+    if source is not None:
+        told = Acknowledged(
+            source=source.name, number=entry.number, revision=max(1, ledger._revision)
+        )
+        ledger._outbox.reply(source.peer, None, told)
+
+
+def publish_anything(snapshots: Snapshots, revision: int, handle: object) -> bool:
+    # Every fifth revision is announced as an older one.
+    snapshots._current = Snapshot(revision - 3 * (revision % 5 == 0), handle)
+    return True
+
+
+def hold_anything(docket: Docket, outcome: Outcome, revision: int, now: Instant) -> bool:
+    docket.best = Held(outcome, revision)
+    docket.first_at = docket.first_at or now
+    return True
+
+
+def pass_off_as_new(docket: Docket, outcome: Outcome, revision: int, now: Instant) -> None:
+    true_ended(docket, outcome, revision + 1, now)
+
+
+def never_look_at_the_clock(dispatch: Dispatch, now: Instant) -> None:
+    dispatch._begin_jobs(now)
+
+
+def decide_without_refusals(ledger: Ledger, refusals: object, revision: int, now: Instant) -> None:
+    true_decide(ledger, (), revision, now)
+
+
+def number_nothing(outbox: Outbox, topic: str, *args: Any, **more: Any) -> None:
+    outbox._streams.clear()
+    true_publish(outbox, topic, *args, **more)
+
+
+def take_gaps(ledger: Ledger, peer: Any, header: Any, now: Instant) -> Any:
+    source = ledger.sources.heard(header.source, peer, now)
+    return source if source is not None and header.number > source.have else None
+
+
+CANARIES = {
+    "changes are acknowledged before they are visible": Canary(
+        Ledger, "_append", acknowledge_at_once, "what is acknowledged is visible"
+    ),
+    "changes that the surveyor refused count as visible": Canary(
+        Ledger, "decide", decide_without_refusals, "what is acknowledged is visible"
+    ),
+    "changes are taken in across gaps": Canary(
+        Ledger, "_next_in_turn", take_gaps, "what is acknowledged is visible|decided once"
+    ),
+    "snapshots are given back while they are read": Canary(
+        *(Snapshots, "maybe_release", lambda self: self.revision),
+        "no snapshot is given back while it is read",
+    ),
+    "successors are told of the current snapshot only": Canary(
+        *(Snapshots, "hand_over", lambda self: (self.current.handle,)),
+        "a successor keeps every snapshot that is read",
+    ),
+    "revisions go back": Canary(
+        Snapshots,
+        "publish",
+        publish_anything,
+        "revisions never go back|not older|not given back|a replan sees",
+    ),
+    "deadlines are not kept": Canary(
+        *(Dispatch, "settle", never_look_at_the_clock),
+        "an answer leaves within its budget|not settled",
+    ),
+    "worse routes are published": Canary(
+        Docket, "hold", hold_anything, "costs never rise within a stream|repeats the best"
+    ),
+    "answers are forgotten at once": Canary(
+        *(Answers, "get", lambda self, id: None),
+        "taken in once|nothing is taken in after its end|same answer again|answered once",
+    ),
+    "routes on old revisions pass for new ones": Canary(
+        *(Docket, "ended", pass_off_as_new),
+        "was verified at the revision that its answer names",
+    ),
+    "events are not numbered": Canary(Outbox, "publish", number_nothing, "streams are numbered"),
+}

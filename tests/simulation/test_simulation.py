@@ -1,0 +1,71 @@
+"""
+A hundred thousand events of simulated days, and a broken core for every promise.
+
+The seed is printed, and a failure names it: `python -m tests.simulation.run --seed N` replays it.
+`BYWAY_SIMULATION_SEED` chooses other days.
+"""
+
+from __future__ import annotations
+
+import os
+
+import pytest
+from tests.simulation.canaries import CANARIES
+from tests.simulation.checkers import BrokenPromise
+from tests.simulation.odds import FAULTS, RATES, Odds
+from tests.simulation.world import World
+
+from bywayd.core.invariant import Defect
+
+SEED = int(os.environ.get("BYWAY_SIMULATION_SEED", "1"))
+DAYS = 10
+EVENTS_PER_DAY = 10_000
+
+
+@pytest.mark.parametrize("day", range(DAYS))
+def test_no_promise_is_broken_whatever_goes_wrong(day: int) -> None:
+    seed = SEED * 1000 + day
+    print(f"simulated day: seed={seed} events={EVENTS_PER_DAY}")
+    world = World(seed)
+    world.run(EVENTS_PER_DAY, calm=day % 3 != 0)
+
+
+def test_on_a_quiet_day_nobody_is_killed_and_nobody_waits_in_vain() -> None:
+    odds = Odds(dict.fromkeys(FAULTS, 0.0), {name: low for name, (low, _) in RATES.items()})
+    world = World(3, odds)
+    world.run(5_000)
+    counts = world.front.health.counts()
+    assert counts["answers_route_total"] > 100
+    for name in ("workers_lost_total", "surveyors_lost_total", "answers_late_total"):
+        assert counts.get(name, 0) == 0
+    assert counts.get("refused_overloaded_total", 0) == 0
+
+
+def test_on_the_worst_day_everything_happens_and_nothing_breaks() -> None:
+    odds = Odds(dict(FAULTS), {name: high / 2 for name, (_, high) in RATES.items()}, workers=3)
+    world = World(4, odds)
+    world.run(10_000)
+    assert {name for name in FAULTS if name not in world.counts} <= {"restart"}
+
+
+def test_the_same_seed_gives_the_same_day() -> None:
+    digests = []
+    for _ in range(2):
+        world = World(5)
+        world.keep_digest = True
+        world.run(2_000)
+        digests.append((world.digest.hexdigest(), world.now_ns, world.event_count))
+    assert digests[0] == digests[1]
+
+
+@pytest.mark.parametrize("name", CANARIES)
+def test_a_core_that_is_broken_on_purpose_is_caught(
+    name: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    canary = CANARIES[name]
+    monkeypatch.setattr(canary.owner, canary.method, canary.broken)
+    odds = Odds(dict(FAULTS), {name: high / 2 for name, (_, high) in RATES.items()}, workers=3)
+    odds.faults["restart"] = 0.0
+    world = World(6, odds)
+    with pytest.raises((BrokenPromise, Defect), match=canary.caught):
+        world.run(5_000)
