@@ -18,7 +18,7 @@ from byway_planning.verify.geometry import (
     is_inside,
     obstacle_trace,
     segments_cross,
-    trace_to_segment,
+    trace_if_near,
 )
 
 Floats = npt.NDArray[np.float64]
@@ -41,10 +41,8 @@ class Notes(NamedTuple):
     traces: Floats  # (n, 4) ends of the traces of the outline's vertices
     polygons: npt.NDArray[np.int64]  # indexes of what is near the part being looked at
     discs: npt.NDArray[np.int64]
-    rows: npt.NDArray[
-        np.uint8
-    ]  # (2, columns) two rows of cells, the one looked at and the one before
-    runs: npt.NDArray[np.int64]  # (columns,) where runs of upright cell edges began
+    rows: npt.NDArray[np.uint8]  # (2, columns) cells of two rows, from column -1 on
+    runs: npt.NDArray[np.int64]  # (columns,) rows where runs of upright cell edges began, or -1
 
 
 describe(Hull, "rf8[:, ::1]", "f8", "f8")
@@ -52,24 +50,23 @@ describe(Notes, "f8[:, ::1]", "i8[::1]", "i8[::1]", "u1[:, ::1]", "i8[::1]")
 
 
 @kernel()
-def swept_box(outline: Floats, traces: Floats, bend: Any, curvature: float) -> Any:
-    """Bounds, in the frame of the middle pose, of all that the outline sweeps."""
-    _, _, cos_half, _, _, _, _ = bend
+def swept_box(traces: Floats, n: int, bend: Any) -> Any:
+    """Bounds, in the frame of the middle pose, of all that n vertices sweep."""
     x0, y0, x1, y1 = np.inf, np.inf, -np.inf, -np.inf
     bulge = 0.0
-    for i in range(outline.shape[0]):
+    for i in range(n):
         ax, ay, bx, by = traces[i, 0], traces[i, 1], traces[i, 2], traces[i, 3]
         x0, x1 = min(x0, ax, bx), max(x1, ax, bx)
         y0, y1 = min(y0, ay, by), max(y1, ay, by)
-        if curvature != 0.0:
-            radius = math.hypot(outline[i, 0], outline[i, 1] - 1.0 / curvature)
-            bulge = max(bulge, radius * (1.0 - cos_half))
-    bulge += 1e-9
+        bulge = max(bulge, abs(bx - ax) + abs(by - ay))
+    bulge = 0.5 * bulge * bend[7] + 1e-9
     return x0 - bulge, y0 - bulge, x1 + bulge, y1 + bulge
 
 
 @kernel()
-def edge_distance(hull: Hull, traces: Floats, bend: Any, edge: Any, with_first: bool) -> float:
+def edge_distance(
+    hull: Hull, traces: Floats, bend: Any, edge: Any, with_first: bool, care: float
+) -> Any:
     """
     Distance of the moving outline from an edge: from its inside, its second end and, if asked
     for, its first. In a ring the first end is the second one of the edge before.
@@ -79,17 +76,18 @@ def edge_distance(hull: Hull, traces: Floats, bend: Any, edge: Any, with_first: 
     best = np.inf
     for i in range(n):
         trace = (traces[i, 0], traces[i, 1], traces[i, 2], traces[i, 3])
-        best = min(best, trace_to_segment(bend, outline[i, 0], outline[i, 1], trace, edge))
+        x, y = outline[i, 0], outline[i, 1]
+        best = min(best, trace_if_near(bend, x, y, trace, edge, min(care, best)))
     if n > 1:
         px, py, qx, qy = edge
-        best = min(best, point_distance(hull, bend, qx, qy))
+        best = min(best, point_distance(hull, bend, qx, qy, min(care, best)))
         if with_first:
-            best = min(best, point_distance(hull, bend, px, py))
+            best = min(best, point_distance(hull, bend, px, py, min(care, best)))
     return best
 
 
 @kernel()
-def point_distance(hull: Hull, bend: Any, x: float, y: float) -> float:
+def point_distance(hull: Hull, bend: Any, x: float, y: float, care: float) -> Any:
     """Distance of a point of the ground from the moving outline."""
     outline = hull.outline_m
     n = outline.shape[0]
@@ -98,7 +96,7 @@ def point_distance(hull: Hull, bend: Any, x: float, y: float) -> float:
     j = n - 1
     for i in range(n):
         edge = (outline[j, 0], outline[j, 1], outline[i, 0], outline[i, 1])
-        best = min(best, trace_to_segment(bend, x, y, trace, edge))
+        best = min(best, trace_if_near(bend, x, y, trace, edge, min(care, best)))
         j = i
     return best
 
@@ -143,7 +141,7 @@ def edge_if_near(
         return np.inf
     if standing and edge_overlaps(hull.outline_m, edge):
         return OVERLAP_M
-    return edge_distance(hull, traces, bend, edge, with_first) - hull.skin_m
+    return edge_distance(hull, traces, bend, edge, with_first, care) - hull.skin_m
 
 
 @kernel()
@@ -171,7 +169,9 @@ def polygon_distance(
 
 
 @kernel()
-def disc_distance(solids: Solids, d: int, hull: Hull, place: Any, standing: bool) -> Any:
+def disc_distance(
+    solids: Solids, d: int, hull: Hull, place: Any, care: float, standing: bool
+) -> Any:
     """Distance of the moving body from disc d."""
     bend, _, x, y, c, s = place
     dx, dy = solids.discs_m[d, 0] - x, solids.discs_m[d, 1] - y
@@ -179,7 +179,8 @@ def disc_distance(solids: Solids, d: int, hull: Hull, place: Any, standing: bool
     n = hull.outline_m.shape[0]
     if standing and n > 2 and is_inside(hull.outline_m, 0, n, px, py):
         return OVERLAP_M
-    return point_distance(hull, bend, px, py) - solids.discs_m[d, 2] - hull.skin_m
+    thick = solids.discs_m[d, 2] + hull.skin_m
+    return point_distance(hull, bend, px, py, care + thick) - thick
 
 
 @kernel()

@@ -5,6 +5,7 @@ A cell is a closed square. Only the edges between blocked and free cells are loo
 into runs, along rows and upright, so that a straight wall of cells costs one edge a side.
 """
 
+import math
 from typing import Any
 
 import numpy as np
@@ -42,47 +43,149 @@ def _run_distance(
 
 
 @kernel()
-def _copy_row(solids: Solids, row: int, first: int, count: int, into: Any) -> Any:
+def _copy_row(solids: Solids, row: int, first: int, last: int, into: Any) -> Any:
     """
-    Copy `count` cells of a row, from column `first` on, into `into`; outside all tiles is free.
+    Copy the cells first..last of a row into `into`, whose first place is column -1.
 
-    Returns (whether one blocks, whether all do).
+    Outside all tiles is free. Returns (whether one blocks, whether all do).
     """
     tile = solids.tile_cells
     tile_rows, tile_columns = solids.cells_of.shape
-    some, every = False, True
-    tr = row // tile if row >= 0 else -1
-    at = 0
-    while at < count:
-        column = first + at
-        tc = column // tile if column >= 0 else -1
-        if column < 0:
-            size = min(-column, count - at)
-        elif tc >= tile_columns:
-            size = count - at
+    some, every = np.uint8(0), np.uint8(1)
+    inside = 0 <= row < tile_rows * tile
+    column = first
+    while column <= last:
+        if not inside or column < 0 or column >= tile_columns * tile:
+            begin, end = NO_CELLS, (0 if column < 0 and inside else last + 1)
         else:
-            size = min((tc + 1) * tile - column, count - at)
-        begin = np.int64(NO_CELLS)
-        if 0 <= tr < tile_rows and 0 <= tc < tile_columns:
-            begin = solids.cells_of[tr, tc]
+            begin = solids.cells_of[row // tile, column // tile]
+            end = (column // tile + 1) * tile
+        end = min(end, last + 1)
+        # slices, because loops over them are compiled into wide instructions
+        target = into[column + 1 : end + 1]
         if begin < 0:
             fill = np.uint8(1) if begin == ALL_CELLS else np.uint8(0)
-            for i in range(at, at + size):
-                into[i] = fill
-            some |= begin == ALL_CELLS
-            every &= begin == ALL_CELLS
+            for i in range(end - column):
+                target[i] = fill
+            some, every = np.uint8(some | fill), np.uint8(every & fill)
         else:
-            source = begin + (row - tr * tile) * tile + column - tc * tile - at
-            high, low = np.uint8(0), np.uint8(1)
-            for i in range(at, at + size):
-                cell = np.uint8(1) if solids.cells[source + i] != 0 else np.uint8(0)
-                into[i] = cell
-                high = high | cell
-                low = low & cell
-            some |= high != 0
-            every &= low != 0
-        at += size
-    return some, every
+            at = begin + row % tile * tile + column % tile
+            source = solids.cells[at : at + end - column]
+            for i in range(end - column):
+                cell = source[i]
+                target[i] = cell
+                some, every = np.uint8(some | cell), np.uint8(every & cell)
+        column = end
+    return some != 0, every != 0
+
+
+@kernel()
+def _band(solids: Solids, place: Any, reach: float) -> Any:
+    """What `_columns` needs to cut the box of a stretch, grown by a reach, into rows of cells."""
+    _, box, x, y, c, s = place
+    mx, my = 0.5 * (box[0] + box[2]), 0.5 * (box[1] + box[3])
+    hx, hy = 0.5 * (box[2] - box[0]) + reach, 0.5 * (box[3] - box[1]) + reach
+    # middle of the box in cells, half its sides in cells, direction of its x axis
+    column = (x + c * mx - s * my - solids.corner_x_m) / solids.cell_m
+    row = (y + s * mx + c * my - solids.corner_y_m) / solids.cell_m
+    return column, row, hx / solids.cell_m, hy / solids.cell_m, c, s
+
+
+@kernel()
+def _columns(band: Any, row: int, first: int, last: int) -> Any:
+    """The columns of a row that a band touches, one more each way, within first..last."""
+    column, middle, hx, hy, c, s = band
+    below, above = row - 1.0 - middle, row + 1.0 - middle  # the row and the edges below it
+    low, high = -np.inf, np.inf
+    if abs(c) > 1e-6:  # between the ends of the box: |c dx + s dy| <= hx
+        slope = -s / c
+        low = max(low, min(slope * below, slope * above) - hx / abs(c))
+        high = min(high, max(slope * below, slope * above) + hx / abs(c))
+    if abs(s) > 1e-6:  # between its sides: |c dy - s dx| <= hy
+        slope = c / s
+        low = max(low, min(slope * below, slope * above) - hy / abs(s))
+        high = min(high, max(slope * below, slope * above) + hy / abs(s))
+    if low > high:
+        return first, first - 1
+    low = min(max(math.floor(column + low) - 1.0, float(first)), last + 1.0)
+    high = max(min(math.floor(column + high) + 1.0, float(last)), first - 1.0)
+    return int(low), int(high)
+
+
+@kernel()
+def _level_edges(
+    solids: Solids,
+    row: int,
+    columns: Any,
+    rows: Any,
+    hull: Hull,
+    notes: Notes,
+    place: Any,
+    how: Any,
+) -> Any:
+    """The nearest run of edges between a row and the one before: (distance, its column)."""
+    here, before = rows
+    care, standing = how
+    first, last = columns
+    best, at_column = np.inf, -1
+    one, other = here[first + 1 : last + 2], before[first + 1 : last + 2]
+    differ = np.uint8(0)
+    for i in range(last + 1 - first):
+        differ = np.uint8(differ | (one[i] ^ other[i]))
+    if differ == 0:
+        return best, at_column
+    i = 0
+    while i <= last - first:
+        if one[i] == other[i]:
+            i += 1
+            continue
+        begin = i
+        while i <= last - first and one[i] != other[i]:
+            i += 1
+        run = (row, first + begin, row, first + i)
+        distance = _run_distance(solids, run, hull, notes, place, min(care, best), standing)
+        if distance < best:
+            best, at_column = distance, first + begin
+    return best, at_column
+
+
+@kernel()
+def _upright_edges(
+    solids: Solids,
+    row: int,
+    columns: Any,
+    scan: Any,
+    hull: Hull,
+    notes: Notes,
+    place: Any,
+    how: Any,
+) -> Any:
+    """
+    Begin, go on with and end the runs of upright edges at a row.
+
+    `scan` is (cells of the row, first and last column of this row and the one before, whether
+    no row follows). Returns (distance, row, column) of the nearest run that ended, and by how
+    much the number of open runs grew.
+    """
+    here, least, most, ends = scan
+    care, standing = how
+    first, last = columns
+    best, at_row, at_column, opened = np.inf, -1, -1, 0
+    for column in range(least, most + 1):
+        begun = notes.runs[column + 1]
+        upright = first < column <= last and here[column + 1] != here[column]
+        if upright and begun < 0:
+            begun = row
+            notes.runs[column + 1] = row
+            opened += 1
+        if begun >= 0 and (ends or not upright):
+            run = (begun, column, row + 1 if upright else row, column)
+            distance = _run_distance(solids, run, hull, notes, place, min(care, best), standing)
+            if distance < best:
+                best, at_row, at_column = distance, begun, column
+            notes.runs[column + 1] = -1
+            opened -= 1
+    return best, at_row, at_column, opened
 
 
 @kernel()
@@ -92,50 +195,37 @@ def cells_distance(
     """
     Distance of the moving body from the blocked cells in a window.
 
-    The edges between blocked and free cells are joined into runs, along rows and upright, so
-    that a straight wall of cells costs two edges. Returns (distance, row, column) of the run
-    that is nearest; the distance is inf if all are clear by `care`.
+    `window` is (first row, last row, first column, last column). Returns (distance, row,
+    column) of the run that is nearest; the distance is inf if all are clear by `care`.
     """
-    row_first, row_last, column_first, column_count = window
+    row_first, row_last, column_first, column_last = window
+    band = _band(solids, place, care + hull.skin_m)
     best, at_row, at_column = np.inf, -1, -1
-    now, before = 0, 1
     open_runs = 0
-    notes.rows[before, :column_count] = 0
-    notes.runs[:column_count] = -1
-    some_before, every_before = False, False
+    flat_before, some_before = False, False
+    first, last = _columns(band, row_first, column_first, column_last)
+    least, most = first, last
     for row in range(row_first, row_last + 1):
-        some, every = _copy_row(solids, row, column_first, column_count, notes.rows[now])
-        flat = some == every and some_before == every_before and some == some_before
-        if row > row_first and not flat:
-            i = 0
-            while i < column_count:
-                if notes.rows[now, i] == notes.rows[before, i]:
-                    i += 1
-                    continue
-                begin = i
-                while i < column_count and notes.rows[now, i] != notes.rows[before, i]:
-                    i += 1
-                run = (row, column_first + begin, row, column_first + i)
-                distance = _run_distance(solids, run, hull, notes, place, min(care, best), standing)
-                if distance < best:
-                    best, at_row, at_column = distance, row, column_first + begin
-        last = row == row_last
-        if some != every or open_runs > 0:
-            for i in range(1, column_count):
-                upright = notes.rows[now, i] != notes.rows[now, i - 1]
-                if upright and notes.runs[i] < 0:
-                    notes.runs[i] = row
-                    open_runs += 1
-                if notes.runs[i] >= 0 and (last or not upright):
-                    end = row + 1 if upright else row
-                    run = (notes.runs[i], column_first + i, end, column_first + i)
-                    distance = _run_distance(
-                        solids, run, hull, notes, place, min(care, best), standing
-                    )
-                    if distance < best:
-                        best, at_row, at_column = distance, run[0], run[1]
-                    notes.runs[i] = -1
-                    open_runs -= 1
-        now, before = before, now
-        some_before, every_before = some, every
+        here, before = notes.rows[row & 1], notes.rows[(row + 1) & 1]
+        # as far as the next row will want to look back
+        next_first, next_last = _columns(band, row + 1, column_first, column_last)
+        some, every = _copy_row(solids, row, min(first, next_first), max(last, next_last), here)
+        flat = some == every
+        how = (min(care, best), standing)
+        if row > row_first and not (flat and flat_before and some == some_before):
+            distance, column = _level_edges(
+                solids, row, (first, last), (here, before), hull, notes, place, how
+            )
+            if distance < best:
+                best, at_row, at_column = distance, row, column
+        if not flat or open_runs > 0:
+            scan = (here, min(least, first), max(most, last), row == row_last)
+            distance, began, column, opened = _upright_edges(
+                solids, row, (first, last), scan, hull, notes, place, how
+            )
+            open_runs += opened
+            if distance < best:
+                best, at_row, at_column = distance, began, column
+        flat_before, some_before = flat, some
+        least, most, first, last = first, last, next_first, next_last
     return best, at_row, at_column

@@ -217,7 +217,7 @@ def _check_motion(
         # stricter, where an arm of the outline is too thin for what is allowed
         depth_m = 0.5 * depth_m if depth_m > TOLERANCE_M else -TOLERANCE_M
     told_m = max(CLEARANCE_TOLD_M + 2.0 * TOLERANCE_M, need_m)
-    notes = _notes_for(solids, hull, told_m + start_overlap_m)
+    notes = _notes_for(solids, hull)
     found = np.array([told_m, *[0.0] * 7])
     code = drive(solids, notes, hull, drawn_in, depth_m, rows, arcs, need_m, found)
     if found[5] < 0.0 and code != FREE:  # an overlap is only told as such: how deep is it?
@@ -291,7 +291,7 @@ def _clearance(solids: Solids, body: Body, x: float, y: float, heading: float) -
 def _nearest(
     solids: Solids, hull: Hull, x: float, y: float, heading: float, care_m: float
 ) -> Nearest:
-    notes = _notes_for(solids, hull, care_m)
+    notes = _notes_for(solids, hull)
     found = np.array([care_m, *[0.0] * 7])
     rows = np.array([[0.0, x, y, heading, 0.0, 0.0, 0.0]])
     drive(solids, notes, hull, hull, 0.0, rows, np.zeros(1), -np.inf, found)
@@ -335,18 +335,14 @@ def _mitred(outline: bytes, depth_m: float) -> bytes | None:
     return moved.tobytes() if kept.min() > 0.0 else None
 
 
-def _notes_for(solids: Solids, hull: Hull, care_m: float) -> Notes:
-    columns = solids.cells_of.shape[1] * solids.tile_cells + 4
-    if math.isfinite(care_m):
-        # no stretch reaches farther: its box is at most twice the body and its way across
-        wide_m = 4.0 * (hull.reach_m + hull.skin_m + care_m + 2.0)
-        columns = min(columns, int(wide_m / solids.cell_m) + 8)
+def _notes_for(solids: Solids, hull: Hull) -> Notes:
+    columns = solids.cells_of.shape[1] * solids.tile_cells + 2  # one beside each border
     return Notes(
         np.empty((len(hull.outline_m), 4)),
         np.empty(len(solids.boxes_m), np.int64),
         np.empty(len(solids.discs_m), np.int64),
         np.empty((2, columns), np.uint8),
-        np.empty(columns, np.int64),
+        np.full(columns, -1),
     )
 
 

@@ -19,8 +19,8 @@ from byway_planning.verify.motion import NOTHING, note_near, stretch_clearance
 
 Floats = npt.NDArray[np.float64]
 
-STRETCH_M: Final = 2.0
-STRETCH_RAD: Final = 1.0  # the wedge test of arcs needs less than pi
+STRETCH_M: Final = 3.0
+STRETCH_RAD: Final = 0.6  # arcs below a right angle, with boxes that fit them
 PART_M: Final = 12.0
 SAME_ARC: Final = 1e-8  # m and rad: rows closer than this to an arc lie on it
 PLACE_M: Final = 1e-3  # how closely the place of a fault is told

@@ -142,13 +142,27 @@ def trace_to_segment(bend: Any, mx: float, my: float, ends: Any, edge: Any) -> A
 
 
 @kernel()
+def trace_if_near(bend: Any, mx: float, my: float, ends: Any, edge: Any, care: float) -> Any:
+    """The same, or inf if their boxes already are apart by more than `care`."""
+    ax, ay, bx, by = ends
+    px, py, qx, qy = edge
+    # half a chord times this is its sagitta: an arc below a right angle stays that near to it
+    care += 0.5 * (abs(bx - ax) + abs(by - ay)) * bend[7]
+    if max(min(ax, bx) - max(px, qx), min(px, qx) - max(ax, bx)) > care:
+        return np.inf
+    if max(min(ay, by) - max(py, qy), min(py, qy) - max(ay, by)) > care:
+        return np.inf
+    return trace_to_segment(bend, mx, my, ends, edge)
+
+
+@kernel()
 def bend_of(curvature: float, half: float) -> Any:
     """
-    What the traces of a stretch have in common.
+    What the traces of a stretch have in common; half of its turn is below a right angle.
 
     Returns (whether they are circles, y of the turning centre, cosine of half the turn,
     sagitta lost where a chord is taken for a circle, sine of half the turn, x and y of the
-    vehicle's origin at the far end).
+    vehicle's origin at the far end, tangent of a quarter of the turn).
     """
     turn = curvature * half
     chord = half
@@ -158,13 +172,14 @@ def bend_of(curvature: float, half: float) -> Any:
     curved = abs(curvature) >= BEND_PER_M_MIN
     cy = 1.0 / curvature if curved else 0.0
     sagitta = 0.0 if curved else 0.51 * abs(curvature) * half * half
-    return curved, cy, math.cos(turn), sagitta, math.sin(turn), end_x, end_y
+    swell = abs(math.tan(0.5 * turn))
+    return curved, cy, math.cos(turn), sagitta, math.sin(turn), end_x, end_y, swell
 
 
 @kernel()
 def body_trace(bend: Any, x: float, y: float) -> Any:
     """Where a point of the body is at the beginning and at the end of a stretch."""
-    _, _, c, _, s, end_x, end_y = bend
+    _, _, c, _, s, end_x, end_y, _ = bend
     return (
         c * x + s * y - end_x,
         c * y - s * x + end_y,
@@ -176,7 +191,7 @@ def body_trace(bend: Any, x: float, y: float) -> Any:
 @kernel()
 def obstacle_trace(bend: Any, x: float, y: float) -> Any:
     """The same for a point of the ground, seen from the body."""
-    _, _, c, _, s, end_x, end_y = bend
+    _, _, c, _, s, end_x, end_y, _ = bend
     v = y - end_y
     u, w = x + end_x, x - end_x
     return c * u - s * v, s * u + c * v, c * w + s * v, c * v - s * w

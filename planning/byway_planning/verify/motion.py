@@ -56,7 +56,7 @@ def _world_box(box: Any, x: float, y: float, c: float, s: float, margin: float) 
 
 @kernel()
 def _window(solids: Solids, world: Any) -> Any:
-    """Cells around a box: first row, last row, first column, number of columns."""
+    """Cells around a box: first row, last row, first column, last column."""
     tile = solids.tile_cells
     rows, columns = solids.cells_of.shape[0] * tile, solids.cells_of.shape[1] * tile
     r0 = math.floor((world[1] - solids.corner_y_m) / solids.cell_m) - 1.0
@@ -66,7 +66,7 @@ def _window(solids: Solids, world: Any) -> Any:
     # one row and column of free ground around all tiles, so that their borders count as edges
     first_row, last_row = max(int(r0), -1), min(int(r1), rows)
     first_column, last_column = max(int(c0), -1), min(int(c1), columns)
-    return first_row, last_row, first_column, last_column - first_column + 1
+    return first_row, last_row, first_column, last_column
 
 
 @kernel()
@@ -102,7 +102,7 @@ def stretch_clearance(
             bend, outline[i, 0], outline[i, 1]
         )
     c, s = math.cos(heading), math.sin(heading)
-    box = swept_box(outline, traces, bend, curvature)
+    box = swept_box(traces, outline.shape[0], bend)
     place = (bend, box, x, y, c, s)
     best, kind, index = care, NOTHING, -1
     world = _world_box(box, x, y, c, s, care + hull.skin_m)
@@ -126,12 +126,12 @@ def stretch_clearance(
         r = solids.discs_m[d, 2]
         if abs(solids.discs_m[d, 0] - 0.5 * (x0 + x1)) <= 0.5 * (x1 - x0) + r:
             if abs(solids.discs_m[d, 1] - 0.5 * (y0 + y1)) <= 0.5 * (y1 - y0) + r:
-                distance = disc_distance(solids, d, hull, place, standing)
+                distance = disc_distance(solids, d, hull, place, best, standing)
                 if distance < best:
                     best, kind, index = distance, DISC_OBSTACLE, d
     if solids.cells_of.shape[0] > 0:
         window = _window(solids, world)
-        if window[1] >= window[0] and window[3] > 0:
+        if window[1] >= window[0] and window[3] >= window[2]:
             distance, row, column = cells_distance(
                 solids, window, hull, notes, place, best, standing
             )
