@@ -14,6 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from byway_planning.collision import CONTACT_M
+from byway_planning.kernel import ensure_warm
 from byway_planning.outcome import Blockage, Kind, Outcome
 from byway_planning.prefix import end_of, leaving, rolling
 from byway_planning.profile import stopping_distance_m
@@ -29,7 +30,6 @@ from byway_planning.vehicles.body import CAR, DISC, Body
 from byway_planning.vehicles.models import Vehicle
 from byway_planning.verify import clearance_m as exact_clearance_m
 from byway_planning.verify import verify
-from byway_planning.warmth import ensure_warm
 
 Floats = npt.NDArray[np.float64]
 

@@ -1,15 +1,26 @@
 """Everything that is made once in a process, before the first answer."""
 
+import logging
 from collections.abc import Callable
+from typing import Final
 
 from byway_planning import kernel
+from byway_planning.planner import plan
 from byway_planning.search.lengths import lengths_of
+from byway_planning.site.site import Site
 from byway_planning.vehicles.body import CAR, DISC, FORWARD_CAR
+from byway_planning.vehicles.models import Car, Disc, ForwardCar, Vehicle
+
+_BOX: Final = [(-0.5, -0.5), (1.5, -0.5), (1.5, 0.5), (-0.5, 0.5)]
+_REHEARSAL_WORK: Final = 3000
 
 
 def warm(progress: Callable[[int, int, str], None] | None = None) -> None:
     """
-    Compile every kernel, or load it from the cache, and fill the tables that searches read.
+    Compile every kernel, or load it from the cache, fill tables, and call everything once.
+
+    The first call of a loaded kernel still takes milliseconds (its code is put in place then),
+    so short plans with each kind of vehicle are part of it.
 
     Args:
         progress: Called before each kernel with (done, total, name).
@@ -17,9 +28,30 @@ def warm(progress: Callable[[int, int, str], None] | None = None) -> None:
     kernel.warm(progress)
     for kind in (CAR, FORWARD_CAR, DISC):
         lengths_of(kind)
+    log = logging.getLogger(__name__)
+    for vehicle in _vehicles():
+        site = Site.from_shapes(
+            {"wall": [(6.0, 0.0), (7.0, 0.0), (7.0, 8.0), (6.0, 8.0)]},
+            {"post": (3.0, 9.0, 0.3)},
+            limits_m=(0.0, 0.0, 14.0, 14.0),
+        )
+        for method in ("auto", "rrt_connect"):
+            outcome = plan(
+                site,
+                vehicle,
+                (2.0, 3.0, 1.5),
+                (11.0, 3.0, -1.5),
+                time_left=lambda: 1.0,
+                seed=1,
+                method=method,
+                work_max=_REHEARSAL_WORK,
+            )
+            log.debug("rehearsed %s with %s: %s", method, vehicle.model, outcome.kind)
 
 
-def ensure_warm() -> None:
-    """For scripts that did not call `warm`: do it now, and say so once."""
-    kernel.ensure_warm()
-    warm()
+def _vehicles() -> tuple[Vehicle, ...]:
+    return (
+        Car(footprint_m=_BOX, turn_radius_m_min=2.0),
+        ForwardCar(footprint_m=_BOX, turn_radius_m_min=2.0),
+        Disc(radius_m=0.5),
+    )

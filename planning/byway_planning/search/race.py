@@ -9,6 +9,7 @@ Which corridor a path takes decides more than how well it is polished.
 
 import math
 from collections.abc import Generator, Iterator
+from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
@@ -57,6 +58,14 @@ def scale_of(question: Question) -> float:
         return min(max(question.body.inner_radius_m / 0.6, 0.3), 3.0)
     radius = question.body.turn_radius_m
     return min(1.0, radius / 2.0) * max(1.0, radius / 6.0)
+
+
+@dataclass
+class _Runner:
+    """One lattice in the race."""
+
+    lattice: Lattice
+    backward: bool
 
 
 class Auto:
@@ -166,33 +175,33 @@ class Auto:
     def _race(self) -> Generator[int, None, bool]:
         """Find a first path; tell whether there is one."""
         change_m = max(CHANGE_M, self._q.body.direction_change_m)
-        runners: list[tuple[Lattice, bool]] = []
-        waiting = [COARSE, FINE, FINEST]
+        levels = (COARSE, FINE, FINEST)
+        runners: list[_Runner] = []
+        started = [0, 0]  # levels so far, from the start and from the goal
         size = FIRST_SLICE
         while True:
-            if waiting and (not runners or self._work > FINER_AFTER * (3 - len(waiting))):
-                level = waiting.pop(0)
-                for backward in (False, True):
+            due = min(1 + self._work // FINER_AFTER, len(levels))
+            for backward in (False, True):
+                alone = not any(runner.backward == backward for runner in runners)
+                # An exhausted search says early that its cells are too coarse there.
+                if started[backward] < (len(levels) if alone else due):
                     lattice = self._lattice()
+                    level = levels[started[backward]]
                     self._set_up(lattice, level, WEIGHT, backward=backward, change_m=change_m)
-                    runners.append((lattice, backward))
+                    runners.append(_Runner(lattice, backward))
+                    started[backward] += 1
+            if not runners:
+                return (yield from self._grow_trees(math.inf))
             for runner in tuple(runners):
-                lattice, backward = runner
-                status = self._advance(lattice, backward=backward, iterations=size)
+                status = self._advance(runner.lattice, backward=runner.backward, iterations=size)
                 if status == FOUND:
-                    self._winner_backward = backward
-                    load_course_kernel(
-                        path_of(lattice, self._q.body), self._q.body, self._polish.course
-                    )
-                    self._best = cost_of(self._polish.course)
-                    yield FOUND
+                    self._winner_backward = runner.backward
+                    yield self._found_first(path_of(runner.lattice, self._q.body))
                     return True
                 if status in (EXHAUSTED, FULL):
                     runners = [other for other in runners if other is not runner]
                 yield RUNNING
             size = min(int(size * SLICE_GROWTH), SLICE_MAX)
-            if not runners and not waiting:
-                return (yield from self._grow_trees(math.inf))
 
     def _found_first(self, path: Floats) -> int:
         load_course_kernel(path, self._q.body, self._polish.course)
