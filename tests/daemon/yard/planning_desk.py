@@ -15,7 +15,7 @@ from bywayd.yard.world import STEP_S, World
 
 #: How often the site hears of the vehicles, in steps; the daemon hears of them as often.
 SHOW_EVERY_STEPS = 10
-WORK_MAX = 4000
+WORK_MAX = 1500
 
 
 class PlanningDesk:
