@@ -89,8 +89,9 @@ class _Line:
             until_s = min(until_s, self._down_since_s + self._patience.reconnect_s)
         return min([until_s, *repeat_at_s])
 
-    def _take_in_all(self) -> None:
-        """Take in all messages that have come. Raises BadReply."""
+    def _take_in_all(self) -> bool:
+        """Take in all messages that have come; tell whether there were any. Raises BadReply."""
+        any_came = False
         while (parts := self._link.receive()) is not None:
             try:
                 received = frames.decode(parts, frames.REPLIES)
@@ -99,6 +100,8 @@ class _Line:
                     f"{self._link.endpoint} sent what cannot be read: {fault.text}", fault.facts
                 ) from fault
             self._take_in(received)
+            any_came = True
+        return any_came
 
     def _take_in(self, received: frames.Received) -> None:
         raise NotImplementedError
@@ -164,7 +167,8 @@ class Requests(_Line):
             DaemonLost, BadReply.
         """
         # What came since the last turn counts, however long ago that was.
-        self._take_in_all()
+        if self._take_in_all():
+            return
         now_s = self._clock()
         for question in [each for each in self._open.values() if now_s >= each.deadline_s]:
             self.end(question)
@@ -229,7 +233,8 @@ class Updates(_Line):
             Stopping: the changes stay in the line.
         """
         # What came since the last turn counts, however long ago that was.
-        self._take_in_all()
+        if self._take_in_all():
+            return
         source, now_s = self._source, self._clock()
         if self._look(now_s):
             source.send_again()
