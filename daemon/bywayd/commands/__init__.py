@@ -33,14 +33,16 @@ for _command in (serve, demo, ask, listen, health, check, bench, warm):
 
 def main() -> None:
     """Run a command; what went wrong on purpose becomes one sentence and an exit status."""
-    from byway.errors import BywayError, SenderFault
+    from byway.errors import BywayError, LinkFault, SenderFault, Unavailable
 
     try:
         app()
     except SenderFault as fault:
         _end(Status.REFUSED, str(fault))
-    except BywayError as fault:
+    except (Unavailable, LinkFault) as fault:
         _end(Status.UNREACHABLE, str(fault))
+    except BywayError as fault:
+        _end(Status.FAILED, str(fault))
     except KeyboardInterrupt:
         _end(Status.INTERRUPTED, "interrupted")
 

@@ -26,6 +26,7 @@ class Status(IntEnum):
     USAGE = 2  # the command line was not understood
     UNREACHABLE = 3  # no daemon, or not now
     REFUSED = 4  # the daemon refuses this, and asking again changes nothing
+    FAILED = 5  # the daemon took it in and then failed at it, or it was withdrawn
     INTERRUPTED = 130
 
 
