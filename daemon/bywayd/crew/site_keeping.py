@@ -185,11 +185,11 @@ def recover_site(
 
 def site_settings(told: Mapping[str, Any]) -> SiteSettings:
     """Return the settings of the model for those of the file, in the site's own frame."""
-    ox, oy = told["origin_m"]
+    ox, oy = (float(value) for value in told["origin_m"])
     if told["limits_m"] is None:
         reach = limits_m_if_none
         limits_m = (-reach, -reach, reach, reach)
     else:
         x0, y0, x1, y1 = told["limits_m"]
         limits_m = (x0 - ox, y0 - oy, x1 - ox, y1 - oy)
-    return SiteSettings(limits_m, told["cell_m"], (ox, oy))
+    return SiteSettings(limits_m, float(told["cell_m"]), (ox, oy))

@@ -341,3 +341,7 @@ def test_readers_cannot_write_to_the_site(ground, site):
     readable: mmap.mmap = ground[2]
     with pytest.raises(TypeError):
         readable[0:1] = b"x"
+
+
+def test_the_rehearsal_finds_a_route_and_so_comes_past_everything():
+    assert trade.rehearse()["kind"] == "route"
