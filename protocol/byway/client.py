@@ -451,10 +451,10 @@ class Client:
         down_since_s: float | None = None
         try:
             while contact.clock() < end_s:
-                contact.enter()
                 ear.look()
                 while (heard := ear.next()) is not None:
                     yield _event(heard)
+                    contact.enter()
                 down_since_s = contact.check_ear(ear, down_since_s)
                 # Looked at now and then: a connection that is not there makes no noise.
                 wait([(ear.link, False)], min(end_s, contact.clock() + 0.1), contact.clock)

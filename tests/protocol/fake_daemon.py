@@ -83,6 +83,8 @@ class FakeDaemon:
         self.costs = [5.0]
         self.got: Counter[str] = Counter()
         self.log: list[Received] = []
+        self._topics: set[str] = set()
+        self._subscription = threading.Condition()
         self._lives = 0
         self._thread: threading.Thread | None = None
         self.start()
@@ -100,6 +102,7 @@ class FakeDaemon:
         self.answered: dict[str, tuple[bytes, list[Parts]]] = {}
         self.open: dict[str, tuple[bytes, Received]] = {}
         self._numbers: Counter[str] = Counter()
+        self._topics.clear()
         self._orders: queue.SimpleQueue[Callable[[], None] | None] = queue.SimpleQueue()
         self._context = zmq.Context()
         self._poke = self._context.socket(zmq.PAIR)
@@ -335,11 +338,19 @@ class FakeDaemon:
     # -- events --------------------------------------------------------------------------------
 
     def _subscribed(self, frame: bytes) -> None:
+        topic = frame[1:].decode()
+        with self._subscription:
+            self._topics.add(topic)
+            self._subscription.notify_all()
         if frame[:1] == b"\x01" and self.confirms_subscriptions:
-            topic = frame[1:].decode()
             header = Header("listening", epoch=self.epoch)
             told = frames.encode(header, messages.Listening(topic=topic))
             self._sockets["events"].send_multipart([frame[1:], *told])
+
+    def wait_for_subscription(self, topic: str) -> None:
+        """Return when somebody listens to this topic."""
+        with self._subscription:
+            assert self._subscription.wait_for(lambda: topic in self._topics, 10.0)
 
     def publish(
         self,
