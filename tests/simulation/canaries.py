@@ -102,7 +102,7 @@ CANARIES = {
         Snapshots,
         "publish",
         publish_anything,
-        "revisions never go back|not older|not given back|a replan sees",
+        "revisions never go back|not older|not given back|acknowledged before",
     ),
     "deadlines are not kept": Canary(
         *(Dispatch, "settle", never_look_at_the_clock),

@@ -32,9 +32,6 @@ class Alarms(Generic[Key]):
         self._heap: list[tuple[int, int, Key]] = []
         self._serial = 0
 
-    def __len__(self) -> int:
-        return len(self._set)
-
     def set(self, key: Key, at: Instant) -> None:
         """Let this key be due at this instant, and at no other."""
         known = self._set.get(key)

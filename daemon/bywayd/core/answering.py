@@ -17,7 +17,7 @@ from bywayd.core.events import Outcome, Peer
 from bywayd.core.front_settings import FrontSettings
 from bywayd.core.health import Health
 from bywayd.core.instants import Duration, Instant
-from bywayd.core.invariant import Defect, invariant
+from bywayd.core.invariant import invariant, known
 from bywayd.core.outbox import Outbox, error_of
 from bywayd.core.snapshots import Snapshots
 
@@ -98,18 +98,16 @@ class Answering:
         if act == "answer_stopping":
             return error_of("stopping", "the daemon ends before a route was found"), b""
         if act == "answer_failed":
-            code, text, facts = docket.failure or ("internal", "the planner failed", {})
+            code, text, facts = known(docket.failure, "a failure has a reason", docket.story)
             return error_of(code, text, facts), b""
-        if act == "answer" and docket.hurry == "newer":
-            text = "a newer replan of the same unit took its place before a route was found"
-            return error_of("superseded", text, unit), b""
         if act == "answer_unserved" and docket.begun_at is None:
             waited_s = now.since(docket.times.arrived).s
             text = f"no worker was free within {waited_s:.3f} s"
             facts = {"waited_s": waited_s, "waiting": waiting}
             return error_of("overloaded", text, facts, self.retry_after_s(waiting)), b""
-        if act not in ("answer", "answer_unserved"):
-            raise Defect(f"replan {docket.id}: {act} is no way to answer", docket.story)
+        if docket.hurry == "newer":
+            text = "a newer replan of the same unit took its place before a route was found"
+            return error_of("superseded", text, unit), b""
         nothing = Held(not_found(docket), self._snapshots.revision)
         return self._answer(docket, nothing, now), b""
 
@@ -153,7 +151,7 @@ class Answering:
             request_id=docket.id,
             unit=docket.ask.unit,
             kind=kind,
-            cost_m=held.outcome.cost if held is not None else None,
+            cost_m=docket.best.outcome.cost if docket.best is not None else None,
             revision=held.revision if held is not None else None,
             budget_s=docket.ask.budget_s,
             total_s=total.s,

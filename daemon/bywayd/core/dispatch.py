@@ -27,7 +27,7 @@ from bywayd.core.events import (
 from bywayd.core.front_settings import FrontSettings
 from bywayd.core.health import Health
 from bywayd.core.instants import Instant
-from bywayd.core.invariant import invariant
+from bywayd.core.invariant import invariant, known
 from bywayd.core.outbox import Outbox
 from bywayd.core.pressure import improving, pressure
 from bywayd.core.roster import Roster
@@ -172,10 +172,8 @@ class Dispatch:
         docket = task.docket
         self._health.observe("recheck_s", now.since(task.since))
         if event.good:
-            best = docket.best
-            invariant(best is not None, "what was checked is a route", docket.story)
-            if best is not None:
-                docket.best = Held(best.outcome, task.snapshot.revision)
+            best = known(docket.best, "what was checked is a route", docket.story)
+            docket.best = Held(best.outcome, task.snapshot.revision)
             self._act(docket, docket.move("stood", now), now)
             return
         self._health.count("rechecks_failed_total")
@@ -194,8 +192,7 @@ class Dispatch:
 
     def kill(self, worker: int, why: str, now: Instant) -> None:
         """Have a worker killed; what it was at does not wait for that."""
-        if not self._workers.kill(worker, why):
-            return
+        self._workers.kill(worker, why)
         self._health.count("workers_killed_total")
         self._outbox.add(KillWorker(worker, why))
         self._outbox.log("warning", "worker.killed", worker=worker, why=why)
@@ -298,16 +295,17 @@ class Dispatch:
 
     def _act(self, docket: Docket, act: Act, now: Instant, worker: int | None = None) -> None:
         """Do what a docket has decided. `worker` is idle and has just been at it."""
-        best = docket.best
-        if act == "publish" and best is not None:
+        if act == "publish":
+            best = known(docket.best, "what is published is there", docket.story)
             self._health.count("better_total")
             message = better_message(docket, best, now)
             packed = best.outcome.packed
             self._outbox.publish(f"better.{docket.ask.unit}", message, packed, id=docket.id)
         elif act == "steer":
             self._steer(docket, "finish", now)
-        elif act == "recheck" and best is not None and worker is not None:
-            self._recheck(docket, worker, best.outcome, now)
+        elif act == "recheck":
+            best = known(docket.best, "what is checked is there", docket.story)
+            self._recheck(docket, known(worker, "its worker is idle"), best.outcome, now)
         elif act == "again":
             self._health.count("retries_total")
             self.room.return_to(docket)
@@ -334,10 +332,9 @@ class Dispatch:
         self._restless = True
 
     def _steer(self, docket: Docket, how: Literal["finish", "cancel"], now: Instant) -> None:
-        number, worker = docket.task, docket.worker
-        if number is not None and worker is not None:
-            self._workers.hurry(worker, number, now)
-            self._outbox.add(SteerJob(worker, number, how))
+        task = known(self._tasks.of_docket(docket), "who is steered has a task", docket.story)
+        self._workers.hurry(task.worker, task.number, now)
+        self._outbox.add(SteerJob(task.worker, task.number, how))
 
     def _hasten(self, docket: Docket, why: Hurry, now: Instant) -> None:
         docket.hurry = why

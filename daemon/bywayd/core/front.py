@@ -144,8 +144,11 @@ class Front:
         if self._stop_why:
             # Not taken in, so not acknowledged: the source sends it again, to our successor.
             self.outbox.error(peer, came.header, "stopping", "the daemon is on its way out")
+        elif isinstance(came.message, messages.Change):
+            self.ledger.take(peer, came, came.message, now)
         else:
-            self.ledger.take(peer, came, now)
+            text = f"{came.message.kind} is no change"
+            self.outbox.error(peer, came.header, "unknown_kind", text)
 
     def _request(self, peer: Peer, came: frames.Received, now: Instant) -> None:
         header, message = came.header, came.message

@@ -35,9 +35,6 @@ class Duration:
         """The same in seconds, for messages and people."""
         return self.ns / SECOND_NS
 
-    def __add__(self, other: Duration) -> Duration:
-        return Duration(self.ns + other.ns)
-
     def times(self, ratio: float) -> Duration:
         """Return this duration multiplied by a ratio that is not negative."""
         return Duration(round(self.ns * ratio))

@@ -10,6 +10,9 @@ are refused with an error of the protocol.
 from __future__ import annotations
 
 from collections.abc import Iterable
+from typing import TypeVar
+
+Value = TypeVar("Value")
 
 
 class Defect(BaseException):
@@ -35,3 +38,10 @@ def invariant(holds: bool, rule: str, story: Iterable[str] = ()) -> None:
     """
     if not holds:
         raise Defect(rule, story)
+
+
+def known(value: Value | None, rule: str, story: Iterable[str] = ()) -> Value:
+    """Return a value that must be there; stop with a `Defect` if it is not."""
+    if value is None:
+        raise Defect(rule, story)
+    return value

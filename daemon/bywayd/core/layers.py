@@ -78,10 +78,6 @@ class Layers:
         """Return a layer, if there is one of that name."""
         return self._layers.get(name)
 
-    def is_owned_by(self, source: str) -> bool:
-        """Whether this source owns any layer."""
-        return any(layer.owner == source for layer in self._layers.values())
-
     def claim(
         self,
         source: str,

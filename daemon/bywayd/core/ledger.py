@@ -26,7 +26,7 @@ from bywayd.core.expiries import Expiries
 from bywayd.core.front_settings import FrontSettings
 from bywayd.core.health import Health
 from bywayd.core.instants import Duration, Instant
-from bywayd.core.invariant import invariant
+from bywayd.core.invariant import invariant, known
 from bywayd.core.layers import Layer, Layers, No
 from bywayd.core.outbox import Outbox
 from bywayd.core.sources import Source, Sources
@@ -100,7 +100,9 @@ class Ledger:
 
     # -- what sources send ---------------------------------------------------------------------
 
-    def take(self, peer: Peer, came: frames.Received, now: Instant) -> None:
+    def take(
+        self, peer: Peer, came: frames.Received, message: messages.Change, now: Instant
+    ) -> None:
         """Take in a change, or say why not."""
         source = self._next_in_turn(peer, came.header, now)
         if source is None:
@@ -110,7 +112,7 @@ class Ledger:
             self._ask_again(source, "full", now, self._settings.resend_every_s)
             return
         source.have = came.header.number
-        made = self._entry(source, came.message, came.packed, size, now)
+        made = self._entry(source, message, came.packed, size, now)
         if isinstance(made, No):
             made = Entry(now, source.name, source.have, None, made)
         self._append(made)
@@ -189,7 +191,7 @@ class Ledger:
     # -- from a message to a change ------------------------------------------------------------
 
     def _entry(
-        self, source: Source, message: messages.Message, packed: Bytes, size: int, now: Instant
+        self, source: Source, message: messages.Change, packed: Bytes, size: int, now: Instant
     ) -> Entry | No:
         match message:
             case messages.Claim() | messages.ReplaceLayer():
@@ -201,10 +203,8 @@ class Ledger:
                     message.lease_s,
                     now,
                 )
-            case messages.Change():
-                layer = self.layers.to_change(source.name, message.layer, now)
             case _:
-                return No("unknown_kind", f"{message.kind} is no change", {"kind": message.kind})
+                layer = self.layers.to_change(source.name, message.layer, now)
         if isinstance(layer, No):
             return layer
         return self._entry_for(layer, source, message, packed, size, now)
@@ -300,10 +300,8 @@ class Ledger:
 
     def decide(self, refusals: Sequence[Refusal], revision: int, now: Instant) -> None:
         """The batch that is out has become visible with this revision, but for the refused."""
-        batch, self._out = self._out, None
-        invariant(batch is not None, "what is decided was handed out")
-        if batch is None:
-            return
+        batch = known(self._out, "what is decided was handed out")
+        self._out = None
         refused = {refusal.index: refusal for refusal in refusals}
         last: dict[str, int] = {}
         index = 0
@@ -319,11 +317,9 @@ class Ledger:
                 self._tell(entry.source, entry, no, now)
         self._revision = revision
         for name, number in last.items():
-            source = self.sources.get(name)
-            invariant(source is not None, "a source with changes under way is known")
-            if source is not None:
-                source.decided = number
-                self._acknowledge(source, revision)
+            source = self._source(name)
+            source.decided = number
+            self._acknowledge(source, revision)
 
     def _settle_change(self, entry: Entry, change: Change, no: No | None, now: Instant) -> None:
         self._pending_bytes -= entry.size_bytes
@@ -338,8 +334,8 @@ class Ledger:
             )
         elif change.what == "drop" and no is None:
             self._expiries.dropped(name, change.ids)
-        layer = self.layers.get(name)
-        if no is None and layer is not None:
+        if no is None:
+            layer = self._layer(name)
             layer.is_visible = True
             layer.changed_at = now
 
@@ -349,9 +345,7 @@ class Ledger:
             self._health.observe("visible_s", now.since(entry.arrived))
             return
         self._health.count("changes_refused_total")
-        source = self.sources.get(name)
-        if source is None:
-            return
+        source = self._source(name)
         refused = Refused(
             source=name,
             number=entry.number,
@@ -383,11 +377,8 @@ class Ledger:
 
     def _expire(self, now: Instant) -> None:
         for name, ids in self._expiries.pop_due(now).items():
-            layer = self.layers.get(name)
-            invariant(layer is not None, "an obstacle that expires has a layer")
+            layer = self._layer(name)
             self._health.count("obstacles_expired_total", len(ids))
-            if layer is None:
-                continue
             for first in range(0, len(ids), _DROP_IDS_MAX):
                 some = tuple(ids[first : first + _DROP_IDS_MAX])
                 self._append(Entry(now, None, 0, Change("drop", name, layer.flags, ids=some)))
@@ -402,6 +393,12 @@ class Ledger:
     def _append(self, entry: Entry) -> None:
         self._line.append(entry)
         self._pending_bytes += entry.size_bytes
+
+    def _source(self, name: str) -> Source:
+        return known(self.sources.get(name), "a source with changes under way is known")
+
+    def _layer(self, name: str) -> Layer:
+        return known(self.layers.get(name), "a change that was taken in has a layer")
 
     def _heard_at(self, name: str) -> Instant | None:
         source = self.sources.get(name)

@@ -23,7 +23,7 @@ from typing import Final, Literal, TypeAlias
 
 from bywayd.core.alarms import Alarms
 from bywayd.core.instants import Duration, Instant
-from bywayd.core.invariant import Defect, invariant
+from bywayd.core.invariant import Defect, invariant, known
 
 Phase: TypeAlias = Literal["starting", "idle", "busy", "killed", "gone"]
 Move: TypeAlias = Literal["ready", "heard", "given", "done", "freed", "killed", "lost"]
@@ -185,16 +185,13 @@ class Roster:
             member.owes[task] = now
             self._watch(member)
 
-    def kill(self, number: int, why: str) -> bool:
-        """Note that this member is being killed; False if that has been done already."""
+    def kill(self, number: int, why: str) -> None:
+        """Note that this member is being killed. Nobody is killed twice."""
         member = self._member(number)
-        if member.phase == "killed":
-            return False
         self._move(member, "killed", why)
         self._killed += 1
         # SIGKILL cannot be refused: the loss will be reported.
         self._alarms.clear(("member", number))
-        return True
 
     # -- what the crew does --------------------------------------------------------------------
 
@@ -215,11 +212,6 @@ class Roster:
         member.heard_at = now
         member.pinged_at = None
         self._move(member, "heard")
-
-    def is_owed(self, number: int, task: int) -> bool:
-        """Whether this member owes an answer for this task, and that answer counts."""
-        member = self._member(number)
-        return member.phase == "busy" and task in member.owes
 
     def done(self, number: int, task: int, now: Instant) -> bool:
         """Note that a task has ended; False if it was never given, or has ended before."""
@@ -316,10 +308,8 @@ class Roster:
         return min(pause, longest)
 
     def _member(self, number: int) -> Member:
-        member = self._members.get(number)
-        if member is None:
-            raise Defect(f"{self._role} {number} is not known or was lost before", self.story)
-        return member
+        rule = f"{self._role} {number} is known, and was not lost before"
+        return known(self._members.get(number), rule, self.story)
 
     def _move(self, member: Member, move: Move, why: str = "") -> None:
         after = MOVES.get((member.phase, move))

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from bywayd.core.invariant import Defect, invariant
+from bywayd.core.invariant import invariant, known
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,9 +53,7 @@ class Snapshots:
 
     def pin(self) -> Snapshot:
         """Keep the current one until `unpin`, and return it."""
-        current = self._current
-        if current is None:
-            raise Defect("there is a snapshot before one is pinned")
+        current = known(self._current, "there is a snapshot before one is pinned")
         self._pins[current.revision] = self._pins.get(current.revision, 0) + 1
         self._handles[current.revision] = current.handle
         return current
@@ -80,11 +78,10 @@ class Snapshots:
 
     def hand_over(self) -> tuple[object, ...]:
         """Return the handles of all that must stay, oldest first: what a successor is told."""
-        handles = {**self._handles}
-        if self._current is not None:
-            handles[self._current.revision] = self._current.handle
-            # The successor gives back whatever it was not told to keep.
-            self._released_before = min(handles)
+        current = known(self._current, "there is a snapshot before one is handed over")
+        handles = {**self._handles, current.revision: current.handle}
+        # The successor gives back whatever it was not told to keep.
+        self._released_before = min(handles)
         return tuple(handles[revision] for revision in sorted(handles))
 
     def pins(self) -> dict[int, int]:

@@ -111,7 +111,7 @@ class Surveying:
             self._nonsense(number, "ready a second time")
         elif self._roster.phase(number) == "killed":
             return
-        elif not self._publish(event.revision, event.handle):
+        elif not self._snapshots.publish(event.revision, event.handle):
             self._nonsense(number, f"took up revision {event.revision}")
         else:
             self._ready = number
@@ -126,7 +126,7 @@ class Surveying:
         elif self._roster.phase(number) == "killed":
             # Not counted on: its successor gets the batch once more.
             return
-        elif not self._publish(event.revision, event.handle):
+        elif not self._snapshots.publish(event.revision, event.handle):
             self._nonsense(number, f"went back to revision {event.revision}")
         else:
             self._batch = None
@@ -153,11 +153,11 @@ class Surveying:
 
     def kill(self, number: int, why: str) -> None:
         """Have a surveyor killed. Nothing it still says counts."""
-        if self._roster.kill(number, why):
-            self._health.count("surveyors_killed_total")
-            self._outbox.add(KillSurveyor(number, why))
-            self._outbox.log("error", "surveyor.killed", surveyor=number, why=why)
-            self._forsake(number)
+        self._roster.kill(number, why)
+        self._health.count("surveyors_killed_total")
+        self._outbox.add(KillSurveyor(number, why))
+        self._outbox.log("error", "surveyor.killed", surveyor=number, why=why)
+        self._forsake(number)
 
     def ping(self, number: int) -> None:
         """Ask for a sign of life."""
@@ -196,15 +196,7 @@ class Surveying:
         """Whether a surveyor is at work."""
         return self._ready is not None
 
-    @property
-    def open_questions(self) -> int:
-        """Descriptions in the making."""
-        return len(self._tickets)
-
     # -- within --------------------------------------------------------------------------------
-
-    def _publish(self, revision: int, handle: object) -> bool:
-        return self._snapshots.publish(revision, handle)
 
     def _nonsense(self, number: int, what: str) -> None:
         if self._roster.phase(number) != "killed":

@@ -7,7 +7,6 @@ until the worker says that it has ended, or is gone, and nobody looks at what ca
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Literal, TypeAlias
 
@@ -46,9 +45,6 @@ class Tasks:
         #: Those that have not ended, by number.
         self._tasks: dict[int, Task] = {}
         self._serial = 0
-
-    def __iter__(self) -> Iterator[Task]:
-        return iter(self._tasks.values())
 
     def begin(
         self, kind: Kind, docket: Docket, worker: int, deadline: Instant, now: Instant
