@@ -76,6 +76,12 @@ def test_arguments_leave_out_what_was_not_told() -> None:
     assert told["wheelbase_m"] == 4.2
 
 
+def test_port_0_may_stand_for_several_sockets(tmp_path: Path) -> None:
+    free = '["tcp://127.0.0.1:0"]'
+    told = load(write(tmp_path, f"[sockets]\nrequests = {free}\nupdates = {free}\n"))
+    assert told.sockets.requests == told.sockets.updates
+
+
 def test_settings_cannot_be_changed() -> None:
     with pytest.raises(ValueError, match="frozen"):
         load().site.cell_m = 0.2  # type: ignore[misc]
@@ -146,6 +152,7 @@ count = 3
         ("[sockets]\nevents = ['udp://127.0.0.1:3']", "expected tcp://127.0.0.1:PORT"),
         ("[sockets]\nevents = ['tcp://127.0.0.1:77777']", "expected tcp://127.0.0.1:PORT"),
         ("[sockets]\nevents = ['tcp://127.0.0.1:7461']", "stands for more than one socket"),
+        ("[workers]\ncores = [0, -1]", ":2: workers.cores[1]: must be greater than or equal to 0"),
         ("[site]\norigin_m = [1, 2, 3]", ":2: site.origin_m: the list should have at most 2"),
         ("[site]\ncell_m = 0.001", ":2: site.cell_m: must be greater than or equal to 0.02"),
     ],
