@@ -44,6 +44,7 @@ _SCALARS: Final[dict[str, Any]] = {
 _NAMED: dict[type, Any] = {}
 _ENTRIES: dict[str, tuple[Any, Any]] = {}
 _WARM: set[str] = set()
+_REHEARSALS: list[Callable[[], None]] = []
 
 
 def numba_type(part: Part) -> Any:
@@ -154,6 +155,15 @@ def warm(progress: Callable[[int, int, str], None] | None = None) -> None:
             dispatcher.compile(signature)
         dispatcher.disable_compile()
         _WARM.add(name)
+
+    while _REHEARSALS:
+        _REHEARSALS.pop(0)()
+
+
+def rehearsal(function: Callable[[], None]) -> Callable[[], None]:
+    """Have a function called once, when all kernels are compiled and before anything is planned."""
+    _REHEARSALS.append(function)
+    return function
 
 
 def ensure_warm() -> None:

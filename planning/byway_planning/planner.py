@@ -21,7 +21,7 @@ from byway_planning.profile import stopping_distance_m
 from byway_planning.route import make_route
 from byway_planning.search.floods import FloodGround
 from byway_planning.search.method import EXHAUSTED, FOUND, FULL
-from byway_planning.search.methods import make_method
+from byway_planning.search.methods import check_method, make_method
 from byway_planning.search.question import Question, excess_kernel
 from byway_planning.search.workshop import Workshop, borrowed
 from byway_planning.site.site import Site
@@ -172,6 +172,7 @@ def plan(
     body = vehicle.body(clearance_m)
     _check_arguments(body, start, goal, start_speed_mps, start_curvature_per_m, gap_wanted)
     _check_size(snapshot, body)
+    check_method(method, sampler)
     run = _Run(
         snapshot,
         vehicle,

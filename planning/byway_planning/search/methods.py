@@ -1,6 +1,5 @@
 """The search methods by name."""
 
-from collections.abc import Callable
 from typing import Final
 
 import numpy as np
@@ -65,9 +64,9 @@ METHODS: Final[dict[str, str]] = {
 }
 
 
-def make_method(name: str, question: Question, sampler: str | None, workshop: Workshop) -> Method:
+def check_method(name: str, sampler: str | None) -> None:
     """
-    Make a search by its published name.
+    Check a method's published name and the sampler that goes with it.
 
     Args:
         sampler: One of SAMPLERS, for the methods that sample; None for the method's own.
@@ -79,10 +78,14 @@ def make_method(name: str, question: Question, sampler: str | None, workshop: Wo
         raise ValueError(f"there is no method {name!r}; known: {', '.join(sorted(METHODS))}")
     if sampler is not None and sampler not in SAMPLERS:
         raise ValueError(f"there is no sampler {sampler!r}; known: {', '.join(sorted(SAMPLERS))}")
-    samplers: dict[str, Callable[..., Method]] = {"rrt": SingleTree, "rrt_connect": ConnectedTrees}
-    if name in samplers:
-        make = samplers[name]
-        return make(question) if sampler is None else make(question, sampler)
-    if sampler is not None:
+    if sampler is not None and name not in ("rrt", "rrt_connect"):
         raise ValueError(f"method {name!r} does not sample; leave the sampler out")
+
+
+def make_method(name: str, question: Question, sampler: str | None, workshop: Workshop) -> Method:
+    """Make a search by its published name; the arguments have passed `check_method`."""
+    if name == "rrt":
+        return SingleTree(question, sampler or "goal_biased")
+    if name == "rrt_connect":
+        return ConnectedTrees(question, sampler or "corridor")
     return Auto(question, workshop) if name == "auto" else LatticeSearch(question, workshop)

@@ -1,35 +1,30 @@
-"""Everything that is made once in a process, before the first answer."""
+"""
+What is done once in a process behind the compiler, before the first answer.
+
+The first call of a loaded kernel still takes milliseconds (its code is put in place then), so
+short plans with each kind of vehicle are part of getting warm, and so are the tables that
+searches read.
+"""
 
 import logging
-from collections.abc import Callable
 from typing import Final
 
-from byway_planning import kernel
+from byway_planning.kernel import rehearsal
 from byway_planning.planner import plan
 from byway_planning.search.lengths import lengths_of
 from byway_planning.site.site import Site
-from byway_planning.vehicles.body import CAR, DISC, FORWARD_CAR
 from byway_planning.vehicles.models import Car, Disc, ForwardCar, Vehicle
 
 _BOX: Final = [(-0.5, -0.5), (1.5, -0.5), (1.5, 0.5), (-0.5, 0.5)]
-_REHEARSAL_WORK: Final = 3000
+_WORK: Final = 3000
 
 
-def warm(progress: Callable[[int, int, str], None] | None = None) -> None:
-    """
-    Compile every kernel, or load it from the cache, fill tables, and call everything once.
-
-    The first call of a loaded kernel still takes milliseconds (its code is put in place then),
-    so short plans with each kind of vehicle are part of it.
-
-    Args:
-        progress: Called before each kernel with (done, total, name).
-    """
-    kernel.warm(progress)
-    for kind in (CAR, FORWARD_CAR, DISC):
-        lengths_of(kind)
+@rehearsal
+def rehearse() -> None:
+    """Fill the tables and call everything once."""
     log = logging.getLogger(__name__)
     for vehicle in _vehicles():
+        lengths_of(vehicle.kind)
         site = Site.from_shapes(
             {"wall": [(6.0, 0.0), (7.0, 0.0), (7.0, 8.0), (6.0, 8.0)]},
             {"post": (3.0, 9.0, 0.3)},
@@ -44,7 +39,7 @@ def warm(progress: Callable[[int, int, str], None] | None = None) -> None:
                 time_left=lambda: 1.0,
                 seed=1,
                 method=method,
-                work_max=_REHEARSAL_WORK,
+                work_max=_WORK,
             )
             log.debug("rehearsed %s with %s: %s", method, vehicle.model, outcome.kind)
 
