@@ -8,11 +8,13 @@ from tests.planning.route_scenes import (
     EVERYWHERE,
     Floats,
     Pose,
+    Twin,
     car,
     codes,
     disc,
     driven,
     line_of,
+    path_of,
     solids_of,
 )
 
@@ -67,6 +69,17 @@ def test_the_clearance_is_kept_to_a_micrometre(clearance: float) -> None:
         assert codes(faults) == expected
 
 
+@pytest.mark.parametrize("curvature", [2.9e-6, -1e-6, 3.1e-6])
+def test_a_very_flat_bend_is_measured_to_a_micrometre(curvature: float) -> None:
+    wall = [(0.0, 1.25), (8.0, 1.25), (8.0, 3.0), (0.0, 3.0)]
+    path, goal = path_of((0.0, 0.0, 0.0), [(curvature, 12.0)])
+    route = make_route(path, car())
+    faults = verify(solids_of([wall]), car(), path, route, (0.0, 0.0, 0.0), goal)
+    least_m = Twin(car(), route.table, [wall]).least()
+    # the outline is drawn in by a micrometre while it is measured
+    assert faults.clearance_m == pytest.approx(least_m, abs=0.3e-6)
+
+
 def test_a_bend_swings_the_front_corner_out() -> None:
     """The outer front corner of a car turning left moves on a circle around (0, 5)."""
     out_m = math.hypot(3.5, 5.0 + 0.95)
@@ -97,7 +110,16 @@ def test_nothing_hides_where_a_bend_bulges() -> None:
                 (post[0] + 0.01 * s, post[1] - 0.01 * c),
                 (post[0] - 0.01 * s, post[1] + 0.01 * c),
             ]
-            for solids in (solids_of(discs=[grazed, post]), solids_of([spike], discs=[grazed])):
+            # a long straight face across the circle: no end of it comes near the vehicle
+            face = [
+                ((tip_m + d) * c - w * s, 5.0 + (tip_m + d) * s + w * c)
+                for d, w in ((0.0, -3.0), (1.0, -3.0), (1.0, 3.0), (0.0, 3.0))
+            ]
+            for solids in (
+                solids_of(discs=[grazed, post]),
+                solids_of([spike], discs=[grazed]),
+                solids_of([face], discs=[grazed]),
+            ):
                 faults = driven(solids, vehicle, [(0.2, 7.0)])
                 assert codes(faults) == expected
                 if not expected:
@@ -179,6 +201,16 @@ def test_no_start_may_overlap_if_none_is_allowed() -> None:
             start_overlap_m=overlap_m,
         )
         assert codes(faults) == expected
+
+
+@pytest.mark.parametrize(("overlap_m", "expected"), [(0.02, []), (0.035, ["collides"])])
+def test_thin_arms_allow_less_overlap(overlap_m: float, expected: list[str]) -> None:
+    """Arms 0.1 m thick cannot be drawn in by the 0.06 m that are allowed, but by half of it."""
+    fork = [(-1.0, -0.6), (3.0, -0.6), (3.0, -0.5), (0.0, -0.5)]
+    fork += [(x, -y) for x, y in reversed(fork)]
+    vehicle = car(footprint_m=fork, start_overlap_m=0.06)
+    post = [(1.0, -0.8), (1.2, -0.8), (1.2, -0.6 + overlap_m), (1.0, -0.6 + overlap_m)]
+    assert codes(driven(solids_of([post]), vehicle, [(-0.1, -4.0)])) == expected
 
 
 @pytest.mark.parametrize("gap_m", [0.03, -0.02])
