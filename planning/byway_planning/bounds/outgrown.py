@@ -24,6 +24,7 @@ from byway_planning.site.solids import ALL_CELLS, NO_CELLS, Solids
 
 Floats = npt.NDArray[np.float64]
 Whole4 = npt.NDArray[np.int32]
+Marks = npt.NDArray[np.uint8]
 
 #: Runs of cells that are looked at; 40 bytes each. More come only from megapixels of speckle.
 RUNS_MAX: Final = 200_000
@@ -116,10 +117,11 @@ def _bucket_grid(solids: Solids, count: int) -> tuple[float, int, int]:
 def _runs(solids: Solids) -> Floats:
     if (solids.cells_of == NO_CELLS).all():
         return np.empty((0, 4))
+    edges = np.empty((solids.tile_cells, solids.tile_cells), np.uint8)
     room = 4096
     while True:
         runs = np.empty((room, 4))
-        count = runs_kernel(solids, runs)
+        count = runs_kernel(solids, edges, runs)
         if count <= room or room >= RUNS_MAX:
             return runs[: min(count, room)]
         room = min(count, RUNS_MAX)
@@ -127,6 +129,7 @@ def _runs(solids: Solids) -> Floats:
 
 @kernel()
 def is_blocked(solids: Solids, row: int, column: int) -> bool:
+    """Whether a cell blocks; outside all tiles is free."""
     tile = solids.tile_cells
     tile_rows, tile_columns = solids.cells_of.shape
     if row < 0 or column < 0 or row >= tile_rows * tile or column >= tile_columns * tile:
@@ -138,22 +141,38 @@ def is_blocked(solids: Solids, row: int, column: int) -> bool:
 
 
 @kernel()
-def _at_edge(solids: Solids, row: int, column: int) -> bool:
-    """Is this a blocked cell with a free one beside it?"""
-    return is_blocked(solids, row, column) and not (
-        is_blocked(solids, row - 1, column)
-        and is_blocked(solids, row + 1, column)
-        and is_blocked(solids, row, column - 1)
-        and is_blocked(solids, row, column + 1)
-    )
+def _mark_edges(solids: Solids, tr: int, tc: int, edges: Marks) -> bool:
+    """Mark the cells of a tile that block and have a free one beside them; are there any?"""
+    tile = solids.tile_cells
+    begin = solids.cells_of[tr, tc]
+    some = False
+    for r in range(tile):
+        for c in range(tile):
+            edges[r, c] = 0
+            # most cells are free: look at them as quickly as can be
+            if begin >= 0 and solids.cells[begin + r * tile + c] == 0:
+                continue
+            if begin == ALL_CELLS and 0 < r < tile - 1 and 0 < c < tile - 1:
+                continue
+            row, column = tr * tile + r, tc * tile + c
+            if not (
+                is_blocked(solids, row - 1, column)
+                and is_blocked(solids, row + 1, column)
+                and is_blocked(solids, row, column - 1)
+                and is_blocked(solids, row, column + 1)
+            ):
+                edges[r, c] = 1
+                some = True
+    return some
 
 
-@kernel(Solids, "f8[:, ::1]")
-def runs_kernel(solids: Solids, out: Floats) -> int:
+@kernel(Solids, "u1[:, ::1]", "f8[:, ::1]")
+def runs_kernel(solids: Solids, edges: Marks, out: Floats) -> int:
     """
     Straight runs of blocked cells that have a free neighbour, tile by tile.
 
     Args:
+        edges: One tile of cells, for the work.
         out: Receives x0, y0, x1, y1, the middles of the first and the last cell.
 
     Returns:
@@ -163,69 +182,49 @@ def runs_kernel(solids: Solids, out: Floats) -> int:
     n = 0
     for tr in range(solids.cells_of.shape[0]):
         for tc in range(solids.cells_of.shape[1]):
-            if solids.cells_of[tr, tc] == NO_CELLS:
-                continue
-            if solids.cells_of[tr, tc] == ALL_CELLS and _walled_in(solids, tr, tc):
-                continue
-            for upright in range(2):
+            if solids.cells_of[tr, tc] != NO_CELLS and _mark_edges(solids, tr, tc, edges):
                 for line in range(tile):
-                    n = _runs_of_line(solids, tr * tile, tc * tile, line, upright, out, n)
+                    n = _runs_of_line(solids, edges, tr * tile, tc * tile, line, False, out, n)
+                    n = _runs_of_line(solids, edges, tr * tile, tc * tile, line, True, out, n)
     return n
 
 
 @kernel()
-def _walled_in(solids: Solids, tr: int, tc: int) -> bool:
-    """Are the four tiles around this one blocked altogether?"""
-    rows, columns = solids.cells_of.shape
-    if tr == 0 or tc == 0 or tr == rows - 1 or tc == columns - 1:
-        return False
-    return bool(
-        solids.cells_of[tr - 1, tc] == ALL_CELLS
-        and solids.cells_of[tr + 1, tc] == ALL_CELLS
-        and solids.cells_of[tr, tc - 1] == ALL_CELLS
-        and solids.cells_of[tr, tc + 1] == ALL_CELLS
-    )
-
-
-@kernel()
 def _runs_of_line(
-    solids: Solids, row: int, column: int, line: int, upright: int, out: Floats, n: int
-) -> int:
+    solids: Solids, edges: Marks, row: int, column: int, line: int, upright: bool,
+    out: Floats, n: int,
+) -> int:  # fmt: skip
     """The runs in one row (or column) of the tile that begins at (row, column)."""
     tile = solids.tile_cells
     begin = -1
     for place in range(tile + 1):
         edge = False
-        r, c = (row + place, column + line) if upright == 1 else (row + line, column + place)
         if place < tile:
-            edge = _at_edge(solids, r, c)
+            edge = edges[place, line] != 0 if upright else edges[line, place] != 0
         if edge and begin < 0:
             begin = place
         elif not edge and begin >= 0:
             last = place - 1
             # a cell alone in its row is told by its column, unless it is alone there too
-            r0, c0 = (row + begin, column + line) if upright == 1 else (row + line, column + begin)
-            alone = last == begin
-            if alone and upright == 0:
-                alone = not _beside(solids, r0, c0, row)
-            if last > begin or (alone and upright == 0):
+            if last > begin or (not upright and not _beside(edges, line, begin)):
                 if n < out.shape[0]:
-                    r1, c1 = (r0 + last - begin, c0) if upright == 1 else (r0, c0 + last - begin)
-                    out[n, 0] = solids.corner_x_m + (c0 + 0.5) * solids.cell_m
-                    out[n, 1] = solids.corner_y_m + (r0 + 0.5) * solids.cell_m
-                    out[n, 2] = solids.corner_x_m + (c1 + 0.5) * solids.cell_m
-                    out[n, 3] = solids.corner_y_m + (r1 + 0.5) * solids.cell_m
+                    r0, c0 = (begin, line) if upright else (line, begin)
+                    r1, c1 = (last, line) if upright else (line, last)
+                    out[n, 0] = solids.corner_x_m + (column + c0 + 0.5) * solids.cell_m
+                    out[n, 1] = solids.corner_y_m + (row + r0 + 0.5) * solids.cell_m
+                    out[n, 2] = solids.corner_x_m + (column + c1 + 0.5) * solids.cell_m
+                    out[n, 3] = solids.corner_y_m + (row + r1 + 0.5) * solids.cell_m
                 n += 1
             begin = -1
     return n
 
 
 @kernel()
-def _beside(solids: Solids, row: int, column: int, first_row: int) -> bool:
-    """Does a cell have a neighbour above or below, in its tile, with which it forms a run?"""
-    below = row > first_row and _at_edge(solids, row - 1, column)
-    above = row + 1 < first_row + solids.tile_cells and _at_edge(solids, row + 1, column)
-    return below or above
+def _beside(edges: Marks, row: int, column: int) -> bool:
+    """Does a marked cell have one above or below, in its tile, with which it forms a run?"""
+    below = row > 0 and edges[row - 1, column] != 0
+    above = row + 1 < edges.shape[0] and edges[row + 1, column] != 0
+    return bool(below or above)
 
 
 @kernel()
