@@ -22,7 +22,15 @@ from byway_planning.route import make_route
 from byway_planning.search.floods import FloodGround
 from byway_planning.search.method import EXHAUSTED, FOUND, FULL
 from byway_planning.search.methods import check_method, make_method
-from byway_planning.search.question import Question, excess_kernel
+from byway_planning.search.question import (
+    Guide,
+    Question,
+    direct_length_kernel,
+    excess_kernel,
+    flood_length_kernel,
+    guide_for,
+    middle_of,
+)
 from byway_planning.search.workshop import Workshop, borrowed
 from byway_planning.site.site import Site
 from byway_planning.site.snapshot import Snapshot
@@ -204,37 +212,26 @@ def _planned(
     blocked = _blockages(run, run.goal, 0.0)
     if blocked:
         return run.outcome("goal_blocked", blocked)
+    run.bound = float(direct_length_kernel(run.body, run.start, run.goal))
     openings: list[Floats | None] = [None]
-    if excess_kernel(scene, run.body, run.start) <= CONTACT_M:
+    near = bool(excess_kernel(scene, run.body, run.start) <= CONTACT_M)
+    if near:
         blocked = _blockages(run, run.start, run.vehicle.start_overlap_m)
-        openings = list(leaving(scene, run.body, run.start, run.vehicle.start_overlap_m))
-        if blocked or not openings or run.start_speed_mps != 0.0:
+        if not blocked and run.start_speed_mps == 0.0:
+            openings = list(leaving(scene, run.body, run.start, run.vehicle.start_overlap_m))
+        if blocked or not openings:
             return run.outcome("start_blocked", blocked or _blockages(run, run.start, -math.inf))
-    elif run.start_speed_mps != 0.0:
-        stop_m = stopping_distance_m(run.start_speed_mps, run.vehicle.limits)
-        openings = list(
-            rolling(
-                scene, run.body, run.start, run.start_speed_mps, run.start_curvature_per_m, stop_m
-            )
-        )
+    if run.start_speed_mps != 0.0:
+        openings = list(_rolling(run, near))
         if not openings or not _fits_bend(run):
             return run.outcome("start_too_fast")
-    ground = _ground(run)
-    questions = [_question(run, ground, opening) for opening in openings[:6]]
-    run.bound = min(
-        q.direct_length_m() + (abs(float(o[0, 4])) if o is not None else 0.0)
-        for q, o in zip(questions, openings)
-    )
-    if all(q.shortest_m == math.inf for q in questions):
+    guide = guide_for(_ground(run), run.body, run.start, run.goal)
+    if not guide.reached:
         return run.outcome("no_route")
-    ranked = sorted(
-        (q.shortest_m + (path_cost(o, run.body) if o is not None else 0.0), i)
-        for i, (q, o) in enumerate(zip(questions, openings))
-    )
-    for length_m, i in ranked:
-        if length_m < math.inf and _searched(
-            run, workshop, questions[i], openings[i], method, sampler, gap_wanted, work_max
-        ):
+    for opening in _ranked(run, guide, openings):
+        start = run.start if opening is None else end_of(opening)
+        question = Question(scene, run.body, start, run.goal, run.seed, guide)
+        if _searched(run, workshop, question, opening, method, sampler, gap_wanted, work_max):
             break
     if run.best is None:
         return run.outcome("not_found")
@@ -374,10 +371,32 @@ def _ground(run: _Run) -> FloodGround:
     return found
 
 
-def _question(run: _Run, ground: FloodGround, opening: Floats | None) -> Question:
-    start = run.start if opening is None else end_of(opening)
-    scene = run.snapshot.scene(run.left_out)
-    return Question(scene, run.body, start, run.goal, run.seed, ground)
+def _rolling(run: _Run, near: bool) -> list[Floats]:
+    """Return the opening paths of a moving vehicle."""
+    return rolling(
+        run.snapshot.scene(run.left_out),
+        run.body,
+        run.start,
+        run.start_speed_mps,
+        run.start_curvature_per_m,
+        stopping_distance_m(run.start_speed_mps, run.vehicle.limits),
+        overlap_m=run.vehicle.start_overlap_m if near else None,
+    )
+
+
+def _ranked(run: _Run, guide: Guide, openings: list[Floats | None]) -> list[Floats | None]:
+    """Return the openings that lead somewhere, the most promising first."""
+
+    def estimate(opening: Floats | None) -> float:
+        if opening is None:
+            return 0.0
+        end = end_of(opening)
+        flood_length_m = float(flood_length_kernel(guide.to_goal, *middle_of(run.body, end)))
+        curve_m = float(direct_length_kernel(run.body, end, run.goal))
+        return path_cost(opening, run.body) + max(flood_length_m, curve_m)
+
+    ranked = sorted((estimate(opening), i) for i, opening in enumerate(openings))
+    return [openings[i] for cost, i in ranked if cost < math.inf]
 
 
 def path_cost(path: Floats, body: Body) -> float:

@@ -111,7 +111,14 @@ def _core_of(body: Body, overlap_m: float) -> Body:
 
 
 def rolling(
-    scene: Scene, body: Body, pose: Floats, speed_mps: float, curvature_per_m: float, stop_m: float
+    scene: Scene,
+    body: Body,
+    pose: Floats,
+    speed_mps: float,
+    curvature_per_m: float,
+    stop_m: float,
+    *,
+    overlap_m: float | None = None,
 ) -> list[Floats]:
     """
     Return opening paths (1, 5) along which a moving vehicle could still stop.
@@ -119,11 +126,21 @@ def rolling(
     Args:
         speed_mps: Signed. curvature_per_m: the steering as it stands, tried first.
         stop_m: Distance in which the vehicle stops.
+        overlap_m: Given when the vehicle is too near to an obstacle and has to get away from
+            it on the same arc: how deep it may overlap at the start.
     """
     sign = 1.0 if speed_mps > 0.0 else -1.0
     found = []
     for k in dict.fromkeys([curvature_per_m, *_curvatures(body)]):
-        if reach_kernel(scene, body, pose, k, sign * stop_m) >= stop_m:
+        away_m, at = 0.0, pose
+        if overlap_m is not None:
+            core = _core_of(body, overlap_m)
+            away_m = float(leave_kernel(scene, body, core, overlap_m, pose, k, sign, stop_m))
+            if away_m < 0.0:
+                continue
+            at = end_of(np.array([[*pose, k, sign * away_m]]))
+        rest_m = stop_m - away_m
+        if reach_kernel(scene, body, at, k, sign * rest_m) >= rest_m:
             found.append(np.array([[*pose, k, sign * stop_m]]))
     return found
 

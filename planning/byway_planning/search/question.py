@@ -1,7 +1,9 @@
 """What a search is asked: one scene, one body, one start, one goal, and what guides the way."""
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass
+from functools import cached_property
+from typing import Final
 
 import numpy as np
 import numpy.typing as npt
@@ -11,12 +13,15 @@ from byway_planning.curves.steer import steer
 from byway_planning.curves.word import advance
 from byway_planning.kernel import kernel
 from byway_planning.motion import segments_free
-from byway_planning.search.floods import GUIDE_CELLS, PROOF_CELLS, Flood, FloodGround
+from byway_planning.search.floods import GUIDE_CELLS, PROOF_CELLS, Flood, FloodGround, flood_m
 from byway_planning.search.lengths import Lengths, lengths_of
 from byway_planning.site.scene import Scene
 from byway_planning.vehicles.body import DISC, Body
 
 Floats = npt.NDArray[np.float64]
+
+#: Floods run on until this much past the other end: what lies farther is no good detour.
+STRETCH: Final = 1.3
 
 
 @kernel(Scene, Body, "rf8[::1]", "rf8[::1]", "f8[:, ::1]", allocates=True)
@@ -50,7 +55,11 @@ def direct_kernel(scene: Scene, body: Body, start: Floats, goal: Floats, out: Fl
 
 @kernel(Body, "rf8[::1]", "rf8[::1]", allocates=True)
 def direct_length_kernel(body: Body, start: Floats, goal: Floats) -> float:
-    """Length of the shortest curve from start to goal in an empty world."""
+    """
+    Length of the shortest curve from start to goal in an empty world: a bound of any cost.
+
+    Length, not cost: with dear reversing the cheapest path may be no Reeds-Shepp word.
+    """
     segments = np.empty((5, 2))
     _, length, _ = steer(
         body.kind,
@@ -63,10 +72,46 @@ def direct_length_kernel(body: Body, start: Floats, goal: Floats) -> float:
     return float(length)
 
 
+@kernel(Flood, "f8", "f8")
+def flood_length_kernel(flood: Flood, x: float, y: float) -> float:
+    """`flood_m`, for callers outside the kernels."""
+    return float(flood_m(flood, x, y))
+
+
 @kernel(Scene, Body, "rf8[::1]")
 def excess_kernel(scene: Scene, body: Body, pose: Floats) -> float:
     """`pose_excess` of one pose."""
     return float(pose_excess(scene, body, pose[0], pose[1], pose[2]))
+
+
+def middle_of(body: Body, pose: Floats) -> tuple[float, float]:
+    """Return where the middle of the inscribed disc is at a pose."""
+    c, s = math.cos(pose[2]), math.sin(pose[2])
+    return (
+        float(pose[0] + c * body.inner_x_m - s * body.inner_y_m),
+        float(pose[1] + s * body.inner_x_m + c * body.inner_y_m),
+    )
+
+
+@dataclass(frozen=True)
+class Guide:
+    """A flood from the goal, and the ground that it ran over."""
+
+    ground: FloodGround
+    to_goal: Flood
+    slack_cells: float
+    reached: bool  # False: proved, no disc of the inscribed radius gets from start to goal
+
+
+def guide_for(ground: FloodGround, body: Body, start: Floats, goal: Floats) -> Guide:
+    """Flood from the goal until past the start: over what can mostly be driven, else over all."""
+    for slack in (GUIDE_CELLS, PROOF_CELLS):
+        flood, length_m = ground.flood(
+            middle_of(body, goal), middle_of(body, start), slack_cells=slack, stretch=STRETCH
+        )
+        if length_m < math.inf:
+            break
+    return Guide(ground, flood, slack, length_m < math.inf)
 
 
 @dataclass
@@ -78,35 +123,28 @@ class Question:
     start: Floats  # (3,) read-only
     goal: Floats
     seed: int
-    ground: FloodGround
-    lengths: Lengths = field(init=False)
-    to_goal: Flood = field(init=False)  # flood from the goal: what is left to go
-    to_start: Flood = field(init=False)
-    shortest_m: float = field(init=False)  # of the disc over the grid; inf: proved unreachable
+    guide: Guide
 
-    def __post_init__(self) -> None:
-        self.lengths = lengths_of(self.body.kind)
-        start, goal = self.middle_of(self.start), self.middle_of(self.goal)
-        for slack in (GUIDE_CELLS, PROOF_CELLS):
-            self.slack_cells = slack
-            self.to_goal, self.shortest_m = self.ground.flood(
-                goal, start, slack_cells=slack, stretch=1.3
-            )
-            if self.shortest_m < math.inf:
-                break
-        if self.shortest_m < math.inf:
-            self.to_start, _ = self.ground.flood(
-                start, goal, slack_cells=self.slack_cells, stretch=1.3
-            )
+    @property
+    def to_goal(self) -> Flood:
+        """Flood from the goal: what is left to go."""
+        return self.guide.to_goal
 
-    def middle_of(self, pose: Floats) -> tuple[float, float]:
-        """Return where the middle of the inscribed disc is at a pose."""
-        b = self.body
-        c, s = math.cos(pose[2]), math.sin(pose[2])
-        return (
-            float(pose[0] + c * b.inner_x_m - s * b.inner_y_m),
-            float(pose[1] + s * b.inner_x_m + c * b.inner_y_m),
+    @cached_property
+    def to_start(self) -> Flood:
+        """Flood from the start, for searches that grow from the goal."""
+        flood, _ = self.guide.ground.flood(
+            middle_of(self.body, self.start),
+            middle_of(self.body, self.goal),
+            slack_cells=self.guide.slack_cells,
+            stretch=STRETCH,
         )
+        return flood
+
+    @cached_property
+    def lengths(self) -> Lengths:
+        """Unit curve lengths of this kind of vehicle."""
+        return lengths_of(self.body.kind)
 
     def direct(self) -> Floats | None:
         """Return the path of the cheapest curve, when it is free."""
@@ -117,11 +155,3 @@ class Question:
         if count == 0:
             return np.array([[*self.start, 0.0, 0.0]])
         return rows[:count]
-
-    def direct_length_m(self) -> float:
-        """
-        Return a lower bound of any path's cost: the shortest curve in an empty world.
-
-        Length, not cost: with dear reversing the cheapest path may be no Reeds-Shepp word.
-        """
-        return float(direct_length_kernel(self.body, self.start, self.goal))
