@@ -79,33 +79,28 @@ class Round:
         return tuple(station for delivery in self.deliveries for station in delivery)
 
 
+_SHED_1_EAST: Final = Station("shed-1 east", (49.0, 26.5, NORTH))
+
 ROUNDS: Final = (
     Round(
         *("flatbed-1", "flatbed", 0),
         (
-            (Station("shed-1 east", (49.0, 26.5, NORTH)), Station("ramp 1", (58.0, 7.2, NORTH))),
-            (Station("saw front", (61.0, 37.9, EAST)), Station("ramp 2", (68.0, 7.2, NORTH))),
+            (_SHED_1_EAST, Station("ramp 1", (58.0, 7.2, NORTH))),
+            (_SHED_1_EAST, Station("ramp 2", (68.0, 7.2, NORTH))),
         ),
     ),
     Round(
         *("loader-2", "loader", 1),
         (
-            (Station("timber 1", (63.0, 14.4, NORTH)), Station("saw yard", (61.0, 50.5, EAST))),
-            (
-                Station("shed-2 east", (50.6, 19.0, WEST)),
-                Station("kiln-2 east", (35.8, 45.0, WEST)),
-            ),
+            (Station("shed-2 east", (50.6, 19.0, WEST)), Station("saw front", (61.5, 37.9, EAST))),
+            (Station("timber 2", (54.9, 26.8, EAST)), Station("timber 1", (63.0, 14.4, NORTH))),
         ),
     ),
     Round(
         *("tug-3", "tug", 2),
         (
-            (Station("kiln-2 door", (25.5, 42.4, NORTH)), Station("sorting", (56.6, 34.0, EAST))),
-            (
-                Station("kiln-1 door", (10.5, 40.6, NORTH)),
-                Station("shed-2 west", (16.6, 19.0, EAST)),
-            ),
-            (Station("bricks 1", (10.2, 23.5, WEST)), Station("shed-1 aisle", (33.0, 24.0, EAST))),
+            (Station("kiln-2", (25.5, 42.4, NORTH)), Station("sorting", (56.6, 34.0, EAST))),
+            (Station("poles", (50.4, 48.9, WEST)), Station("shed-1 north", (38.0, 38.0, WEST))),
         ),
     ),
 )

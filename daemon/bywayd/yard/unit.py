@@ -20,7 +20,7 @@ from bywayd.yard.scene import ASIDE, Round, Station
 from bywayd.yard.shapes import Mass, Masses, Pose
 from bywayd.yard.tracking import Line
 
-STANDING_BUDGET_S: Final = 0.25
+STANDING_BUDGET_S: Final = 0.2
 MOVING_BUDGET_S: Final = 0.12
 #: From the end of the budget to the hand-over: the way there and back, and a step.
 HANDOVER_SPARE_S: Final = 0.12
@@ -28,7 +28,7 @@ ASK_EVERY_S: Final = 1.5
 #: Never more often than this, whatever happens: the workers are there for all units.
 ASK_PAUSE_S: Final = 0.3
 RETRY_S: Final = 0.4
-LOADING_S: Final = 1.0
+LOADING_S: Final = 0.8
 #: A new route must save this much, or a vehicle would swing between routes of the same cost.
 SAVING_M: Final = 0.4
 #: How long a unit of rank 0 lets itself be held up before it asks again; lower ranks sooner.
