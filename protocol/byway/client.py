@@ -17,7 +17,7 @@ from byway.ask import Ask, OnBetter
 from byway.contact import Contact
 from byway.conversation import Clock, Patience
 from byway.ear import Heard
-from byway.errors import BadReply, BadValue, UnknownRequest
+from byway.errors import BadValue, UnknownRequest
 from byway.link import wait
 from byway.packed import pack
 from byway.site_view import SiteView, site_view
@@ -464,13 +464,7 @@ class Client:
 
 def _event(heard: Heard) -> Event:
     header, message = heard.received.header, heard.received.message
-    content: Better | messages.HealthIs
-    if isinstance(message, messages.BetterMessage):
-        content = better_of(heard.received)
-    elif isinstance(message, messages.HealthIs):
-        content = message
-    else:
-        raise BadReply(f"a {header.kind} under the topic {heard.topic}")
+    content = message if isinstance(message, messages.HealthIs) else better_of(heard.received)
     return Event(heard.topic, header.epoch, header.number, heard.missed, content)
 
 

@@ -205,7 +205,7 @@ class Contact:
 
     # -- changes of the site ---------------------------------------------------------------------
 
-    def change(self, message: messages.Change, packed: Bytes = b"") -> int:
+    def change(self, message: messages.AnyChange, packed: Bytes = b"") -> int:
         """Send a change and wait until it is visible; return the revision that has it."""
         self.enter()
         self.meet()
@@ -234,6 +234,7 @@ class Contact:
         deadline_s = self.clock() + self.patience.timeout_s
         while not all(sent.is_decided for sent in made):
             if self.clock() >= deadline_s:
+                self._source.send_again()  # by the next call, at once
                 what = f"{len(self._source.line)} changes"
                 raise self._late(what, is_connected=updates.is_connected)
             updates.turn(deadline_s)

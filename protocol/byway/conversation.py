@@ -6,6 +6,7 @@ number, so that the daemon does it once. Neither waits by itself: a turn sends w
 waits until something happens or a given time, and takes in what came.
 """
 
+from abc import ABC, abstractmethod
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Final
@@ -38,7 +39,7 @@ class Patience:
     listen_s: float = 0.25
 
 
-class _Line:
+class _Line(ABC):
     """What both conversations have in common: a link, and since when it has been down."""
 
     def __init__(self, link: Link, patience: Patience, clock: Clock) -> None:
@@ -103,8 +104,9 @@ class _Line:
             any_came = True
         return any_came
 
+    @abstractmethod
     def _take_in(self, received: frames.Received) -> None:
-        raise NotImplementedError
+        """Take in one message."""
 
 
 @dataclass(slots=True, eq=False)

@@ -24,7 +24,7 @@ patches_max: Final = 256
 patch_bytes_max: Final = 4 * limits.packed_bytes_max
 
 #: A change to be sent, its packed frame, and when it counts from.
-Restoring: TypeAlias = tuple[messages.Change, Bytes, float]
+Restoring: TypeAlias = tuple[messages.AnyChange, Bytes, float]
 _Polygon: TypeAlias = npt.NDArray[np.float64]
 _Disc: TypeAlias = tuple[float, float, float]
 
@@ -51,7 +51,7 @@ class HeldLayer:
 
     # -- what has become visible ------------------------------------------------------------------
 
-    def take(self, message: messages.Change, packed: Bytes, made_s: float, now_s: float) -> None:
+    def take(self, message: messages.AnyChange, packed: Bytes, made_s: float, now_s: float) -> None:
         """Take note of a change that was made at `made_s` and is visible now."""
         match message:
             case messages.Claim():
@@ -65,7 +65,7 @@ class HeldLayer:
                 self._take_settings(message)
                 self._clear()
                 self._take_obstacles(message, packed, made_s)
-            case messages.Put():
+            case _:
                 self._take_obstacles(message, packed, made_s)
         self._forget_expired(now_s)
 

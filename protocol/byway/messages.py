@@ -196,6 +196,10 @@ class Patch(Change):
     columns: Columns
 
 
+#: Whatever a source may send.
+AnyChange: TypeAlias = Claim | Put | ReplaceLayer | Drop | Patch
+
+
 # -- replies to requests ----------------------------------------------------------------------
 
 

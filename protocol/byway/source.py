@@ -33,7 +33,7 @@ class Sent:
         is_decided: There is a verdict: `error`, or visible at `revision`.
     """
 
-    message: messages.Change
+    message: messages.AnyChange
     packed: Bytes
     made_s: float
     number: int
@@ -66,7 +66,7 @@ class Source:
 
     # -- out ------------------------------------------------------------------------------------
 
-    def add(self, message: messages.Change, packed: Bytes, now_s: float) -> Sent:
+    def add(self, message: messages.AnyChange, packed: Bytes, now_s: float) -> Sent:
         """Put a change at the end of the line."""
         self._last_number += 1
         sent = Sent(message, packed, now_s, self._last_number)

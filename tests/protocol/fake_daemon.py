@@ -9,6 +9,7 @@ import queue
 import threading
 from collections import Counter
 from collections.abc import Callable, Iterable
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -17,6 +18,7 @@ import zmq
 
 from byway import frames, limits, messages, obstacles
 from byway.answer import ROUTE_TABLE
+from byway.client import Client
 from byway.errors import SenderFault
 from byway.frames import Header, Received
 from byway.packed import pack
@@ -53,6 +55,20 @@ def outcome(cost: float | None = 1.0, **changes: Any) -> tuple[bytes, bytes]:
     }
     told = messages.OutcomeIs(**{**fields, **changes})
     return frames.encode_body(told), packed
+
+
+def set_patience(client: Client, **changes: float) -> None:
+    """
+    Change how long a client waits from now on.
+
+    Short only where it is to be found wanting: what shall succeed has all the time it needs,
+    however busy the machine is.
+    """
+    contact: Any = client._contact
+    contact.patience = replace(contact.patience, **changes)
+    for conversation in (contact._requests, contact._updates):
+        if conversation is not None:
+            conversation._patience = contact.patience
 
 
 class FakeDaemon:
@@ -374,6 +390,7 @@ class FakeDaemon:
 
     def _change(self, sock: Any, identity: bytes, came: Received) -> None:
         source, number = came.header.source, came.header.number
+        self.identity = identity
 
         def tell(message: messages.Message) -> None:
             self._reply(sock, identity, came.header.id, message)

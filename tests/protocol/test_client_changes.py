@@ -4,12 +4,12 @@ from collections.abc import Callable
 
 import numpy as np
 import pytest
-from tests.protocol.fake_daemon import FakeDaemon
+from tests.protocol.fake_daemon import FakeDaemon, set_patience
 
 import byway
 from byway import frames, limits, messages
-from byway.conversation import Patience
 from byway.frames import Header
+from byway.link import wait
 
 NewClient = Callable[..., byway.Client]
 KILN = [(10, 5), (18, 5), (18, 9), (10, 9)]
@@ -133,6 +133,23 @@ def test_a_restarted_daemon_gets_the_layers_as_soon_as_it_is_met(
     assert set(daemon.layers["fixed"]["obstacles"]) == {"kiln"}
 
 
+def test_a_restoration_that_timed_out_goes_on_with_the_next_call(
+    new_client: NewClient, daemon: FakeDaemon
+) -> None:
+    client = new_client()
+    client.replace_layer("fixed", polygons={"kiln": KILN})
+    daemon.restart()
+    daemon.mute["acknowledged"] = 1000
+    set_patience(client, timeout_s=0.2)
+    with pytest.raises(byway.TimedOut):
+        client.put("fixed", discs={"bin": (7, 7, 1)})
+    daemon.mute.clear()
+    set_patience(client, timeout_s=5.0)
+    client.health()
+    assert client.epoch == daemon.epoch
+    assert set(daemon.layers["fixed"]["obstacles"]) == {"kiln", "bin"}
+
+
 def test_patches_that_were_too_many_to_keep_are_told(
     client: byway.Client, daemon: FakeDaemon, monkeypatch: pytest.MonkeyPatch
 ) -> None:
@@ -165,11 +182,13 @@ def test_a_layer_that_somebody_took_meanwhile_is_told(
 def test_a_change_that_timed_out_is_sent_again_by_the_next_call(
     new_client: NewClient, daemon: FakeDaemon
 ) -> None:
-    client = new_client(timeout_s=0.03)
+    client = new_client()
     client.claim("stacks")
     daemon.lose["put"] = 1
+    set_patience(client, timeout_s=0.03)
     with pytest.raises(byway.TimedOut, match="1 changes"):
         client.put("stacks", discs={"pile": (1, 1, 1)})
+    set_patience(client, timeout_s=5.0)
     client.put("stacks", discs={"heap": (2, 2, 1)})
     assert set(daemon.layers["stacks"]["obstacles"]) == {"pile", "heap"}
 
@@ -177,15 +196,16 @@ def test_a_change_that_timed_out_is_sent_again_by_the_next_call(
 def test_without_a_daemon_changes_are_kept_and_bounded(
     new_client: NewClient, daemon: FakeDaemon
 ) -> None:
-    client = new_client(timeout_s=0.5, reconnect_s=0.001)
+    client = new_client()
     client.claim("stacks")
     daemon.stop()
+    set_patience(client, reconnect_s=0.001)
     for number in range(limits.unacknowledged_max + 3):
         with pytest.raises(byway.DaemonLost):
             client.put("stacks", discs={f"pile-{number}": (1, 1, 1)})
     assert len(client._contact._source.line) == limits.unacknowledged_max
     daemon.start()
-    client._contact._updates._patience = Patience()  # type: ignore[union-attr, misc]
+    set_patience(client, reconnect_s=5.0)
     client.drop("stacks", ["none"])
     assert len(daemon.layers["stacks"]["obstacles"]) == limits.unacknowledged_max
 
@@ -230,6 +250,18 @@ def test_what_is_said_to_others_or_by_an_earlier_life_is_passed_over(
     for number, (epoch, stray) in enumerate(strays):
         daemon.instead["put"] = frames.encode(Header(stray.kind, epoch=epoch), stray)
         assert client.put("stacks", discs={"pile": (1, 1, 1)}) == number + 2
+
+
+def test_what_came_while_nobody_called_is_taken_in_first(
+    client: byway.Client, daemon: FakeDaemon
+) -> None:
+    client.claim("stacks")
+    link = client._contact._updates._link  # type: ignore[union-attr]
+    told = messages.Acknowledged(source="other", number=1, revision=1)
+    parts = frames.encode(Header("acknowledged", epoch=daemon.epoch), told)
+    daemon.do(lambda: daemon._sockets["updates"].send_multipart([daemon.identity, *parts]))
+    wait([(link, False)], client._contact.clock() + 5.0, client._contact.clock)
+    assert client.put("stacks", discs={"pile": (1, 1, 1)}) == 2
 
 
 def test_nonsense_on_the_updates_socket_is_a_bad_reply(

@@ -5,7 +5,7 @@ from collections.abc import Callable
 
 import numpy as np
 import pytest
-from tests.protocol.fake_daemon import FakeDaemon, outcome, route_table
+from tests.protocol.fake_daemon import FakeDaemon, outcome, route_table, set_patience
 
 import byway
 from byway import frames, messages
@@ -263,11 +263,12 @@ def test_a_restarted_daemon_is_told_to_the_caller(client: byway.Client, daemon: 
 
 def test_no_daemon_is_told_soon(new_client: NewClient, daemon: FakeDaemon) -> None:
     daemon.stop()
-    client = new_client(reconnect_s=0.05)
+    client = new_client(reconnect_s=0.03)
     with pytest.raises(byway.DaemonLost, match="no connection") as caught:
         client.replan("tug", START, GOAL, 0.05)
     assert caught.value.facts["endpoint"] == daemon.endpoints["requests"]
     daemon.start()
+    set_patience(client, reconnect_s=5.0)
     assert client.replan("tug", START, GOAL, 0.05).kind == "route"
 
 
@@ -281,26 +282,48 @@ def test_no_daemon_within_the_timeout_is_told_as_such(
 
 
 def test_no_answer_in_time_is_a_timeout(new_client: NewClient, daemon: FakeDaemon) -> None:
-    client = new_client(timeout_s=0.05)
+    client = new_client()
+    client.hello()
+    set_patience(client, timeout_s=0.05)
     daemon.holds = True
     with pytest.raises(byway.TimedOut) as caught:
         client.replan("tug", START, GOAL, 0.01)
     assert caught.value.code == "timed_out"
     daemon.holds = False
+    set_patience(client, timeout_s=5.0)
     assert client.replan("tug", START, GOAL, 0.01).kind == "route"
 
 
 def test_a_replan_nobody_waits_for_is_forgotten(new_client: NewClient, daemon: FakeDaemon) -> None:
     """After its time it is not sent again, and does not disturb the other calls."""
-    client = new_client(timeout_s=0.05, repeat_s=0.01)
+    client = new_client(repeat_s=0.01)
+    client.hello()
+    set_patience(client, timeout_s=0.05)
     daemon.holds = True
     ask = client.start_replan("tug", START, GOAL, 0.01)
     with pytest.raises(byway.TimedOut):
         ask.wait()
+    set_patience(client, timeout_s=5.0)
     before = daemon.got["replan"]
     for _ in range(5):
         client.health()
     assert daemon.got["replan"] == before
+
+
+def test_an_ask_that_is_dropped_is_forgotten(new_client: NewClient, daemon: FakeDaemon) -> None:
+    client = new_client(repeat_s=0.001)
+    client.hello()
+    set_patience(client, timeout_s=0.02)
+    daemon.holds = True
+    ask = client.start_replan("tug", START, GOAL, 0.001)
+    set_patience(client, timeout_s=5.0)
+    while client._contact._requests._open:  # type: ignore[union-attr]
+        client.health()
+    before = daemon.got["replan"]
+    client.health()
+    assert daemon.got["replan"] == before
+    with pytest.raises(byway.TimedOut):
+        ask.wait()
 
 
 def test_nonsense_for_an_answer_is_a_bad_reply(client: byway.Client, daemon: FakeDaemon) -> None:
@@ -332,8 +355,9 @@ def test_another_reply_than_was_due_is_a_bad_reply(
 
 
 def test_replies_to_nobody_are_passed_over(new_client: NewClient, daemon: FakeDaemon) -> None:
-    client = new_client(timeout_s=0.03)
+    client = new_client()
     client.hello()
+    set_patience(client, timeout_s=0.03)
     header = Header("noted", "nobody", epoch=daemon.epoch)
     daemon.instead["replan"] = frames.encode(header, messages.Noted(replans=[]))
     with pytest.raises(byway.TimedOut):

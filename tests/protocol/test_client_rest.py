@@ -6,7 +6,7 @@ from collections.abc import Callable, Iterator
 
 import numpy as np
 import pytest
-from tests.protocol.fake_daemon import FakeDaemon, outcome
+from tests.protocol.fake_daemon import FakeDaemon, outcome, set_patience
 
 import byway
 from byway import frames, messages, obstacles
@@ -215,7 +215,7 @@ def test_listening_ends_in_time(client: byway.Client) -> None:
 def test_listening_survives_a_restart_and_tells_a_loss(
     new_client: NewClient, daemon: FakeDaemon
 ) -> None:
-    client = new_client(reconnect_s=0.3)
+    client = new_client(reconnect_s=5.0)
     events = client.listen(["health"])
     epochs = []
     for _ in range(2):
@@ -225,6 +225,7 @@ def test_listening_survives_a_restart_and_tells_a_loss(
         if len(epochs) == 1:
             daemon.start()
     assert epochs == ["epoch-1", "epoch-2"]
+    set_patience(client, reconnect_s=0.15)
     with pytest.raises(byway.DaemonLost, match="for events"):
         next(events)
 
