@@ -75,7 +75,7 @@ def number_nothing(outbox: Outbox, topic: str, *args: Any, **more: Any) -> None:
     true_publish(outbox, topic, *args, **more)
 
 
-def take_gaps(ledger: Ledger, peer: Any, header: Any, now: Instant) -> Any:
+def take_gaps(ledger: Ledger, peer: Any, header: Any, size: int, now: Instant) -> Any:
     source = ledger.sources.heard(header.source, peer, now)
     return source if source is not None and header.number > source.have else None
 

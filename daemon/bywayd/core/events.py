@@ -240,7 +240,7 @@ class SiteDescribed:
     surveyor: int
     ticket: int
     message: SiteIs | ErrorMessage
-    packed: Bytes
+    packed: Bytes = b""
 
 
 @dataclass(frozen=True, slots=True)

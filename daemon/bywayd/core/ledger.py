@@ -104,12 +104,9 @@ class Ledger:
         self, peer: Peer, came: frames.Received, message: messages.Change, now: Instant
     ) -> None:
         """Take in a change, or say why not."""
-        source = self._next_in_turn(peer, came.header, now)
-        if source is None:
-            return
         size = len(came.body) + len(came.packed)
-        if not self._has_room(source, size):
-            self._ask_again(source, "full", now, self._settings.resend_every_s)
+        source = self._next_in_turn(peer, came.header, size, now)
+        if source is None:
             return
         source.have = came.header.number
         made = self._entry(source, message, came.packed, size, now)
@@ -126,15 +123,17 @@ class Ledger:
         header = fault.header
         if header is None or not header.source or not header.number:
             return False
-        source = self._next_in_turn(peer, header, now)
-        if source is not None and self._has_room(source, 0):
+        source = self._next_in_turn(peer, header, 0, now)
+        if source is not None:
             source.have = header.number
             no = No(fault.code, fault.text, fault.facts)
             self._append(Entry(now, source.name, source.have, None, no))
         return True
 
-    def _next_in_turn(self, peer: Peer, header: frames.Header, now: Instant) -> Source | None:
-        """Return the source if this is its next number; otherwise it is told what is."""
+    def _next_in_turn(
+        self, peer: Peer, header: frames.Header, size_bytes: int, now: Instant
+    ) -> Source | None:
+        """Return the source if its next number can be taken in; otherwise it is told why not."""
         source = self.sources.heard(header.source, peer, now)
         if source is None:
             self._health.count("sources_refused_total")
@@ -151,6 +150,9 @@ class Ledger:
         if header.number > source.have + 1:
             self._health.count("gaps_total")
             self._ask_again(source, "gap", now)
+            return None
+        if not self._has_room(source, size_bytes):
+            self._ask_again(source, "full", now, self._settings.resend_every_s)
             return None
         return source
 
