@@ -50,6 +50,8 @@ T = TypeVar("T", bound=np.generic)
 #: Bends and hopes that a search has room for at first; most need no more.
 BENDS_AT_FIRST: Final = 512
 HOPES_AT_FIRST: Final = 8192
+#: An end is so much outside the circles that the string bends round: tangents from it exist.
+APART_M: Final = 10.0 * GRAZE_M
 #: A disc below this passes everywhere: its corners would be lost in the tolerances.
 RADIUS_M_MIN: Final = 100.0 * GRAZE_M
 #: Of lengths, relative; far above what summing up a hundred pieces loses.
@@ -101,9 +103,11 @@ class _DiscWay:
         # request accepts). A smaller disc passes wherever the larger one does.
         radius_m = ends.radius_m
         for x, y in ((ends.start_x_m, ends.start_y_m), (ends.goal_x_m, ends.goal_y_m)):
-            radius_m = min(radius_m, room_kernel(solids, ground, self._chase.marks, x, y))
+            room_m = room_kernel(solids, ground, self._chase.marks, x, y)
+            radius_m = min(radius_m, room_m - APART_M)
         self._ends = ends._replace(radius_m=radius_m)
-        self.done = radius_m < RADIUS_M_MIN
+        # ends that are one and the same place have no tangent between them, and no way to measure
+        self.done = radius_m < RADIUS_M_MIN or straight_m < APART_M
 
     def advance(self, work_until: int) -> None:
         status = CRAMPED
