@@ -64,12 +64,10 @@ def swept_box(traces: Floats, n: int, bend: Any) -> Any:
 
 
 @kernel()
-def edge_distance(
-    hull: Hull, traces: Floats, bend: Any, edge: Any, with_first: bool, care: float
-) -> Any:
+def edge_distance(hull: Hull, traces: Floats, bend: Any, edge: Any, care: float) -> Any:
     """
-    Distance of the moving outline from an edge: from its inside, its second end and, if asked
-    for, its first. In a ring the first end is the second one of the edge before.
+    Distance of the moving outline from an edge: from its inside and its second end. In a ring
+    the first end is the second one of the edge before.
     """
     outline = hull.outline_m
     n = outline.shape[0]
@@ -79,10 +77,7 @@ def edge_distance(
         x, y = outline[i, 0], outline[i, 1]
         best = min(best, trace_if_near(bend, x, y, trace, edge, min(care, best)))
     if n > 1:
-        px, py, qx, qy = edge
-        best = min(best, point_distance(hull, bend, qx, qy, min(care, best)))
-        if with_first:
-            best = min(best, point_distance(hull, bend, px, py, min(care, best)))
+        best = min(best, point_distance(hull, bend, edge[2], edge[3], min(care, best)))
     return best
 
 
@@ -127,7 +122,6 @@ def edge_if_near(
     bend: Any,
     box: Any,
     edge: Any,
-    with_first: bool,
     care: float,
     standing: bool,
 ) -> Any:
@@ -141,7 +135,7 @@ def edge_if_near(
         return np.inf
     if standing and edge_overlaps(hull.outline_m, edge):
         return OVERLAP_M
-    return edge_distance(hull, traces, bend, edge, with_first, care) - hull.skin_m
+    return edge_distance(hull, traces, bend, edge, care) - hull.skin_m
 
 
 @kernel()
@@ -163,7 +157,7 @@ def polygon_distance(
         qx, qy = c * dx + s * dy, c * dy - s * dx
         edge = (px, py, qx, qy)
         near = min(care, best)
-        best = min(best, edge_if_near(hull, traces, bend, box, edge, False, near, standing))
+        best = min(best, edge_if_near(hull, traces, bend, box, edge, near, standing))
         px, py = qx, qy
     return best
 

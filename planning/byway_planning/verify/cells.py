@@ -38,8 +38,11 @@ def _run_distance(
     py = solids.corner_y_m + run[0] * solids.cell_m - y
     qx = solids.corner_x_m + run[3] * solids.cell_m - x
     qy = solids.corner_y_m + run[2] * solids.cell_m - y
-    edge = (c * px + s * py, c * py - s * px, c * qx + s * qy, c * qy - s * qx)
-    return edge_if_near(hull, notes.traces, bend, box, edge, True, care, standing)
+    ax, ay, bx, by = c * px + s * py, c * py - s * px, c * qx + s * qy, c * qy - s * qx
+    # an edge looks after its second end only; a run has no edge before it
+    best = edge_if_near(hull, notes.traces, bend, box, (ax, ay, bx, by), care, standing)
+    first = (ax, ay, ax, ay)
+    return min(best, edge_if_near(hull, notes.traces, bend, box, first, min(care, best), standing))
 
 
 @kernel()

@@ -84,7 +84,7 @@ def _begin_below(
         half = 0.25 * (high - low)
         middle = driven(x, y, heading, curvature, low + half)
         _, kind, _ = stretch_clearance(
-            solids, notes, near, hull, middle, (curvature, abs(half)), need, False
+            solids, notes, near, hull, middle, (curvature, abs(half)), need
         )
         if kind != NOTHING:
             high = low + 2.0 * half
@@ -126,9 +126,7 @@ def _creep_out(
     margin = body.reach_m + body.skin_m + care + BULGE_M
     near, part_end = _near_rows(solids, notes, rows, arcs, 0, margin)
     pose = (rows[0, 1], rows[0, 2], rows[0, 3])
-    distance, kind, index = stretch_clearance(
-        solids, notes, near, drawn_in, pose, (0.0, 0.0), care, True
-    )
+    distance, kind, index = stretch_clearance(solids, notes, near, drawn_in, pose, (0.0, 0.0), care)
     top = distance - depth
     _report(found, 0.0, pose, top, kind, index)
     if found[0] < 0.0:  # an overlap: by how much
@@ -147,21 +145,19 @@ def _creep_out(
             end = driven(rows[i, 1], rows[i, 2], rows[i, 3], curvature, (k + 1) * step)
             s_m += abs(step)
             distance, kind, index = stretch_clearance(
-                solids, notes, near, drawn_in, middle, (curvature, 0.5 * abs(step)), care, False
+                solids, notes, near, drawn_in, middle, (curvature, 0.5 * abs(step)), care
             )
             _report(found, s_m, end, distance - depth, kind, index)
             if distance - depth < top - FALL_M:
                 return BLOCKED, 0.0
             kept, kind, index = stretch_clearance(
-                solids, notes, near, body, end, (0.0, 0.0), need_m, True
+                solids, notes, near, body, end, (0.0, 0.0), need_m
             )
             if kind == NOTHING:
                 return FREE, s_m
             if kept >= 0.0:
                 found[0] = min(found[0], kept)
-            reached, _, _ = stretch_clearance(
-                solids, notes, near, drawn_in, end, (0.0, 0.0), care, False
-            )
+            reached, _, _ = stretch_clearance(solids, notes, near, drawn_in, end, (0.0, 0.0), care)
             top = max(top, reached - depth)
     found[6], found[7] = kind, index
     return BLOCKED, 0.0
@@ -203,7 +199,6 @@ def _keep_clear(
                     middle,
                     (curvature, 0.5 * abs(piece)),
                     max(found[0], need),
-                    False,
                 )
                 found[0] = min(found[0], distance)
                 if distance < need:
@@ -241,9 +236,7 @@ def drive(
     care = max(found[0], need)
     near, _ = _near_rows(solids, notes, rows, arcs, 0, body.reach_m + body.skin_m + care)
     pose = (rows[0, 1], rows[0, 2], rows[0, 3])
-    distance, kind, index = stretch_clearance(
-        solids, notes, near, body, pose, (0.0, 0.0), care, True
-    )
+    distance, kind, index = stretch_clearance(solids, notes, near, body, pose, (0.0, 0.0), care)
     found[0] = distance
     _report(found, 0.0, pose, distance, kind, index)
     from_m = 0.0

@@ -78,7 +78,6 @@ def stretch_clearance(
     pose: Any,
     arc: Any,
     care: float,
-    standing: bool,
 ) -> Any:
     """
     The least distance of the body from anything on a stretch of motion.
@@ -86,15 +85,16 @@ def stretch_clearance(
     Args:
         near: Numbers of polygons and discs in `notes`.
         pose: (x, y, heading) in the middle of the stretch.
-        arc: (curvature, half its length).
+        arc: (curvature, half its length). Where the length is 0, containment is looked at too.
         care: Nothing farther than this counts.
-        standing: Look for containment in the middle pose as well.
 
     Returns:
         (distance, or `care`; kind of obstacle; its index).
     """
     x, y, heading = pose
     curvature, half = arc
+    # no argument of its own: every kernel below would be compiled once for each constant
+    standing = half == 0.0
     outline, traces = hull.outline_m, notes.traces
     bend = bend_of(curvature, half)
     for i in range(outline.shape[0]):
