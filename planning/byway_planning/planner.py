@@ -8,7 +8,7 @@ the same request with the same work gives the same bits, wherever the slices fal
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
-from typing import Final
+from typing import Final, cast
 
 import numpy as np
 import numpy.typing as npt
@@ -17,9 +17,9 @@ from byway_planning.collision import CONTACT_M
 from byway_planning.kernel import ensure_warm
 from byway_planning.outcome import Blockage, Kind, Outcome
 from byway_planning.prefix import end_of, leaving, rolling
-from byway_planning.profile import stopping_distance_m
+from byway_planning.profile import StartTooFast
 from byway_planning.route import make_route
-from byway_planning.search.floods import FloodGround
+from byway_planning.search.floods import FloodGround, Window, used_tiles, window_for
 from byway_planning.search.method import EXHAUSTED, FOUND, FULL
 from byway_planning.search.methods import check_method, make_method
 from byway_planning.search.question import (
@@ -93,7 +93,10 @@ class _Run:
         if self.best is not None and cost >= self.best.cost:
             return False
         path = _continuous(path, self.body)
-        route = make_route(path, self.vehicle, self.start_speed_mps)
+        try:
+            route = make_route(path, self.vehicle, self.start_speed_mps)
+        except StartTooFast as fault:
+            return self._reject(str(fault))
         faults = verify(
             self.snapshot.solids(self.left_out),
             self.vehicle,
@@ -108,10 +111,7 @@ class _Run:
         now_s = self.time_left()
         self.check_s = before_s - now_s
         if faults:
-            self.rejected += 1
-            self.statistics["rejected"] = self.rejected
-            self.statistics["rejected_why"] = faults[0].text
-            return False
+            return self._reject(faults[0].text)
         x, y = self.snapshot.origin_m
         if x or y:
             table = route.table.copy()
@@ -131,6 +131,12 @@ class _Run:
         if self.on_better is not None:
             self.on_better(self.best)
         return True
+
+    def _reject(self, why: str) -> bool:
+        self.rejected += 1
+        self.statistics["rejected"] = self.rejected
+        self.statistics["rejected_why"] = why
+        return False
 
 
 def plan(
@@ -225,7 +231,7 @@ def _planned(
         openings = list(_rolling(run, near))
         if not openings or not _fits_bend(run):
             return run.outcome("start_too_fast")
-    guide = guide_for(_ground(run), run.body, run.start, run.goal)
+    guide = guide_for(_ground(run), workshop.floods, run.body, run.start, run.goal)
     if not guide.reached:
         return run.outcome("no_route")
     for opening in _ranked(run, guide, openings):
@@ -361,14 +367,17 @@ def _fits_bend(run: _Run) -> bool:
 
 
 def _ground(run: _Run) -> FloodGround:
-    radius_m = run.body.inner_radius_m + run.body.clearance_m
-    key = ("ground", radius_m)
-    found = run.snapshot.kept.get(key)
-    if found is None:
-        found = FloodGround(run.snapshot.scene(), radius_m)
-        run.snapshot.kept[key] = found
-    assert isinstance(found, FloodGround)
-    return found
+    kept, scene, body = run.snapshot.kept, run.snapshot.scene(), run.body
+    if "used_tiles" not in kept:
+        kept["used_tiles"] = used_tiles(scene)
+    used = cast(Window, kept["used_tiles"])
+    margin_m = 2.0 * (body.outer_radius_m + body.turn_radius_m + body.clearance_m)
+    ends = [middle_of(body, run.start), middle_of(body, run.goal)]
+    window = window_for(scene, used, ends, margin_m)
+    key = ("ground", body.inner_radius_m + body.clearance_m, window)
+    if key not in kept:
+        kept[key] = FloodGround(scene, body.inner_radius_m + body.clearance_m, window)
+    return cast(FloodGround, kept[key])
 
 
 def _rolling(run: _Run, near: bool) -> list[Floats]:
@@ -379,7 +388,7 @@ def _rolling(run: _Run, near: bool) -> list[Floats]:
         run.start,
         run.start_speed_mps,
         run.start_curvature_per_m,
-        stopping_distance_m(run.start_speed_mps, run.vehicle.limits),
+        run.vehicle.limits,
         overlap_m=run.vehicle.start_overlap_m if near else None,
     )
 

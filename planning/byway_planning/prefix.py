@@ -16,8 +16,9 @@ from byway_planning.collision import CONTACT_M, pose_excess
 from byway_planning.curves.word import advance
 from byway_planning.kernel import kernel
 from byway_planning.motion import motion_reach
+from byway_planning.profile import stopping_distance_m
 from byway_planning.site.scene import Scene
-from byway_planning.vehicles.body import CAR, DISC, Body
+from byway_planning.vehicles.body import CAR, DISC, Body, Limits
 from byway_planning.vehicles.footprint import shrunk
 
 Floats = npt.NDArray[np.float64]
@@ -67,10 +68,10 @@ def reach_kernel(scene: Scene, body: Body, pose: Floats, curvature: float, lengt
     return float(motion_reach(scene, body, pose[0], pose[1], pose[2], curvature, length))
 
 
-def _curvatures(body: Body) -> list[float]:
+def _curvatures(body: Body, most: float = math.inf) -> list[float]:
     if body.kind == DISC:
         return [0.0]
-    k = 1.0 / body.turn_radius_m
+    k = min(1.0 / body.turn_radius_m, most)
     return [0.0, 0.5 * k, -0.5 * k, k, -k]
 
 
@@ -116,7 +117,7 @@ def rolling(
     pose: Floats,
     speed_mps: float,
     curvature_per_m: float,
-    stop_m: float,
+    limits: Limits,
     *,
     overlap_m: float | None = None,
 ) -> list[Floats]:
@@ -125,13 +126,17 @@ def rolling(
 
     Args:
         speed_mps: Signed. curvature_per_m: the steering as it stands, tried first.
-        stop_m: Distance in which the vehicle stops.
+        limits: They give the distance in which it stops, and the bends it can take.
         overlap_m: Given when the vehicle is too near to an obstacle and has to get away from
             it on the same arc: how deep it may overlap at the start.
     """
     sign = 1.0 if speed_mps > 0.0 else -1.0
     found = []
-    for k in dict.fromkeys([curvature_per_m, *_curvatures(body)]):
+    stop_m = stopping_distance_m(speed_mps, limits)
+    tightest = limits.lateral_acceleration_mps2_max / speed_mps**2
+    for k in dict.fromkeys([curvature_per_m, *_curvatures(body, tightest)]):
+        if abs(k) > tightest:
+            continue
         away_m, at = 0.0, pose
         if overlap_m is not None:
             core = _core_of(body, overlap_m)

@@ -14,17 +14,20 @@ import numpy.typing as npt
 
 from byway_planning.collision import RASTER_CELLS
 from byway_planning.kernel import describe, kernel
-from byway_planning.site.scene import OPEN, SOLID, Scene
+from byway_planning.site.scene import OPEN, Scene
 
 Whole4 = npt.NDArray[np.int32]
 Mask = npt.NDArray[np.uint8]
+Point = tuple[float, float]
+#: First tile row and column, last ones plus one.
+Window = tuple[int, int, int, int]
 
 SIDE_STEP: Final = 5
 DIAGONAL_STEP: Final = 7
 BUCKETS: Final = 8  # more than the dearest step
 UNREACHED: Final = 2**30
-#: Cells of a flood up to which the fine squares are used; beyond, squares four times as wide.
-FINE_CELLS_MAX: Final = 90_000
+#: Squares of a flood up to which the fine squares are used; beyond, squares four times as wide.
+FINE_SQUARES_MAX: Final = 90_000
 #: Slack, in cells of the site, of the mask that guides: what a search can mostly drive through.
 GUIDE_CELLS: Final = 1.0
 
@@ -46,38 +49,33 @@ class Flood(NamedTuple):
 describe(Flood, "f8", "f8", "f8", "ri4[:, ::1]")
 
 
-@kernel(Scene, "i8", "f8", "u1[:, ::1]")
-def room_mask_kernel(scene: Scene, level: int, wanted_m: float, out: Mask) -> None:
+@kernel(Scene, "i8", "i8", "i8", "f8", "u1[:, ::1]")
+def room_mask_kernel(
+    scene: Scene, level: int, first_row: int, first_column: int, wanted_m: float, out: Mask
+) -> None:
     """
     Mark the squares of a grid that may hold the middle of a disc.
 
     Args:
         level: 0 for squares of `room_cells` cells, 1 for squares four times as wide.
+        first_row, first_column: Tile at the lower left of the grid.
         wanted_m: The distance that must be reached somewhere in a square.
-        out: Shape (rows + 2, columns + 2): the whole site in such squares and a border of 0.
+        out: Shape (rows + 2, columns + 2): whole tiles in such squares, and a border of 0.
     """
     out[:, :] = 0
-    rows, columns = out.shape[0] - 2, out.shape[1] - 2
     side = scene.tile_cells
     fine = side // scene.room_cells
     per = fine if level == 0 else side // (4 * scene.room_cells)
     base = (side + 1) * (side + 1) + (0 if level == 0 else fine * fine)
-    for tr in range(scene.field_of.shape[0]):
-        for tc in range(scene.field_of.shape[1]):
-            offset = scene.field_of[tr, tc]
+    for i in range((out.shape[0] - 2) // per):
+        for j in range((out.shape[1] - 2) // per):
+            offset = scene.field_of[first_row + i, first_column + j]
             for r in range(per):
-                row = tr * per + r
-                if row >= rows:
-                    break
                 for c in range(per):
-                    column = tc * per + c
-                    if column >= columns:
-                        break
-                    if offset == OPEN:
-                        out[row + 1, column + 1] = 1
-                    elif offset != SOLID:
-                        room = scene.floats[offset + base + r * per + c]
-                        out[row + 1, column + 1] = 1 if room >= wanted_m else 0
+                    free = offset == OPEN
+                    if offset >= 0:
+                        free = scene.floats[offset + base + r * per + c] >= wanted_m
+                    out[i * per + r + 1, j * per + c + 1] = 1 if free else 0
 
 
 @kernel("ru1[:, ::1]", "i8", "i8", "f8", "i4[:, ::1]", "i4[::1]", "i4[::1]", "i4[::1]")
@@ -172,22 +170,72 @@ def flood_m(flood: Flood, x: float, y: float) -> float:
     return float(steps * flood.side_m / SIDE_STEP)
 
 
-class FloodGround:
-    """The masks of one scene for one disc radius, and room to flood them in; kept per snapshot."""
+class FloodRoom:
+    """Scratch memory of floods; grows with the largest."""
 
-    def __init__(self, scene: Scene, radius_m: float) -> None:
+    def __init__(self) -> None:
+        self.heads = np.empty(BUCKETS, np.int32)
+        self.entries = np.empty(0, np.int32)
+        self.links = np.empty(0, np.int32)
+
+    def fit(self, squares: int) -> None:
+        """Make room for a flood over so many squares."""
+        if len(self.entries) < 8 * squares:
+            self.entries = np.empty(8 * squares, np.int32)
+            self.links = np.empty(8 * squares, np.int32)
+
+
+def used_tiles(scene: Scene) -> Window:
+    """Return the tiles around everything that stands on the site: rows and columns, half open."""
+    rows, columns = np.nonzero(scene.field_of != OPEN)
+    if not len(rows):
+        return (0, 0, 0, 0)
+    return (int(rows.min()), int(columns.min()), int(rows.max()) + 1, int(columns.max()) + 1)
+
+
+def window_for(scene: Scene, used: Window, points: list[Point], margin_m: float) -> Window:
+    """
+    Return the tiles that a flood has to cover for some points.
+
+    Around all that stands on the site and the points there is a free margin (or the limit of
+    the site), so whatever gets round outside the window gets round inside it as well, and a
+    flood that fails inside it has failed everywhere.
+    """
+    tile_m = scene.tile_cells * scene.cell_m
+    rows = [(y - scene.corner_y_m) / tile_m for _, y in points]
+    columns = [(x - scene.corner_x_m) / tile_m for x, _ in points]
+    if used[2] > used[0]:
+        rows += [used[0], used[2] - 1]
+        columns += [used[1], used[3] - 1]
+    margin = math.ceil(margin_m / tile_m)
+    tile_rows, tile_columns = scene.field_of.shape
+    return (
+        min(max(math.floor(min(rows)) - margin, 0), tile_rows - 1),
+        min(max(math.floor(min(columns)) - margin, 0), tile_columns - 1),
+        min(max(math.floor(max(rows)) + margin + 1, 1), tile_rows),
+        min(max(math.floor(max(columns)) + margin + 1, 1), tile_columns),
+    )
+
+
+class FloodGround:
+    """The masks of one scene and window for one disc radius; kept per snapshot."""
+
+    def __init__(self, scene: Scene, radius_m: float, window: Window) -> None:
         self._scene = scene
         self._radius_m = radius_m
-        fine_m = scene.room_cells * scene.cell_m
-        width, height = scene.x_m_max - scene.x_m_min, scene.y_m_max - scene.y_m_min
-        self.level = 0 if width * height / fine_m**2 <= FINE_CELLS_MAX else 1
-        self.side_m = fine_m * (1 if self.level == 0 else 4)
-        self.shape = (math.ceil(height / self.side_m) + 2, math.ceil(width / self.side_m) + 2)
+        self._window = window
+        fine = scene.tile_cells // scene.room_cells
+        tiles = (window[2] - window[0], window[3] - window[1])
+        self.level = 0 if tiles[0] * tiles[1] * fine**2 <= FINE_SQUARES_MAX else 1
+        per = fine if self.level == 0 else scene.tile_cells // (4 * scene.room_cells)
+        tile_m = scene.tile_cells * scene.cell_m
+        self.side_m = tile_m / per
+        self.corner_m = (
+            scene.corner_x_m + window[1] * tile_m,
+            scene.corner_y_m + window[0] * tile_m,
+        )
+        self.shape = (tiles[0] * per + 2, tiles[1] * per + 2)
         self._masks: dict[float, Mask] = {}
-        cells = self.shape[0] * self.shape[1]
-        self._heads = np.empty(BUCKETS, np.int32)
-        self._entries = np.empty(8 * cells, np.int32)
-        self._links = np.empty(8 * cells, np.int32)
 
     def mask(self, slack_cells: float) -> Mask:
         """Return where the disc may be, distances being trusted up to some cells."""
@@ -195,15 +243,15 @@ class FloodGround:
         if found is None:
             found = np.empty(self.shape, np.uint8)
             wanted = self._radius_m - slack_cells * self._scene.cell_m
-            room_mask_kernel(self._scene, self.level, wanted, found)
+            room_mask_kernel(self._scene, self.level, *self._window[:2], wanted, found)
             found.flags.writeable = False
             self._masks[slack_cells] = found
         return found
 
     def square_of(self, x: float, y: float) -> int:
         """Return the number of the square that holds a point; clipped to the site."""
-        r = int((y - self._scene.corner_y_m) / self.side_m) + 1
-        c = int((x - self._scene.corner_x_m) / self.side_m) + 1
+        r = int((y - self.corner_m[1]) / self.side_m) + 1
+        c = int((x - self.corner_m[0]) / self.side_m) + 1
         r, c = min(max(r, 1), self.shape[0] - 2), min(max(c, 1), self.shape[1] - 2)
         return r * self.shape[1] + c
 
@@ -211,6 +259,7 @@ class FloodGround:
         self,
         origin: tuple[float, float],
         other: tuple[float, float],
+        room: FloodRoom,
         *,
         slack_cells: float,
         stretch: float,
@@ -221,6 +270,7 @@ class FloodGround:
         Returns:
             The flood, and the path length of the other point (inf when it is not reached).
         """
+        room.fit(self.shape[0] * self.shape[1])
         cost = np.empty(self.shape, np.int32)
         steps = flood_kernel(
             self.mask(slack_cells),
@@ -228,13 +278,13 @@ class FloodGround:
             self.square_of(*other),
             stretch,
             cost,
-            self._heads,
-            self._entries,
-            self._links,
+            room.heads,
+            room.entries,
+            room.links,
         )
         cost.flags.writeable = False
         side = self.side_m  # the border is part of the grid
-        flood = Flood(self._scene.corner_x_m - side, self._scene.corner_y_m - side, side, cost)
+        flood = Flood(self.corner_m[0] - side, self.corner_m[1] - side, side, cost)
         return flood, math.inf if steps >= UNREACHED else steps * self.side_m / SIDE_STEP
 
 

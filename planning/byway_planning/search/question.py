@@ -13,7 +13,14 @@ from byway_planning.curves.steer import steer
 from byway_planning.curves.word import advance
 from byway_planning.kernel import kernel
 from byway_planning.motion import segments_free
-from byway_planning.search.floods import GUIDE_CELLS, PROOF_CELLS, Flood, FloodGround, flood_m
+from byway_planning.search.floods import (
+    GUIDE_CELLS,
+    PROOF_CELLS,
+    Flood,
+    FloodGround,
+    FloodRoom,
+    flood_m,
+)
 from byway_planning.search.lengths import Lengths, lengths_of
 from byway_planning.site.scene import Scene
 from byway_planning.vehicles.body import DISC, Body
@@ -98,20 +105,27 @@ class Guide:
     """A flood from the goal, and the ground that it ran over."""
 
     ground: FloodGround
+    room: FloodRoom
     to_goal: Flood
     slack_cells: float
     reached: bool  # False: proved, no disc of the inscribed radius gets from start to goal
 
 
-def guide_for(ground: FloodGround, body: Body, start: Floats, goal: Floats) -> Guide:
+def guide_for(
+    ground: FloodGround, room: FloodRoom, body: Body, start: Floats, goal: Floats
+) -> Guide:
     """Flood from the goal until past the start: over what can mostly be driven, else over all."""
     for slack in (GUIDE_CELLS, PROOF_CELLS):
         flood, length_m = ground.flood(
-            middle_of(body, goal), middle_of(body, start), slack_cells=slack, stretch=STRETCH
+            middle_of(body, goal),
+            middle_of(body, start),
+            room,
+            slack_cells=slack,
+            stretch=STRETCH,
         )
         if length_m < math.inf:
             break
-    return Guide(ground, flood, slack, length_m < math.inf)
+    return Guide(ground, room, flood, slack, length_m < math.inf)
 
 
 @dataclass
@@ -136,6 +150,7 @@ class Question:
         flood, _ = self.guide.ground.flood(
             middle_of(self.body, self.start),
             middle_of(self.body, self.goal),
+            self.guide.room,
             slack_cells=self.guide.slack_cells,
             stretch=STRETCH,
         )

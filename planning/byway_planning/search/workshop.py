@@ -12,6 +12,7 @@ from typing import Final
 import numpy as np
 
 from byway_planning.dice import new_dice
+from byway_planning.search.floods import FloodRoom
 from byway_planning.search.improve import Polish, new_polish
 from byway_planning.search.lattice import Lattice, new_lattice
 
@@ -25,6 +26,7 @@ class Workshop:
     def __init__(self) -> None:
         self._lattices: list[Lattice] = []
         self._polishes: list[Polish] = []
+        self.floods = FloodRoom()
         self._lattices_used = 0
         self._polishes_used = 0
 

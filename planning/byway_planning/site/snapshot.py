@@ -18,7 +18,7 @@ from byway_planning.site.memory import Memory
 from byway_planning.site.records import NAME, NOWHERE, shape_from
 from byway_planning.site.scene import FAR_PER_TILE, Scene
 from byway_planning.site.settings import LayerSettings, SiteSettings
-from byway_planning.site.shapes import PolygonShape, Shape
+from byway_planning.site.shapes import Shape
 from byway_planning.site.solids import Solids
 
 Handle = dict[str, Any]
@@ -189,15 +189,16 @@ class Snapshot:
         ]
         for kind in ("polygon", "disc"):
             for row in np.nonzero(np.isin(self.table(f"{kind}_layers"), wanted))[0]:
-                shape = self._shape(kind, int(row))
-                if isinstance(shape, PolygonShape):
-                    block = polygon_items(shape.vertices_m)
-                    middle = (shape.vertices_m.min(axis=0) + shape.vertices_m.max(axis=0)) / 2
-                    radius = float(np.hypot(*(shape.vertices_m - middle).T).max())
-                    discs.append((middle[0], middle[1], radius))
+                if kind == "polygon":  # checked when it was put
+                    first, last = self.table("starts")[row : row + 2]
+                    ring = self.table("vertices")[first:last]
+                    block = polygon_items(ring)
+                    middle = (ring.min(axis=0) + ring.max(axis=0)) / 2
+                    radius = float(np.hypot(*(ring - middle).T).max())
                 else:
-                    block = np.array([[shape.x_m, shape.y_m] * 2 + [shape.radius_m]])
-                    discs.append((shape.x_m, shape.y_m, shape.radius_m))
+                    *middle, radius = self.table("discs")[row]
+                    block = np.array([[*middle, *middle, radius]])
+                discs.append((middle[0], middle[1], radius))
                 items.append(block)
                 starts.append(starts[-1] + len(block))
         tables = (
