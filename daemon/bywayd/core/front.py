@@ -186,11 +186,11 @@ class Front:
     # -- from the workers ---------------------------------------------------------------------
 
     def _worker_ready(self, event: events.WorkerReady, now: Instant) -> None:
-        if self.workers.ready(event.worker, now):
+        if not self.workers.ready(event.worker, now):
+            self.dispatch.kill(event.worker, "spoke nonsense: ready a second time", now)
+        elif self.workers.phase(event.worker) == "idle":
             self.outbox.log("info", "worker.ready", worker=event.worker)
             self.dispatch.look_again()
-        else:
-            self.dispatch.kill(event.worker, "spoke nonsense: ready a second time", now)
 
     def _worker_alive(self, event: events.WorkerAlive, now: Instant) -> None:
         self.workers.heard(event.worker, now)
@@ -276,15 +276,16 @@ class Front:
         self.ledger.settle(now)
         self.dispatch.settle(now)
         self.surveying.settle(now)
+        is_drained = not self.answering.open and self.ledger.pending == 0
         while (alarm := self._alarms.pop_due(now)) is not None:
             if alarm == "health":
                 self._alarms.set("health", now + self._health_every)
                 self.outbox.publish("health", reports.health(self, now))
             else:
-                self._end(now)
-        if self._stop_why and not self.answering.open and self.ledger.pending == 0:
+                is_drained = True  # as far as can be
+        if self._stop_why and is_drained:
             self._end(now)
-        if not self._stopped:
+        else:
             self._set_wake()
 
     def _carry_out(self, order: Order, now: Instant) -> None:
@@ -304,8 +305,6 @@ class Front:
             self.surveying.kill(order.number, order.why)
 
     def _end(self, now: Instant) -> None:
-        if self._stopped:
-            return
         self.dispatch.stop(now)
         self._stopped = True
         self.outbox.log("info", "front.stopped", why=self._stop_why, pending=self.ledger.pending)

@@ -63,8 +63,10 @@ class FrontSettings:
 
     # -- the crew ------------------------------------------------------------------------------
 
-    #: A worker that has not ended its job this long after the job's deadline is killed.
-    worker_grace_s: float = 0.05
+    #: A worker that has not ended its job this long after the job's deadline is killed. Nobody
+    #: waits for that, the answer has left; and a niced worker on a busy host may well stand still
+    #: for some tens of milliseconds.
+    worker_grace_s: float = 0.2
     #: A busy worker that says nothing at all for this long is killed.
     worker_silence_s: float = 0.5
     #: Idle workers and the idle surveyor are asked for a sign of life this often.

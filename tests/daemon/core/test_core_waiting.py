@@ -184,10 +184,14 @@ def test_an_older_replan_that_makes_way_for_its_unit_counts_for_others_too(
     working = at_work(older, third, found_ms=1)
     found = pressure(room, working, 0, START + ms(50)).hasten
     assert found == [(older, "newer")]
+    room.enter(docket("another"))
+    found = pressure(room, working, 0, START + ms(50)).hasten
+    assert found == [(older, "newer"), (third, "shorten")]
 
 
 def test_it_looks_again_when_the_first_runs_out_of_patience(room: WaitingRoom) -> None:
     room.enter(docket("slow", budget_s=1.0))
     room.enter(docket("quick", budget_s=0.01))
+    room.enter(docket("later", budget_s=1.0))
     found = pressure(room, at_work(docket("a"), found_ms=1), 0, START)
-    assert found.look_again_at == START + ms(10 * 0.25 * 0.5)
+    assert found.look_again_at == START + ms(10 * 0.25 * 0.25)

@@ -309,14 +309,16 @@ def test_batches_are_bounded_in_number_and_bytes() -> None:
         desk.change(CLAIM)
     desk.publish(1)
     assert len(desk.one(effects.ApplyChanges).changes) == 3
-    desk = Desk(settings(batch_bytes_max=300)).open()
-    for id in "abcd":
-        desk.change(*put("stacks", id))
+    desk = Desk(settings(batch_bytes_max=100)).open()
+    for _ in range(4):
+        desk.change(put("stacks", "a")[0], b"x" * 40)
+    desk.change(put("stacks", "a")[0], b"x" * 1000)
     desk.publish(1)
-    assert len(desk.one(effects.ApplyChanges).changes) == 3
+    assert len(desk.one(effects.ApplyChanges).changes) == 2
     desk.publish(2)
-    desk.change(put("stacks", "e")[0], b"x" * 1000)
-    assert desk.replies() == []
+    assert len(desk.one(effects.ApplyChanges).changes) == 1
+    desk.publish(3)  # one that is larger than a batch goes alone
+    assert len(desk.one(effects.ApplyChanges).changes) == 1
 
 
 # -- leases and expiry -----------------------------------------------------------------------------
@@ -360,6 +362,17 @@ def test_an_obstacle_that_the_surveyor_did_not_drop_still_expires(desk: Desk) ->
     desk.publish(2, refusal(0))
     desk.tick(600)
     assert desk.one(effects.ApplyChanges).changes[0].ids == ("a",)
+
+
+def test_an_obstacle_that_is_put_again_without_expiry_stays_when_its_time_has_come(
+    desk: Desk,
+) -> None:
+    desk.change(*put("stacks", "a", "b", expires_in_s=0.5))
+    desk.publish(1)
+    desk.change(*put("stacks", "a"))
+    desk.publish(2)
+    desk.tick(600)
+    assert desk.one(effects.ApplyChanges).changes[0].ids == ("b",)
 
 
 def test_expiry_is_measured_from_the_arrival_of_the_change(desk: Desk) -> None:
@@ -504,6 +517,27 @@ def test_a_question_is_put_to_the_successor_but_not_for_ever(desk: Desk) -> None
     assert desk.one(effects.DescribeSite).surveyor == 2
     desk.hand_in(events.SurveyorLost(2, "died"))
     assert desk.error("q") == "internal"
+
+
+def test_a_question_waits_for_a_surveyor_that_has_yet_to_start(desk: Desk) -> None:
+    desk.hand_in(events.SurveyorLost(1, "died"))
+    desk.say(messages.Site(), "q")
+    assert desk.out == []
+    desk.hand_in(events.SurveyorLost(2, "stillborn"))
+    assert desk.replies() == []
+    desk.tick(50)
+    desk.hand_in(events.SurveyorReady(3, 1, handle(1)))
+    assert desk.one(effects.DescribeSite).surveyor == 3
+
+
+def test_a_description_that_comes_after_the_end_was_asked_for_goes_nowhere(desk: Desk) -> None:
+    desk.ask("a")
+    desk.say(messages.Site(), "q")
+    ticket = desk.one(effects.DescribeSite).ticket
+    desk.hand_in(events.StopAsked("SIGTERM"))
+    assert desk.error("q") == "stopping"
+    desk.hand_in(events.SiteDescribed(1, ticket, SITE))
+    assert desk.out == []
 
 
 def test_the_same_surveyor_is_asked_and_given_changes(desk: Desk) -> None:
