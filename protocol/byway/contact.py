@@ -126,8 +126,9 @@ class Contact:
         return self.reply_to(question)
 
     def begin(self, message: messages.Replan) -> Question:
-        """Send a replan."""
+        """Send a replan, once the daemon has all that it had before."""
         self.meet()
+        self._restore()
         question = self._talk().ask(
             self._new_id(),
             message,
@@ -150,7 +151,12 @@ class Contact:
             if isinstance(error, NewEpoch):
                 self._meet_epoch(received.header.epoch)
             raise error
-        self._meet_epoch(received.header.epoch)
+        # One that warms up will not acknowledge anything soon, and is asked about just that.
+        match message:
+            case messages.Welcome(state="warming") | messages.HealthIs(state="warming"):
+                self._meet_epoch(received.header.epoch, restores=False)
+            case _:
+                self._meet_epoch(received.header.epoch)
         return received
 
     def turn(self, question: Question) -> None:
@@ -184,15 +190,18 @@ class Contact:
 
     # -- the daemon's life -----------------------------------------------------------------------
 
-    def _meet_epoch(self, epoch: str) -> None:
+    def _meet_epoch(self, epoch: str, *, restores: bool = True) -> None:
         """Take note of the daemon's life; give a new one the layers that the old one had."""
-        if epoch == self.epoch:
-            return
-        self.epoch = epoch
-        source = self._source
-        if source.epoch != epoch:
-            source.begin_again(epoch, 0, self.clock())
-        restoring = [sent for sent in source.line if sent.restores]
+        if epoch != self.epoch:
+            self.epoch = epoch
+            if self._source.epoch != epoch:
+                self._source.begin_again(epoch, 0, self.clock())
+        if restores:
+            self._restore()
+
+    def _restore(self) -> None:
+        """Be sure that a new life of the daemon has the layers that the old one had."""
+        restoring = [sent for sent in self._source.line if sent.restores]
         if restoring:
             self.settle(restoring)
         self._raise_losses()

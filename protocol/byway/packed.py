@@ -25,6 +25,9 @@ DTYPES: Final[Mapping[str, np.dtype[Any]]] = {
     name: np.dtype(name) for name in ("<f8", "<f4", "<i8", "<i4", "i1", "u1")
 }
 
+#: The same by the name that numpy has for them.
+_NAMES: Final[Mapping[str, str]] = {dtype.str: name for name, dtype in DTYPES.items()}
+
 Bytes: TypeAlias = bytes | memoryview
 
 
@@ -63,20 +66,23 @@ def pack(arrays: Mapping[str, npt.NDArray[Any]]) -> tuple[dict[str, Column], byt
     parts: list[bytes] = []
     offset = 0
     for name, array in arrays.items():
-        wire = np.ascontiguousarray(array, array.dtype.newbyteorder("<"))
-        dtype = wire.dtype.str.lstrip("|")
-        if dtype not in DTYPES or not 1 <= array.ndim <= limits.column_dimensions_max:
+        dtype = _NAMES.get(array.dtype.str)
+        if dtype is None:
+            array = array.astype(array.dtype.newbyteorder("<"), copy=False)
+            dtype = _NAMES.get(array.dtype.str)
+        if dtype is None or not 1 <= array.ndim <= limits.column_dimensions_max:
             raise BadValue(
                 f"column {name} is {array.dtype} in {array.ndim} dimensions; a column is one of "
                 f"{', '.join(DTYPES)} in 1 or 2",
                 {"field": name},
             )
-        columns[name] = Column.model_construct(dtype=dtype, shape=array.shape, offset=offset)
-        data = wire.tobytes()
-        padding = -len(data) % 8
+        columns[name] = Column(dtype=dtype, shape=array.shape, offset=offset)
+        data = array.tobytes()  # rows first, whatever the layout
         parts.append(data)
-        parts.append(bytes(padding))
-        offset += len(data) + padding
+        offset += len(data)
+        if padding := -offset % 8:
+            parts.append(bytes(padding))
+            offset += padding
     return columns, b"".join(parts)
 
 

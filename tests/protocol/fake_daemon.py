@@ -84,23 +84,26 @@ class FakeDaemon:
         got: How many messages of each kind came in.
     """
 
-    def __init__(self, folder: Path) -> None:
+    def __init__(self, folder: Path | None) -> None:
+        """Listen in this folder, or on free TCP ports of this host."""
         self.endpoints = {
-            name: f"ipc://{folder}/{name}" for name in ("requests", "updates", "events")
+            name: "tcp://127.0.0.1:*" if folder is None else f"ipc://{folder}/{name}"
+            for name in ("requests", "updates", "events")
         }
-        self.offered = {name: [end] for name, end in self.endpoints.items()}
+        self.offered: dict[str, list[str]] = {}
         self.lose: Counter[str] = Counter()
         self.mute: Counter[str] = Counter()
         self.instead: dict[str, Parts] = {}
         self.refuses: dict[str, messages.ErrorMessage] = {}
         self.refuses_change: dict[str, tuple[str, str]] = {}
         self.holds = False
+        self.state = "ready"
         self.confirms_subscriptions = True
         self.costs = [5.0]
         self.got: Counter[str] = Counter()
         self.log: list[Received] = []
         self._topics: set[str] = set()
-        self._subscription = threading.Condition()
+        self._news = threading.Condition()
         self._lives = 0
         self._thread: threading.Thread | None = None
         self.start()
@@ -132,6 +135,8 @@ class FakeDaemon:
             if kind == zmq.XPUB:
                 sock.setsockopt(zmq.XPUB_VERBOSE, 1)
             sock.bind(self.endpoints[name])
+            self.endpoints[name] = sock.getsockopt_string(zmq.LAST_ENDPOINT)
+            self.offered.setdefault(name, [self.endpoints[name]])
             self._sockets[name] = sock
         self._thread = threading.Thread(target=self._live, name="fake-daemon")
         self._thread.start()
@@ -247,7 +252,7 @@ class FakeDaemon:
     def _welcome(self) -> messages.Welcome:
         return messages.Welcome(
             version=1,
-            state="ready",
+            state=self.state,
             updates_endpoints=self.offered["updates"],
             events_endpoints=self.offered["events"],
             vehicles=["tug"],
@@ -259,7 +264,11 @@ class FakeDaemon:
     def health(self) -> messages.HealthIs:
         """The record of a daemon at rest."""
         return messages.HealthIs(
-            state="ready", revision=self.revision, uptime_s=1.0, waiting=0, planning=len(self.open)
+            state=self.state,
+            revision=self.revision,
+            uptime_s=1.0,
+            waiting=0,
+            planning=len(self.open),
         )
 
     def _site(self) -> tuple[messages.SiteIs, bytes]:
@@ -291,15 +300,23 @@ class FakeDaemon:
             if id in self.open:
                 self.open[id] = (identity, came)
             return
-        self.open[id] = (identity, came)
         self._reply(sock, identity, id, accepted)
+        with self._news:
+            self.open[id] = (identity, came)
+            self._news.notify_all()
         if not self.holds:
             for cost in self.costs[:-1]:
                 self._better(id, message.unit, cost)
             self._answer(id)
 
+    def wait_for_replans(self, count: int = 1) -> None:
+        """Return when so many replans are open."""
+        with self._news:
+            assert self._news.wait_for(lambda: len(self.open) == count, 10.0)
+
     def better(self, *costs: float) -> None:
         """Publish better routes for all open replans."""
+        self.wait_for_replans(len(self.open) or 1)
 
         def publish() -> None:
             for id, (_, came) in self.open.items():
@@ -310,6 +327,7 @@ class FakeDaemon:
 
     def release(self) -> None:
         """Answer all open replans."""
+        self.wait_for_replans(len(self.open) or 1)
         self.do(lambda: [self._answer(id) for id in list(self.open)])
 
     def _better(self, id: str, unit: str, cost: float) -> None:
@@ -355,9 +373,9 @@ class FakeDaemon:
 
     def _subscribed(self, frame: bytes) -> None:
         topic = frame[1:].decode()
-        with self._subscription:
+        with self._news:
             self._topics.add(topic)
-            self._subscription.notify_all()
+            self._news.notify_all()
         if frame[:1] == b"\x01" and self.confirms_subscriptions:
             header = Header("listening", epoch=self.epoch)
             told = frames.encode(header, messages.Listening(topic=topic))
@@ -365,8 +383,8 @@ class FakeDaemon:
 
     def wait_for_subscription(self, topic: str) -> None:
         """Return when somebody listens to this topic."""
-        with self._subscription:
-            assert self._subscription.wait_for(lambda: topic in self._topics, 10.0)
+        with self._news:
+            assert self._news.wait_for(lambda: topic in self._topics, 10.0)
 
     def publish(
         self,

@@ -150,6 +150,36 @@ def test_a_restoration_that_timed_out_goes_on_with_the_next_call(
     assert set(daemon.layers["fixed"]["obstacles"]) == {"kiln", "bin"}
 
 
+def test_a_daemon_that_warms_up_gets_the_layers_before_the_next_replan(
+    client: byway.Client, daemon: FakeDaemon
+) -> None:
+    client.replace_layer("fixed", polygons={"kiln": KILN})
+    daemon.restart()
+    daemon.state = "warming"
+    assert client.health().state == "warming"
+    assert client.hello().state == "warming"
+    assert daemon.layers == {}
+    daemon.state = "ready"
+    assert client.replan("tug", (0, 0, 0), (5, 0, 0), 0.05).epoch == daemon.epoch
+    assert set(daemon.layers["fixed"]["obstacles"]) == {"kiln"}
+
+
+def test_a_replan_after_a_restoration_that_timed_out_waits_for_it(
+    client: byway.Client, daemon: FakeDaemon
+) -> None:
+    """It must not be answered on a site that lacks what this client had put there."""
+    client.replace_layer("fixed", polygons={"kiln": KILN})
+    daemon.restart()
+    daemon.lose["replace_layer"] = 1
+    set_patience(client, timeout_s=0.05)
+    with pytest.raises(byway.TimedOut):
+        client.hello()
+    set_patience(client, timeout_s=5.0)
+    assert daemon.layers == {}
+    client.replan("tug", (0, 0, 0), (5, 0, 0), 0.05)
+    assert set(daemon.layers["fixed"]["obstacles"]) == {"kiln"}
+
+
 def test_patches_that_were_too_many_to_keep_are_told(
     client: byway.Client, daemon: FakeDaemon, monkeypatch: pytest.MonkeyPatch
 ) -> None:

@@ -143,6 +143,7 @@ def test_better_routes_are_not_given_to_another_replan(
         )
         for unit in heard
     }
+    daemon.wait_for_replans(2)
     daemon.better(9.0)
     # The answer waits until the event has come; events and answers travel apart.
     while not asks["ab"]._contact._better[asks["ab"].id]:
@@ -162,11 +163,12 @@ def test_listening_late_hears_what_follows(client: byway.Client, daemon: FakeDae
 
     def hear(better: byway.Better) -> None:
         heard.append(better.cost)
-        daemon.release()
+        if better.cost == 8.0:
+            daemon.release()
 
-    daemon.do(lambda: daemon._better(ask.id, ask.unit, 8.0))
+    daemon.better(8.0)
     ask.wait(hear)
-    assert heard[0] in (9.0, 8.0)
+    assert heard == [9.0, 8.0]
 
 
 def test_a_daemon_that_does_not_confirm_subscriptions_is_not_waited_for_long(
@@ -242,6 +244,7 @@ def test_a_broken_connection_is_made_good(new_client: NewClient, daemon: FakeDae
     client = new_client(repeat_s=0.5)
     daemon.holds = True
     ask = client.start_replan("tug", START, GOAL, 1.0)
+    daemon.wait_for_replans()
     epoch, open_replans = daemon.epoch, dict(daemon.open)
     daemon.restart()
     daemon.epoch, daemon.open = epoch, open_replans
@@ -339,6 +342,7 @@ def test_another_message_than_the_answer_is_a_bad_reply(
     daemon.holds = True
     ask = client.start_replan("tug", START, GOAL, 1.0)
     noted = frames.encode(Header("noted", ask.id, epoch=daemon.epoch), messages.Noted(replans=[]))
+    daemon.wait_for_replans()
     ((identity, _),) = daemon.open.values()
     daemon.do(lambda: daemon._sockets["requests"].send_multipart([identity, *noted]))
     with pytest.raises(byway.BadReply, match="where an answer was due"):

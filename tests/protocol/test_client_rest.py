@@ -295,6 +295,32 @@ def test_what_is_no_endpoint_is_told(new_client: NewClient, endpoint: str) -> No
         new_client(endpoint=endpoint).hello()
 
 
+def test_the_whole_goes_over_tcp_as_well(new_client: NewClient) -> None:
+    """The host that the client came to counts, whatever the daemon calls itself."""
+    over_tcp = FakeDaemon(None)
+    try:
+        for name, (endpoint,) in over_tcp.offered.items():
+            over_tcp.offered[name] = [endpoint.replace("127.0.0.1", "192.0.2.1")]
+        over_tcp.costs = [5.0]
+        client = new_client(endpoint=over_tcp.endpoints["requests"])
+        assert client.replace_layer("fixed", discs={"post": (1, 2, 0.5)}) == 1
+        over_tcp.holds = True
+        heard: list[float] = []
+
+        def hear(better: byway.Better) -> None:
+            heard.append(better.cost)
+            over_tcp.release()
+
+        ask = client.start_replan("tug", (0, 0, 0), (5, 0, 0), 1.0, on_better=hear)
+        assert client.health().planning == 1
+        over_tcp.better(9.0)
+        assert ask.wait().cost == 5.0
+        assert heard == [9.0]
+        client.close()
+    finally:
+        over_tcp.stop()
+
+
 def test_a_daemon_without_a_way_to_its_updates_is_told(
     client: byway.Client, daemon: FakeDaemon
 ) -> None:
