@@ -170,7 +170,12 @@ class Contact:
         if self.clock() >= question.deadline_s:
             requests.end(question)
             raise self._late(f"request {question.id}", is_connected=requests.is_connected)
-        requests.turn(question.deadline_s, [] if self._ear is None else [self._ear.link])
+        try:
+            requests.turn(question.deadline_s, [] if self._ear is None else [self._ear.link])
+        except BywayError:
+            # The caller hears of it, so it must not be sent by some later call.
+            requests.end(question)
+            raise
         self._hear()
 
     def end(self, question: Question) -> None:

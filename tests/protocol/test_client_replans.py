@@ -275,6 +275,18 @@ def test_no_daemon_is_told_soon(new_client: NewClient, daemon: FakeDaemon) -> No
     assert client.replan("tug", START, GOAL, 0.05).kind == "route"
 
 
+def test_what_failed_is_not_sent_by_a_later_call(client: byway.Client, daemon: FakeDaemon) -> None:
+    client.hello()
+    daemon.stop()
+    set_patience(client, reconnect_s=0.01)
+    with pytest.raises(byway.DaemonLost):
+        client.replan("tug", START, GOAL, 1.0)
+    daemon.start()
+    set_patience(client, reconnect_s=5.0)
+    client.health()
+    assert daemon.got["replan"] == 0
+
+
 def test_no_daemon_within_the_timeout_is_told_as_such(
     new_client: NewClient, daemon: FakeDaemon
 ) -> None:
