@@ -13,7 +13,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import Any, Final
 
 import byway
-from bywayd.yard.claims import Claim
+from bywayd.yard.claims import Claim, told_outlines
 from bywayd.yard.report import Asked
 from bywayd.yard.scene import BUILDINGS, STACKS
 from bywayd.yard.shapes import Mass
@@ -182,8 +182,8 @@ class LiveDesk:
     def _show(self, client: byway.Client, shown: dict[str, Claim]) -> None:
         for unit, claim in self._claims.items():
             if shown.get(unit) is not claim:
-                pieces = {f"ground-{k}": piece for k, piece in enumerate(claim.pieces)}
-                client.replace_layer(layer_of(unit), polygons=pieces, outlines_only=True)
+                outlines = {f"ground-{k}": ring for k, ring in enumerate(told_outlines(claim))}
+                client.replace_layer(layer_of(unit), polygons=outlines, outlines_only=True)
                 shown[unit] = claim
 
 

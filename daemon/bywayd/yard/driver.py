@@ -21,6 +21,7 @@ CLAIM_AGAIN_S: Final = 0.1
 PACK_GAP_M: Final = 0.12
 PACK_STOP_M: Final = 0.5
 #: How far the true state may be from the start of a new route at the hand-over.
+HANDOVER_AHEAD_M: Final = 0.5
 HANDOVER_OFFSET_M: Final = 0.08
 HANDOVER_TURNED_RAD: Final = 0.05
 HANDOVER_FASTER_MPS: Final = 0.15
@@ -58,6 +59,9 @@ class Driver:
         #: Grows with every new line, so that answers to questions about an old one are known.
         self.line_number = 0
         self.at_m = 0.0
+        self._leg_from_m = 0.0
+        #: The furthest that it was beside its line.
+        self.off_m_max = 0.0
         #: Since when it has been standing on its line without having arrived.
         self.held_since_s: float | None = None
         #: Where a pack that the route does not know of is in the way.
@@ -96,7 +100,7 @@ class Driver:
         self._next = (line, goes_on_at_m)
 
     def _use(self, line: Line, at_m: float) -> None:
-        self.line, self.at_m = line, at_m
+        self.line, self.at_m, self._leg_from_m = line, at_m, 0.0
         self.line_number += 1
         self.blocked_at_m = math.inf
         self.held_since_s = None
@@ -153,16 +157,19 @@ class Driver:
         self.speed_mps, moved_m = next_step(
             line, self.at_m, self.speed_mps, may_go_to_m, self.can, dt_s
         )
-        curvature, ahead_m = steer(line, self.at_m, moved_m, self.pose, self.can)
-        self.pose = advanced(self.pose, curvature, line.gear_at(self.at_m) * moved_m)
+        way = steer(line, self.at_m, moved_m, self.pose, self.can)
+        self.off_m_max = max(self.off_m_max, abs(way.offset_m))
+        self.pose = advanced(self.pose, way.curvature_per_m, line.gear_at(self.at_m) * moved_m)
         self.driven_m += moved_m
         stop_m = line.stop_after(self.at_m)
         self.at_m += moved_m
         if stop_m - self.at_m > 0.5:
-            # Corrections to the side make the way driven a little longer than the line.
-            self.at_m = max(0.0, self.at_m + 0.2 * ahead_m)
+            # Corrections to the side make the way driven a little longer than the line. Never
+            # back over a change of direction: the vehicle would drive to and fro there for ever.
+            self.at_m = max(self._leg_from_m, self.at_m + 0.2 * way.ahead_m)
         elif stop_m - self.at_m < 1e-4:
             self.at_m, self.speed_mps = stop_m, 0.0
+            self._leg_from_m = stop_m
         self._note_standing(now_s, moved_m)
         return came_of_it
 
@@ -190,18 +197,18 @@ class Driver:
 
     def _hand_over(self, line: Line) -> bool:
         """Go on along another line, if the true state fits its start and the ground is free."""
-        _, ahead_m = steer(line, 0.0, 0.0, self.pose, self.can)
-        x_m, y_m, heading_rad = line.pose_at(max(0.0, ahead_m))
+        way = steer(line, 0.0, 0.0, self.pose, self.can)
+        at_m = max(0.0, way.ahead_m)
+        pose = line.pose_at(at_m)
+        beside_m = math.dist(self.pose[:2], pose[:2]) - max(0.0, -way.ahead_m)
         fits = (
-            abs(ahead_m) < 0.5
-            and math.hypot(self.pose[0] - x_m, self.pose[1] - y_m)
-            < HANDOVER_OFFSET_M + max(0.0, -ahead_m)
-            and abs(wrapped(self.pose[2] - heading_rad)) < HANDOVER_TURNED_RAD
-            and self.speed_mps < line.speed_at(max(0.0, ahead_m)) + HANDOVER_FASTER_MPS
+            abs(way.ahead_m) < HANDOVER_AHEAD_M
+            and beside_m < HANDOVER_OFFSET_M
+            and abs(wrapped(self.pose[2] - pose[2])) < HANDOVER_TURNED_RAD
+            and self.speed_mps < line.speed_at(at_m) + HANDOVER_FASTER_MPS
         )
         if not fits:
             return False
-        at_m = max(0.0, ahead_m)
         to_m = self._needs_to_m(line, at_m)
         wanted = claim_ahead(line, self.outline_m, self.pose, at_m, to_m)
         if self._ground.take(self.name, wanted) is not None:

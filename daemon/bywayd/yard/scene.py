@@ -79,7 +79,7 @@ class Round:
         return tuple(station for delivery in self.deliveries for station in delivery)
 
 
-_SHED_1_EAST: Final = Station("shed-1 east", (49.0, 26.5, NORTH))
+_SHED_1_EAST: Final = Station("shed-1 east", (49.0, 32.0, SOUTH))
 
 ROUNDS: Final = (
     Round(

@@ -72,6 +72,14 @@ def hull(points_m: Points) -> Points:
     return np.array(halves[0] + halves[1])
 
 
+def grown(points_m: Points, by_m: float) -> Points:
+    """Return a convex polygon that keeps at least `by_m` around points, and 8 % more at most."""
+    turn_rad = np.arange(8) * (math.pi / 4)
+    # An octagon around the circle: its sides, not its corners, have the distance.
+    octagon = np.column_stack((np.cos(turn_rad), np.sin(turn_rad))) * (by_m / math.cos(math.pi / 8))
+    return hull((points_m[:, None, :] + octagon).reshape(-1, 2))
+
+
 def convex_apart(a_m: Points, b_m: Points, gap_m: float) -> bool:
     """
     Whether an edge of one of two convex polygons (counter-clockwise) keeps the other off.

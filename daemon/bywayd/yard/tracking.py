@@ -9,7 +9,7 @@ so a route that no vehicle could follow would be seen here.
 import bisect
 import math
 from dataclasses import dataclass
-from typing import Any, Final
+from typing import Any, Final, NamedTuple
 
 import numpy.typing as npt
 
@@ -148,11 +148,17 @@ def next_step(
     return new_mps, min(0.5 * (speed_mps + new_mps) * dt_s, left_m)
 
 
-def steer(
-    line: Line, at_m: float, moved_m: float, pose: Pose, can: Abilities
-) -> tuple[float, float]:
+class Way(NamedTuple):
+    """What to steer, and where the vehicle is beside the place that it should be at."""
+
+    curvature_per_m: float
+    ahead_m: float  # along the way of driving
+    offset_m: float  # to the left of the line
+
+
+def steer(line: Line, at_m: float, moved_m: float, pose: Pose, can: Abilities) -> Way:
     """
-    Return the curvature to drive for the next `moved_m`, and how far the true place is ahead.
+    Return the curvature to drive for the next `moved_m`.
 
     The curvature of the line, its mean over the step, with linear feedback on the offset from
     the line and the heading error; per metre driven rather than per second, so that errors
@@ -169,4 +175,4 @@ def steer(
         curvature = wrapped(line.pose_at(at_m + moved_m)[2] - heading_rad) / (gear * moved_m)
     curvature -= OFFSET_GAIN_PER_M2 * offset_m + gear * HEADING_GAIN_PER_M * turned_rad
     most = STEERING_RESERVE * can.curvature_per_m_max
-    return min(max(curvature, -most), most), gear * ahead_m
+    return Way(min(max(curvature, -most), most), gear * ahead_m, offset_m)

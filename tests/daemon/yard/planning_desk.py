@@ -6,7 +6,7 @@ from typing import Any
 
 import byway_planning
 from bywayd.settings import load
-from bywayd.yard.claims import Claim
+from bywayd.yard.claims import Claim, told_outlines
 from bywayd.yard.scene import BUILDINGS, LIMITS_M, STACKS
 from bywayd.yard.shapes import Mass
 from bywayd.yard.tracking import Line
@@ -103,8 +103,8 @@ class PlanningDesk:
             layer = f"unit.{unit}"
             self._model.declare(layer, byway_planning.LayerSettings(outlines_only=True))
             self._model.clear(layer)
-            for index, piece in enumerate(claim.pieces):
-                self._model.put(layer, f"ground-{index}", byway_planning.PolygonShape(piece))
+            for index, ring_m in enumerate(told_outlines(claim)):
+                self._model.put(layer, f"ground-{index}", byway_planning.PolygonShape(ring_m))
         self._snapshot = self._model.publish()
 
 

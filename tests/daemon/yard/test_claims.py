@@ -11,7 +11,16 @@ from tests.daemon.yard.lines import arc
 
 from bywayd.outlines import outline_of, placed
 from bywayd.settings import load
-from bywayd.yard.claims import GAP_M, STEP_M, Ground, apart, claim_ahead, claim_here
+from bywayd.yard.claims import (
+    GAP_M,
+    GROWN_M,
+    STEP_M,
+    Ground,
+    apart,
+    claim_ahead,
+    claim_here,
+    told_outlines,
+)
 from bywayd.yard.shapes import as_points, rectangle
 
 BOX_M = as_points([(-1, -0.7), (2, -0.7), (2, 0.7), (-1, 0.7)])
@@ -58,7 +67,19 @@ def test_claims_that_are_apart_keep_the_gap(
     if apart(a, b):
         assert away_m >= GAP_M - 1e-9
     else:
-        assert away_m < GAP_M * math.sqrt(2)
+        assert away_m < GAP_M + 1e-9
+
+
+def test_the_daemon_is_told_of_more_ground_than_is_claimed() -> None:
+    line = arc((0.0, 0.0, 0.0), 0.2, 6.0)
+    claim = claim_ahead(line, BOX_M, (0.0, 0.0, 0.0), 0.0, 4.0)
+    told = told_outlines(claim)
+    assert len(told) < len(claim.pieces)
+    ground = shapely.unary_union([shapely.Polygon(ring) for ring in told])
+    claimed = shapely.unary_union([shapely.Polygon(piece) for piece in claim.pieces])
+    # shapely's rounds are polygons inside the circle
+    assert ground.buffer(1e-9).contains(claimed.buffer(GROWN_M))
+    assert claimed.buffer(GROWN_M + 0.15).contains(ground)
 
 
 def test_ground_that_another_holds_is_not_given() -> None:

@@ -28,7 +28,7 @@ def drive(
         new_speed, moved_m = next_step(line, at_m, speed, stop_at_m, CAN, DT_S)
         if new_speed == 0.0 and moved_m < 1e-9:
             break
-        curvature, _ = steer(line, at_m, moved_m, pose, CAN)
+        curvature = steer(line, at_m, moved_m, pose, CAN).curvature_per_m
         pose = advanced(pose, curvature, line.gear_at(at_m) * moved_m)
         at_m, speed = at_m + moved_m, new_speed
         trace.append((at_m, pose, speed))
