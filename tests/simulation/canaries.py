@@ -15,15 +15,19 @@ from bywayd.core.answers import Answers
 from bywayd.core.dispatch import Dispatch
 from bywayd.core.docket import Docket, Held
 from bywayd.core.events import Outcome
+from bywayd.core.expiries import Expiries
 from bywayd.core.instants import Instant
 from bywayd.core.ledger import Entry, Ledger
 from bywayd.core.outbox import Outbox
 from bywayd.core.snapshots import Snapshot, Snapshots
+from bywayd.core.surveying import Surveying
 
 true_append = Ledger._append
 true_ended = Docket.ended
 true_decide = Ledger.decide
 true_publish = Outbox.publish
+true_forsake = Surveying._forsake
+true_pop_due = Expiries.pop_due
 
 
 @dataclass(frozen=True)
@@ -80,7 +84,24 @@ def take_gaps(ledger: Ledger, peer: Any, header: Any, size: int, now: Instant) -
     return source if source is not None and header.number > source.have else None
 
 
+def lose_the_batch(surveying: Surveying, number: int) -> None:
+    surveying._ledger._out = None
+    true_forsake(surveying, number)
+
+
+def forget_what_expired(expiries: Expiries, now: Instant) -> dict[str, list[str]]:
+    true_pop_due(expiries, now)
+    return {}
+
+
 CANARIES = {
+    "a batch is lost with its surveyor": Canary(
+        *(Surveying, "_forsake", lose_the_batch),
+        "every number taken in is decided once|not settled",
+    ),
+    "obstacles never expire": Canary(
+        Expiries, "pop_due", forget_what_expired, "obstacles that have expired are there"
+    ),
     "changes are acknowledged before they are visible": Canary(
         Ledger, "_append", acknowledge_at_once, "what is acknowledged is visible"
     ),

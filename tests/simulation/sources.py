@@ -140,7 +140,7 @@ class Sources:
         came = frames.Received(header, message, b"body", packed)
 
         def make() -> events.Event:
-            world.crew.site_arrives(came)
+            world.crew.surveyor.site_arrives(came)
             return events.Received(peer, came)
 
         world.to_front(make)

@@ -110,7 +110,7 @@ class World:
         """The daemon is killed with all its processes, and another takes its place."""
         self.lives += 1
         self.epoch = f"epoch{self.lives}"
-        self.checkers = Checkers(self.epoch, self.crew.sees)
+        self.checkers = Checkers(self.epoch, self.crew.surveyor.sees)
         self.crew.all_gone()
         self.front = self.make_front(self.settings, self.epoch, self.seed + self.lives)
         self._wake_serial = 0
@@ -235,7 +235,7 @@ class World:
                 raise BrokenPromise(f"not settled: {self._unsettled()}")
             self.step()
         self.front.check()
-        self.crew.check_site()
+        self.crew.surveyor.check_site()
 
     def _unsettled(self) -> list[str]:
         workers = self.front.workers.statistics()
@@ -246,7 +246,7 @@ class World:
             "sources live in the past": self.sources.belated(),
             "workers are missing": workers.idle + workers.busy < self.settings.workers,
             "no surveyor": not self.front.surveying.is_ready,
-            "obstacles that have expired are there": self.crew.overdue(),
+            "obstacles that have expired are there": self.crew.surveyor.overdue(),
         }
         return [f"{what} {who}" for what, who in found.items() if who]
 

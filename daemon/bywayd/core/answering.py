@@ -138,6 +138,9 @@ class Answering:
             kind = held.outcome.kind if held is not None else "not_found"
             self._health.count(f"answers_{kind}_total")
             self._health.observe("answer_s", total)
+            if held is not None and held.revision < self._snapshots.revision:
+                # True of the revision that it names; there was no time to look at the newest.
+                self._health.count("answers_behind_total")
             if docket.first_at is not None:
                 self._health.observe("first_s", docket.first_at.since(arrived))
         budget = Duration.of_s(docket.ask.budget_s)

@@ -267,7 +267,8 @@ class Dispatch:
             self._nonsense(worker, f"the end of job {number}", now)
             return None
         self._tasks.end(task, now)
-        self._answering.note_hold(now.since(task.since))
+        if task.kind == "plan":
+            self._answering.note_hold(now.since(task.since))
         if task.docket is not None:
             task.docket.leave_worker()
         self._restless = True

@@ -402,6 +402,7 @@ def test_a_check_that_takes_too_long_leaves_the_route_to_its_own_revision(desk: 
     desk.done(route(4.0), after_ms=97)
     desk.tick(2)
     assert desk.outcome() == (route(4.0).body, 1)
+    assert desk.count("answers_behind_total") == 1
     assert desk.all_of(effects.SteerJob) == []
     desk.hand_in(events.WorkerChecked(1, 2, False), 1)
     assert desk.replies() == []
