@@ -1,27 +1,24 @@
 """
-The anytime loop: a budget in, better and better verified routes out.
-
-Time comes in as a callable and only ends the run; what runs next depends on the work done, so
-the same request with the same work gives the same bits, wherever the slices fall.
+A budget in, better and better routes out: what is asked, what can be answered at once, and how
+a route has to begin and end. The search itself is in `anytime`.
 """
 
 import math
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field, replace
-from typing import Final, cast
+from dataclasses import replace
+from typing import cast
 
 import numpy as np
 import numpy.typing as npt
 
+from byway_planning.anytime import Run, Wishes, search
 from byway_planning.collision import CONTACT_M
 from byway_planning.kernel import ensure_warm
-from byway_planning.outcome import Blockage, Kind, Outcome
-from byway_planning.prefix import end_of, leaving, rolling
-from byway_planning.profile import StartTooFast
-from byway_planning.route import make_route
+from byway_planning.outcome import Blockage, Outcome
+from byway_planning.prefix import end_of, leaving, reversed_path, rolling
 from byway_planning.search.floods import FloodGround, Window, used_tiles, window_for
-from byway_planning.search.method import EXHAUSTED, FOUND, FULL
-from byway_planning.search.methods import check_method, make_method
+from byway_planning.search.methods import check_method
+from byway_planning.search.paths import path_cost
 from byway_planning.search.question import (
     Guide,
     Question,
@@ -37,106 +34,8 @@ from byway_planning.site.snapshot import Snapshot
 from byway_planning.vehicles.body import CAR, DISC, Body
 from byway_planning.vehicles.models import Vehicle
 from byway_planning.verify import clearance_m as exact_clearance_m
-from byway_planning.verify import verify
 
 Floats = npt.NDArray[np.float64]
-
-#: Work between two looks at the clock: about half a millisecond.
-SLICE: Final = 120
-#: A better route is only made and checked when it gains this share of the last one's cost.
-WORTH_TELLING: Final = 0.005
-#: Time set aside for the last route, in runs of making and checking one, and at least.
-LAST_ROUTES: Final = 1.5
-LAST_S: Final = 0.0004
-
-
-@dataclass
-class _Run:
-    """One call of `plan`: what was asked, and what there is so far."""
-
-    snapshot: Snapshot
-    vehicle: Vehicle
-    body: Body
-    start: Floats  # site-local
-    goal: Floats
-    left_out: frozenset[str]
-    start_speed_mps: float
-    start_curvature_per_m: float
-    seed: int
-    time_left: Callable[[], float]
-    on_better: Callable[[Outcome], None] | None
-    began_s: float = 0.0
-    bound: float = 0.0
-    best: Outcome | None = None
-    check_s: float = 0.0  # how long making and checking the last route took
-    rejected: int = 0
-    statistics: dict[str, int | float | str] = field(default_factory=dict)
-
-    def elapsed_s(self) -> float:
-        return self.began_s - self.time_left()
-
-    def outcome(self, kind: Kind, blocked_by: tuple[Blockage, ...] = ()) -> Outcome:
-        return Outcome(
-            kind,
-            self.snapshot.revision,
-            self.seed,
-            bound=self.bound,
-            total_s=self.elapsed_s(),
-            blocked_by=blocked_by,
-            statistics=self.statistics,
-        )
-
-    def offer(self, path: Floats) -> bool:
-        """Make a route of a path, check it, and keep and tell it when it is the best."""
-        before_s = self.time_left()
-        cost = path_cost(path, self.body)
-        if self.best is not None and cost >= self.best.cost:
-            return False
-        path = _continuous(path, self.body)
-        try:
-            route = make_route(path, self.vehicle, self.start_speed_mps)
-        except StartTooFast as fault:
-            return self._reject(str(fault))
-        faults = verify(
-            self.snapshot.solids(self.left_out),
-            self.vehicle,
-            path,
-            route,
-            (float(self.start[0]), float(self.start[1]), float(self.start[2])),
-            (float(self.goal[0]), float(self.goal[1]), float(self.goal[2])),
-            clearance_m=self.body.clearance_m,
-            start_speed_mps=self.start_speed_mps,
-            start_curvature_per_m=self.start_curvature_per_m,
-        )
-        now_s = self.time_left()
-        self.check_s = before_s - now_s
-        if faults:
-            return self._reject(faults[0].text)
-        x, y = self.snapshot.origin_m
-        if x or y:
-            table = route.table.copy()
-            table["x_m"] += x
-            table["y_m"] += y
-            shift = np.array([x, y, 0.0, 0.0, 0.0])
-            route = replace(route, table=table, path=route.path + shift)
-        first_s = self.best.first_s if self.best is not None else self.began_s - now_s
-        self.statistics["clearance_m"] = float(faults.clearance_m)
-        self.best = replace(
-            self.outcome("route"),
-            route=route,
-            cost=cost,
-            first_s=first_s,
-            statistics=dict(self.statistics),
-        )
-        if self.on_better is not None:
-            self.on_better(self.best)
-        return True
-
-    def _reject(self, why: str) -> bool:
-        self.rejected += 1
-        self.statistics["rejected"] = self.rejected
-        self.statistics["rejected_why"] = why
-        return False
 
 
 def plan(
@@ -187,7 +86,7 @@ def plan(
     _check_arguments(body, start, goal, start_speed_mps, start_curvature_per_m, gap_wanted)
     _check_size(snapshot, body)
     check_method(method, sampler)
-    run = _Run(
+    run = Run(
         snapshot,
         vehicle,
         body,
@@ -201,98 +100,64 @@ def plan(
         on_better,
         began_s=time_left(),
     )
-    work = math.inf if work_max is None else work_max
+    wishes = Wishes(method, sampler, gap_wanted, math.inf if work_max is None else work_max)
     with borrowed() as workshop:
-        return _planned(run, workshop, method, sampler, gap_wanted, work)
+        return _planned(run, workshop, wishes)
 
 
-def _planned(
-    run: _Run,
-    workshop: Workshop,
-    method: str,
-    sampler: str | None,
-    gap_wanted: float,
-    work_max: float,
-) -> Outcome:
+def _planned(run: Run, workshop: Workshop, wishes: Wishes) -> Outcome:
     scene = run.snapshot.scene(run.left_out)
-    blocked = _blockages(run, run.goal, 0.0)
-    if blocked:
-        return run.outcome("goal_blocked", blocked)
-    run.bound = float(direct_length_kernel(run.body, run.start, run.goal))
-    openings: list[Floats | None] = [None]
-    near = bool(excess_kernel(scene, run.body, run.start) <= CONTACT_M)
+    closing: Floats | None = None
+    if _is_near(run, run.goal):
+        blocked = _blockages(run, run.goal, 0.0)
+        if blocked:
+            return run.outcome("goal_blocked", blocked)
+        closing = _closing(run)
+        if closing is None:
+            return run.outcome("not_found")
+    near = _is_near(run, run.start)
     if near:
         blocked = _blockages(run, run.start, run.vehicle.start_overlap_m)
-        if not blocked and run.start_speed_mps == 0.0:
-            openings = list(leaving(scene, run.body, run.start, run.vehicle.start_overlap_m))
-        if blocked or not openings:
-            return run.outcome("start_blocked", blocked or _blockages(run, run.start, -math.inf))
+        if blocked:
+            return run.outcome("start_blocked", blocked)
+    openings: list[Floats | None] = [None]
     if run.start_speed_mps != 0.0:
         openings = list(_rolling(run, near))
-        if not openings or not _fits_bend(run):
+        if not openings or not _fits_limits(run):
             return run.outcome("start_too_fast")
-    guide = guide_for(_ground(run), workshop.floods, run.body, run.start, run.goal)
+    elif near:
+        openings = list(leaving(scene, run.body, run.start, run.vehicle.start_overlap_m))
+        if not openings:
+            return run.outcome("start_blocked", _blockages(run, run.start, -math.inf))
+    run.bound = float(direct_length_kernel(run.body, run.start, run.goal))
+    goal = run.goal if closing is None else _read_only(closing[0, :3])
+    guide = guide_for(_ground(run), workshop.floods, run.body, run.start, goal)
     if not guide.reached:
         return run.outcome("no_route")
     for opening in _ranked(run, guide, openings):
         start = run.start if opening is None else end_of(opening)
-        question = Question(scene, run.body, start, run.goal, run.seed, guide)
-        if _searched(run, workshop, question, opening, method, sampler, gap_wanted, work_max):
+        question = Question(scene, run.body, start, goal, run.seed, guide)
+        if search(run, workshop, question, wishes, opening, closing):
             break
     if run.best is None:
         return run.outcome("not_found")
     return replace(run.best, total_s=run.elapsed_s(), statistics=dict(run.statistics))
 
 
-def _searched(
-    run: _Run,
-    workshop: Workshop,
-    question: Question,
-    opening: Floats | None,
-    method: str,
-    sampler: str | None,
-    gap_wanted: float,
-    work_max: float,
-) -> bool:
-    """Search from the end of one opening; False when another opening should be tried."""
+def _is_near(run: Run, pose: Floats) -> bool:
+    """Is a pose too near to an obstacle for a search to start or end there?"""
+    return bool(excess_kernel(run.snapshot.scene(run.left_out), run.body, pose) <= CONTACT_M)
 
-    def whole(path: Floats) -> Floats:
-        return path if opening is None else np.vstack([opening, path])
 
-    def good_enough() -> bool:
-        return run.best is not None and run.best.gap <= gap_wanted + 1e-12
+def _closing(run: Run) -> Floats | None:
+    """
+    Return the last motion to a goal that just keeps the hard clearance (a dock, say).
 
-    direct = question.direct()
-    if direct is not None:
-        run.offer(whole(direct))
-        if good_enough():
-            return True
-    search = make_method(method, question, sampler, workshop)
-    told = math.inf if run.best is None else run.best.cost
-    newest: Floats | None = None
-    work = 0
-    status = FOUND
-    while work < work_max and run.time_left() > LAST_S + LAST_ROUTES * run.check_s:
-        status = search.advance(SLICE)
-        work += SLICE
-        if status == FOUND:
-            path = whole(search.path())
-            cost = path_cost(path, run.body)
-            newest = path
-            if cost < told * (1.0 - WORTH_TELLING):
-                if run.offer(path):
-                    newest = None
-                told = cost
-                if good_enough():
-                    break
-        elif status in (EXHAUSTED, FULL):
-            break
-    run.statistics.update(
-        method=method, work=work, states_checked=search.states_checked, slices=work // SLICE
-    )
-    if newest is not None:
-        run.offer(newest)
-    return run.best is not None or status not in (EXHAUSTED, FULL)
+    It is a way out of the goal, driven the other way round.
+    """
+    scene = run.snapshot.scene(run.left_out)
+    ways = leaving(scene, run.body, run.goal, 0.0, backward=run.body.kind != DISC)
+    return reversed_path(ways[0], run.body) if ways else None
 
 
 def _check_arguments(
@@ -335,11 +200,10 @@ def _check_size(snapshot: Snapshot, body: Body) -> None:
 def _local(pose: Sequence[float], snapshot: Snapshot) -> Floats:
     x, y = snapshot.origin_m
     local = np.array([pose[0] - x, pose[1] - y, pose[2]], np.float64)
-    local.flags.writeable = False
-    return local
+    return _read_only(local)
 
 
-def _blockages(run: _Run, pose: Floats, overlap_m: float) -> tuple[Blockage, ...]:
+def _blockages(run: Run, pose: Floats, overlap_m: float) -> tuple[Blockage, ...]:
     """
     Return what a pose is too near to.
 
@@ -359,14 +223,14 @@ def _blockages(run: _Run, pose: Floats, overlap_m: float) -> tuple[Blockage, ...
     return (Blockage(layer, name, run.body.clearance_m - found.distance_m),)
 
 
-def _fits_bend(run: _Run) -> bool:
-    """Can the steering at the start be driven at the start speed?"""
+def _fits_limits(run: Run) -> bool:
+    """Is the start speed one that the vehicle may have?"""
     limits = run.vehicle.limits
     top = limits.speed_mps_max if run.start_speed_mps > 0.0 else limits.reverse_speed_mps_max
     return abs(run.start_speed_mps) <= top + 1e-9
 
 
-def _ground(run: _Run) -> FloodGround:
+def _ground(run: Run) -> FloodGround:
     kept, scene, body = run.snapshot.kept, run.snapshot.scene(), run.body
     if "used_tiles" not in kept:
         kept["used_tiles"] = used_tiles(scene)
@@ -380,7 +244,7 @@ def _ground(run: _Run) -> FloodGround:
     return cast(FloodGround, kept[key])
 
 
-def _rolling(run: _Run, near: bool) -> list[Floats]:
+def _rolling(run: Run, near: bool) -> list[Floats]:
     """Return the opening paths of a moving vehicle."""
     return rolling(
         run.snapshot.scene(run.left_out),
@@ -393,7 +257,7 @@ def _rolling(run: _Run, near: bool) -> list[Floats]:
     )
 
 
-def _ranked(run: _Run, guide: Guide, openings: list[Floats | None]) -> list[Floats | None]:
+def _ranked(run: Run, guide: Guide, openings: list[Floats | None]) -> list[Floats | None]:
     """Return the openings that lead somewhere, the most promising first."""
 
     def estimate(opening: Floats | None) -> float:
@@ -408,22 +272,7 @@ def _ranked(run: _Run, guide: Guide, openings: list[Floats | None]) -> list[Floa
     return [openings[i] for cost, i in ranked if cost < math.inf]
 
 
-def path_cost(path: Floats, body: Body) -> float:
-    """Return the cost of a path (n, 5): length, reversing and changes of direction."""
-    lengths = path[:, 4]
-    cost = float(np.where(lengths >= 0.0, lengths, -lengths * body.reverse_factor).sum())
-    if body.kind == CAR:
-        signs = np.sign(lengths[lengths != 0.0])
-        cost += float((np.diff(signs) != 0.0).sum()) * body.direction_change_m
-    return cost
-
-
-def _continuous(path: Floats, body: Body) -> Floats:
-    """Return the path with headings that do not jump by whole turns (discs turn freely)."""
-    if body.kind == DISC or len(path) == 1:
-        return path
-    ends = path[:-1, 2] + path[:-1, 3] * path[:-1, 4]
-    turns = np.round((path[1:, 2] - ends) / (2.0 * math.pi))
-    out = path.copy()
-    out[1:, 2] -= 2.0 * math.pi * np.cumsum(turns)
-    return out
+def _read_only(pose: Floats) -> Floats:
+    kept = np.array(pose, np.float64)
+    kept.flags.writeable = False
+    return kept

@@ -75,12 +75,15 @@ def _curvatures(body: Body, most: float = math.inf) -> list[float]:
     return [0.0, 0.5 * k, -0.5 * k, k, -k]
 
 
-def leaving(scene: Scene, body: Body, pose: Floats, overlap_m: float) -> list[Floats]:
+def leaving(
+    scene: Scene, body: Body, pose: Floats, overlap_m: float, *, backward: bool = False
+) -> list[Floats]:
     """
     Return opening paths (1, 5) out of a place that is too near to obstacles, shortest first.
 
     Args:
         overlap_m: How deep the body may overlap at the start.
+        backward: The motions will be driven the other way round, from their end to the pose.
     """
     core = _core_of(body, overlap_m)
     longest = 2.0 * body.outer_radius_m + 2.0 * body.turn_radius_m
@@ -92,7 +95,8 @@ def leaving(scene: Scene, body: Body, pose: Floats, overlap_m: float) -> list[Fl
         at = np.array([pose[0], pose[1], heading])
         at.flags.writeable = False
         for k in _curvatures(body):
-            for sign in (1.0, -1.0) if body.kind == CAR else (1.0,):
+            one_way = -1.0 if backward else 1.0
+            for sign in (1.0, -1.0) if body.kind == CAR else (one_way,):
                 length = float(leave_kernel(scene, body, core, overlap_m, at, k, sign, longest))
                 if length > 0.0:
                     found.append((length, np.array([[*at, k, sign * length]])))
@@ -156,6 +160,15 @@ def end_of(path: Floats) -> Floats:
     end = np.array(end_kernel(x, y, h, k, length))
     end.flags.writeable = False
     return end
+
+
+def reversed_path(path: Floats, body: Body) -> Floats:
+    """Return a path (1, 5) driven the other way round; a disc turns about instead."""
+    x, y, heading = end_of(path)
+    _, _, begin, k, length = path[0]
+    if body.kind == DISC:
+        return np.array([[x, y, begin + math.pi, 0.0, length]])
+    return np.array([[x, y, heading, k, -length]])
 
 
 @kernel("f8", "f8", "f8", "f8", "f8")

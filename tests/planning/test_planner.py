@@ -219,7 +219,11 @@ def test_a_start_that_overlaps_a_little_may_only_get_out():
 def test_a_goal_may_touch_the_hard_clearance_but_not_less():
     site = Site.from_shapes({"ramp": box(30.0, 5.0, 2.0, 10.0)}, limits_m=LIMITS)
     car = pure_length_car(clearance_m=0.1)
-    assert planned(site, car, (5.0, 10.0, 0.0), (30.0 - 3.5 - 0.11, 10.0, 0.0)).kind == "route"
+    for keeps_m in (0.11, 0.1005, 0.1):
+        goal = (30.0 - 3.5 - keeps_m, 10.0, 0.0)
+        outcome = planned(site, car, (5.0, 6.0, 0.5), goal)
+        assert outcome.kind == "route"
+        assert "rejected" not in outcome.statistics
     assert (
         planned(site, car, (5.0, 10.0, 0.0), (30.0 - 3.5 - 0.05, 10.0, 0.0)).kind == "goal_blocked"
     )

@@ -82,10 +82,23 @@ def check_method(name: str, sampler: str | None) -> None:
         raise ValueError(f"method {name!r} does not sample; leave the sampler out")
 
 
-def make_method(name: str, question: Question, sampler: str | None, workshop: Workshop) -> Method:
-    """Make a search by its published name; the arguments have passed `check_method`."""
+def make_method(
+    name: str,
+    question: Question,
+    sampler: str | None,
+    workshop: Workshop,
+    first: npt.NDArray[np.float64] | None = None,
+) -> Method:
+    """
+    Make a search by its published name; the arguments have passed `check_method`.
+
+    Args:
+        first: A path that is known already, for the methods that can go on from one.
+    """
     if name == "rrt":
         return SingleTree(question, sampler or "goal_biased")
     if name == "rrt_connect":
         return ConnectedTrees(question, sampler or "corridor")
-    return Auto(question, workshop) if name == "auto" else LatticeSearch(question, workshop)
+    if name == "lattice":
+        return LatticeSearch(question, workshop)
+    return Auto(question, workshop, first)

@@ -154,3 +154,13 @@ def path_from(course: Course) -> Floats:
 def cost_of(course: Course) -> float:
     """Return the cost of the whole path."""
     return float(course.costs[course.used[0]])
+
+
+def path_cost(path: Floats, body: Body) -> float:
+    """Return the cost of a path (n, 5): length, reversing and changes of direction."""
+    lengths = path[:, 4]
+    cost = float(np.where(lengths >= 0.0, lengths, -lengths * body.reverse_factor).sum())
+    if body.kind == CAR:
+        signs = np.sign(lengths[lengths != 0.0])
+        cost += float((np.diff(signs) != 0.0).sum()) * body.direction_change_m
+    return cost

@@ -10,6 +10,7 @@ Which corridor a path takes decides more than how well it is polished.
 import math
 from collections.abc import Generator, Iterator
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Final
 
 import numpy as np
@@ -73,24 +74,28 @@ class Auto:
 
     name = "auto"
 
-    def __init__(self, question: Question, workshop: Workshop) -> None:
+    def __init__(self, question: Question, workshop: Workshop, first: Floats | None = None) -> None:
         self._q = question
         self._workshop = workshop
         self._lattices: list[Lattice] = []
         self._scale = scale_of(question)
         self._polish = workshop.polish(question.seed)
         self._other = workshop.polish(question.seed + 1)
-        self._trees: ConnectedTrees | None = None
         self._winner_backward = False
         self._work = 0
         self._states = 0
         self._best = math.inf
         self._share = 0
+        self._first = first
         self._turns = self._run()
 
     @property
     def states_checked(self) -> int:
         return self._states + sum(int(lattice.marks[STATES]) for lattice in self._lattices)
+
+    @cached_property
+    def _trees(self) -> ConnectedTrees:
+        return ConnectedTrees(self._q)
 
     @property
     def cost(self) -> float:
@@ -117,7 +122,9 @@ class Auto:
     # -- the schedule -----------------------------------------------------------------------
 
     def _run(self) -> Iterator[int]:
-        if not (yield from self._race()):
+        if self._first is not None:
+            self._found_first(self._first)
+        elif not (yield from self._race()):
             yield EXHAUSTED
             return
         yield from self._improve(self._polish, IDLE_MAX)
@@ -226,9 +233,9 @@ class Auto:
         """Look in other corridors, for ever."""
         first = self._winner_backward
         change_m = self._q.body.direction_change_m
+        lattice = self._lattices[0] if self._lattices else self._lattice()
         for weight in (1.3, 1.1):
             for backward in (first, not first):
-                lattice = self._lattices[0]
                 self._set_up(
                     lattice,
                     FINE,
@@ -245,12 +252,9 @@ class Auto:
                     yield from self._adopt(path_of(lattice, self._q.body))
         while True:
             if (yield from self._grow_trees(ALLOWANCE * self._best, load=False)):
-                assert self._trees is not None
                 yield from self._adopt(self._trees.path())
 
     def _grow_trees(self, bound_m: float, *, load: bool = True) -> Generator[int, None, bool]:
-        if self._trees is None:
-            self._trees = ConnectedTrees(self._q)
         self._trees.restart(bound_m)
         while True:
             status = self._trees.advance(TREE_SLICE)

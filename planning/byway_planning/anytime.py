@@ -1,0 +1,207 @@
+"""
+The anytime loop: search, check, tell, until the time is over or nothing can be gained.
+
+What runs next depends on the work done; time only ends the run. The same request with the same
+work therefore gives the same bits, wherever the slices fall.
+"""
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, field, replace
+from typing import Final
+
+import numpy as np
+import numpy.typing as npt
+
+from byway_planning.outcome import Blockage, Kind, Outcome
+from byway_planning.profile import StartTooFast
+from byway_planning.route import make_route
+from byway_planning.search.method import EXHAUSTED, FOUND, FULL
+from byway_planning.search.methods import make_method
+from byway_planning.search.paths import path_cost
+from byway_planning.search.question import Question
+from byway_planning.search.workshop import Workshop
+from byway_planning.site.snapshot import Snapshot
+from byway_planning.vehicles.body import DISC, Body
+from byway_planning.vehicles.models import Vehicle
+from byway_planning.verify import verify
+
+Floats = npt.NDArray[np.float64]
+
+#: Work between two looks at the clock: about half a millisecond.
+SLICE: Final = 120
+#: A better route is only made and checked when it gains this share of the last one's cost.
+WORTH_TELLING: Final = 0.005
+#: Time set aside for the last route, in runs of making and checking one, and at least.
+LAST_ROUTES: Final = 1.5
+LAST_S: Final = 0.0004
+
+
+@dataclass(frozen=True)
+class Wishes:
+    """How to search, and when it is good enough."""
+
+    method: str
+    sampler: str | None
+    gap_wanted: float
+    work_max: float
+
+
+@dataclass
+class Run:
+    """One call of `plan`: what was asked, and what there is so far."""
+
+    snapshot: Snapshot
+    vehicle: Vehicle
+    body: Body
+    start: Floats  # site-local
+    goal: Floats
+    left_out: frozenset[str]
+    start_speed_mps: float
+    start_curvature_per_m: float
+    seed: int
+    time_left: Callable[[], float]
+    on_better: Callable[[Outcome], None] | None
+    began_s: float = 0.0
+    bound: float = 0.0
+    best: Outcome | None = None
+    check_s: float = 0.0  # how long making and checking the last route took
+    rejected: int = 0
+    statistics: dict[str, int | float | str] = field(default_factory=dict)
+
+    def elapsed_s(self) -> float:
+        return self.began_s - self.time_left()
+
+    def outcome(self, kind: Kind, blocked_by: tuple[Blockage, ...] = ()) -> Outcome:
+        return Outcome(
+            kind,
+            self.snapshot.revision,
+            self.seed,
+            bound=self.bound,
+            total_s=self.elapsed_s(),
+            blocked_by=blocked_by,
+            statistics=self.statistics,
+        )
+
+    def offer(self, path: Floats) -> bool:
+        """Make a route of a path, check it, and keep and tell it when it is the best."""
+        before_s = self.time_left()
+        cost = path_cost(path, self.body)
+        if self.best is not None and cost >= self.best.cost:
+            return False
+        path = _continuous(path, self.body)
+        try:
+            route = make_route(path, self.vehicle, self.start_speed_mps)
+        except StartTooFast as fault:
+            return self._reject(str(fault))
+        faults = verify(
+            self.snapshot.solids(self.left_out),
+            self.vehicle,
+            path,
+            route,
+            (float(self.start[0]), float(self.start[1]), float(self.start[2])),
+            (float(self.goal[0]), float(self.goal[1]), float(self.goal[2])),
+            clearance_m=self.body.clearance_m,
+            start_speed_mps=self.start_speed_mps,
+            start_curvature_per_m=self.start_curvature_per_m,
+        )
+        now_s = self.time_left()
+        self.check_s = before_s - now_s
+        if faults:
+            return self._reject(faults[0].text)
+        x, y = self.snapshot.origin_m
+        if x or y:
+            table = route.table.copy()
+            table["x_m"] += x
+            table["y_m"] += y
+            shift = np.array([x, y, 0.0, 0.0, 0.0])
+            route = replace(route, table=table, path=route.path + shift)
+        first_s = self.best.first_s if self.best is not None else self.began_s - now_s
+        self.statistics["clearance_m"] = float(faults.clearance_m)
+        self.best = replace(
+            self.outcome("route"),
+            route=route,
+            cost=cost,
+            first_s=first_s,
+            statistics=dict(self.statistics),
+        )
+        if self.on_better is not None:
+            self.on_better(self.best)
+        return True
+
+    def _reject(self, why: str) -> bool:
+        self.rejected += 1
+        self.statistics["rejected"] = self.rejected
+        self.statistics["rejected_why"] = why
+        return False
+
+
+def search(
+    run: Run,
+    workshop: Workshop,
+    question: Question,
+    wishes: Wishes,
+    opening: Floats | None,
+    closing: Floats | None,
+) -> bool:
+    """
+    Search from the end of an opening to the start of a closing, offering what is found.
+
+    Returns:
+        False when this opening leads nowhere and another one should be tried.
+    """
+    ends = [part for part in (opening, closing) if part is not None]
+
+    def whole(path: Floats) -> Floats:
+        if not ends:
+            return path
+        parts = [part for part in (opening, path, closing) if part is not None]
+        return np.vstack(parts)
+
+    def good_enough() -> bool:
+        return run.best is not None and run.best.gap <= wishes.gap_wanted + 1e-12
+
+    direct = question.direct()
+    if direct is not None:
+        run.offer(whole(direct))
+        if good_enough():
+            return True
+    method = make_method(wishes.method, question, wishes.sampler, workshop, direct)
+    told = math.inf if run.best is None else run.best.cost
+    newest: Floats | None = None
+    work = 0
+    status = FOUND
+    while work < wishes.work_max and run.time_left() > LAST_S + LAST_ROUTES * run.check_s:
+        status = method.advance(SLICE)
+        work += SLICE
+        if status == FOUND:
+            newest = whole(method.path())
+            cost = path_cost(newest, run.body)
+            if cost < told * (1.0 - WORTH_TELLING):
+                if run.offer(newest):
+                    newest = None
+                told = cost
+                if good_enough():
+                    break
+        elif status in (EXHAUSTED, FULL):
+            break
+    run.statistics.update(
+        method=wishes.method,
+        work=work,
+        states_checked=method.states_checked,
+        slices=work // SLICE,
+    )
+    if newest is not None:
+        run.offer(newest)
+    return run.best is not None or status not in (EXHAUSTED, FULL)
+
+
+def _continuous(path: Floats, body: Body) -> Floats:
+    """Return the path with headings that do not jump by whole turns (discs turn freely)."""
+    if body.kind == DISC or len(path) == 1:
+        return path
+    ends = path[:-1, 2] + path[:-1, 3] * path[:-1, 4]
+    turns = np.round((path[1:, 2] - ends) / (2.0 * math.pi))
+    out = path.copy()
+    out[1:, 2] -= 2.0 * math.pi * np.cumsum(turns)
+    return out
