@@ -97,7 +97,7 @@ def forget_what_expired(expiries: Expiries, now: Instant) -> dict[str, list[str]
 CANARIES = {
     "a batch is lost with its surveyor": Canary(
         *(Surveying, "_forsake", lose_the_batch),
-        "every number taken in is decided once|not settled",
+        "decided once|what is pending is known|not settled",
     ),
     "obstacles never expire": Canary(
         Expiries, "pop_due", forget_what_expired, "obstacles that have expired are there"
