@@ -1,8 +1,11 @@
 """The rules of a table: a good one passes, and every kind of fault is found by its code."""
 
+import ast
+import inspect
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -451,3 +454,29 @@ def test_the_vehicles_own_clearance_is_the_one_that_counts_by_default() -> None:
         assert [fault.code for fault in faults] == expected
         if not expected:
             assert faults.clearance_m == pytest.approx(0.03, abs=2e-6)
+
+
+# -- independence --------------------------------------------------------------------
+
+
+def test_the_check_shares_no_code_with_what_it_checks() -> None:
+    """A mistake in the search, its curves, its collisions or its tables must not be in both."""
+    allowed = {
+        "byway_planning.kernel",
+        "byway_planning.site.solids",
+        "byway_planning.vehicles.body",
+    }
+    files = sorted(Path(inspect.getfile(verify)).parent.glob("*.py"))
+    assert len(files) > 5
+    for file in files:
+        for node in ast.walk(ast.parse(file.read_text())):
+            named: list[str] = []
+            if isinstance(node, ast.ImportFrom):
+                assert node.level == 0
+                named = [node.module or ""]
+            elif isinstance(node, ast.Import):
+                named = [alias.name for alias in node.names]
+            for name in named:
+                ours = name.startswith("byway_planning")
+                inside = name.startswith("byway_planning.verify")
+                assert not ours or inside or name in allowed, f"{file.name} imports {name}"

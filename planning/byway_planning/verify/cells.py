@@ -12,7 +12,7 @@ import numpy as np
 
 from byway_planning.kernel import kernel
 from byway_planning.site.solids import ALL_CELLS, NO_CELLS, Solids
-from byway_planning.verify.body import Hull, Notes, edge_if_near
+from byway_planning.verify.body import Hull, Notes, edge_if_near, point_distance
 
 
 @kernel()
@@ -39,10 +39,10 @@ def _run_distance(
     qx = solids.corner_x_m + run[3] * solids.cell_m - x
     qy = solids.corner_y_m + run[2] * solids.cell_m - y
     ax, ay, bx, by = c * px + s * py, c * py - s * px, c * qx + s * qy, c * qy - s * qx
-    # an edge looks after its second end only; a run has no edge before it
     best = edge_if_near(hull, notes.traces, bend, box, (ax, ay, bx, by), care, standing)
-    first = (ax, ay, ax, ay)
-    return min(best, edge_if_near(hull, notes.traces, bend, box, first, min(care, best), standing))
+    # an edge looks after its second end only, and a run has no edge before it
+    skin = hull.skin_m
+    return min(best, point_distance(hull, bend, ax, ay, min(care, best) + skin) - skin)
 
 
 @kernel()

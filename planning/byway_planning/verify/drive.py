@@ -24,7 +24,7 @@ STRETCH_RAD: Final = 0.6  # arcs below a right angle, with boxes that fit them
 PART_M: Final = 12.0
 SAME_ARC: Final = 1e-8  # m and rad: rows closer than this to an arc lie on it
 PLACE_M: Final = 1e-3  # how closely the place of a fault is told
-CREEP_M: Final = 5e-3  # steps out of an overlap; its running maximum is taken at these
+CREEP_M: Final = 0.02  # steps out of an overlap; the running maximum is taken at their ends
 FALL_M: Final = 1e-6  # by so much may the clearance fall on the way out
 BULGE_M: Final = 0.3  # arcs between rows leave the box of the rows by less
 
