@@ -8,11 +8,12 @@ work therefore gives the same bits, wherever the slices fall.
 import math
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
-from typing import Final
+from typing import Final, cast
 
 import numpy as np
 import numpy.typing as npt
 
+from byway_planning.bounds import LowerBound, Outgrown, outgrown
 from byway_planning.outcome import Blockage, Kind, Outcome
 from byway_planning.profile import StartTooFast
 from byway_planning.route import make_route
@@ -35,6 +36,11 @@ WORTH_TELLING: Final = 0.005
 #: Time set aside for the last route, in runs of making and checking one, and at least.
 LAST_ROUTES: Final = 1.5
 LAST_S: Final = 0.0004
+#: Work on the lower bound beside each slice of search, and in all: about 0.4 and 20 ms.
+BOUND_SLICE: Final = 40_000
+BOUND_WORK_MAX: Final = 2_000_000
+#: A cost this near to the bound is the bound.
+ROUNDING_M: Final = 1e-9
 
 
 @dataclass(frozen=True)
@@ -62,8 +68,11 @@ class Run:
     seed: int
     time_left: Callable[[], float]
     on_better: Callable[[Outcome], None] | None
+    start_clearance_m: float = math.inf  # less than the hard clearance: see LowerBound
     began_s: float = 0.0
     bound: float = 0.0
+    bounding: LowerBound | None = None  # what raises the bound; made when there is a route
+    bound_work: int = 0
     best: Outcome | None = None
     check_s: float = 0.0  # how long making and checking the last route took
     rejected: int = 0
@@ -87,7 +96,7 @@ class Run:
         """Make a route of a path, check it, and keep and tell it when it is the best."""
         before_s = self.time_left()
         cost = path_cost(path, self.body)
-        if self.best is not None and cost >= self.best.cost:
+        if cost >= self.best_cost:
             return False
         path = _continuous(path, self.body)
         try:
@@ -129,6 +138,49 @@ class Run:
             self.on_better(self.best)
         return True
 
+    def raise_bound(self) -> None:
+        """Work a little on the lower bound, in the units of `bounds`."""
+        if self.bound_work >= BOUND_WORK_MAX:
+            return
+        if self.bounding is None:
+            self.bounding = self._new_bounding()
+        self.bound_work += BOUND_SLICE
+        if self.bounding.advance(self.bound_work):
+            self.bound_work = BOUND_WORK_MAX
+        # A route may end within the tolerance of the check, and so undercut the bound by as much.
+        self.bound = max(self.bound, min(self.bounding.bound_m, self.best_cost))
+
+    def _new_bounding(self) -> LowerBound:
+        kept, body = self.snapshot.kept, self.body
+        key = ("outgrown", body.inner_radius_m + body.clearance_m)
+        if key not in kept:
+            kept[key] = outgrown(self.snapshot.solids(), key[1])
+        solids = self.snapshot.solids(self.left_out)
+        return LowerBound(
+            solids,
+            body,
+            self.start,
+            self.goal,
+            ground=cast(Outgrown, kept[key]),
+            start_clearance_m=self.start_clearance_m,
+        )
+
+    @property
+    def best_cost(self) -> float:
+        """Cost of the best route so far; inf without one."""
+        return math.inf if self.best is None else self.best.cost
+
+    def answer(self) -> Outcome:
+        """Return the best route with what is known by now, or that nothing was found."""
+        if self.best is None:
+            return self.outcome("not_found")
+        return replace(
+            self.best,
+            bound=self.bound,
+            total_s=self.elapsed_s(),
+            statistics=dict(self.statistics),
+        )
+
     def _reject(self, why: str) -> bool:
         self.rejected += 1
         self.statistics["rejected"] = self.rejected
@@ -159,7 +211,7 @@ def search(
         return np.vstack(parts)
 
     def good_enough() -> bool:
-        return run.best is not None and run.best.gap <= wishes.gap_wanted + 1e-12
+        return run.best_cost - run.bound <= max(wishes.gap_wanted * run.best_cost, ROUNDING_M)
 
     direct = question.direct()
     if direct is not None:
@@ -167,11 +219,15 @@ def search(
         if good_enough():
             return True
     method = make_method(wishes.method, question, wishes.sampler, workshop, direct)
-    told = math.inf if run.best is None else run.best.cost
+    told = run.best_cost
     newest: Floats | None = None
     work = 0
     status = FOUND
     while work < wishes.work_max and run.time_left() > LAST_S + LAST_ROUTES * run.check_s:
+        if run.best is not None:
+            run.raise_bound()
+            if good_enough():
+                break
         status = method.advance(SLICE)
         work += SLICE
         if status == FOUND:

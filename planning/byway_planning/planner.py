@@ -5,13 +5,13 @@ a route has to begin and end. The search itself is in `anytime`.
 
 import math
 from collections.abc import Callable, Sequence
-from dataclasses import replace
 from typing import cast
 
 import numpy as np
 import numpy.typing as npt
 
 from byway_planning.anytime import Run, Wishes, search
+from byway_planning.bounds import curve_bound
 from byway_planning.collision import CONTACT_M
 from byway_planning.kernel import ensure_warm
 from byway_planning.outcome import Blockage, Outcome
@@ -120,6 +120,7 @@ def _planned(run: Run, workshop: Workshop, wishes: Wishes) -> Outcome:
         blocked = _blockages(run, run.start, run.vehicle.start_overlap_m)
         if blocked:
             return run.outcome("start_blocked", blocked)
+        run.start_clearance_m = min(0.0, run.body.clearance_m) - run.vehicle.start_overlap_m
     openings: list[Floats | None] = [None]
     if run.start_speed_mps != 0.0:
         openings = list(_rolling(run, near))
@@ -129,7 +130,7 @@ def _planned(run: Run, workshop: Workshop, wishes: Wishes) -> Outcome:
         openings = list(leaving(scene, run.body, run.start, run.vehicle.start_overlap_m))
         if not openings:
             return run.outcome("start_blocked", _blockages(run, run.start, -math.inf))
-    run.bound = float(direct_length_kernel(run.body, run.start, run.goal))
+    run.bound = curve_bound(run.body, run.start, run.goal)
     goal = run.goal if closing is None else _read_only(closing[0, :3])
     guide = guide_for(_ground(run), workshop.floods, run.body, run.start, goal)
     if not guide.reached:
@@ -139,9 +140,7 @@ def _planned(run: Run, workshop: Workshop, wishes: Wishes) -> Outcome:
         question = Question(scene, run.body, start, goal, run.seed, guide)
         if search(run, workshop, question, wishes, opening, closing):
             break
-    if run.best is None:
-        return run.outcome("not_found")
-    return replace(run.best, total_s=run.elapsed_s(), statistics=dict(run.statistics))
+    return run.answer()
 
 
 def _is_near(run: Run, pose: Floats) -> bool:

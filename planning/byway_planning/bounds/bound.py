@@ -151,7 +151,7 @@ class LowerBound:
         self._body = body
         poses = np.array([start, goal], np.float64)
         poses.flags.writeable = False
-        self._any_m, self._forward_m, self._reverse_m = curve_lengths_m(body, poses)
+        self._lengths_m = curve_lengths_m(body, poses)
         kept_m = min(body.clearance_m, start_clearance_m) - CHECKED_M
         discs = [disc for disc in passing_discs(body) if disc[2] + kept_m >= RADIUS_M_MIN]
         if ground is None:
@@ -182,13 +182,27 @@ class LowerBound:
     def bound_m(self) -> float:
         """The bound so far; inf where a disc has no way, so that there is no route."""
         least_m = max((way.least_m for way in self._ways), default=0.0)
-        if self._body.kind != CAR:
-            return max(self._any_m, least_m)
-        return min(
-            max(self._forward_m, least_m),
-            max(self._reverse_m, least_m) * self._body.reverse_factor,
-            max(self._any_m, least_m) + self._body.direction_change_m,
-        )
+        return _cost_bound(self._body, self._lengths_m, least_m)
+
+
+def curve_bound(
+    body: Body, start: Sequence[float] | Floats, goal: Sequence[float] | Floats
+) -> float:
+    """Return what the curves alone say, whatever stands in the way: the bound before any work."""
+    poses = np.array([start, goal], np.float64)
+    poses.flags.writeable = False
+    return _cost_bound(body, curve_lengths_m(body, poses), 0.0)
+
+
+def _cost_bound(body: Body, lengths_m: tuple[float, float, float], least_m: float) -> float:
+    any_m, forward_m, reverse_m = lengths_m
+    if body.kind != CAR:
+        return max(any_m, least_m)
+    return min(
+        max(forward_m, least_m),
+        max(reverse_m, least_m) * body.reverse_factor,
+        max(any_m, least_m) + body.direction_change_m,
+    )
 
 
 def lower_bound(
