@@ -150,13 +150,9 @@ def _creep_out(
             _report(found, s_m, end, distance - depth, kind, index)
             if distance - depth < top - FALL_M:
                 return BLOCKED, 0.0
-            kept, kind, index = stretch_clearance(
-                solids, notes, near, body, end, (0.0, 0.0), need_m
-            )
+            _, kind, index = stretch_clearance(solids, notes, near, body, end, (0.0, 0.0), need_m)
             if kind == NOTHING:
                 return FREE, s_m
-            if kept >= 0.0:
-                found[0] = min(found[0], kept)
             reached, _, _ = stretch_clearance(solids, notes, near, drawn_in, end, (0.0, 0.0), care)
             top = max(top, reached - depth)
     found[6], found[7] = kind, index

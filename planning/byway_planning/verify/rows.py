@@ -52,8 +52,6 @@ def _check_interval(
     gear = rows[i, 6]
     v0, v1 = rows[i, 5], rows[i + 1, 5]
     dt = rows[i + 1, 0] - rows[i, 0]
-    if not dt > 0.0:
-        _note(first, values, TIME, i, dt)
     if abs(gear) != 1.0 or v0 * gear < 0.0 or v1 * gear < 0.0:
         _note(first, values, GEAR, i, gear)
     if gear < 0.0 and kind != CAR:
@@ -63,14 +61,17 @@ def _check_interval(
     top = limits.speed_mps_max if gear > 0.0 else limits.reverse_speed_mps_max
     if max(abs(v0), abs(v1)) > top * (1.0 + OVER_RATIO):
         _note(first, values, SPEED, i, max(abs(v0), abs(v1)))
+    sideways = max(v0 * v0, v1 * v1) * abs(rows[i, 4])
+    if sideways > limits.lateral_acceleration_mps2_max * (1.0 + OVER_RATIO):
+        _note(first, values, LATERAL, i, sideways)
+    if not dt > 0.0:
+        _note(first, values, TIME, i, dt)
+        return
     gain = abs(v1) - abs(v0)
     if gain > limits.acceleration_mps2_max * dt * (1.0 + OVER_RATIO) + SPEED_MPS:
         _note(first, values, ACCELERATION, i, gain / dt)
     if -gain > limits.deceleration_mps2_max * dt * (1.0 + OVER_RATIO) + SPEED_MPS:
         _note(first, values, BRAKING, i, -gain / dt)
-    sideways = max(v0 * v0, v1 * v1) * abs(rows[i, 4])
-    if sideways > limits.lateral_acceleration_mps2_max * (1.0 + OVER_RATIO):
-        _note(first, values, LATERAL, i, sideways)
 
 
 @kernel()
