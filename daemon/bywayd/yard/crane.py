@@ -19,15 +19,17 @@ from bywayd.yard.unit import Pack, Unit
 
 FIRST_S: Final = 2.0
 EVERY_S: Final = (1.5, 3.5)
+#: After no place was found.
+AGAIN_S: Final = 0.4
 STAYS_S: Final = (9.0, 15.0)
 PACKS_MAX: Final = 3
 #: The widest vehicle is 2.3 m wide and keeps 0.15 m on either side; it needs room to turn as well.
-PASSAGE_M: Final = 3.3
+PASSAGE_M: Final = 3.0
 CLAIM_GAP_M: Final = 2.0
-STATION_GAP_M: Final = 2.5
+STATION_GAP_M: Final = 2.0
 PACKS_GAP_M: Final = 7.0
 #: How far along its route a vehicle finds the pack, so that it notices well before it must stop.
-AHEAD_M: Final = 9.0
+AHEAD_M: Final = 7.5
 
 
 class Crane:
@@ -47,9 +49,10 @@ class Crane:
         gone = [pack for pack in self.packs if now_s >= pack.gone_s]
         put: list[Pack] = []
         if now_s >= self._next_s and len(self.packs) < PACKS_MAX:
-            self._next_s = now_s + self._dice.uniform(*EVERY_S)
             ring_m = self._place(ground)
+            self._next_s = now_s + AGAIN_S
             if ring_m is not None:
+                self._next_s = now_s + self._dice.uniform(*EVERY_S)
                 self.put_down += 1
                 mass = Mass(f"pack-{self.put_down}", ring_m)
                 put.append(Pack(mass, math.inf, now_s + self._dice.uniform(*STAYS_S)))

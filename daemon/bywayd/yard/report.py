@@ -17,7 +17,7 @@ if TYPE_CHECKING:
     from rich.table import Table
 
 #: The three vehicles need about twelve seconds a delivery between them.
-SECONDS_PER_DELIVERY_MAX: Final = 15.0
+SECONDS_PER_DELIVERY_MAX: Final = 20.0
 
 
 @dataclass(frozen=True)

@@ -64,13 +64,15 @@ class Round:
     """
     The day of one unit.
 
-    `deliveries` are pairs of stations, load and unload, driven one after the other and then
-    from the beginning again. No station is shared, so a goal is never taken for long.
+    It begins loaded, on its way to where the first delivery is unloaded. `deliveries` are pairs
+    of stations, load and unload, driven one after the other and then from the beginning again.
+    No two units share a station, so a goal is never taken for long.
     """
 
     unit: str
     vehicle: str
     rank: int  # who gives way in a stand-off: the higher number
+    begins: Pose
     deliveries: tuple[tuple[Station, Station], ...]
 
     @property
@@ -79,25 +81,25 @@ class Round:
         return tuple(station for delivery in self.deliveries for station in delivery)
 
 
-_SHED_1_EAST: Final = Station("shed-1 east", (49.0, 32.0, SOUTH))
+_SHED_2_SOUTH: Final = Station("shed-2 south", (35.0, 13.4, EAST))
 
 ROUNDS: Final = (
     Round(
-        *("flatbed-1", "flatbed", 0),
+        *("flatbed-1", "flatbed", 0, (46.0, 11.5, EAST)),
         (
-            (_SHED_1_EAST, Station("ramp 1", (58.0, 7.2, NORTH))),
-            (_SHED_1_EAST, Station("ramp 2", (68.0, 7.2, NORTH))),
+            (_SHED_2_SOUTH, Station("ramp 1", (58.0, 7.2, NORTH))),
+            (_SHED_2_SOUTH, Station("ramp 2", (68.0, 7.2, NORTH))),
         ),
     ),
     Round(
-        *("loader-2", "loader", 1),
+        *("loader-2", "loader", 1, (51.0, 40.5, EAST)),
         (
             (Station("shed-2 east", (50.6, 19.0, WEST)), Station("saw front", (61.5, 37.9, EAST))),
             (Station("timber 2", (54.9, 26.8, EAST)), Station("timber 1", (63.0, 14.4, NORTH))),
         ),
     ),
     Round(
-        *("tug-3", "tug", 2),
+        *("tug-3", "tug", 2, (41.0, 39.5, EAST)),
         (
             (Station("kiln-2", (25.5, 42.4, NORTH)), Station("sorting", (56.6, 34.0, EAST))),
             (Station("poles", (50.4, 48.9, WEST)), Station("shed-1 north", (38.0, 38.0, WEST))),
@@ -108,7 +110,9 @@ ROUNDS: Final = (
 #: Corners out of everybody's way, for a unit that has waited too long.
 ASIDE: Final = (
     Station("aside west", (14.0, 11.0, EAST)),
-    Station("aside south", (30.0, 10.0, EAST)),
-    Station("aside north", (52.0, 54.0, SOUTH)),
+    Station("aside south", (26.0, 9.0, EAST)),
+    Station("aside aisle", (33.0, 26.0, EAST)),
+    Station("aside lane", (36.0, 41.0, EAST)),
+    Station("aside north", (55.0, 54.0, SOUTH)),
     Station("aside east", (76.5, 12.0, NORTH)),
 )

@@ -35,8 +35,9 @@ SAVING_M: Final = 0.4
 PATIENCE_S: Final = 1.6
 PATIENCE_PER_RANK_S: Final = 0.5
 #: After so many questions without a route a unit of rank 0 makes way; lower ranks sooner.
-FAILURES_MAX: Final = 9
-FAILURES_PER_RANK: Final = 3
+FAILURES_MAX: Final = 6
+FAILURES_PER_RANK: Final = 2
+ASIDE_CHOICE: Final = 3
 
 
 @dataclass(frozen=True)
@@ -97,14 +98,14 @@ class Unit:
     ) -> None:
         self.name, self.vehicle = round_.unit, round_.vehicle
         self.stations = round_.stations
-        self.driver = Driver(round_.unit, vehicle, round_.stations[0].pose, ground)
+        self.driver = Driver(round_.unit, vehicle, round_.begins, ground)
         self.tally = Tally()
         self._rank = round_.rank
         self._reverse_factor = float(vehicle["reverse_factor"])
         self._direction_change_m = float(vehicle["direction_change_m"])
         self._ground = ground
         self._dice = random.Random(seed)
-        # The round begins loaded, at the first station.
+        # The round begins loaded, so with the second station.
         self._stations = itertools.cycle(round_.stations)
         next(self._stations)
         self.goal = next(self._stations)
@@ -249,4 +250,7 @@ class Unit:
             self._aside = None
             return
         self.tally.made_way += 1
-        self._aside = self._dice.choice(ASIDE)
+        x_m, y_m, _ = self.driver.pose
+        nearest = sorted(ASIDE, key=lambda place: math.dist(place.pose[:2], (x_m, y_m)))
+        # Not always the same: two that make way must not meet there again and again.
+        self._aside = self._dice.choice(nearest[:ASIDE_CHOICE])

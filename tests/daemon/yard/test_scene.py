@@ -8,12 +8,13 @@ import shapely
 
 from bywayd.outlines import outline_of, placed
 from bywayd.settings import load
-from bywayd.yard.scene import ASIDE, BUILDINGS, LIMITS_M, ROUNDS, STACKS
+from bywayd.yard.scene import ASIDE, BUILDINGS, LIMITS_M, ROUNDS, STACKS, Station
 from bywayd.yard.shapes import Mass, distance_m
 
 VEHICLES = {name: vehicle.arguments() for name, vehicle in load().vehicles.items()}
 OUTLINES = {round_.unit: outline_of(VEHICLES[round_.vehicle]) for round_ in ROUNDS}
-PLACES = [(r.unit, s) for r in ROUNDS for s in (*r.stations, *ASIDE)]
+BEGINS = {round_.unit: Station("begin", round_.begins) for round_ in ROUNDS}
+PLACES = [(r.unit, s) for r in ROUNDS for s in (BEGINS[r.unit], *r.stations, *ASIDE)]
 
 
 def solid(mass: Mass) -> shapely.Geometry:
@@ -22,7 +23,7 @@ def solid(mass: Mass) -> shapely.Geometry:
 
 
 @pytest.mark.parametrize(("unit", "station"), PLACES, ids=lambda p: getattr(p, "name", p))
-def test_a_vehicle_that_stands_at_its_place_has_room(unit: str, station: object) -> None:
+def test_a_vehicle_that_stands_at_its_place_has_room(unit: str, station: Station) -> None:
     ring = shapely.Polygon(placed(OUTLINES[unit], station.pose))
     assert shapely.box(*LIMITS_M).buffer(-0.5).contains(ring)
     assert min(ring.distance(solid(mass)) for mass in (*BUILDINGS, *STACKS)) > 0.45
@@ -33,6 +34,12 @@ def test_stations_of_different_units_do_not_meet() -> None:
     rings = [(r.unit, placed(OUTLINES[r.unit], s.pose)) for r in ROUNDS for s in r.stations]
     for (a, ring_a), (b, ring_b) in itertools.combinations(rings, 2):
         assert a == b or distance_m(ring_a, ring_b) > 1.0
+
+
+def test_units_begin_apart() -> None:
+    rings = [placed(OUTLINES[unit], begin.pose) for unit, begin in BEGINS.items()]
+    for a, b in itertools.combinations(rings, 2):
+        assert distance_m(a, b) > 1.0
 
 
 def test_nothing_stands_in_anything() -> None:

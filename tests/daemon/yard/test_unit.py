@@ -22,7 +22,7 @@ class Run:
 
     def __init__(self, rank: int = 0) -> None:
         self.ground = Ground()
-        round_ = Round("cart-1", "cart", rank, ((HERE, THERE), (THERE, BACK)))
+        round_ = Round("cart-1", "cart", rank, HERE.pose, ((HERE, THERE), (THERE, BACK)))
         self.unit = Unit(round_, CART, self.ground, seed=1)
         self.packs: list[Pack] = []
         self.now_s = 0.0
