@@ -34,7 +34,7 @@ from byway_planning.vehicles.body import DISC
 
 Floats = npt.NDArray[np.float64]
 
-#: cell_m, headings, arc_m of the lattices, for a turning radius of 2 to 6 m.
+#: cell_m, headings, arc_m of the lattices, for a turning radius of 5 m.
 COARSE: Final = (1.0, 48, 1.6)
 FINE: Final = (0.5, 72, 0.8)
 FINEST: Final = (0.3, 96, 0.4)
@@ -46,6 +46,10 @@ FINER_AFTER: Final = 1500
 #: Work of one slice stays below 2 ms.
 SLICE_MAX: Final = 300
 IDLE_MAX: Final = 400
+#: The first path is polished so long before anything else is looked at.
+FIRST_IDLE_MAX: Final = 400
+#: Lattices and weights that look for other corridors, from both ends each.
+OTHERS: Final = ((FINE, 1.3), (FINE, 1.1))
 #: How much worse than the best an alternative may be before it is polished.
 ALLOWANCE: Final = 1.10
 CHANGE_M: Final = 0.5  # a change of direction in the race; the first path should have few
@@ -58,7 +62,7 @@ def scale_of(question: Question) -> float:
     if question.body.kind == DISC:
         return min(max(question.body.inner_radius_m / 0.6, 0.3), 3.0)
     radius = question.body.turn_radius_m
-    return min(1.0, radius / 2.0) * max(1.0, radius / 6.0)
+    return min(max(radius / 5.0, 0.4), 3.0)
 
 
 @dataclass
@@ -127,7 +131,7 @@ class Auto:
         elif not (yield from self._race()):
             yield EXHAUSTED
             return
-        yield from self._improve(self._polish, IDLE_MAX)
+        yield from self._improve(self._polish, FIRST_IDLE_MAX)
         others = self._others()
         while True:
             share = max(TURN_SLICE, self._work // 20)
@@ -234,11 +238,11 @@ class Auto:
         first = self._winner_backward
         change_m = self._q.body.direction_change_m
         lattice = self._lattices[0] if self._lattices else self._lattice()
-        for weight in (1.3, 1.1):
+        for size, weight in OTHERS:
             for backward in (first, not first):
                 self._set_up(
                     lattice,
-                    FINE,
+                    size,
                     weight,
                     backward=backward,
                     change_m=change_m,
