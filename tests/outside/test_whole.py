@@ -132,3 +132,19 @@ def test_the_demo_runs_reports_and_draws(tmp_path: Path) -> None:
     assert all(unit["driven_m"] > 1.0 for unit in told["units"].values())
     assert picture.read_bytes().startswith(b"\x89PNG")
     assert "not a safety function" in " ".join(found.stderr.split())
+
+
+@pytest.mark.timeout(300)
+def test_a_demo_that_is_cut_short_still_reports(tmp_path: Path) -> None:
+    arguments = ["demo", "--seconds", "100", "--picture", str(tmp_path / "yard.png")]
+    command = [sys.executable, "-m", "bywayd", *arguments]
+    with subprocess.Popen(command, stdout=subprocess.PIPE, text=True) as process:
+        assert process.stdout is not None
+        for line in process.stdout:
+            if "of 100 s" in line:
+                process.send_signal(signal.SIGINT)
+                break
+        rest = process.stdout.read()
+        assert process.wait(30) == 0, rest
+    assert "All was well." in rest
+    assert (tmp_path / "yard.png").exists()

@@ -3,6 +3,7 @@
 import contextlib
 import json
 import os
+import signal
 import subprocess
 import sys
 import tempfile
@@ -64,8 +65,13 @@ def _daemon(folder: Path) -> Iterator[subprocess.Popen[bytes]]:
         "BYWAY_WORKERS__COUNT": str(max(WORKERS_MIN, len(os.sched_getaffinity(0)) - 1)),
     }
     with (folder / "daemon.log").open("wb") as log:
+        # Ctrl-C goes to a whole process group; the daemon has to outlive the yard.
         process = subprocess.Popen(
-            [sys.executable, "-m", "bywayd", "serve"], env=environment, stdout=log, stderr=log
+            [sys.executable, "-m", "bywayd", "serve"],
+            env=environment,
+            stdout=log,
+            stderr=log,
+            start_new_session=True,
         )
     try:
         yield process
@@ -108,7 +114,7 @@ def _run_yard(
     )
     report: dict[str, Any] | None = None
     try:
-        with _Progress(out, seconds) as progress:
+        with _cutting_short(yard), _Progress(out, seconds) as progress:
             for line in _lines_of(yard):
                 if "progress" in line:
                     progress.show(line["progress"])
@@ -123,6 +129,21 @@ def _run_yard(
     if report is None:
         fail(Status.NO, f"the simulated yard ended with status {yard.returncode}, without a report")
     return report
+
+
+@contextlib.contextmanager
+def _cutting_short(yard: subprocess.Popen[bytes]) -> Iterator[None]:
+    """Pass SIGINT and SIGTERM on to the yard, which then reports what there is."""
+
+    def forward(number: int, _: object) -> None:
+        yard.send_signal(number)
+
+    before = {n: signal.signal(n, forward) for n in (signal.SIGINT, signal.SIGTERM)}
+    try:
+        yield
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
 
 
 def _lines_of(yard: subprocess.Popen[bytes]) -> Iterator[dict[str, Any]]:
