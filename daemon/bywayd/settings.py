@@ -101,6 +101,11 @@ class WorkersSection(Section):
     cores: tuple[Annotated[int, Field(ge=0, le=4095)], ...] = ()
 
 
+class AnswersSection(Section):
+    margin_s: Annotated[float, Field(ge=0.0005, le=1.0)] = 0.002
+    budget_s_max: Annotated[float, Field(gt=0.0, le=limits.budget_s_max)] = limits.budget_s_max
+
+
 class LogSection(Section):
     level: Literal["debug", "info", "warning", "error"] = "info"
     form: Literal["auto", "human", "json"] = "auto"
@@ -122,6 +127,7 @@ class Settings(BaseSettings):
     layers: dict[Name, LayerSection] = Field(default_factory=dict)
     sockets: SocketsSection
     workers: WorkersSection = WorkersSection()
+    answers: AnswersSection = AnswersSection()
     log: LogSection = LogSection()
     vehicles: dict[Name, Annotated[VehicleSection, Field(discriminator="model")]] = Field(
         min_length=1
@@ -179,7 +185,7 @@ def load(file: Path | None = None) -> Settings:
     except tomllib.TOMLDecodeError as fault:
         raise BadSettings([Mistake(str(file), "", f"not TOML: {fault}")]) from None
     merged = {**embedded, **told}
-    for section in {"site", "sockets", "workers", "log"} & embedded.keys() & told.keys():
+    for section in {"site", "sockets", "workers", "answers", "log"} & embedded.keys() & told.keys():
         if isinstance(told[section], dict):
             merged[section] = {**embedded[section], **told[section]}
     mistakes = _unknown_variables()
@@ -318,6 +324,7 @@ def _known_keys(section: Location, merged: Mapping[str, Any]) -> list[str]:
         "layers": LayerSection,
         "sockets": SocketsSection,
         "workers": WorkersSection,
+        "answers": AnswersSection,
         "log": LogSection,
     }
     found = sections.get(str(section[0]))

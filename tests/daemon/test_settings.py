@@ -154,6 +154,8 @@ count = 3
         ("[sockets]\nevents = ['tcp://127.0.0.1:7461']", "stands for more than one socket"),
         ("[workers]\ncores = [0, -1]", ":2: workers.cores[1]: must be greater than or equal to 0"),
         ("[site]\norigin_m = [1, 2, 3]", ":2: site.origin_m: the list should have at most 2"),
+        ("[answers]\nmargin_s = 2", ":2: answers.margin_s: must be less than or equal to 1"),
+        ("[answers]\nbudget_s_max = 99", ":2: answers.budget_s_max: must be less than or equal"),
         ("[site]\ncell_m = 0.001", ":2: site.cell_m: must be greater than or equal to 0.02"),
     ],
 )

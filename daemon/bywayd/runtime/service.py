@@ -173,6 +173,8 @@ def _front_settings(settings: Settings, outside: Outside) -> FrontSettings:
         events_endpoints=tuple(outside.endpoints["events"]),
         software=f"bywayd {metadata.version('byway')}",
         workers=settings.workers.count,
+        margin_s=settings.answers.margin_s,
+        budget_max_s=settings.answers.budget_s_max,
         worker_silence_s=worker_silence_s,
         worker_grace_s=worker_grace_s,
         surveyor_silence_s=surveyor_silence_s,
