@@ -21,10 +21,9 @@ RuntimeError: no peer has anything to do with it.
 """
 
 from collections.abc import Mapping
-from typing import TYPE_CHECKING, Any, ClassVar, Final, TypeAlias
+from typing import Any, ClassVar, Final, TypeAlias
 
-if TYPE_CHECKING:
-    from byway.frames import Header
+from byway.header import Header
 
 Facts: TypeAlias = Mapping[str, Any]
 
@@ -62,10 +61,10 @@ class SenderFault(BywayError):
     What was sent cannot be served; sending it again changes nothing.
 
     Attributes:
-        header: Of the message at fault, a `frames.Header`, where that much could be decoded.
+        header: Of the message at fault, a `Header`, where that much could be decoded.
     """
 
-    header: "Header | None" = None
+    header: Header | None = None
 
 
 class BadMessage(SenderFault):
