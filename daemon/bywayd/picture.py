@@ -41,11 +41,15 @@ _WIDTH_INCHES: Final = 11.0
 _EDGE_RATIO: Final = 0.03
 
 
-def box_around(points_m: Iterable[Sequence[float]], margin_m: float) -> Box:
-    """Return the box around some points, grown on all sides."""
+def box_around(
+    points_m: Iterable[Sequence[float]], margin_m: float, within_m: Box | None = None
+) -> Box:
+    """Return the box around some points, grown on all sides, but not beyond another box."""
     points = np.array(list(points_m), np.float64)
-    x_m_min, y_m_min = (points.min(axis=0) - margin_m).tolist()
-    x_m_max, y_m_max = (points.max(axis=0) + margin_m).tolist()
+    low, high = points.min(axis=0) - margin_m, points.max(axis=0) + margin_m
+    if within_m is not None:
+        low, high = np.maximum(low, within_m[:2]), np.minimum(high, within_m[2:])
+    (x_m_min, y_m_min), (x_m_max, y_m_max) = low.tolist(), high.tolist()
     return x_m_min, y_m_min, x_m_max, y_m_max
 
 
@@ -218,7 +222,7 @@ class Plan:
         box = {"boxstyle": "round,pad=0.15", "facecolor": PAPER, "edgecolor": "none", "alpha": 0.85}
         self._axes.text(
             place_m[0], place_m[1], text, fontsize=7, color=INK, ha="center", va="center",
-            zorder=9, bbox=box,
+            zorder=9, bbox=box, clip_on=True,
         )  # fmt: skip
 
     def _arrows(self, points: Points, ink: str) -> None:

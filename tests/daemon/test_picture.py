@@ -98,3 +98,9 @@ def test_masses_vehicles_and_goals_are_drawn(plan: picture.Plan, tmp_path: Path)
 def test_the_suffix_says_the_format(plan: picture.Plan, tmp_path: Path, suffix: str) -> None:
     plan.save(tmp_path / f"x.{suffix}")
     assert (tmp_path / f"x.{suffix}").read_bytes()[:5] in (b"<?xml", b"%PDF-")
+
+
+def test_the_box_around_what_is_shown_stays_within_the_site() -> None:
+    points = [(0.0, 0.0), (30.0, 10.0)]
+    assert picture.box_around(points, 5.0) == (-5.0, -5.0, 35.0, 15.0)
+    assert picture.box_around(points, 5.0, (-2.0, -9.0, 32.0, 99.0)) == (-2.0, -5.0, 32.0, 15.0)

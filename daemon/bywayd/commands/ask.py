@@ -169,7 +169,8 @@ def _draw(
     shown = [start[:2], goal[:2]]
     if table is not None:
         shown += list(zip(table["x_m"].tolist(), table["y_m"].tolist(), strict=True))
-    box_m = site.limits_m or box_around(shown, margin_m=15.0)
+    # A large site would leave the route a dot in it.
+    box_m = box_around(shown, margin_m=15.0, within_m=site.limits_m)
     notes = [f"{answer.kind}, revision {answer.revision}, seed {answer.seed}"]
     if answer.route is not None:
         notes.append(

@@ -77,7 +77,7 @@ def _print_settings(settings: "Settings", vehicles: dict[str, Any]) -> None:
         )
     out.print(table)
     limits_m = settings.site.limits_m
-    ground = "without limits" if limits_m is None else f"limits {list(limits_m)} m"
+    ground = "250 m around its origin" if limits_m is None else f"limits {list(limits_m)} m"
     out.print(f"site: cells of {settings.site.cell_m} m, {ground}")
     out.print(f"workers: {settings.workers.count}, sockets: {', '.join(settings.sockets.requests)}")
     out.print("The settings are good.")

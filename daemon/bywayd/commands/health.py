@@ -44,7 +44,8 @@ def _print(record: "HealthIs") -> None:
     from rich.table import Table
 
     out = console()
-    workers = ", ".join(f"{count} {state}" for state, count in sorted(record.workers.items()))
+    crew = sorted(record.workers.items())
+    workers = ", ".join(f"{count} {state}" for state, count in crew if count)
     out.print(
         f"[bold]{record.state}[/bold], up {record.uptime_s:.0f} s, revision {record.revision}, "
         f"{record.planning} planning, {record.waiting} waiting, workers: {workers}"
@@ -63,9 +64,11 @@ def _print(record: "HealthIs") -> None:
         )
         layers.add_row(name, str(layer.obstacles), age, lease, layer.source or "")
     out.print(layers)
-    counts = Table("count", "since the start", box=None)
+    counts = Table("count", "", "", box=None)
     for name, count in sorted(record.counts.items()):
-        counts.add_row(name.removesuffix("_total").replace("_", " "), str(count))
+        since = "since the start" if name.endswith("_total") else "now"
+        if count:
+            counts.add_row(name.removesuffix("_total").replace("_", " "), str(count), since)
     out.print(counts)
     for part, size_bytes in sorted(record.memory_bytes.items()):
         out.print(f"memory of {part}: {size_bytes / 1e6:.1f} MB")

@@ -58,7 +58,8 @@ def _line(event: "byway.Event") -> str:
             f"cost {content.cost:9.3f} {content.cost_unit}  gap {100 * content.gap:5.1f} %  "
             f"revision {content.revision}{missed}"
         )
-    workers = ", ".join(f"{count} {state}" for state, count in sorted(content.workers.items()))
+    crew = sorted(content.workers.items())
+    workers = ", ".join(f"{count} {state}" for state, count in crew if count)
     return (
         f"{event.topic:24s} #{event.number:<6d} {content.state}, revision {content.revision}, "
         f"{content.planning} planning, {content.waiting} waiting, workers: {workers}{missed}"

@@ -53,12 +53,15 @@ class _Once(Collector):
         yield from _gauges(self._health)
         yield from _layers(self._health)
         for name, count in sorted(self._health.counts.items()):
-            counter = CounterMetricFamily(
-                f"byway_{_metric(name).removesuffix('_total')}",
-                f"Since the start of the daemon: {name.removesuffix('_total').replace('_', ' ')}",
-            )
-            counter.add_metric([], count)
-            yield counter
+            words = name.removesuffix("_total").replace("_", " ")
+            if name.endswith("_total"):
+                counter = CounterMetricFamily(
+                    f"byway_{_metric(name).removesuffix('_total')}", f"Since the start: {words}"
+                )
+                counter.add_metric([], count)
+                yield counter
+            else:
+                yield _gauge(name, count)
         for name, times in sorted(self._health.histograms.items()):
             cumulative = list(itertools.accumulate(times.counts))
             bounds = [*(f"{bound}" for bound in times.bounds_s), "+Inf"]
@@ -88,6 +91,15 @@ def _gauges(health: HealthIs) -> Iterator[Metric]:
     for part, size_bytes in sorted(health.memory_bytes.items()):
         memory.add_metric([part], size_bytes)
     yield memory
+
+
+def _gauge(name: str, value: float) -> Metric:
+    """A value of now; times in base units, as everywhere."""
+    for suffix, factor in (("_us", 1e-6), ("_ms", 1e-3), ("_s", 1.0)):
+        if name.endswith(suffix):
+            name, value = f"{name.removesuffix(suffix)}_seconds", value * factor
+            break
+    return GaugeMetricFamily(f"byway_{_metric(name)}", name.replace("_", " "), value)
 
 
 def _layers(health: HealthIs) -> Iterator[Metric]:

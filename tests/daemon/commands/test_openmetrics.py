@@ -18,7 +18,13 @@ HEALTH = HealthIs(
         "lidar": LayerHealth(source="b", age_s=0.1, lease_left_s=9.9),
         "unit.tug-1": LayerHealth(),
     },
-    counts={"replans_total": 40, "answers_route_total": 38, "deadline_missed_total": 1},
+    counts={
+        "replans_total": 40,
+        "answers_route_total": 38,
+        "deadline_missed_total": 1,
+        "peers": 3,
+        "turn_longest_us": 2500,
+    },
     histograms={"answer_s": Histogram(bounds_s=[0.01, 0.1, 1.0], counts=[3, 4, 2, 1], sum_s=4.5)},
     memory_bytes={"front": 50_000_000},
 )
@@ -36,6 +42,13 @@ def samples() -> dict[tuple[str, tuple[tuple[str, str], ...]], float]:
 def test_counts_are_counters(samples: dict[object, float]) -> None:
     assert samples["byway_replans_total", ()] == 40
     assert samples["byway_deadline_missed_total", ()] == 1
+
+
+def test_what_is_no_count_since_the_start_is_a_gauge_in_base_units(
+    samples: dict[object, float],
+) -> None:
+    assert samples["byway_peers", ()] == 3
+    assert samples["byway_turn_longest_seconds", ()] == pytest.approx(0.0025)
 
 
 def test_times_are_histograms_in_seconds_that_add_up(samples: dict[object, float]) -> None:
