@@ -6,6 +6,7 @@ goes forward and dashed when it reverses. Everything is in metres of the site. m
 used without its global state and loads only when a drawing is made.
 """
 
+import itertools
 from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Any, Final
@@ -13,7 +14,6 @@ from typing import Any, Final
 import numpy as np
 import numpy.typing as npt
 from matplotlib.backends.backend_agg import FigureCanvasAgg
-from matplotlib.collections import LineCollection
 from matplotlib.figure import Figure
 from matplotlib.patches import Circle, Polygon
 
@@ -151,23 +151,16 @@ class Plan:
     def route(self, table: npt.NDArray[Any], ink: str = INKS[0], label: str = "route") -> None:
         """Draw a route table: forward drawn out, reverse dashed, an arrow now and then."""
         points = np.column_stack((table["x_m"], table["y_m"]))
-        segments = np.stack((points[:-1], points[1:]), axis=1)
-        backward = table["gear"][:-1] < 0
-        for chosen, style, name in (
-            (~backward, "-", f"{label}, forward"),
-            (backward, (0, (2.2, 1.2)), f"{label}, in reverse"),
-        ):
-            if chosen.any():
-                self._axes.add_collection(
-                    LineCollection(
-                        list(segments[chosen]),
-                        colors=ink,
-                        linewidths=2.0,
-                        linestyles=style,
-                        zorder=6,
-                    )
-                )
-                self._legend[name] = {"color": ink, "linewidth": 2.0, "linestyle": style}
+        gears = table["gear"][:-1]
+        turns = [0, *(np.flatnonzero(np.diff(gears)) + 1).tolist(), len(gears)]
+        for first, last in itertools.pairwise(turns):
+            # One line a leg: a dash must not begin anew at every row.
+            leg, way = points[first : last + 1], "forward" if gears[first] > 0 else "in reverse"
+            style = "-" if gears[first] > 0 else (0, (2.2, 1.2))
+            self._axes.plot(
+                leg[:, 0], leg[:, 1], color=ink, linewidth=2.0, linestyle=style, zorder=6
+            )
+            self._legend[f"{label}, {way}"] = {"color": ink, "linewidth": 2.0, "linestyle": style}
         self._arrows(points, ink)
 
     def swath(

@@ -73,7 +73,7 @@ def test_a_route_in_reverse_is_dashed_and_said_so(plan: picture.Plan, tmp_path: 
     plan.route(table, picture.INKS[0])
     drawn = Drawn(plan, tmp_path / "x.png")
     printed = [drawn.near(x_m, 21.0, picture.INKS[0], 0) for x_m in np.arange(6, 34, 0.05)]
-    assert 0.2 < np.mean(printed) < 0.95
+    assert 0.3 < np.mean(printed) < 0.85
     assert list(plan._legend) == ["route, in reverse"]
 
 
