@@ -39,6 +39,8 @@ LAST_S: Final = 0.0004
 #: Work on the lower bound beside each slice of search, and in all: about 0.4 and 20 ms.
 BOUND_SLICE: Final = 40_000
 BOUND_WORK_MAX: Final = 2_000_000
+#: Work without a route after which the bound is asked whether there can be one.
+PROOF_AFTER: Final = 1200
 #: A cost this near to the bound is the bound.
 ROUNDING_M: Final = 1e-9
 
@@ -173,7 +175,7 @@ class Run:
     def answer(self) -> Outcome:
         """Return the best route with what is known by now, or that nothing was found."""
         if self.best is None:
-            return self.outcome("not_found")
+            return self.outcome("no_route" if self.bound == math.inf else "not_found")
         return replace(
             self.best,
             bound=self.bound,
@@ -211,6 +213,8 @@ def search(
         return np.vstack(parts)
 
     def good_enough() -> bool:
+        if run.best is None:
+            return False
         return run.best_cost - run.bound <= max(wishes.gap_wanted * run.best_cost, ROUNDING_M)
 
     direct = question.direct()
@@ -224,9 +228,9 @@ def search(
     work = 0
     status = FOUND
     while work < wishes.work_max and run.time_left() > LAST_S + LAST_ROUTES * run.check_s:
-        if run.best is not None:
+        if run.best is not None or work >= PROOF_AFTER:
             run.raise_bound()
-            if good_enough():
+            if good_enough() or run.bound == math.inf:
                 break
         status = method.advance(SLICE)
         work += SLICE
@@ -249,7 +253,7 @@ def search(
     )
     if newest is not None:
         run.offer(newest)
-    return run.best is not None or status not in (EXHAUSTED, FULL)
+    return run.best is not None or run.bound == math.inf or status not in (EXHAUSTED, FULL)
 
 
 def _continuous(path: Floats, body: Body) -> Floats:

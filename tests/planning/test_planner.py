@@ -160,6 +160,21 @@ def test_a_sealed_goal_is_proved_at_once():
     assert math.isinf(outcome.cost)
 
 
+def test_a_gap_a_little_too_narrow_for_the_disc_is_proved_by_the_bound():
+    """The grid of the floods is too coarse to tell; the ways of grown obstacles are exact."""
+    walls = {"south": box(20.0, 0.0, 0.5, 12.0), "north": box(20.0, 13.1, 0.5, 11.9)}
+    site = Site.from_shapes(walls, limits_m=LIMITS)
+    disc = Disc(radius_m=0.6, clearance_m=0.0)
+    outcome = planned(site, disc, (5.0, 12.0, 0.0), (35.0, 12.0, 0.0), work=20_000)
+    assert outcome.kind == "no_route"
+    assert outcome.statistics["work"] < 20_000
+    wider = {"south": walls["south"], "north": box(20.0, 13.3, 0.5, 11.7)}
+    passing = planned(
+        Site.from_shapes(wider, limits_m=LIMITS), disc, (5.0, 12.0, 0.0), (35.0, 12.0, 0.0)
+    )
+    assert passing.kind == "route"
+
+
 def test_a_gap_that_only_the_inscribed_disc_fits_through_is_never_claimed():
     """A bend too tight for the car's length: not proved, and no route may be claimed."""
     walls = {
