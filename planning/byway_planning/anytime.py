@@ -40,7 +40,7 @@ LAST_S: Final = 0.0004
 BOUND_SLICE: Final = 40_000
 BOUND_WORK_MAX: Final = 2_000_000
 #: Work without a route after which the bound is asked whether there can be one.
-PROOF_AFTER: Final = 1200
+PROOF_AFTER: Final = 480
 #: A cost this near to the bound is the bound.
 ROUNDING_M: Final = 1e-9
 

@@ -122,6 +122,12 @@ def test_a_direct_curve_does_not_end_the_search_while_reversing_is_dear():
     assert outcome.statistics["work"] >= 2000
 
 
+def test_whole_numbers_may_stand_where_metres_are_wanted():
+    site = Site.from_shapes({"kiln": KILN}, limits_m=(0, 0, 45, 25), cell_m=1)
+    car = Car(footprint_m=[(-3, -3), (5, -3), (5, 3), (-3, 3)], turn_radius_m_min=5)
+    assert planned(site, car, (6, 18, 0), (30, 18, 0)).kind == "route"
+
+
 def test_start_equal_to_goal_is_a_route_of_no_length(yard):
     outcome = planned(yard, pure_length_car(), START, START)
     assert outcome.kind == "route"

@@ -31,6 +31,11 @@ class SiteSettings:
     tile_cells: int = 64
 
     def __post_init__(self) -> None:
+        # Kernels have one signature: a whole number where a float belongs would be another.
+        for name in ("limits_m", "origin_m"):
+            object.__setattr__(self, name, tuple(float(value) for value in getattr(self, name)))
+        for name in ("cell_m", "reach_m"):
+            object.__setattr__(self, name, float(getattr(self, name)))
         if not np.isfinite([*self.limits_m, *self.origin_m]).all():
             raise ValueError(f"limits_m and origin_m must be finite, got {self.limits_m}")
         x0, y0, x1, y1 = self.limits_m
