@@ -17,7 +17,8 @@ class SiteSettings:
         limits_m: x_min, y_min, x_max, y_max in the site's frame; everything outside is blocked.
         cell_m: Side of a cell. Distances are exact to a fraction of it.
         origin_m: The site's origin in the coordinates that callers use (survey coordinates, say).
-        reach_m: Where the distance field is cut off; beyond it a coarse clearance serves.
+        reach_m: Where the distance field is cut off; beyond it a coarse clearance serves. 0 for
+            3.2 m or eight cells, whichever is more.
         tile_cells: Cells along one side of a tile; a power of two.
 
     Raises:
@@ -27,7 +28,7 @@ class SiteSettings:
     limits_m: tuple[float, float, float, float]
     cell_m: float = 0.1
     origin_m: tuple[float, float] = (0.0, 0.0)
-    reach_m: float = 3.2
+    reach_m: float = 0.0
     tile_cells: int = 64
 
     def __post_init__(self) -> None:
@@ -36,6 +37,8 @@ class SiteSettings:
             object.__setattr__(self, name, tuple(float(value) for value in getattr(self, name)))
         for name in ("cell_m", "reach_m"):
             object.__setattr__(self, name, float(getattr(self, name)))
+        if self.reach_m == 0.0:
+            object.__setattr__(self, "reach_m", max(3.2, 8.0 * self.cell_m))
         if not np.isfinite([*self.limits_m, *self.origin_m]).all():
             raise ValueError(f"limits_m and origin_m must be finite, got {self.limits_m}")
         x0, y0, x1, y1 = self.limits_m
