@@ -111,7 +111,7 @@ def test_a_route_that_hits_something_is_a_fault() -> None:
     assert findings.faults == []
     assert outcome.route is not None
     row = outcome.route.table[len(outcome.route.table) // 2]
-    square = np.array([(-1, -1), (1, -1), (1, 1), (-1, 1)]) + (row["x_m"], row["y_m"])
+    square = np.array([(-1, -1), (1, -1), (1, 1), (-1, 1)]) + np.array([row["x_m"], row["y_m"]])
     walled = replace(case, ground=replace(case.ground, polygons={"box": square}))
     _, snapshot = walled.ground.build()
     planning._checked(walled, snapshot, outcome, findings, notes)
