@@ -186,7 +186,7 @@ def sealed(lot: Lot) -> Case:
     fence = 0.62 * yard.width_m
     gap_m = size.width_m * float(rng.uniform(0.3, 0.8)) if kind == 2 else 0.0
     at = float(rng.uniform(0.3, 0.7)) * yard.height_m
-    margin_m = size.length_m + 2.0 + size.radius_m
+    margin_m = size.length_m + 4.0 + size.radius_m
     if kind == 0:
         x0, x1 = fence, yard.width_m - 3.0
         y0, y1 = 3.0, yard.height_m - 3.0

@@ -36,8 +36,8 @@ GOAL_SLACK_M: Final = 0.002
 class Sizes:
     """How much is measured."""
 
-    firsts: int = 50
-    costs: int = 8
+    firsts: int = 100
+    costs: int = 10
     first_budget_s: float = 0.3
     short_s: float = 0.05
     full_s: float = 0.5

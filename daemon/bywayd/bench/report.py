@@ -64,7 +64,7 @@ def _firsts(planning: Figures) -> Table:
     for name, told in planning.items():
         wanted = FAMILY_TARGETS[name]
         known, fresh = told["first_known_ms"], told["first_fresh_ms"]
-        solved = f"{100.0 * told['solved']:.0f} %"
+        solved = f"{100.0 * told['solved']:.1f} %"
         table.add_row(
             name,
             str(told["cases"]),
