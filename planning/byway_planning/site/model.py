@@ -68,6 +68,8 @@ class SiteModel:
         #: Sizes of the tile blocks of the newest snapshot, by offset.
         self._sizes: dict[int, int] = {}
         self._tables: list[int] = []
+        #: Blocks written since the last publish that went through.
+        self._unpublished: set[int] = set()
         #: Blocks that the next revision no longer reads (kept over a failed publish).
         self._retiring: list[int] = []
         #: (revision from which on they are not read, offsets), oldest first.
@@ -221,6 +223,7 @@ class SiteModel:
         self.revision += 1
         self._retired.append((self.revision, self._retiring))
         self._retiring = []
+        self._unpublished.clear()
         layers = {name: layer.settings for name, layer in self._layers.items()}
         handle = handle_for(self.revision, self.settings, layers, places)
         self._snapshot = Snapshot(self.memory.buffer, handle)
@@ -268,26 +271,37 @@ class SiteModel:
         """Publish a block in place of the tile's last one; return its offset in elements."""
         old = getattr(place, what)
         if old:
-            self._retiring.append(old)
-            del self._sizes[old]
+            self._retire(old)
+            setattr(place, what, 0)  # before anything that can fail
         if block is None:
-            setattr(place, what, 0)
             return NO_CELLS
-        offset = self.memory.store(block)
-        self._sizes[offset] = block.nbytes
+        offset = self._keep(block)
         setattr(place, what, offset)
         return offset // block.itemsize
+
+    def _keep(self, block: npt.NDArray[np.generic]) -> int:
+        offset = self.memory.store(block)
+        self._sizes[offset] = block.nbytes
+        self._unpublished.add(offset)
+        return offset
+
+    def _retire(self, offset: int) -> None:
+        """Forget a block: later, when nobody reads it, or at once when nobody ever did."""
+        del self._sizes[offset]
+        if offset in self._unpublished:
+            self._unpublished.remove(offset)
+            self.memory.give_back(offset)
+        else:
+            self._retiring.append(offset)
 
     def _publish_cells(self) -> None:
         for name, tile in sorted(self._dirty_cells):
             layer = self._layers[name]
             old = layer.places.pop(tile, None)
             if old is not None:
-                self._retiring.append(old)
-                del self._sizes[old]
+                self._retire(old)
             if tile in layer.cells:
-                layer.places[tile] = self.memory.store(layer.cells[tile])
-                self._sizes[layer.places[tile]] = layer.cells[tile].nbytes
+                layer.places[tile] = self._keep(layer.cells[tile])
         self._dirty_cells.clear()
 
     def _contents(self) -> dict[str, npt.NDArray[np.generic]]:

@@ -82,22 +82,24 @@ def resample_kernel(
     Overwrite the cells of a tile whose middle a patch covers.
 
     Occupied wins over unknown wins over free among the patch cells that a tile cell overlaps;
-    a finer tile therefore repeats, a coarser one is on the safe side. 0 free, 1 occupied,
-    2 unknown. Borders that agree within a millionth of a cell count as equal.
+    a finer tile therefore repeats, a coarser one is on the safe side. Where the patch covers
+    only a corner of a tile cell, an occupied one still fills it. 0 free, 1 occupied, 2 unknown.
+    Borders that agree within a millionth of a cell count as equal.
     """
     slack = 1e-6
     rows, columns = patch.shape
     for r in range(out.shape[0]):
         y0 = (cy + r * cell - py) / pcell
         y1 = y0 + cell / pcell
-        if not 0.0 <= (y0 + y1) / 2 < rows:
+        if y1 <= slack or y0 >= rows - slack:
             continue
         r0, r1 = max(math.floor(y0 + slack), 0), min(math.ceil(y1 - slack), rows)
         for c in range(out.shape[1]):
             x0 = (cx + c * cell - px) / pcell
             x1 = x0 + cell / pcell
-            if not 0.0 <= (x0 + x1) / 2 < columns:
+            if x1 <= slack or x0 >= columns - slack:
                 continue
+            covered = 0.0 <= (y0 + y1) / 2 < rows and 0.0 <= (x0 + x1) / 2 < columns
             c0, c1 = max(math.floor(x0 + slack), 0), min(math.ceil(x1 - slack), columns)
             value = 0
             for i in range(r0, r1):
@@ -105,4 +107,5 @@ def resample_kernel(
                     p = patch[i, j]
                     if p == 1 or (p == 2 and value == 0):
                         value = p
-            out[r, c] = value
+            if covered or value == 1:
+                out[r, c] = value

@@ -14,7 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from byway_planning.site.edges import polygon_items
-from byway_planning.site.memory import Memory
+from byway_planning.site.memory import Memory, MemoryFull
 from byway_planning.site.records import NAME, NOWHERE, shape_from
 from byway_planning.site.scene import FAR_PER_TILE, Scene
 from byway_planning.site.settings import LayerSettings, SiteSettings
@@ -44,8 +44,21 @@ TABLES: Final[dict[str, tuple[npt.DTypeLike, int]]] = {
 
 
 def store_tables(memory: Memory, tables: Mapping[str, Array]) -> dict[str, tuple[int, int]]:
-    """Copy the tables of a snapshot into memory; return where each lies and its rows."""
-    return {name: (memory.store(tables[name]), len(tables[name])) for name in TABLES}
+    """
+    Copy the tables of a snapshot into memory; return where each lies and its rows.
+
+    Raises:
+        MemoryFull: When they do not fit; nothing is taken then.
+    """
+    places: dict[str, tuple[int, int]] = {}
+    try:
+        for name in TABLES:
+            places[name] = (memory.store(tables[name]), len(tables[name]))
+    except MemoryFull:
+        for offset, _ in places.values():
+            memory.give_back(offset)
+        raise
+    return places
 
 
 class Snapshot:
