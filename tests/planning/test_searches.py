@@ -1,0 +1,383 @@
+"""The searches: what they find can be driven, slices do not matter, and outside laws hold."""
+
+import heapq
+import math
+
+import numpy as np
+import pytest
+import shapely
+from scipy.sparse import coo_array
+from scipy.sparse.csgraph import dijkstra
+
+from byway_planning import Car, Disc, ForwardCar, Site
+from byway_planning.curves import shortest_curve
+from byway_planning.dice import new_dice, uniform
+from byway_planning.kernel import kernel
+from byway_planning.search.floods import (
+    DIAGONAL_STEP,
+    PROOF_CELLS,
+    SIDE_STEP,
+    UNREACHED,
+    FloodGround,
+    FloodRoom,
+    flood_kernel,
+    used_tiles,
+    window_for,
+)
+from byway_planning.search.heap import pop, push
+from byway_planning.search.improve import IDLE, improve_kernel, new_polish
+from byway_planning.search.lattice import (
+    advance_lattice_kernel,
+    new_lattice,
+    path_of,
+    restart,
+)
+from byway_planning.search.lengths import HALF, STEP, TURNS, guessed_length, lengths_of
+from byway_planning.search.method import EXHAUSTED, FOUND, FULL, RUNNING
+from byway_planning.search.methods import METHODS, make_method
+from byway_planning.search.neighbours import nearest_k
+from byway_planning.search.paths import cost_of, load_course_kernel, path_cost, path_from
+from byway_planning.search.question import Question, guide_for
+from byway_planning.search.workshop import Workshop
+from byway_planning.vehicles.body import CAR
+from byway_planning.vehicles.models import Vehicle
+
+LIMITS = (0.0, 0.0, 40.0, 24.0)
+BOX = [(-1.0, -0.95), (3.5, -0.95), (3.5, 0.95), (-1.0, 0.95)]
+CAR_ = Car(
+    footprint_m=BOX,
+    turn_radius_m_min=4.0,
+    clearance_m=0.0,
+    reverse_factor=1.0,
+    direction_change_m=0.0,
+)
+VEHICLES: dict[str, Vehicle] = {
+    "car": CAR_,
+    "dear reverse": Car(footprint_m=BOX, turn_radius_m_min=4.0, clearance_m=0.0),
+    "forward": ForwardCar(footprint_m=BOX, turn_radius_m_min=4.0, clearance_m=0.0),
+    "disc": Disc(radius_m=0.8, clearance_m=0.0),
+}
+WALLS = {
+    "wall": [(18.0, 0.0), (19.0, 0.0), (19.0, 15.0), (18.0, 15.0)],
+    "lid": [(26.0, 9.0), (27.0, 9.0), (27.0, 24.0), (26.0, 24.0)],
+}
+START, GOAL = (5.0, 5.0, 0.3), (34.0, 18.0, 1.2)
+
+
+def read_only(values) -> np.ndarray:
+    array = np.array(values, np.float64)
+    array.flags.writeable = False
+    return array
+
+
+def question(vehicle: Vehicle, polygons=WALLS, start=START, goal=GOAL, seed=1) -> Question:
+    scene = Site.from_shapes(polygons, limits_m=LIMITS).snapshot.scene()
+    body = vehicle.body()
+    window = window_for(scene, used_tiles(scene), [start[:2], goal[:2]], 12.0)
+    ground = FloodGround(scene, body.inner_radius_m + body.clearance_m, window)
+    begin, end = read_only(start), read_only(goal)
+    guide = guide_for(ground, FloodRoom(), body, begin, end)
+    return Question(scene, body, begin, end, seed, guide)
+
+
+def drive(path: np.ndarray, step_m: float = 0.05) -> np.ndarray:
+    """Poses along a path, by the plain formula of an arc."""
+    poses = []
+    for x, y, h, k, length in path:
+        for s in np.linspace(0.0, length, int(abs(length) / step_m) + 2):
+            if k == 0.0:
+                poses.append((x + s * math.cos(h), y + s * math.sin(h), h))
+            else:
+                turned = h + k * s
+                poses.append(
+                    (
+                        x + (math.sin(turned) - math.sin(h)) / k,
+                        y - (math.cos(turned) - math.cos(h)) / k,
+                        turned,
+                    )
+                )
+    return np.array(poses)
+
+
+def check_drivable(path: np.ndarray, vehicle: Vehicle, q: Question, polygons=WALLS) -> None:
+    """Ends, joints, curvature, direction and room, with shapely and nothing of the search."""
+    poses = drive(path)
+    assert poses[0, :2] == pytest.approx(q.start[:2], abs=1e-6)
+    assert poses[-1, :2] == pytest.approx(q.goal[:2], abs=1e-6)
+    joints = np.hypot(*np.diff(poses[:, :2], axis=0).T)
+    assert joints.max() < 0.051
+    if not isinstance(vehicle, Disc):
+        turns = np.abs(np.angle(np.exp(1j * np.diff(poses[:, 2]))))
+        assert turns.max() < 0.051 / 4.0
+        assert np.abs(path[:, 3]).max() <= 1 / 4.0 + 1e-12
+        final = math.remainder(poses[-1, 2] - q.goal[2], 2 * math.pi)
+        assert final == pytest.approx(0.0, abs=1e-6)
+    if not isinstance(vehicle, Car):
+        assert (path[:, 4] >= 0.0).all()
+    frame = shapely.box(-5, -5, 45, 29).difference(shapely.box(*LIMITS))
+    world = shapely.union_all([*[shapely.Polygon(p) for p in polygons.values()], frame])
+    if isinstance(vehicle, Disc):
+        assert shapely.distance(shapely.points(poses[:, :2]), world).min() > 0.8 - 1e-9
+    else:
+        outlines = shapely.polygons([vehicle.outline_at(pose) for pose in poses])
+        assert shapely.distance(outlines, world).min() > 0.0
+
+
+# -- floods, heap, table --------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("seed", range(4))
+def test_a_flood_is_dijkstras_algorithm_on_the_free_squares(seed):
+    """Against scipy.sparse.csgraph, over the whole grid and with an early stop."""
+    rng = np.random.default_rng(seed)
+    mask = np.pad((rng.random((24, 31)) < 0.7).astype(np.uint8), 1)
+    free = np.argwhere(mask)
+    origin, other = (int(r * mask.shape[1] + c) for r, c in free[rng.integers(len(free), size=2)])
+    rows, columns, costs = [], [], []
+    for r, c in free:
+        for dr in (-1, 0, 1):
+            for dc in (-1, 0, 1):
+                if (dr or dc) and mask[r + dr, c + dc]:
+                    rows.append(r * mask.shape[1] + c)
+                    columns.append((r + dr) * mask.shape[1] + c + dc)
+                    costs.append(DIAGONAL_STEP if dr and dc else SIDE_STEP)
+    graph = coo_array((costs, (rows, columns)), shape=(mask.size, mask.size)).tocsr()
+    wanted = dijkstra(graph, indices=origin)
+    room = FloodRoom()
+    room.fit(mask.size)
+    mask.flags.writeable = False
+    for stretch in (1e6, 1.2):
+        cost = np.empty(mask.shape, np.int32)
+        told = flood_kernel(
+            mask, origin, other, stretch, cost, room.heads, room.entries, room.links
+        )
+        found = np.where(cost.ravel() >= UNREACHED, np.inf, cost.ravel())
+        assert told == min(wanted[other], UNREACHED)
+        until = wanted[other] * stretch
+        near = wanted <= until
+        assert (found[near] == wanted[near]).all()
+
+
+def test_the_proving_mask_keeps_every_square_that_could_hold_the_disc():
+    rng = np.random.default_rng(5)
+    polygons = {
+        f"p{i}": np.array(
+            shapely.convex_hull(
+                shapely.multipoints(rng.uniform((2, 2), (38, 22)) + rng.normal(0, 0.8, (6, 2)))
+            ).exterior.coords
+        )[:-1]
+        for i in range(40)
+    }
+    scene = Site.from_shapes(polygons, limits_m=LIMITS).snapshot.scene()
+    world = shapely.union_all([shapely.Polygon(p) for p in polygons.values()])
+    ground = FloodGround(scene, 0.9, (0, 0, *scene.field_of.shape))
+    mask = ground.mask(PROOF_CELLS)
+    points = rng.uniform((0.1, 0.1), (39.9, 23.9), (4000, 2))
+    room_m = shapely.distance(shapely.points(points), world)
+    for (x, y), free_m in zip(points, room_m, strict=True):
+        if free_m >= 0.9:
+            assert mask.ravel()[ground.square_of(x, y)] == 1
+
+
+def test_the_heap_gives_what_heapq_gives():
+    rng = np.random.default_rng(6)
+    keys, values = np.empty(500), np.empty(500, np.int32)
+    size, twin = 0, []
+    for i in range(2000):
+        if size < 400 and (size == 0 or rng.random() < 0.6):
+            key = float(rng.integers(10**9))
+            size = push.py_func(keys, values, size, key, i)
+            heapq.heappush(twin, key)
+        else:
+            assert keys[0] == heapq.heappop(twin)
+            size = pop.py_func(keys, values, size)
+
+
+def test_the_table_of_lengths_holds_the_curves_at_its_points_for_every_radius():
+    lengths = lengths_of(CAR)
+    rng = np.random.default_rng(7)
+    for i, j, k in rng.integers((0, 0, 0), (2 * HALF + 1, 2 * HALF + 1, TURNS), (200, 3)):
+        goal = ((i - HALF) * STEP, (j - HALF) * STEP, k * 2 * math.pi / TURNS)
+        one = Car(
+            footprint_m=BOX, turn_radius_m_min=1.0, reverse_factor=1.0, direction_change_m=0.0
+        )
+        wanted = shortest_curve(one, (0.0, 0.0, 0.0), goal).length_m
+        assert lengths.table[i, j, k] == pytest.approx(wanted, abs=1e-5)
+        if max(abs(goal[0]), abs(goal[1])) < (HALF - 1) * STEP:
+            scaled = guessed_length(
+                lengths, 5.0, 1.0, 2.0, 0.0, 1.0 + 5 * goal[0], 2.0 + 5 * goal[1], goal[2]
+            )
+            assert scaled == pytest.approx(5.0 * wanted, abs=1e-4)
+
+
+# -- lattice --------------------------------------------------------------------------------
+
+
+def lattice_path(vehicle: Vehicle, q: Question, *, backward: bool, step: int) -> np.ndarray:
+    lattice = new_lattice(60_000)
+    restart(
+        lattice,
+        backward=backward,
+        start=q.start,
+        goal=q.goal,
+        cell_m=0.7,
+        headings=64,
+        arc_m=1.1,
+        weight=2.0,
+        change_m=0.5,
+    )
+    status = RUNNING
+    for _ in range(40_000 // step):
+        flood = q.to_start if backward else q.to_goal
+        status = advance_lattice_kernel(q.scene, q.body, lattice, flood, q.lengths, step)
+        if status != RUNNING:
+            break
+    assert status == FOUND
+    return path_of(lattice, q.body)
+
+
+@pytest.mark.parametrize("name", VEHICLES)
+@pytest.mark.parametrize("backward", [False, True])
+def test_a_lattice_finds_drivable_paths_from_either_end_in_any_slices(name, backward):
+    vehicle = VEHICLES[name]
+    q = question(vehicle)
+    paths = [lattice_path(vehicle, q, backward=backward, step=step) for step in (1, 7, 1000)]
+    assert paths[0].tobytes() == paths[1].tobytes() == paths[2].tobytes()
+    check_drivable(paths[0], vehicle, q)
+
+
+def test_a_lattice_in_a_pen_is_exhausted_and_one_without_memory_is_full():
+    pen = {
+        "west": [(30.0, 14.0), (30.4, 14.0), (30.4, 23.0), (30.0, 23.0)],
+        "south": [(30.0, 14.0), (39.0, 14.0), (39.0, 14.4), (30.0, 14.4)],
+        "east": [(38.6, 14.0), (39.0, 14.0), (39.0, 23.0), (38.6, 23.0)],
+        "north": [(30.0, 22.6), (39.0, 22.6), (39.0, 23.0), (30.0, 23.0)],
+    }
+    inside = question(CAR_, pen, start=(33.0, 18.0, 0.0), goal=(36.0, 19.0, 0.0))
+    outside = read_only((5.0, 5.0, 0.0))
+    lattice = new_lattice(60_000)
+    knobs = {"cell_m": 0.7, "headings": 64, "arc_m": 1.1, "weight": 2.0, "change_m": 0.5}
+    restart(lattice, backward=False, start=inside.start, goal=outside, **knobs)
+    args = (inside.scene, inside.body, lattice, inside.to_goal, inside.lengths)
+    assert advance_lattice_kernel(*args, 100_000) == EXHAUSTED
+    small, q = new_lattice(64), question(CAR_)
+    restart(small, backward=False, start=q.start, goal=q.goal, **knobs)
+    assert advance_lattice_kernel(q.scene, q.body, small, q.to_goal, q.lengths, 10**6) == FULL
+
+
+# -- improvement ----------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("name", VEHICLES)
+def test_polishing_keeps_a_path_drivable_and_never_dearer(name):
+    vehicle = VEHICLES[name]
+    q = question(vehicle)
+    first = lattice_path(vehicle, q, backward=False, step=500)
+    results = []
+    for step in (40, 4000):
+        polish = new_polish(new_dice(3))
+        load_course_kernel(read_only(first), q.body, polish.course)
+        costs = [cost_of(polish.course)]
+        for _ in range(4000 // step):
+            improve_kernel(q.scene, q.body, polish, step, 10**9)
+            costs.append(cost_of(polish.course))
+        assert costs == sorted(costs, reverse=True)
+        assert costs[-1] < costs[0]
+        path = path_from(polish.course)
+        assert path_cost(path, q.body) == pytest.approx(costs[-1], abs=1e-6)
+        check_drivable(path, vehicle, q)
+        results.append(path.tobytes())
+    assert results[0] == results[1]
+
+
+def test_polishing_a_disc_comes_near_the_known_shortest_way_round_a_square():
+    """Two tangents and an arc round each of two corners: 2 sqrt(5) + 2 and the arcs' excess."""
+    square = {"square": [(15.0, 10.0), (17.0, 10.0), (17.0, 12.0), (15.0, 12.0)]}
+    radius = 0.5
+    disc = Disc(radius_m=radius, clearance_m=0.0)
+    q = question(disc, square, start=(13.0, 11.0, 0.0), goal=(19.0, 11.0, 0.0))
+    grown = shapely.Polygon(square["square"]).buffer(radius, quad_segs=200)
+    hull = shapely.convex_hull(shapely.union(grown, shapely.MultiPoint([(13, 11), (19, 11)])))
+    exact = hull.exterior.length / 2.0  # the scene is symmetric about the line of the ends
+    polish = new_polish(new_dice(4))
+    first = lattice_path(disc, q, backward=False, step=500)
+    load_course_kernel(read_only(first), q.body, polish.course)
+    improve_kernel(q.scene, q.body, polish, 30_000, 10**9)
+    assert exact - 1e-6 <= cost_of(polish.course) < 1.01 * exact
+    assert polish.marks[IDLE] >= 0
+
+
+# -- trees, all methods ---------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("name", VEHICLES)
+@pytest.mark.parametrize("method", METHODS)
+def test_every_method_finds_the_same_in_any_slices(name, method):
+    vehicle = VEHICLES[name]
+    costs = []
+    for step in (7, 400):
+        q = question(vehicle)
+        search = make_method(method, q, None, Workshop())
+        found, work = None, 0
+        while found is None and work < 60_000:
+            status = search.advance(step)
+            work += step
+            if status == FOUND:
+                found = search.path()
+            elif status in (EXHAUSTED, FULL):
+                break
+        assert found is not None, (name, method)
+        check_drivable(found, vehicle, q)
+        costs.append(path_cost(found, q.body))
+    assert costs[0] == costs[1]
+
+
+def test_auto_goes_over_to_the_shorter_of_two_corridors():
+    """A wall with a near narrow gap and a far wide one: the first path is not the last word."""
+    walls = {
+        "low": [(19.0, 0.0), (20.0, 0.0), (20.0, 9.0), (19.0, 9.0)],
+        "middle": [(19.0, 11.6), (20.0, 11.6), (20.0, 17.5), (19.0, 17.5)],
+    }
+    q = question(CAR_, walls, start=(8.0, 10.3, 0.0), goal=(30.0, 10.3, 0.0))
+    search = make_method("auto", q, None, Workshop())
+    costs = []
+    for _ in range(60):
+        if search.advance(400) == FOUND:
+            costs.append(path_cost(search.path(), q.body))
+    assert costs == sorted(costs, reverse=True)
+    assert costs[-1] < 22.6
+    check_drivable(search.path(), CAR_, q, walls)
+
+
+@kernel("f8[:, ::1]", "u8[::1]", "b1", allocates=True)
+def spread_kernel(nodes: np.ndarray, dice: np.ndarray, walk: bool) -> None:
+    """2,000 nodes in a 10 x 10 square, 0.2 apart: a random walk, or a tree of nearest nodes."""
+    nodes[0, 0] = nodes[0, 1] = 5.0
+    index = np.zeros(1, np.int64)
+    for n in range(1, nodes.shape[0]):
+        near = n - 1
+        x, y = 10.0 * uniform(dice), 10.0 * uniform(dice)
+        if walk:
+            a = 2.0 * math.pi * uniform(dice)
+            x, y = nodes[near, 0] + math.cos(a), nodes[near, 1] + math.sin(a)
+        else:
+            nearest_k(nodes, n, x, y, 0.0, 0.0, 1, index)
+            near = index[0]
+        dx, dy = x - nodes[near, 0], y - nodes[near, 1]
+        far = math.hypot(dx, dy) + 1e-12
+        nodes[n, 0] = min(max(nodes[near, 0] + 0.2 * dx / far, 0.0), 9.999)
+        nodes[n, 1] = min(max(nodes[near, 1] + 0.2 * dy / far, 0.0), 9.999)
+
+
+def test_a_tree_explores_far_more_than_a_random_walk_of_as_many_nodes():
+    """Common practice; throw-away code elsewhere visited 96 % and 28 % of 20 x 20 cells."""
+
+    def share(walk: bool, seed: int) -> float:
+        nodes = np.zeros((2000, 3))
+        spread_kernel(nodes, new_dice(seed), walk)
+        return len({(int(2 * x), int(2 * y)) for x, y, _ in nodes}) / 400
+
+    trees = np.mean([share(False, seed) for seed in range(5)])
+    walks = np.mean([share(True, seed) for seed in range(5)])
+    assert trees > 0.9
+    assert trees > 2.5 * walks
