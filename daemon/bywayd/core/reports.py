@@ -1,19 +1,45 @@
 """What the front tells about itself: the welcome to a client, and the health record."""
 
-from __future__ import annotations
-
-from typing import TYPE_CHECKING
+from typing import Protocol
 
 from byway import limits
 from byway.messages import ErrorMessage, HealthIs, Hello, LayerHealth, Welcome
+from bywayd.core.answering import Answering
+from bywayd.core.dispatch import Dispatch
+from bywayd.core.events import Vitals
+from bywayd.core.front_settings import FrontSettings
+from bywayd.core.health import Health
 from bywayd.core.instants import Instant
+from bywayd.core.ledger import Ledger
 from bywayd.core.outbox import error_of
+from bywayd.core.roster import Roster
+from bywayd.core.snapshots import Snapshots
+from bywayd.core.surveying import Surveying
 
-if TYPE_CHECKING:
-    from bywayd.core.front import Front
+
+class Reported(Protocol):
+    """What is told about: the front, as far as it is looked at here."""
+
+    health: Health
+    snapshots: Snapshots
+    workers: Roster
+    surveyors: Roster
+    ledger: Ledger
+    surveying: Surveying
+    answering: Answering
+    dispatch: Dispatch
+    vitals: Vitals | None
+    wall: tuple[float, Instant] | None
+    began: Instant | None
+
+    @property
+    def settings(self) -> FrontSettings: ...
+
+    @property
+    def state(self) -> str: ...
 
 
-def welcome(front: Front, hello: Hello, now: Instant) -> Welcome | ErrorMessage:
+def welcome(front: Reported, hello: Hello, now: Instant) -> Welcome | ErrorMessage:
     """Return the reply to a hello: who we are, or that we have no version in common."""
     spoken = limits.spec_version
     if spoken not in hello.versions:
@@ -33,7 +59,7 @@ def welcome(front: Front, hello: Hello, now: Instant) -> Welcome | ErrorMessage:
     )
 
 
-def wall_s(front: Front, now: Instant) -> float:
+def wall_s(front: Reported, now: Instant) -> float:
     """Return the wall clock's reading, carried on by ours from the last time it was told."""
     if front.wall is None:
         return 0.0
@@ -41,7 +67,7 @@ def wall_s(front: Front, now: Instant) -> float:
     return told_s + now.since(at).s
 
 
-def health(front: Front, now: Instant) -> HealthIs:
+def health(front: Reported, now: Instant) -> HealthIs:
     """Return the health record."""
     workers = front.workers.statistics()
     ledger = front.ledger.statistics()
