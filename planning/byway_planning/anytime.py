@@ -39,6 +39,8 @@ LAST_S: Final = 0.0004
 #: Work on the lower bound beside each slice of search, and in all: about 0.4 and 20 ms.
 BOUND_SLICE: Final = 40_000
 BOUND_WORK_MAX: Final = 2_000_000
+#: The bound may exceed the cost by what the check lets a route miss its goal by, not by more.
+BOUND_DOUBT_M: Final = 0.01
 #: Work without a route after which the bound is asked whether there can be one.
 PROOF_AFTER: Final = 480
 #: A cost this near to the bound is the bound.
@@ -133,6 +135,8 @@ class Run:
             self.outcome("route"),
             route=route,
             cost=cost,
+            # It may end within the tolerance of the check, and undercut the bound by as much.
+            bound=min(self.bound, cost),
             first_s=first_s,
             statistics=dict(self.statistics),
         )
@@ -149,8 +153,7 @@ class Run:
         self.bound_work += BOUND_SLICE
         if self.bounding.advance(self.bound_work):
             self.bound_work = BOUND_WORK_MAX
-        # A route may end within the tolerance of the check, and so undercut the bound by as much.
-        self.bound = max(self.bound, min(self.bounding.bound_m, self.best_cost))
+        self.bound = max(self.bound, self.bounding.bound_m)
 
     def _new_bounding(self) -> LowerBound:
         kept, body = self.snapshot.kept, self.body
@@ -176,9 +179,11 @@ class Run:
         """Return the best route with what is known by now, or that nothing was found."""
         if self.best is None:
             return self.outcome("no_route" if self.bound == math.inf else "not_found")
+        if self.bound > self.best_cost + BOUND_DOUBT_M:
+            self.statistics["bound_above_cost_m"] = self.bound - self.best_cost
         return replace(
             self.best,
-            bound=self.bound,
+            bound=min(self.bound, self.best_cost),
             total_s=self.elapsed_s(),
             statistics=dict(self.statistics),
         )

@@ -164,9 +164,8 @@ def arc_blocker(
     """
     What is in the way of a disc that goes round a corner.
 
-    Looked at where the arc comes nearest to an end or to the inside of an item; at its two
-    ends the straight pieces are looked at. An item that the arc crosses without coming to such
-    a place is passed over: the errors are towards "nothing" here as well.
+    Looked at are the places where it is nearest to an end or to the inside of an item, and
+    where it crosses one; the straight pieces are looked at up to both ends of the arc.
 
     Args:
         from_x, from_y: Outward normal where the arc begins; it goes `turn` radians to `side`.
@@ -222,13 +221,22 @@ def _item_on_arc(
             if abs(math.sqrt(square) - arc) < reach:
                 best = _nearer_block(side, from_x, from_y, px, py, best)
     dx, dy = bx - ax, by - ay
-    square = dx * dx + dy * dy
-    share = -(ax * dx + ay * dy)
-    if 0.0 < share < square:
-        px, py = ax + share / square * dx, ay + share / square * dy  # the foot on the item
-        height = math.hypot(px, py)
-        if height > 1e-9 and abs(height - arc) < reach:
-            best = _nearer_block(side, from_x, from_y, px, py, best)
+    length = math.hypot(dx, dy)
+    if length == 0.0:
+        return best
+    dx /= length
+    dy /= length
+    foot = -(ax * dx + ay * dy)  # where on the item's line the middle of the arc is nearest
+    px, py = ax + foot * dx, ay + foot * dy
+    height = math.hypot(px, py)
+    if 0.0 < foot < length and height > 1e-9 and abs(height - arc) < reach:
+        best = _nearer_block(side, from_x, from_y, px, py, best)
+    if height < arc:
+        half = math.sqrt(arc * arc - height * height)
+        for way in range(2):
+            at = -half if way == 0 else half
+            if 0.0 < foot + at < length:
+                best = _nearer_block(side, from_x, from_y, px + at * dx, py + at * dy, best)
     return best
 
 

@@ -20,7 +20,7 @@ ALL_WORK = 10**9
 def solids_of(polygons, discs=(), limits_m=WIDE) -> Solids:
     site = Site.from_shapes(
         {str(i): ring for i, ring in enumerate(polygons)},
-        {str(i): disc for i, disc in enumerate(discs)},
+        {f"disc {i}": disc for i, disc in enumerate(discs)},
         limits_m=limits_m,
         cell_m=0.5,
     )

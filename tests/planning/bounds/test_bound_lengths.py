@@ -20,6 +20,8 @@ from tests.planning.bounds.bound_scenes import (
 
 from byway_planning import Site
 from byway_planning.bounds import LowerBound, bound, outgrown
+from byway_planning.bounds.chase import CORNERS
+from byway_planning.bounds.sight import MET
 from byway_planning.vehicles import footprint
 
 SMALL_M = 1e-4
@@ -170,6 +172,22 @@ def test_stopped_early_it_is_lower_and_slices_change_nothing(polygons, radius_m,
     assert seen == sorted(seen)
     assert seen[-1] <= whole.bound_m
     assert sliced.bound_m == whole.bound_m
+
+
+@settings(max_examples=30, deadline=None)
+@given(scenes, st.floats(0.05, 1.2))
+def test_obstacles_met_on_demand_are_enough(polygons, radius_m):
+    """A search that knows all obstacles from the start finds the same length."""
+    solids = solids_of(polygons)
+    search = LowerBound(solids, disc(radius_m).body(), (-12.0, 0.5, 0.0), (12.0, -0.5, 0.0))
+    (way,) = search._ways
+    corners = len(way._ground.corners)
+    way._chase.marks[:] = MET
+    way._chase.met[:] = np.arange(corners)
+    way._chase.counts[CORNERS] = corners
+    search.advance(ALL_WORK)
+    on_demand = bound_of(solids, disc(radius_m), (-12.0, 0.5), (12.0, -0.5))
+    assert on_demand == pytest.approx(search.bound_m, abs=1e-9)
 
 
 def test_cramped_arrays_grow_without_changing_anything(monkeypatch):

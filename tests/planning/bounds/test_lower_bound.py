@@ -4,7 +4,7 @@ import math
 
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 from tests.planning.bounds.bound_scenes import (
     ALL_WORK,
@@ -41,6 +41,9 @@ def car(footprint=BOX, radius_m=5.0, clearance_m=0.0, **more) -> Car:
 @given(poses, poses, st.floats(1.0, 3.0), st.floats(0.0, 6.0))
 def test_in_an_empty_world_no_curve_is_cheaper(start, goal, factor, change_m):
     """The cheapest curve of the planner is a route, so the bound is at most its cost."""
+    # Below that the planner takes goals for reached that are not: rounding, within its check.
+    moved = max(math.dist(start[:2], goal[:2]), abs(start[2] - goal[2]))
+    assume(moved == 0.0 or moved > 1e-6)
     vehicles = (
         car(reverse_factor=factor, direction_change_m=change_m),
         ForwardCar(footprint_m=BOX, turn_radius_m_min=5.0),
