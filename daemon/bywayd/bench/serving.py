@@ -149,7 +149,7 @@ def _round_trips(
     """Hello and replans against the echo, idle and with busy workers."""
     with echo(f"ipc://{folder}/echo") as bare:
         told = _hellos("ipc", client, bare, sizes.trips)
-        told |= _replans(client, ground, bare, sizes.replans)
+    told |= _replans(client, ground, told["echo_ipc_us"]["p50"] / US, sizes.replans)
     with byway.Client(daemon.tcp_endpoint()) as over_tcp, echo("tcp://127.0.0.1:0") as bare:
         told |= _hellos("tcp", over_tcp, bare, sizes.trips)
     idle_s = [wall_s(client.hello) for _ in range(sizes.trips)]
@@ -173,7 +173,7 @@ def _hellos(transport: str, client: byway.Client, bare: Echo, trips: int) -> Fig
     }
 
 
-def _replans(client: byway.Client, ground: Ground, bare: Echo, count: int) -> Figures:
+def _replans(client: byway.Client, ground: Ground, echo_s: float, count: int) -> Figures:
     """What a replan costs beyond planning the same in this process."""
     _, snapshot = ground.build()
     vehicle = VEHICLES[VEHICLE]
@@ -193,11 +193,11 @@ def _replans(client: byway.Client, ground: Ground, bare: Echo, count: int) -> Fi
     for _ in range(3):
         here()
         there()
-    found = [(wall_s(bare.trip), wall_s(here), there()) for _ in range(count)]
-    echo_s, plan_s = median(f[0] for f in found), median(f[1] for f in found)
+    found = [(wall_s(here), there()) for _ in range(count)]
+    plan_s = median(took_s for took_s, _ in found)
     with busy(client):
         busy_s = [there() - plan_s for _ in range(count)]
-    idle_s = [f[2] - plan_s for f in found]
+    idle_s = [took_s - plan_s for _, took_s in found]
     return {
         "replan_plan_ms": plan_s * MS,
         "replan_rows": int(median(rows)),
