@@ -36,13 +36,16 @@ Floats = npt.NDArray[np.float64]
 
 #: cell_m, headings, arc_m of the lattices, for a turning radius of 5 m.
 COARSE: Final = (1.0, 48, 1.6)
+MIDDLE: Final = (0.7, 64, 1.2)
 FINE: Final = (0.5, 72, 0.8)
 FINEST: Final = (0.3, 96, 0.4)
+#: In the order in which they join the race.
+LEVELS: Final = (COARSE, MIDDLE, FINE, FINEST)
 WEIGHT: Final = 2.0
 FIRST_SLICE: Final = 24
 SLICE_GROWTH: Final = 1.5
-#: Expansions after which each finer pair joins the race.
-FINER_AFTER: Final = 1500
+#: Expansions after which each next pair joins the race.
+FINER_AFTER: Final = 1000
 #: Work of one slice stays below 2 ms.
 SLICE_MAX: Final = 300
 IDLE_MAX: Final = 400
@@ -186,21 +189,19 @@ class Auto:
     def _race(self) -> Generator[int, None, bool]:
         """Find a first path; tell whether there is one."""
         change_m = max(CHANGE_M, self._q.body.direction_change_m)
-        levels = (COARSE, FINE, FINEST)
+        waiting = {backward: list(LEVELS) for backward in (False, True)}
         runners: list[_Runner] = []
-        started = [0, 0]  # levels so far, from the start and from the goal
         size = FIRST_SLICE
         while True:
-            due = min(1 + self._work // FINER_AFTER, len(levels))
-            for backward in (False, True):
+            due = len(LEVELS) - 1 - self._work // FINER_AFTER
+            for backward, levels in waiting.items():
                 alone = not any(runner.backward == backward for runner in runners)
-                # An exhausted search says early that its cells are too coarse there.
-                if started[backward] < (len(levels) if alone else due):
+                if levels and (alone or len(levels) > due):
+                    # An exhausted search says early that its cells are too coarse there.
+                    level = levels.pop(-1 if alone and len(levels) < len(LEVELS) else 0)
                     lattice = self._lattice()
-                    level = levels[started[backward]]
                     self._set_up(lattice, level, WEIGHT, backward=backward, change_m=change_m)
                     runners.append(_Runner(lattice, backward))
-                    started[backward] += 1
             if not runners:
                 return (yield from self._grow_trees(math.inf))
             for runner in tuple(runners):
