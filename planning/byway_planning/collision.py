@@ -14,6 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from byway_planning.kernel import kernel
+from byway_planning.site.edges import REFERENCE_X, REFERENCE_Y, item_crossed
 from byway_planning.site.scene import OPEN, SOLID, Scene
 from byway_planning.vehicles.body import Body
 
@@ -206,7 +207,7 @@ def exact_raster(
                 continue
             b = offset + (r - tr * per) * per + (q - tc * per)
             first, last = scene.wholes[b], scene.wholes[b + 1]
-            base = offset + per * per + 1
+            base = offset + 2 * per * per + 1
             for i in range(first, last):
                 at = base + 5 * i
                 item = (
@@ -220,6 +221,49 @@ def exact_raster(
                 if best <= 0.0:
                     return best
     return best
+
+
+@kernel()
+def inside_raster(scene: Scene, x: float, y: float) -> bool:
+    """
+    Does a point lie in a polygon or in a blocked cell?
+
+    For points that lie on no edge; discs are left to the exact distance. Only a point in a
+    filled cell is looked at closely, which few are.
+    """
+    u, v = (x - scene.corner_x_m) / scene.cell_m, (y - scene.corner_y_m) / scene.cell_m
+    side = scene.tile_cells
+    column, row = int(u), int(v)
+    tr, tc = row // side, column // side
+    offset = scene.field_of[tr, tc]
+    if offset == OPEN:
+        return False
+    if offset != SOLID:
+        at = offset + (row - tr * side) * (side + 1) + (column - tc * side)
+        above = at + side + 1
+        if scene.floats[at] + scene.floats[at + 1] > 0.0:
+            return False
+        if scene.floats[above] + scene.floats[above + 1] > 0.0:
+            return False
+    offset = scene.edges_of[tr, tc]
+    if offset < 0:
+        return True  # a whole tile without an edge
+    per = scene.bucket_side
+    bucket = side * scene.cell_m / per
+    q = int((x - scene.corner_x_m) / bucket)
+    r = int((y - scene.corner_y_m) / bucket)
+    b = (r - tr * per) * per + (q - tc * per)
+    rx = scene.corner_x_m + (q + REFERENCE_X) * bucket
+    ry = scene.corner_y_m + (r + REFERENCE_Y) * bucket
+    around = scene.wholes[offset + per * per + 1 + b]
+    base = offset + 2 * per * per + 1
+    for i in range(scene.wholes[offset + b], scene.wholes[offset + b + 1]):
+        at = base + 5 * i
+        if scene.numbers[at + 4] == 0.0:
+            x0, y0 = scene.numbers[at], scene.numbers[at + 1]
+            x1, y1 = scene.numbers[at + 2], scene.numbers[at + 3]
+            around += item_crossed(x0, y0, x1, y1, rx, ry, x, y)
+    return bool(around > 0)
 
 
 @kernel()
@@ -333,7 +377,17 @@ def pose_excess(scene: Scene, body: Body, x: float, y: float, heading: float) ->
     best = exact_raster(scene, outline, body.skin_m, x, y, c, s, hard + EXACT_M)
     if scene.outline_discs.shape[0] > 0 and best > 0.0:
         best = exact_outlines(scene, body, outline, x, y, c, s, 0.0, best)
+    if best > hard and _is_swallowed(scene, body, x, y, c, s):
+        return 0.0
     return best - hard
+
+
+@kernel()
+def _is_swallowed(scene: Scene, body: Body, x: float, y: float, c: float, s: float) -> bool:
+    """Does a body that touches no edge lie inside an obstacle? Then any of its points does."""
+    ix = x + c * body.inner_x_m - s * body.inner_y_m
+    iy = y + s * body.inner_x_m + c * body.inner_y_m
+    return inside_raster(scene, ix, iy)
 
 
 @kernel()
@@ -350,7 +404,7 @@ def pose_free(scene: Scene, body: Body, x: float, y: float, heading: float) -> b
     best = exact_raster(scene, outline, body.skin_m, x, y, c, s, cap)
     if scene.outline_discs.shape[0] > 0 and best > wanted:
         best = exact_outlines(scene, body, outline, x, y, c, s, 0.0, best)
-    return bool(best > wanted)
+    return bool(best > wanted) and not _is_swallowed(scene, body, x, y, c, s)
 
 
 @kernel(Scene, Body, "rf8[:, ::1]", "f8[::1]")

@@ -1,17 +1,19 @@
 """
 The memory that snapshots live in: one flat buffer, handed out in blocks.
 
-In a script the buffer is private and grows by copying (snapshots keep the buffer they were
-made in). In a daemon it is a shared mapping of fixed size whose pages are claimed extent by
-extent; one process writes, the others only read.
+The buffer has a fixed, generous size, and its pages come into being when they are first written.
+In a daemon it is a shared mapping whose pages are claimed extent by extent, so that none is
+missing; one process writes, the others only read. In a script it is private.
 
-Blocks are multiples of 64 bytes, rounded up to eight sizes an octave, so that a freed block
-fits the next of about its size and at most an eighth is lost. Who may free a block, and
-when, is not decided here but by the owner of the snapshots.
+A block is cut from the smallest free stretch that holds it; a block given back joins the free
+stretches beside it. Sizes are rounded to eight an octave, so that a block mostly fits where one
+of about its size was, and years of updates leave no dust. Who may free a block, and when, is
+not decided here but by the owner of the snapshots.
 """
 
+from bisect import bisect_left, insort
 from collections.abc import Callable
-from mmap import mmap
+from mmap import MAP_ANONYMOUS, MAP_PRIVATE, mmap
 
 import numpy as np
 import numpy.typing as npt
@@ -19,6 +21,9 @@ import numpy.typing as npt
 Bytes = npt.NDArray[np.uint8]
 
 ALIGN_BYTES = 64
+#: Addresses set aside for private memory: twice what the largest site has in blocks (TILES_MAX
+#: tiles of 20 kB). They cost nothing until they are written to.
+PRIVATE_BYTES = 1 << 34
 
 
 class MemoryFull(MemoryError):
@@ -35,18 +40,32 @@ def rounded_bytes(size: int) -> int:
 class Memory:
     """Blocks in one buffer; see the module text."""
 
-    def __init__(self, buffer: Bytes, grow: Callable[[int], None] | None) -> None:
+    def __init__(self, buffer: bytearray | mmap, grow: Callable[[int], None]) -> None:
         # -- owned by the one writer ----------------------------------------------------
-        self._bytes = buffer
-        self._grow = grow  # None: private memory, grown by copying
+        self._bytes: Bytes = np.frombuffer(buffer, np.uint8)
+        self._grow = grow
+        #: From here on nothing is handed out; no free stretch ends here.
         self._top = ALIGN_BYTES  # offset 0 means "no block"
-        self._free: dict[int, list[int]] = {}
+        #: Blocks in use, offset to size.
         self._sizes: dict[int, int] = {}
+        self._used_bytes = 0
+        #: Free stretches below the top, no two of them adjacent: start to size, end to start,
+        #: and (size, start) in order.
+        self._free: dict[int, int] = {}
+        self._free_ends: dict[int, int] = {}
+        self._free_by_size: list[tuple[int, int]] = []
 
     @classmethod
-    def private(cls, size: int = 1 << 20) -> "Memory":
-        """Memory of this process alone."""
-        return cls(np.zeros(size, np.uint8), None)
+    def private(cls) -> "Memory":
+        """Memory of this process alone; takes up what is written to it."""
+        size = PRIVATE_BYTES
+        while True:
+            try:
+                return cls(mmap(-1, size, flags=MAP_PRIVATE | MAP_ANONYMOUS), lambda end: None)
+            except OSError:  # more than this machine would ever give
+                if size < 1 << 26:
+                    raise
+                size //= 2
 
     @classmethod
     def over(cls, buffer: bytearray | mmap, grow: Callable[[int], None]) -> "Memory":
@@ -58,7 +77,7 @@ class Memory:
             grow: Called with the number of bytes from the start that must be usable;
                 raises OSError when they are not to be had.
         """
-        return cls(np.frombuffer(buffer, np.uint8), grow)
+        return cls(buffer, grow)
 
     @property
     def buffer(self) -> Bytes:
@@ -66,40 +85,74 @@ class Memory:
 
     @property
     def used_bytes(self) -> int:
-        return sum(self._sizes.values())
+        """Bytes in blocks."""
+        return self._used_bytes
+
+    @property
+    def top_bytes(self) -> int:
+        """Bytes from the start that blocks and free stretches together take up."""
+        return self._top
 
     def take(self, size: int) -> int:
-        """Return the offset of a block of at least `size` bytes; its content is undefined."""
+        """
+        Return the offset of a block of at least `size` bytes; its content is undefined.
+
+        Raises:
+            MemoryFull: If there is no room for it; nothing is taken then.
+        """
         size = rounded_bytes(size)
-        free = self._free.get(size)
-        if free:
-            offset = free.pop()
+        at = bisect_left(self._free_by_size, (size, 0))
+        if at < len(self._free_by_size):
+            stretch, offset = self._free_by_size[at]
+            self._forget_free(offset, stretch)
+            if stretch > size:
+                self._note_free(offset + size, stretch - size)
         else:
             offset = self._top
             self._reserve(offset + size)
             self._top = offset + size
         self._sizes[offset] = size
+        self._used_bytes += size
         return offset
 
     def give_back(self, offset: int) -> None:
         """Free a block."""
         size = self._sizes.pop(offset)
-        self._free.setdefault(size, []).append(offset)
+        self._used_bytes -= size
+        before = self._free_ends.get(offset)
+        if before is not None:
+            self._forget_free(before, offset - before)
+            offset, size = before, size + offset - before
+        after = self._free.get(offset + size)
+        if after is not None:
+            self._forget_free(offset + size, after)
+            size += after
+        if offset + size == self._top:
+            self._top = offset
+        else:
+            self._note_free(offset, size)
 
     def adopt(self, blocks: dict[int, int]) -> None:
         """Take over blocks (offset to bytes asked for) that a predecessor handed out."""
-        self._sizes = {offset: rounded_bytes(size) for offset, size in blocks.items()}
-        # Holes between them are given up until the next restart: their sizes are unknown.
-        ends = [offset + size for offset, size in self._sizes.items()]
-        self._top = max([ALIGN_BYTES, *ends])
+        self._sizes = {offset: rounded_bytes(size) for offset, size in sorted(blocks.items())}
+        self._used_bytes = sum(self._sizes.values())
+        self._free, self._free_ends, self._free_by_size = {}, {}, []
+        self._top = ALIGN_BYTES
+        for offset, size in self._sizes.items():
+            if offset > self._top:
+                self._note_free(self._top, offset - self._top)
+            self._top = offset + size
+
+    def _note_free(self, start: int, size: int) -> None:
+        self._free[start] = size
+        self._free_ends[start + size] = start
+        insort(self._free_by_size, (size, start))
+
+    def _forget_free(self, start: int, size: int) -> None:
+        del self._free[start], self._free_ends[start + size]
+        del self._free_by_size[bisect_left(self._free_by_size, (size, start))]
 
     def _reserve(self, end: int) -> None:
-        if self._grow is None:
-            if end > len(self._bytes):
-                bigger = np.zeros(max(end, 2 * len(self._bytes)), np.uint8)
-                bigger[: len(self._bytes)] = self._bytes
-                self._bytes = bigger
-            return
         if end > len(self._bytes):
             raise MemoryFull(
                 f"the site needs more than the {len(self._bytes) >> 20} MiB it was given"

@@ -7,21 +7,20 @@ the tiles that changed and the distances around them, writes them to fresh block
 tables; the blocks of the revision before stay until `release_before` says that nobody reads it.
 """
 
-from collections.abc import Iterator
+import math
 from dataclasses import dataclass, field
 
 import numpy as np
 import numpy.typing as npt
 
-from byway_planning.site.memory import Memory, MemoryFull
+from byway_planning.site.memory import Memory
+from byway_planning.site.publishing import Publisher
 from byway_planning.site.raster import resample_kernel
 from byway_planning.site.records import Records
-from byway_planning.site.scene import OPEN
 from byway_planning.site.settings import LayerSettings, SiteSettings
 from byway_planning.site.shapes import ID_BYTES_MAX, PolygonShape, Shape, SiteError
-from byway_planning.site.snapshot import Handle, Snapshot, handle_for, store_tables
-from byway_planning.site.solids import ALL_CELLS, NO_CELLS
-from byway_planning.site.tiles import Cells, Rasters, Tile, TileBlocks, field_block_floats
+from byway_planning.site.snapshot import Handle, Snapshot, handle_for
+from byway_planning.site.tiles import Cells, Tile
 
 #: Rows or columns of one patch; 4096 cells of 0.1 m are more than any sensor sees at once.
 PATCH_CELLS_MAX = 4096
@@ -29,20 +28,10 @@ UNKNOWN = 2
 
 
 @dataclass
-class _Published:
-    """Where the newest snapshot keeps what one tile contributes; offset 0: nowhere."""
-
-    field: int = 0
-    edges: int = 0
-    cells: int = 0
-
-
-@dataclass
 class _Layer:
     index: int
     settings: LayerSettings
     cells: dict[Tile, Cells] = field(default_factory=dict)
-    places: dict[Tile, int] = field(default_factory=dict)  # published copies of the cells
 
 
 class SiteModel:
@@ -54,26 +43,13 @@ class SiteModel:
         self.revision = 0
         self._layers: dict[str, _Layer] = {}
         self._records = Records()
-        self._rasters = Rasters(settings)
-        #: Obstacles by tile: all and only those whose box touches the tile, outlines not.
+        #: Obstacles by tile: all and only those that may touch the tile, outlines not.
         self._by_tile: dict[Tile, dict[tuple[int, str], Shape]] = {}
+        self._publisher = Publisher(settings, self.memory, self._records)
+        #: What the newest snapshot does not show yet: tiles, and cells of layers in tiles.
         self._dirty: set[Tile] = set()
         self._dirty_cells: set[tuple[str, Tile]] = set()
         self._changed = True
-        rows, columns = settings.tiles
-        self._field_of = np.full((rows, columns), OPEN, np.int64)
-        self._edges_of = np.full((rows, columns), NO_CELLS, np.int64)
-        self._cells_of = np.full((rows, columns), NO_CELLS, np.int64)
-        self._published: dict[Tile, _Published] = {}
-        #: Sizes of the tile blocks of the newest snapshot, by offset.
-        self._sizes: dict[int, int] = {}
-        self._tables: list[int] = []
-        #: Blocks written since the last publish that went through.
-        self._unpublished: set[int] = set()
-        #: Blocks that the next revision no longer reads (kept over a failed publish).
-        self._retiring: list[int] = []
-        #: (revision from which on they are not read, offsets), oldest first.
-        self._retired: list[tuple[int, list[int]]] = []
         self._snapshot: Snapshot | None = None
 
     # -- changes ----------------------------------------------------------------------------
@@ -165,19 +141,22 @@ class SiteModel:
                 f"{(a0, b0, a1, b1)}",
             )
         side = self.settings.tile_cells
+        # What a tile without cells stands for; no tile is kept for that.
+        base = np.full((side, side), UNKNOWN if owner.settings.unknown_blocks else 0, np.uint8)
         for tile in self._tiles_in(x, y, x + width, y + height):
-            old = owner.cells.get(tile)
-            if old is None:
-                base = UNKNOWN if owner.settings.unknown_blocks else 0
-                old = np.full((side, side), base, np.uint8)
+            old = owner.cells.get(tile, base)
             new = old.copy()
-            tx, ty = self._rasters.corner_m(tile)
+            tx, ty = self.settings.corner_m(tile)
             resample_kernel(patch, x, y, cell_m, new, tx, ty, self.settings.cell_m)
-            if tile not in owner.cells or (new != old).any():
+            if (new == old).all():
+                continue
+            if (new == base).all():
+                del owner.cells[tile]
+            else:
                 owner.cells[tile] = new
-                self._dirty.add(tile)
-                self._dirty_cells.add((layer, tile))
-                self._changed = True
+            self._dirty.add(tile)
+            self._dirty_cells.add((layer, tile))
+            self._changed = True
 
     @staticmethod
     def _checked_patch(corner_m: tuple[float, float], cell_m: float, cells: Cells) -> Cells:
@@ -215,119 +194,30 @@ class SiteModel:
         """
         if not self._changed and self._snapshot is not None:
             return self._snapshot
-        self._publish_rasters()
-        self._publish_cells()
-        places = store_tables(self.memory, self._contents())
-        self._retiring += self._tables
-        self._tables = [offset for offset, _ in places.values()]
+        places = self._publisher.publish(
+            self.revision + 1,
+            self._dirty,
+            self._content,
+            {
+                (self._layers[name].index, tile): self._layers[name].cells.get(tile)
+                for name, tile in sorted(self._dirty_cells)
+            },
+        )
         self.revision += 1
-        self._retired.append((self.revision, self._retiring))
-        self._retiring = []
-        self._unpublished.clear()
+        self._dirty.clear()
+        self._dirty_cells.clear()
+        self._changed = False
         layers = {name: layer.settings for name, layer in self._layers.items()}
         handle = handle_for(self.revision, self.settings, layers, places)
-        self._snapshot = Snapshot(self.memory.buffer, handle)
-        self._changed = False
+        self._snapshot = Snapshot(self.memory.buffer, handle, self.settings)
         return self._snapshot
 
     def release_before(self, revision: int) -> None:
         """Give back the memory that only snapshots older than `revision` read."""
-        while self._retired and self._retired[0][0] <= revision:
-            for offset in self._retired.pop(0)[1]:
-                self.memory.give_back(offset)
+        self._publisher.release_before(revision)
 
-    def _publish_rasters(self) -> None:
-        rows, columns = self.settings.tiles
-        around: set[Tile] = set()
-        for tile in sorted(self._dirty):
-            shapes = self._by_tile.get(tile, {})
-            blocks = self._rasters.rebuild(tile, shapes.values(), self._blocked(tile))
-            place = self._published.setdefault(tile, _Published())
-            self._edges_of[tile] = self._swap(place, "edges", blocks.edges)
-            self._cells_of[tile] = self._swap(place, "cells", blocks.cells)
-            if blocks.all_cells:
-                self._cells_of[tile] = ALL_CELLS
-            r, c = tile
-            around |= {
-                (i, j)
-                for i in range(max(r - 1, 0), min(r + 2, rows))
-                for j in range(max(c - 1, 0), min(c + 2, columns))
-            }
-        for row, first, last in _runs(sorted(around)):
-            for column, blocks in self._rasters.fields(row, first, last):
-                tile = (row, column)
-                place = self._published.setdefault(tile, _Published())
-                offset = self._swap(place, "field", blocks.field)
-                self._field_of[tile] = offset if blocks.field is not None else blocks.field_state
-        self._rasters.update_far(self._dirty)
-        self._dirty.clear()
-
-    def _swap(
-        self,
-        place: _Published,
-        what: str,
-        block: npt.NDArray[np.generic] | None,
-    ) -> int:
-        """Publish a block in place of the tile's last one; return its offset in elements."""
-        old = getattr(place, what)
-        if old:
-            self._retire(old)
-            setattr(place, what, 0)  # before anything that can fail
-        if block is None:
-            return NO_CELLS
-        offset = self._keep(block)
-        setattr(place, what, offset)
-        return offset // block.itemsize
-
-    def _keep(self, block: npt.NDArray[np.generic]) -> int:
-        offset = self.memory.store(block)
-        self._sizes[offset] = block.nbytes
-        self._unpublished.add(offset)
-        return offset
-
-    def _retire(self, offset: int) -> None:
-        """Forget a block: later, when nobody reads it, or at once when nobody ever did."""
-        del self._sizes[offset]
-        if offset in self._unpublished:
-            self._unpublished.remove(offset)
-            self.memory.give_back(offset)
-        else:
-            self._retiring.append(offset)
-
-    def _publish_cells(self) -> None:
-        for name, tile in sorted(self._dirty_cells):
-            layer = self._layers[name]
-            old = layer.places.pop(tile, None)
-            if old is not None:
-                self._retire(old)
-            if tile in layer.cells:
-                layer.places[tile] = self._keep(layer.cells[tile])
-        self._dirty_cells.clear()
-
-    def _contents(self) -> dict[str, npt.NDArray[np.generic]]:
-        columns = self.settings.tiles[1]
-        cells = [
-            (layer.index, tile[0] * columns + tile[1], offset)
-            for layer in self._layers.values()
-            for tile, offset in layer.places.items()
-        ]
-        records = self._records
-        return {
-            "field_of": self._field_of.reshape(-1),
-            "edges_of": self._edges_of.reshape(-1),
-            "cells_of": self._cells_of.reshape(-1),
-            "far_m": self._rasters.far_m.reshape(-1),
-            "vertices": records.vertices.view,
-            "starts": records.starts.view,
-            "boxes": records.boxes.view,
-            "polygon_layers": records.polygon_layers.view,
-            "polygon_names": records.polygon_names.view,
-            "discs": records.discs.view,
-            "disc_layers": records.disc_layers.view,
-            "disc_names": records.disc_names.view,
-            "layer_cells": np.array(cells, np.int64).reshape(-1, 3),
-            "tile_blocks": np.array(list(self._sizes.items()), np.int64).reshape(-1, 2),
-        }
+    def _content(self, tile: Tile) -> tuple[list[Shape], Cells | None]:
+        return list(self._by_tile.get(tile, {}).values()), self._blocked(tile)
 
     def _blocked(self, tile: Tile) -> Cells | None:
         """Blocked cells of a tile, over all rastered layers; None when there is none."""
@@ -360,13 +250,9 @@ class SiteModel:
                 until `release_before` frees them.
         """
         snapshot = Snapshot.attach(memory, handle)
-        blocks = snapshot.blocks()
-        for other in in_use:
-            blocks |= Snapshot.attach(memory, other).blocks()
-        memory.adopt(blocks)
         model = cls(snapshot.settings, memory)
         for name, settings in snapshot.layers().items():
-            model.declare(name, settings)
+            model._layers[name] = _Layer(len(model._layers), settings)
         for layer, name, shape in snapshot.obstacles():
             model.put(layer, name, shape)
         for name, owner in model._layers.items():
@@ -375,13 +261,18 @@ class SiteModel:
                 x, y = (c + snapshot.settings.tile_m / 2 for c in corner)
                 tile = model._tiles_in(x, y, x, y)[0]
                 owner.cells[tile] = cells.copy()
-                model._dirty.add(tile)
-                model._dirty_cells.add((name, tile))
+        others = [Snapshot.attach(memory, each) for each in in_use]
+        model._publisher.adopt(snapshot, others, model._filled_tiles(), model._content)
         model.revision = snapshot.revision
         model._snapshot = snapshot
-        # Everything is published afresh; what the predecessor wrote goes when nobody reads it.
-        model._retired.append((snapshot.revision + 1, list(blocks)))
+        model._dirty.clear()
+        model._changed = False
         return model
+
+    def _filled_tiles(self) -> set[Tile]:
+        if any(layer.settings.unknown_blocks for layer in self._layers.values()):
+            return set(self._tiles_in(*self.settings.limits_m))
+        return set(self._by_tile).union(*(layer.cells for layer in self._layers.values()))
 
     # -- places -----------------------------------------------------------------------------
 
@@ -405,10 +296,10 @@ class SiteModel:
         """Tiles that a box touches, its border included."""
         s = self.settings
         rows, columns = s.tiles
-        c0 = int(np.floor((x0 - s.limits_m[0]) / s.tile_m - 1e-9))
-        c1 = int(np.floor((x1 - s.limits_m[0]) / s.tile_m + 1e-9))
-        r0 = int(np.floor((y0 - s.limits_m[1]) / s.tile_m - 1e-9))
-        r1 = int(np.floor((y1 - s.limits_m[1]) / s.tile_m + 1e-9))
+        c0 = math.floor((x0 - s.limits_m[0]) / s.tile_m - 1e-9)
+        c1 = math.floor((x1 - s.limits_m[0]) / s.tile_m + 1e-9)
+        r0 = math.floor((y0 - s.limits_m[1]) / s.tile_m - 1e-9)
+        r1 = math.floor((y1 - s.limits_m[1]) / s.tile_m + 1e-9)
         return [
             (r, c)
             for r in range(max(r0, 0), min(r1, rows - 1) + 1)
@@ -429,7 +320,7 @@ class SiteModel:
         convex = _is_convex(ring)
         kept = []
         for tile in tiles:
-            x, y = self._rasters.corner_m(tile)
+            x, y = self.settings.corner_m(tile)
             middle = np.array([x + side / 2, y + side / 2])
             # Inside distance to each edge's line; a convex shape misses a tile that lies beyond
             # one of them as a whole.
@@ -444,22 +335,3 @@ def _is_convex(ring: npt.NDArray[np.float64]) -> bool:
     d = np.roll(ring, -1, axis=0) - ring
     e = np.roll(d, -1, axis=0)
     return bool((d[:, 0] * e[:, 1] - d[:, 1] * e[:, 0] >= -1e-12).all())
-
-
-def _runs(tiles: list[Tile]) -> Iterator[tuple[int, int, int]]:
-    """Cut sorted tiles into runs (row, first column, last column) of neighbours, up to 16 long."""
-    i = 0
-    while i < len(tiles):
-        j = i
-        row, first = tiles[i]
-        while (
-            j + 1 < len(tiles)
-            and tiles[j + 1] == (row, tiles[j][1] + 1)
-            and tiles[j + 1][1] - first < 16
-        ):
-            j += 1
-        yield row, first, tiles[j][1]
-        i = j + 1
-
-
-__all__ = ["MemoryFull", "SiteModel", "TileBlocks", "field_block_floats"]

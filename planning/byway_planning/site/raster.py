@@ -42,16 +42,18 @@ def fill_polygon_kernel(
                 x0, x1 = x1, x0
             for c in range(max(math.floor(x0), 0), min(math.floor(x1), columns - 1) + 1):
                 out[r, c] = 1
-    for r in range(rows):
-        y = corner_y + (r + 0.5) * cell
-        for i in range(count):  # crossings to the left flip the state of every cell to the right
-            j = i + 1 if i + 1 < count else 0
-            ay, by = ring[i, 1], ring[j, 1]
+    for i in range(count):  # an edge flips the state of every cell whose middle is to its right
+        j = i + 1 if i + 1 < count else 0
+        ax, ay, bx, by = ring[i, 0], ring[i, 1], ring[j, 0], ring[j, 1]
+        first = max(math.floor((min(ay, by) - corner_y) / cell - 0.5), 0)
+        last = min(math.floor((max(ay, by) - corner_y) / cell + 0.5), rows - 1)
+        for r in range(first, last + 1):
+            y = corner_y + (r + 0.5) * cell
             if (ay <= y) != (by <= y):
-                x = ring[i, 0] + (ring[j, 0] - ring[i, 0]) * (y - ay) / (by - ay)
-                first = max(math.ceil((x - corner_x) / cell - 0.5), 0)
-                for c in range(first, columns):
+                x = ax + (bx - ax) * (y - ay) / (by - ay)
+                for c in range(max(math.ceil((x - corner_x) / cell - 0.5), 0), columns):
                     out[r, c] ^= 2
+    for r in range(rows):
         for c in range(columns):
             out[r, c] = 1 if out[r, c] else 0
 
@@ -79,33 +81,57 @@ def resample_kernel(
     patch: Cells, px: float, py: float, pcell: float, out: Cells, cx: float, cy: float, cell: float
 ) -> None:
     """
-    Overwrite the cells of a tile whose middle a patch covers.
+    Overwrite the cells of a tile that a patch covers.
 
-    Occupied wins over unknown wins over free among the patch cells that a tile cell overlaps;
-    a finer tile therefore repeats, a coarser one is on the safe side. Where the patch covers
-    only a corner of a tile cell, an occupied one still fills it. 0 free, 1 occupied, 2 unknown.
-    Borders that agree within a millionth of a cell count as equal.
+    A tile cell takes the worst of the patch cells that it overlaps, occupied before unknown
+    before free, so a finer tile repeats and a coarser one is on the safe side. A tile cell that
+    the patch covers only in part can only get worse by it. Borders that agree within a millionth
+    of a patch cell count as equal. 0 free, 1 occupied, 2 unknown.
     """
     slack = 1e-6
     rows, columns = patch.shape
-    for r in range(out.shape[0]):
-        y0 = (cy + r * cell - py) / pcell
-        y1 = y0 + cell / pcell
-        if y1 <= slack or y0 >= rows - slack:
-            continue
+    ratio = cell / pcell
+    first_row, last_row = _covered((cy - py) / pcell, ratio, rows, out.shape[0])
+    first, last = _covered((cx - px) / pcell, ratio, columns, out.shape[1])
+    for r in range(first_row, last_row + 1):
+        y0 = (cy - py) / pcell + r * ratio
+        y1 = y0 + ratio
         r0, r1 = max(math.floor(y0 + slack), 0), min(math.ceil(y1 - slack), rows)
-        for c in range(out.shape[1]):
-            x0 = (cx + c * cell - px) / pcell
-            x1 = x0 + cell / pcell
-            if x1 <= slack or x0 >= columns - slack:
-                continue
-            covered = 0.0 <= (y0 + y1) / 2 < rows and 0.0 <= (x0 + x1) / 2 < columns
+        whole_row = y0 >= -slack and y1 <= rows + slack
+        for c in range(first, last + 1):
+            x0 = (cx - px) / pcell + c * ratio
+            x1 = x0 + ratio
             c0, c1 = max(math.floor(x0 + slack), 0), min(math.ceil(x1 - slack), columns)
-            value = 0
+            if r0 >= r1 or c0 >= c1:
+                continue
+            value = 0 if whole_row and x0 >= -slack and x1 <= columns + slack else out[r, c]
             for i in range(r0, r1):
                 for j in range(c0, c1):
-                    p = patch[i, j]
-                    if p == 1 or (p == 2 and value == 0):
-                        value = p
-            if covered or value == 1:
-                out[r, c] = value
+                    if patch[i, j] == 1 or (patch[i, j] == 2 and value == 0):
+                        value = patch[i, j]
+            out[r, c] = value
+
+
+@kernel()
+def _covered(begin: float, ratio: float, extent: int, count: int) -> tuple[int, int]:
+    """First and last of `count` tile cells that a patch may overlap along one axis."""
+    first = max(math.floor(-begin / ratio) - 1, 0)
+    last = min(math.ceil((extent - begin) / ratio) + 1, count - 1)
+    return first, last
+
+
+@kernel("ru1[:, ::1]", "ru1[:, ::1]")
+def changed_span_kernel(before: Cells, after: Cells) -> tuple[int, int, int, int]:
+    """First and last row, first and last column in which two rasters differ; -1 if they do not."""
+    rows, columns = before.shape
+    r0, r1, c0, c1 = -1, -1, columns, -1
+    for r in range(rows):
+        differs = False
+        for c in range(columns):
+            differs |= before[r, c] != after[r, c]
+        if differs:
+            r0, r1 = r if r0 < 0 else r0, r
+            for c in range(columns):
+                if before[r, c] != after[r, c]:
+                    c0, c1 = min(c0, c), max(c1, c)
+    return r0, r1, c0, c1

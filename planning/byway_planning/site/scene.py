@@ -6,6 +6,7 @@ import numpy as np
 import numpy.typing as npt
 
 from byway_planning.kernel import describe
+from byway_planning.site.settings import SiteSettings
 
 #: Tile table: no obstacle within reach of the tile, or the whole tile and its surroundings blocked.
 OPEN = -1
@@ -20,8 +21,9 @@ class Scene(NamedTuple):
     A tile's field block holds, in `floats` from `field_of`: the distance to the nearest occupied
     cell at the (tile_cells + 1)^2 corners of its cells, in metres, cut off at `reach_m`; then, for
     squares of `room_cells` cells, the largest such distance (row by row); then the same for
-    squares four times as wide. A tile's edge block holds, in `wholes` from `edges_of`, the bucket
-    starts, and right behind them, in `numbers`, the items (see `edges`).
+    squares four times as wide. A tile's edge block (see `edges`) holds, in `wholes` from
+    `edges_of`, the bucket starts and what is around their reference points, and right behind
+    them, in `numbers`, the items.
     """
 
     cell_m: float
@@ -54,3 +56,9 @@ describe(
     *("ri8[:, ::1]", "ri8[:, ::1]", "rf4[::1]", "ri8[::1]", "rf8[::1]", "rf4[:, ::1]"),
     *("rf8[:, ::1]", "ri8[::1]", "rf8[:, ::1]"),
 )
+
+
+def field_block_floats(settings: SiteSettings) -> int:
+    """Return how many float32 a field block holds."""
+    side, room = settings.tile_cells, settings.room_cells
+    return (side + 1) ** 2 + (side // room) ** 2 + (side // (4 * room)) ** 2

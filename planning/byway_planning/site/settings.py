@@ -1,6 +1,7 @@
 """Settings of a site and of its layers."""
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -57,16 +58,16 @@ class SiteSettings:
                 f"smaller limits_m"
             )
 
-    @property
+    @cached_property
     def tile_m(self) -> float:
         return self.tile_cells * self.cell_m
 
-    @property
+    @cached_property
     def reach_cells(self) -> int:
         """Cells that a distance reaches; at most a tile, so that neighbours suffice."""
         return min(int(np.ceil(self.reach_m / self.cell_m - 1e-9)), self.tile_cells)
 
-    @property
+    @cached_property
     def room_cells(self) -> int:
         """Cells along one side of a room square: about 0.4 m, so that a flood is quick."""
         size = 1
@@ -74,18 +75,22 @@ class SiteSettings:
             size *= 2
         return size
 
-    @property
+    @cached_property
     def bucket_side(self) -> int:
         """Buckets along one side of a tile: about 1.6 m, so that a vehicle touches few."""
         return max(1, round(self.tile_m / 1.6))
 
-    @property
+    @cached_property
     def tiles(self) -> tuple[int, int]:
         """Rows and columns of tiles that cover the limits."""
         x0, y0, x1, y1 = self.limits_m
         rows = int(np.ceil((y1 - y0) / self.tile_m - 1e-9))
         columns = int(np.ceil((x1 - x0) / self.tile_m - 1e-9))
         return max(rows, 1), max(columns, 1)
+
+    def corner_m(self, tile: tuple[int, int]) -> tuple[float, float]:
+        """Return the lower left corner of a tile (row, column)."""
+        return self.limits_m[0] + tile[1] * self.tile_m, self.limits_m[1] + tile[0] * self.tile_m
 
 
 @dataclass(frozen=True)

@@ -7,7 +7,7 @@ import numpy as np
 import numpy.typing as npt
 
 from byway_planning.kernel import ensure_warm
-from byway_planning.site.model import SiteModel
+from byway_planning.site.model import PATCH_CELLS_MAX, SiteModel
 from byway_planning.site.settings import LayerSettings, SiteSettings
 from byway_planning.site.shapes import DiscShape, PolygonShape, Shape
 from byway_planning.site.snapshot import Snapshot
@@ -70,10 +70,12 @@ class Site:
         model = cls._model(limits_m, cell_m, origin_m)
         model.declare(CELLS, LayerSettings(unknown_blocks=unknown == "blocked"))
         x, y = corner_m[0] - origin_m[0], corner_m[1] - origin_m[1]
-        step = 4096
-        for r in range(0, max(rows, 1), step):  # a grid may be larger than the largest patch
-            for c in range(0, max(columns, 1), step):
-                part = grid[r : r + step, c : c + step] if grid.ndim == 2 else grid
+        # A grid may be larger than the largest patch. Its parts share a row or column, so that
+        # every cell of the site which the grid covers is covered by one part as a whole.
+        most, step = PATCH_CELLS_MAX, PATCH_CELLS_MAX - 1
+        for r in range(0, max(rows - 1, 1), step):
+            for c in range(0, max(columns - 1, 1), step):
+                part = grid[r : r + most, c : c + most] if grid.ndim == 2 else grid
                 model.patch(CELLS, (x + c * cell_m, y + r * cell_m), cell_m, part)
         return cls._filled(model, polygons, discs)
 

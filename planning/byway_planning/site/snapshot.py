@@ -7,16 +7,16 @@ kept; nothing is copied but the few outlines that a request may leave out.
 """
 
 from collections.abc import Hashable, Iterator, Mapping
-from dataclasses import asdict
-from typing import Any, Final, Literal, cast
+from dataclasses import fields
+from typing import Any, Final, cast
 
 import numpy as np
 import numpy.typing as npt
 
 from byway_planning.site.edges import polygon_items
-from byway_planning.site.memory import Memory, MemoryFull
-from byway_planning.site.records import NAME, NOWHERE, shape_from
-from byway_planning.site.scene import FAR_PER_TILE, Scene
+from byway_planning.site.memory import Memory
+from byway_planning.site.records import NAME, NO_DISC, NOWHERE, shape_from
+from byway_planning.site.scene import FAR_PER_TILE, Scene, field_block_floats
 from byway_planning.site.settings import LayerSettings, SiteSettings
 from byway_planning.site.shapes import Shape
 from byway_planning.site.solids import Solids
@@ -38,41 +38,20 @@ TABLES: Final[dict[str, tuple[npt.DTypeLike, int]]] = {
     "discs": (np.float64, 3),
     "disc_layers": (np.int32, 0),
     "disc_names": (NAME, 0),
-    "layer_cells": (np.int64, 3),  # layer, tile index, offset of its tile_cells^2 cells
-    "tile_blocks": (np.int64, 2),  # offset and size of every tile block this snapshot reads
+    "layer_cells": (np.int64, 3),  # layer (-1: free row), tile, offset of its tile_cells^2 cells
 }
-
-
-def store_tables(memory: Memory, tables: Mapping[str, Array]) -> dict[str, tuple[int, int]]:
-    """
-    Copy the tables of a snapshot into memory; return where each lies and its rows.
-
-    Raises:
-        MemoryFull: When they do not fit; nothing is taken then.
-    """
-    places: dict[str, tuple[int, int]] = {}
-    try:
-        for name in TABLES:
-            places[name] = (memory.store(tables[name]), len(tables[name]))
-    except MemoryFull:
-        for offset, _ in places.values():
-            memory.give_back(offset)
-        raise
-    return places
 
 
 class Snapshot:
     """One revision of a site; see the module text."""
 
-    def __init__(self, buffer: npt.NDArray[np.uint8], handle: Handle) -> None:
+    def __init__(
+        self, buffer: npt.NDArray[np.uint8], handle: Handle, settings: SiteSettings | None = None
+    ) -> None:
         self._buffer = buffer
         self.handle = handle
         self.revision: int = handle["revision"]
-        raw = handle["settings"]
-        self.settings = SiteSettings(
-            tuple(raw["limits_m"]), raw["cell_m"], tuple(raw["origin_m"]), raw["reach_m"],
-            raw["tile_cells"],
-        )  # fmt: skip
+        self.settings = settings or _settings_from(handle["settings"])
         self._layers = {
             name: LayerSettings(unknown, outlines) for name, unknown, outlines in handle["layers"]
         }
@@ -131,23 +110,39 @@ class Snapshot:
         index = self._names.index(layer)
         side = self.settings.tile_cells
         columns = self.settings.tiles[1]
-        for owner, tile, offset in self.table("layer_cells").tolist():
-            if owner == index:
-                row, column = divmod(tile, columns)
-                corner = (
-                    self.settings.limits_m[0] + column * self.settings.tile_m,
-                    self.settings.limits_m[1] + row * self.settings.tile_m,
-                )
-                cells = self._buffer[offset : offset + side * side].reshape(side, side)
-                cells.flags.writeable = False
-                yield corner, cells
+        table = self.table("layer_cells")
+        for tile, offset in sorted(table[table[:, 0] == index, 1:].tolist()):
+            row, column = divmod(tile, columns)
+            corner = (
+                self.settings.limits_m[0] + column * self.settings.tile_m,
+                self.settings.limits_m[1] + row * self.settings.tile_m,
+            )
+            cells = self._buffer[offset : offset + side * side].reshape(side, side)
+            cells.flags.writeable = False
+            yield corner, cells
+
+    def table_blocks(self) -> dict[str, tuple[int, int]]:
+        """Return offset and bytes of every table."""
+        found = {}
+        for name, (offset, rows) in self.handle["tables"].items():
+            dtype, columns = TABLES[name]
+            found[name] = offset, np.dtype(dtype).itemsize * rows * max(columns, 1)
+        return found
 
     def blocks(self) -> dict[int, int]:
         """Return offset and bytes of every block of memory that this snapshot reads."""
-        found = {int(offset): int(size) for offset, size in self.table("tile_blocks")}
-        for name, (offset, rows) in self.handle["tables"].items():
-            dtype, columns = TABLES[name]
-            found[offset] = np.dtype(dtype).itemsize * rows * max(columns, 1)
+        s = self.settings
+        found = dict(self.table_blocks().values())
+        field_bytes = 4 * field_block_floats(s)
+        found |= {4 * int(at): field_bytes for at in self.table("field_of") if at >= 0}
+        words = self._buffer[: len(self._buffer) // 8 * 8].view(np.int64)
+        buckets = s.bucket_side**2
+        for at in self.table("edges_of"):
+            if at >= 0:
+                found[8 * int(at)] = 8 * (2 * buckets + 1 + 5 * int(words[at + buckets]))
+        cells_bytes = s.tile_cells**2
+        found |= {int(at): cells_bytes for at in self.table("cells_of") if at >= 0}
+        found |= {int(at): cells_bytes for layer, _, at in self.table("layer_cells") if layer >= 0}
         return found
 
     def _check_left_out(self, left_out: frozenset[str]) -> None:
@@ -238,7 +233,7 @@ class Snapshot:
             if gone:
                 boxes, discs = boxes.copy(), discs.copy()
                 boxes[np.isin(self.table("polygon_layers"), gone)] = NOWHERE
-                discs[np.isin(self.table("disc_layers"), gone)] = (1e12, 1e12, 0.0)
+                discs[np.isin(self.table("disc_layers"), gone)] = NO_DISC
                 boxes.flags.writeable = discs.flags.writeable = False
             memory = self._buffer.view()
             memory.flags.writeable = False
@@ -248,6 +243,11 @@ class Snapshot:
                 x0, y0, x1, y1,
             )  # fmt: skip
         return self._solids[left_out]
+
+
+def _settings_from(told: Mapping[str, Any]) -> SiteSettings:
+    limits_m, origin_m = tuple(told["limits_m"]), tuple(told["origin_m"])
+    return SiteSettings(limits_m, told["cell_m"], origin_m, told["reach_m"], told["tile_cells"])
 
 
 def handle_for(
@@ -261,13 +261,10 @@ def handle_for(
         Handle,
         {
             "revision": revision,
-            "settings": asdict(settings),
+            "settings": {field.name: getattr(settings, field.name) for field in fields(settings)},
             "layers": [
                 [name, layer.unknown_blocks, layer.outlines_only] for name, layer in layers.items()
             ],
             "tables": {name: list(place) for name, place in tables.items()},
         },
     )
-
-
-ShapeKind = Literal["polygon", "disc"]

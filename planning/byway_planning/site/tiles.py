@@ -2,194 +2,279 @@
 From the shapes and cells in a tile to the blocks that a search reads.
 
 Owner of the rasters: which cells of each tile are filled, kept so that a change recomputes
-only the tiles it touches and, for distances, their neighbours.
+only the tile it touches and, for distances, the tiles within reach of cells that changed.
 """
 
-from collections.abc import Iterable
-from dataclasses import dataclass, field
-from typing import TypeVar
+from collections.abc import Iterable, Iterator
+from typing import Any, TypeVar
 
 import numpy as np
 import numpy.typing as npt
 
 from byway_planning.kernel import kernel
-from byway_planning.site.distance import corners_kernel, distances_kernel
-from byway_planning.site.edges import bucket_kernel, cell_outlines_kernel, polygon_items
-from byway_planning.site.raster import fill_disc_kernel, fill_polygon_kernel
+from byway_planning.site.distance import corners_kernel, distances_kernel, grown_kernel
+from byway_planning.site.edges import (
+    bucket_kernel,
+    cell_outlines_kernel,
+    cells_around_kernel,
+    polygon_items,
+    rings_around_kernel,
+)
+from byway_planning.site.raster import changed_span_kernel, fill_disc_kernel, fill_polygon_kernel
 from byway_planning.site.scene import FAR_PER_TILE, OPEN, SOLID
 from byway_planning.site.settings import SiteSettings
 from byway_planning.site.shapes import PolygonShape, Shape
+from byway_planning.site.solids import ALL_CELLS, NO_CELLS
+from byway_planning.site.tables import Table
 
 Cells = npt.NDArray[np.uint8]
+Floats4 = npt.NDArray[np.float32]
+Floats8 = npt.NDArray[np.float64]
+Wholes = npt.NDArray[np.int64]
 Tile = tuple[int, int]
+Span = tuple[int, int, int, int]
 Scalar = TypeVar("Scalar", bound=np.generic)
 
 #: Coarse cells that the far clearance reaches.
 FAR_REACH = 24
+#: Root, factor and product are rounded to float32, each by up to 6e-8 of the value; a clearance
+#: must not come out larger than it is.
+ROUNDED_DOWN = 1.0 - 3e-7
 
 
-@kernel("rf4[:, ::1]", "i8", "i8", "f8", "i8", "f4[::1]")
-def field_block_kernel(
-    distances: npt.NDArray[np.float32],
+@kernel(
+    *("rf4[:, ::1]", "ri8[:, ::1]", "i8", "f8", "f8", "i8"),
+    *("rf4[::1]", "ri8[::1]", "f4[:, ::1]", "i8[::1]"),
+)
+def field_blocks_kernel(
+    distances: Floats4,
+    places: Wholes,
     side: int,
-    first: int,
     cell: float,
+    cut_off: float,
     room: int,
-    out: npt.NDArray[np.float32],
-) -> bool:
+    published: Floats4,
+    old: Wholes,
+    blocks: Floats4,
+    states: Wholes,
+) -> None:
     """
-    Fill the field block of a tile (see Scene) from distances in cells around it.
+    Make the field blocks (see Scene) of tiles whose distances changed.
 
     Args:
-        distances: Lattice distances in cells; the tile's corner (0, 0) is at [first row, first].
-        side: Cells along one side of the tile.
-        first: Lattice column of the tile's corner; its lattice row is that of the whole window.
-        out: The block.
-
-    Returns:
-        Whether any distance is below the cut-off (the largest value of the window).
+        distances: Lattice distances in cells, of a window.
+        places: By tile: first row, last row, first column, last column of the part of its
+            lattice that changed; row and column in the window of its lower left corner.
+        side: Cells along one side of a tile.
+        cut_off: Metres from which on a distance says "out of reach".
+        room: Cells along one side of a room.
+        published: Where the blocks lie that the tiles have so far.
+        old: By tile: its block so far, or OPEN, or SOLID.
+        blocks: By tile: filled with the new block.
+        states: By tile: OPEN or SOLID when the block is not needed, otherwise 0.
     """
-    margin = (distances.shape[0] - side - 1) // 2
     n = side + 1
-    reach = np.float32(0.0)
-    low = np.float32(1e30)
-    for r in range(n):
-        for c in range(n):
-            d = distances[margin + r, first + c]
-            low = min(low, d)
-            reach = max(reach, d)
-            out[r * n + c] = d * cell
-    base = n * n
-    for level in range(2):
-        size = room if level == 0 else 4 * room
-        squares = side // size
-        for r in range(squares):
-            for c in range(squares):
-                best = np.float32(0.0)
-                for i in range(r * size, (r + 1) * size + 1):
-                    for j in range(c * size, (c + 1) * size + 1):
-                        best = max(best, out[i * n + j])
-                out[base + r * squares + c] = best
-        base += squares * squares
-    return bool(low < reach or low == 0.0)
+    for t in range(len(old)):
+        block = blocks[t]
+        for i in range(len(block)):
+            if old[t] >= 0:
+                block[i] = published[old[t] + i]
+            else:
+                block[i] = 0.0 if old[t] == SOLID else cut_off
+        for r in range(places[t, 0], places[t, 1] + 1):
+            for c in range(places[t, 2], places[t, 3] + 1):
+                block[r * n + c] = distances[places[t, 4] + r, places[t, 5] + c] * cell
+        largest = _fill_rooms(block, places[t], side, room)
+        if largest == 0.0:
+            states[t] = SOLID
+        elif not _any_below(block[: n * n], np.float32(cut_off)):
+            states[t] = OPEN
+        else:
+            states[t] = 0
 
 
-def field_block_floats(settings: SiteSettings) -> int:
-    """Return how many float32 a field block holds."""
-    side, room = settings.tile_cells, settings.room_cells
-    return (side + 1) ** 2 + (side // room) ** 2 + (side // (4 * room)) ** 2
+@kernel()
+def _fill_rooms(block: Floats4, place: Wholes, side: int, room: int) -> Any:
+    """Renew both levels of rooms of a block around a place; return the largest distance of all."""
+    n = side + 1
+    squares = side // room
+    rooms = block[n * n :]
+    for r in range(max(place[0] - 1, 0) // room, min(place[1] // room + 1, squares)):
+        for c in range(max(place[2] - 1, 0) // room, min(place[3] // room + 1, squares)):
+            best = np.float32(0.0)
+            for i in range(r * room, (r + 1) * room + 1):
+                for j in range(c * room, (c + 1) * room + 1):
+                    d = block[i * n + j]
+                    best = d if d > best else best
+            rooms[r * squares + c] = best
+    largest = np.float32(0.0)
+    for r in range(squares // 4):
+        for c in range(squares // 4):
+            best = np.float32(0.0)
+            for i in range(4 * r, 4 * r + 4):
+                for j in range(4 * c, 4 * c + 4):
+                    best = max(best, rooms[i * squares + j])
+            rooms[squares * squares + r * (squares // 4) + c] = best
+            largest = max(largest, best)
+    return largest
 
 
-@dataclass
-class TileBlocks:
-    """What one tile contributes to a snapshot; None: nothing."""
-
-    field: npt.NDArray[np.float32] | None = None
-    field_state: int = OPEN  # OPEN or SOLID when there is no field
-    edges: npt.NDArray[np.int64] | None = None  # bucket starts, then items as 8-byte words
-    cells: Cells | None = None  # blocked cells of patches
-    all_cells: bool = False
+@kernel()
+def _any_below(values: Floats4, bound: Any) -> bool:
+    for value in values:  # noqa: SIM110 - any() of a generator does not compile
+        if value < bound:
+            return True
+    return False
 
 
-@dataclass
 class Rasters:
     """Filled cells of every tile that has any; see the module text."""
 
-    settings: SiteSettings
-    filled: dict[Tile, Cells] = field(default_factory=dict)
-
-    def __post_init__(self) -> None:
-        rows, columns = self.settings.tiles
-        self.far_filled = np.zeros((rows * FAR_PER_TILE, columns * FAR_PER_TILE), np.uint8)
-        self.far_m = np.full(self.far_filled.shape, self._far_reach_m(), np.float32)
-        side = self.settings.tile_cells
-        self._room = np.empty((2 * side * side + 2 * side, 5))
+    def __init__(self, settings: SiteSettings) -> None:
+        self.settings = settings
+        rows, columns = settings.tiles
+        self._filled: dict[Tile, Cells] = {}
+        self._nothing = np.zeros((settings.tile_cells, settings.tile_cells), np.uint8)
+        #: Distances to be recomputed: by tile, first and last row, first and last column of its
+        #: lattice. Kept until the owner clears it, because the new blocks may find no room.
+        self.stale: dict[Tile, Span] = {}
+        self._stale_far: set[Tile] = set()
+        self._far_filled = np.zeros((rows * FAR_PER_TILE, columns * FAR_PER_TILE), np.uint8)
+        self.far = Table(np.float32)
+        self.far.append(np.full(self._far_filled.size, FAR_REACH * self._coarse_m * ROUNDED_DOWN))
+        side = settings.tile_cells
+        self._outlines = np.empty((2 * side * side + 2 * side, 5))
         self._sorted = np.empty((4096, 5))
 
-    def _far_reach_m(self) -> float:
-        return FAR_REACH * self.settings.tile_m / FAR_PER_TILE
+    @property
+    def _coarse_m(self) -> float:
+        return self.settings.tile_m / FAR_PER_TILE
 
-    def corner_m(self, tile: Tile) -> tuple[float, float]:
-        s = self.settings
-        return s.limits_m[0] + tile[1] * s.tile_m, s.limits_m[1] + tile[0] * s.tile_m
+    # -- raster and edges ---------------------------------------------------------------------
 
-    def rebuild(self, tile: Tile, shapes: Iterable[Shape], blocked: Cells | None) -> TileBlocks:
+    def rebuild(
+        self, tile: Tile, shapes: Iterable[Shape], blocked: Cells | None
+    ) -> tuple[Wholes | None, Cells | None, int]:
         """
         Recompute the raster and the edges of one tile.
 
         Args:
             shapes: Obstacles that may touch the tile.
             blocked: Blocked cells of patches (n, n), or None.
+
+        Returns:
+            The edge block (see `edges`) or None, the blocked cells as a block or None, and
+            where there is none: NO_CELLS or ALL_CELLS.
         """
+        shapes = list(shapes)
+        self._fill(tile, shapes, blocked)
+        edges = self._edges(tile, shapes, blocked)
+        if blocked is None or not blocked.any():
+            return edges, None, NO_CELLS
+        if blocked.all():
+            return edges, None, ALL_CELLS
+        return edges, blocked, 0
+
+    def refill(self, tile: Tile, shapes: Iterable[Shape], blocked: Cells | None) -> None:
+        """Recompute the raster of a tile whose blocks are published already."""
+        self._fill(tile, list(shapes), blocked)
+        self._far_filled[self._coarse_part(tile)] = self._coarse(tile)
+        self.stale.clear()
+        self._stale_far.clear()
+
+    def _fill(self, tile: Tile, shapes: list[Shape], blocked: Cells | None) -> None:
         s = self.settings
-        x, y = self.corner_m(tile)
+        x, y = self.settings.corner_m(tile)
         filled = np.zeros((s.tile_cells, s.tile_cells), np.uint8)
-        parts: list[npt.NDArray[np.float64]] = []
         if blocked is not None:
             filled |= blocked
-            count = cell_outlines_kernel(_read_only(blocked), x, y, s.cell_m, self._room)
-            parts.append(self._room[:count].copy())
         for shape in shapes:
             if isinstance(shape, PolygonShape):
                 fill_polygon_kernel(shape.vertices_m, x, y, s.cell_m, filled)
-                parts.append(polygon_items(shape.vertices_m))
             else:
                 fill_disc_kernel(shape.x_m, shape.y_m, shape.radius_m, x, y, s.cell_m, filled)
-                parts.append(np.array([[shape.x_m, shape.y_m] * 2 + [shape.radius_m]]))
+        before = self._filled.get(tile, self._nothing)
+        r0, r1, c0, c1 = changed_span_kernel(_read_only(before), _read_only(filled))
+        if r0 < 0:
+            return
         if filled.any():
-            self.filled[tile] = filled
+            self._filled[tile] = filled
         else:
-            self.filled.pop(tile, None)
-        blocks = TileBlocks(edges=self._edges(parts, x, y))
-        if blocked is not None and blocked.any():
-            blocks.all_cells = bool(blocked.all())
-            blocks.cells = None if blocks.all_cells else blocked
-        return blocks
+            del self._filled[tile]
+        self._stale_far.add(tile)
+        r, c = tile[0] * s.tile_cells, tile[1] * s.tile_cells
+        self._spoil((r + r0, r + r1, c + c0, c + c1))
 
-    def _edges(
-        self, parts: list[npt.NDArray[np.float64]], x: float, y: float
-    ) -> npt.NDArray[np.int64] | None:
+    def _spoil(self, cells: Span) -> None:
+        """Note as stale what cells that changed, counted over the whole site, are nearest to."""
+        side, reach = self.settings.tile_cells, self.settings.reach_cells
+        r0, r1, c0, c1 = (
+            cells[0] - reach + 1,
+            cells[1] + reach,
+            cells[2] - reach + 1,
+            cells[3] + reach,
+        )
+        rows, columns = self.settings.tiles
+        for i in range(max(-(-r0 // side) - 1, 0), min(r1 // side, rows - 1) + 1):
+            for j in range(max(-(-c0 // side) - 1, 0), min(c1 // side, columns - 1) + 1):
+                s0, s1, t0, t1 = self.stale.get((i, j), (side, 0, side, 0))
+                self.stale[i, j] = (
+                    min(s0, max(r0 - i * side, 0)),
+                    max(s1, min(r1 - i * side, side)),
+                    min(t0, max(c0 - j * side, 0)),
+                    max(t1, min(c1 - j * side, side)),
+                )
+
+    def _edges(self, tile: Tile, shapes: list[Shape], blocked: Cells | None) -> Wholes | None:
+        x, y = self.settings.corner_m(tile)
+        side = self.settings.bucket_side
+        bucket_m = self.settings.tile_m / side
+        around = np.zeros(side * side, np.int64)
+        parts: list[Floats8] = []
+        if blocked is not None:
+            cells = _read_only(blocked)
+            count = cell_outlines_kernel(cells, x, y, self.settings.cell_m, self._outlines)
+            parts.append(self._outlines[:count].copy())
+            cells_around_kernel(cells, around)
+        for shape in shapes:
+            if isinstance(shape, PolygonShape):
+                parts.append(polygon_items(shape.vertices_m))
+                rings_around_kernel(shape.vertices_m, x, y, bucket_m, around)
+            else:
+                parts.append(np.array([[shape.x_m, shape.y_m] * 2 + [shape.radius_m]]))
         if not parts:
             return None
         items = _read_only(np.concatenate(parts))
-        side = self.settings.bucket_side
         starts = np.zeros(side * side + 1, np.int64)
-        bucket_m = self.settings.tile_m / side
         total = bucket_kernel(items, x, y, bucket_m, starts, self._sorted)
         if total > len(self._sorted):
             self._sorted = np.empty((2 * total, 5))
             bucket_kernel(items, x, y, bucket_m, starts, self._sorted)
         if total == 0:
             return None
-        return np.concatenate([starts, self._sorted[:total].reshape(-1).view(np.int64)])
+        return np.concatenate([starts, around, self._sorted[:total].reshape(-1).view(np.int64)])
 
-    def fields(self, row: int, first: int, last: int) -> list[tuple[int, TileBlocks]]:
-        """Recompute the distances of the tiles first..last of a row of tiles."""
-        s = self.settings
-        side, reach = s.tile_cells, s.reach_cells
-        count = last - first + 1
-        window = np.zeros((side + 2 * reach, count * side + 2 * reach), np.uint8)
-        self._paste(window, row * side - reach, first * side - reach)
-        if not window.any():
-            return [(column, TileBlocks(field_state=OPEN)) for column in range(first, last + 1)]
-        lattice = np.empty((window.shape[0] + 1, window.shape[1] + 1), np.uint8)
-        corners_kernel(_read_only(window), lattice)
-        distances = np.empty(lattice.shape, np.float32)
-        distances_kernel(_read_only(lattice), reach, distances)
-        found = []
-        for i in range(count):
-            block = np.empty(field_block_floats(s), np.float32)
-            begin = reach + i * side
-            near = field_block_kernel(
-                _read_only(distances), side, begin, s.cell_m, s.room_cells, block
-            )
-            if not near:
-                found.append((first + i, TileBlocks(field_state=OPEN)))
-            elif not block.any():
-                found.append((first + i, TileBlocks(field_state=SOLID)))
-            else:
-                found.append((first + i, TileBlocks(field=block)))
-        return found
+    # -- distances ----------------------------------------------------------------------------
+
+    def windows(self) -> Iterator[tuple[list[Tile], Floats4, Wholes]]:
+        """Yield tiles with stale distances, a window of new ones, and `places` in it (above)."""
+        side, reach = self.settings.tile_cells, self.settings.reach_cells
+        for tiles in _groups(sorted(self.stale)):
+            places = np.array([(*self.stale[t], t[0] * side, t[1] * side) for t in tiles])
+            row, column = (places[:, 4] + places[:, 0]).min(), (places[:, 5] + places[:, 2]).min()
+            height = (places[:, 4] + places[:, 1]).max() - row + 1
+            width = (places[:, 5] + places[:, 3]).max() - column + 1
+            places[:, 4] -= row
+            places[:, 5] -= column
+            # Lattice points within reach around the window, and the cells around those.
+            grow = reach + 1
+            cells = np.zeros((height + 2 * grow - 1, width + 2 * grow - 1), np.uint8)
+            self._paste(cells, int(row) - grow, int(column) - grow)
+            marks = np.empty((height + 2 * reach, width + 2 * reach), np.uint8)
+            corners_kernel(_read_only(cells), marks)
+            distances = np.empty((height, width), np.float32)
+            distances_kernel(_read_only(marks), reach, distances)
+            yield tiles, distances, places
 
     def _paste(self, window: Cells, row0: int, column0: int) -> None:
         """Copy filled cells into a window whose lower left cell is (row0, column0)."""
@@ -197,7 +282,7 @@ class Rasters:
         height, width = window.shape
         for tr in range(row0 // side, (row0 + height - 1) // side + 1):
             for tc in range(column0 // side, (column0 + width - 1) // side + 1):
-                filled = self.filled.get((tr, tc))
+                filled = self._filled.get((tr, tc))
                 if filled is None:
                     continue
                 r, c = tr * side - row0, tc * side - column0
@@ -205,42 +290,77 @@ class Rasters:
                 c0, c1 = max(c, 0), min(c + side, width)
                 window[r0:r1, c0:c1] = filled[r0 - r : r1 - r, c0 - c : c1 - c]
 
-    def update_far(self, tiles: Iterable[Tile]) -> None:
-        """Recompute the coarse clearance around tiles whose raster changed."""
+    # -- far clearance ------------------------------------------------------------------------
+
+    def _coarse_part(self, tile: Tile) -> tuple[slice, slice]:
         k = FAR_PER_TILE
-        rows, columns = [], []
-        for row, column in tiles:
-            filled = self.filled.get((row, column))
-            part = 0
-            if filled is not None:
-                step = self.settings.tile_cells // k
-                part = filled.reshape(k, step, k, step).max(axis=(1, 3))
-            self.far_filled[row * k : (row + 1) * k, column * k : (column + 1) * k] = part
-            rows.append(row)
-            columns.append(column)
-        if not rows:
-            return
-        height, width = self.far_filled.shape
-        r0 = max(min(rows) * k - FAR_REACH - 1, 0)
-        r1 = min((max(rows) + 1) * k + FAR_REACH + 1, height)
-        c0 = max(min(columns) * k - FAR_REACH - 1, 0)
-        c1 = min((max(columns) + 1) * k + FAR_REACH + 1, width)
-        w0, w1 = max(r0 - FAR_REACH - 1, 0), min(r1 + FAR_REACH + 1, height)
-        v0, v1 = max(c0 - FAR_REACH - 1, 0), min(c1 + FAR_REACH + 1, width)
+        return slice(tile[0] * k, (tile[0] + 1) * k), slice(tile[1] * k, (tile[1] + 1) * k)
+
+    def _coarse(self, tile: Tile) -> Cells:
+        """Which coarse cells (k, k) of a tile hold anything."""
+        k = FAR_PER_TILE
+        filled = self._filled.get(tile)
+        if filled is None:
+            return np.zeros((k, k), np.uint8)
+        step = self.settings.tile_cells // k
+        coarse: Cells = filled.reshape(k, step, k, step).max(axis=(1, 3))
+        return coarse
+
+    def update_far(self) -> None:
+        """Recompute the coarse clearance around tiles whose raster changed."""
+        boxes: list[list[int]] = []
+        for tile in sorted(self._stale_far):
+            part, coarse = self._coarse_part(tile), self._coarse(tile)
+            if (self._far_filled[part] == coarse).all():
+                continue
+            self._far_filled[part] = coarse
+            _include(boxes, tile, 2 * FAR_REACH // FAR_PER_TILE)
+        self._stale_far.clear()
+        for box in boxes:
+            self._update_far_in(*box)
+
+    def _update_far_in(self, row: int, column: int, last_row: int, last_column: int) -> None:
+        k = FAR_PER_TILE
+        height, width = self._far_filled.shape
+        r0, r1 = max(row * k - FAR_REACH, 0), min((last_row + 1) * k + FAR_REACH, height)
+        c0, c1 = max(column * k - FAR_REACH, 0), min((last_column + 1) * k + FAR_REACH, width)
         # Any point of a cell is at least as far from any point of another as their borders are:
         # hypot(max(|dx| - 1, 0), max(|dy| - 1, 0)), which is the distance to the grown mask.
-        mask = np.pad(self.far_filled[w0:w1, v0:v1], 1)
-        grown = mask.copy()
-        grown[1:] |= mask[:-1]
-        grown[:-1] |= mask[1:]
-        mask = grown.copy()
-        grown[:, 1:] |= mask[:, :-1]
-        grown[:, :-1] |= mask[:, 1:]
-        inner = np.ascontiguousarray(grown[1:-1, 1:-1])
-        out = np.empty(inner.shape, np.float32)
-        distances_kernel(_read_only(inner), FAR_REACH, out)
-        coarse_m = self.settings.tile_m / k
-        self.far_m[r0:r1, c0:c1] = out[r0 - w0 : r1 - w0, c0 - v0 : c1 - v0] * coarse_m
+        grow = FAR_REACH + 1
+        cells = np.zeros((r1 - r0 + 2 * grow, c1 - c0 + 2 * grow), np.uint8)
+        below, left = max(grow - r0, 0), max(grow - c0, 0)  # what of it lies outside the site
+        inner = self._far_filled[max(r0 - grow, 0) : r1 + grow, max(c0 - grow, 0) : c1 + grow]
+        cells[below : below + inner.shape[0], left : left + inner.shape[1]] = inner
+        grown = np.empty((r1 - r0 + 2 * FAR_REACH, c1 - c0 + 2 * FAR_REACH), np.uint8)
+        grown_kernel(_read_only(cells), grown)
+        out = np.empty((r1 - r0, c1 - c0), np.float32)
+        distances_kernel(_read_only(grown), FAR_REACH, out)
+        out *= self._coarse_m * ROUNDED_DOWN
+        self.far.write_window(width, r0, c0, out)
+
+
+def _groups(tiles: list[Tile]) -> Iterator[list[Tile]]:
+    """Cut sorted tiles into groups of neighbours, up to 4 x 4, whose distances are made at once."""
+    left = dict.fromkeys(tiles)
+    for row, column in tiles:
+        if (row, column) in left:
+            near = ((row + i, column + j) for i in range(4) for j in range(-3, 4))
+            group: list[Tile] = []
+            for tile in near:
+                if tile in left and tile[1] < min([column, *(t[1] for t in group)]) + 4:
+                    group.append(tile)
+                    del left[tile]
+            yield group
+
+
+def _include(boxes: list[list[int]], tile: Tile, gap: int) -> None:
+    """Put a tile into the first box (row, column, last row, last column) within a gap of it."""
+    for box in boxes:
+        if box[0] - gap <= tile[0] <= box[2] + gap and box[1] - gap <= tile[1] <= box[3] + gap:
+            box[0], box[2] = min(box[0], tile[0]), max(box[2], tile[0])
+            box[1], box[3] = min(box[1], tile[1]), max(box[3], tile[1])
+            return
+    boxes.append([*tile, *tile])
 
 
 def _read_only(array: npt.NDArray[Scalar]) -> npt.NDArray[Scalar]:
