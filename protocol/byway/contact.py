@@ -5,6 +5,7 @@ Opened at the first call, used by one thread. The calls themselves, and what the
 client.py.
 """
 
+import functools
 import os
 import secrets
 import threading
@@ -100,7 +101,7 @@ class Contact:
         asked = messages.Hello(
             versions=[limits.spec_version],
             client=self.client_id,
-            software=f"byway {version('byway')}",
+            software=_software(),
         )
         sent_s = time.time_ns() * 1e-9
         self._welcome = welcome = self.ask(asked, messages.Welcome)
@@ -323,3 +324,9 @@ class Contact:
         if is_connected:
             return TimedOut(f"{self.endpoint} has not replied to {what} in time", facts)
         return DaemonLost(f"no connection to {self.endpoint} for {what}", facts)
+
+
+@functools.cache
+def _software() -> str:
+    # Looked up once: reading the metadata of a package takes longer than the whole round trip.
+    return f"byway {version('byway')}"
