@@ -36,11 +36,19 @@ RASTER_CELLS: Final = 2.13
 
 
 @kernel()
+def _is_within(scene: Scene, x: float, y: float) -> bool:
+    """Is a point inside the limits of the site? NaN is nowhere."""
+    if not (x > scene.x_m_min and x < scene.x_m_max):
+        return False
+    return bool(y > scene.y_m_min and y < scene.y_m_max)
+
+
+@kernel()
 def field_at(scene: Scene, x: float, y: float) -> float:
     """Interpolated distance to the raster, cut off at the reach; inf beyond, 0 outside."""
     u = (x - scene.corner_x_m) / scene.cell_m
     v = (y - scene.corner_y_m) / scene.cell_m
-    if not (x > scene.x_m_min and x < scene.x_m_max and y > scene.y_m_min and y < scene.y_m_max):
+    if not _is_within(scene, x, y):
         return 0.0
     side = scene.tile_cells
     column, row = int(u), int(v)
@@ -335,7 +343,7 @@ def quick_excess(
     ox = x + c * body.outer_x_m - s * body.outer_y_m
     oy = y + s * body.outer_x_m + c * body.outer_y_m
     limit = _limit_distance(scene, ox, oy)
-    if limit <= 0.0:
+    if not _is_within(scene, ox, oy):
         return -math.inf
     near = math.inf
     for k in range(scene.outline_discs.shape[0]):

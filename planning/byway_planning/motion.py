@@ -5,7 +5,9 @@ Where there is much room, by conservative advancement (Mirtich 1996, common prac
 excess at one pose proves the next stretch free, because no point of the body moves faster than a
 known rate. Where there is little, steps would become as small as the gap, so whole stretches are
 tested at once: between two poses the body stays inside the convex hull of both, grown by how far
-its points swing out of the chords that they end on. Nothing is missed between samples either way.
+its points swing out of the chords that they end on. Where that hull is full of something that a
+concave body drives around, single poses decide after all. Nothing is missed between samples
+either way.
 """
 
 import math
@@ -133,7 +135,8 @@ def _near_free(
     Sweep an arc in stretches until it is through or there is much room again.
 
     Returns:
-        The arc length that is proved free; -1 at a contact.
+        The arc length that is proved free; -1 at a contact; -2 where even a short stretch fails
+        though the poses at its ends do not.
     """
     x, y, heading = pose
     total = abs(length)
@@ -160,7 +163,7 @@ def _near_free(
             ):
                 break
             if stretch <= STRETCH_M_MIN:
-                return -1.0
+                return -2.0
             stretch *= 0.5
             qx, qy, qh = advance(x, y, heading, curvature, sign * (at + stretch))
             if not pose_free(scene, body, qx, qy, qh):
@@ -201,9 +204,44 @@ def motion_free(
             at += room
             continue
         swept = _near_free(scene, body, (px, py, ph), curvature, sign * (total - at), rate)
+        if swept == -2.0 and not _is_convex(body.outline_m):
+            return _steps_free(scene, body, (px, py, ph), curvature, sign * (total - at), rate)
         if swept < 0.0:
             return False
         at += swept
+    return True
+
+
+@kernel()
+def _is_convex(outline: Points) -> bool:
+    n = outline.shape[0]
+    for i in range(n):
+        j, k = (i + 1) % n, (i + 2) % n
+        dx, dy = outline[j, 0] - outline[i, 0], outline[j, 1] - outline[i, 1]
+        if dx * (outline[k, 1] - outline[j, 1]) - dy * (outline[k, 0] - outline[j, 0]) < 0.0:
+            return False
+    return True
+
+
+@kernel()
+def _steps_free(
+    scene: Scene,
+    body: Body,
+    pose: tuple[float, float, float],
+    curvature: float,
+    length: float,
+    rate: float,
+) -> bool:
+    """Is an arc free, by conservative advancement on the exact excess alone?"""
+    total = abs(length)
+    sign = 1.0 if length >= 0.0 else -1.0
+    at = 0.0
+    while at < total:
+        px, py, ph = advance(pose[0], pose[1], pose[2], curvature, sign * at)
+        excess = pose_excess(scene, body, px, py, ph)
+        if excess <= CONTACT_M:
+            return False
+        at += excess / rate
     return True
 
 
@@ -214,7 +252,8 @@ def motion_reach(
     """
     How far an arc can be driven, in metres of arc length >= 0, before contact.
 
-    The whole |length| when it is free. Both ends are checked.
+    The whole |length| when the excess is above CONTACT_M all the way, both ends included.
+    Otherwise less, up to where the excess is no more than CONTACT_M, and never below its half.
     """
     total = abs(length)
     sign = 1.0 if length >= 0.0 else -1.0
@@ -224,10 +263,10 @@ def motion_reach(
         px, py, ph = advance(x, y, heading, curvature, sign * at)
         excess = pose_excess(scene, body, px, py, ph)
         if excess <= CONTACT_M:
-            return at if at == 0.0 else min(at, total)
+            return min(at, total * (1.0 - 1e-12))
         if at >= total:
             return total
-        at = min(at + excess / rate, total)
+        at = min(at + (excess - 0.5 * CONTACT_M) / rate, total)
 
 
 @kernel()
