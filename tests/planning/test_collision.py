@@ -5,11 +5,11 @@ import math
 import numpy as np
 import pytest
 import shapely
+from tests.planning.collision_twins import BOX, FORK, VEHICLES, World, car, random_world, world
 
 from byway_planning.collision import CONTACT_M, NEAR_M, excesses_kernel, pose_excess, pose_free
 from byway_planning.site import LayerSettings, Site, SiteModel, SiteSettings
 from byway_planning.vehicles.models import Car, Disc
-from tests.planning.collision_twins import BOX, FORK, VEHICLES, World, car, random_world, world
 
 #: Rounding of the two computations, coordinates up to 30 m.
 ROUNDING_M = 1e-9
@@ -139,11 +139,15 @@ def test_a_gap_is_passed_when_wider_than_the_vehicle_and_only_then(degrees):
     turn = np.array([[c, s], [-s, c]])
     body = car(BOX).body()
     for gap_m, passes in ((1.92, True), (1.899, False)):
+        half = gap_m / 2
         walls = [
-            np.array([(-6.0, side * gap_m / 2), (6.0, side * gap_m / 2), (6.0, side * 2.5), (-6.0, side * 2.5)])
-            @ turn + (12.3, 11.7)
+            np.array(
+                [(-6.0, side * half), (6.0, side * half), (6.0, side * 2.5), (-6.0, side * 2.5)]
+            )
+            @ turn
+            + (12.3, 11.7)
             for side in (1.0, -1.0)
-        ]  # fmt: skip
+        ]
         place = world((0.0, 0.0, 25.0, 25.0), polygons=walls)
         for ahead in np.linspace(-4.0, 2.0, 13):
             pose = (12.3 + c * ahead, 11.7 + s * ahead, heading)
