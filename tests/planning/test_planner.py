@@ -181,22 +181,6 @@ def test_a_gap_a_little_too_narrow_for_the_disc_is_proved_by_the_bound():
     assert passing.kind == "route"
 
 
-def test_a_gap_that_only_the_inscribed_disc_fits_through_is_never_claimed():
-    """A bend too tight for the car's length: not proved, and no route may be claimed."""
-    walls = {
-        "west": box(20.0, 0.0, 0.5, 11.0),
-        "north": box(20.0, 13.0, 6.0, 0.5),
-        "lid": box(20.0, 13.0, 0.5, 12.0),
-        "east": box(22.6, 0.0, 0.5, 11.0),
-        "bottom": box(20.0, 8.0, 3.0, 0.5),
-    }
-    site = Site.from_shapes(walls, limits_m=LIMITS)
-    outcome = planned(site, pure_length_car(), START, (34.0, 12.0, 0.0), work=20_000)
-    assert outcome.kind in ("not_found", "route", "no_route")
-    if outcome.kind == "route":  # the outside of this little maze may offer a way
-        assert "rejected" not in outcome.statistics
-
-
 @pytest.mark.parametrize(("extra_m", "passes"), [(0.02, True), (-0.001, False)])
 @pytest.mark.parametrize("tilt_rad", [0.0, 0.3])
 def test_between_polygons_two_centimetres_more_are_enough_and_a_millimetre_less_never(

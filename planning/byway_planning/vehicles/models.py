@@ -8,6 +8,7 @@ the rear axle (the centre for a disc).
 
 import difflib
 import math
+from abc import ABC, abstractmethod
 from collections.abc import Mapping, Sequence
 from dataclasses import MISSING, dataclass, fields, replace
 from functools import lru_cache
@@ -27,7 +28,7 @@ DISC_CORNERS: Final = 32
 
 
 @dataclass(frozen=True, kw_only=True)
-class _Common:
+class _Common(ABC):
     """What every vehicle has; not a vehicle by itself."""
 
     model: ClassVar[str]
@@ -91,14 +92,16 @@ class _Common:
     # What the models differ in.
 
     @property
+    @abstractmethod
     def limits(self) -> Limits:
-        raise NotImplementedError
+        """Limits in time."""
 
+    @abstractmethod
     def outline_at(self, pose: Sequence[float]) -> Points:
-        raise NotImplementedError
+        """Corners (n, 2) of the body at a pose."""
 
-    def _make_body(self) -> Body:
-        raise NotImplementedError
+    @abstractmethod
+    def _make_body(self) -> Body: ...
 
 
 @dataclass(frozen=True, kw_only=True)
