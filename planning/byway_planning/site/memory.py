@@ -21,6 +21,10 @@ import numpy.typing as npt
 Bytes = npt.NDArray[np.uint8]
 
 ALIGN_BYTES = 64
+#: The last part of a memory, an eighth at most, is kept for changes that give back what they
+#: take. Without it a full site could not even be made smaller, since every change is written
+#: beside what it replaces.
+RESERVE_BYTES = 1 << 25
 #: Addresses set aside for private memory: twice what the largest site has in blocks (TILES_MAX
 #: tiles of 20 kB). They cost nothing until they are written to.
 PRIVATE_BYTES = 1 << 34
@@ -87,6 +91,16 @@ class Memory:
     def used_bytes(self) -> int:
         """Bytes in blocks."""
         return self._used_bytes
+
+    @property
+    def is_short(self) -> bool:
+        """Whether nothing is left but the reserve."""
+        size = len(self._bytes)
+        return self._used_bytes > size - min(size // 8, RESERVE_BYTES)
+
+    def size_of(self, offset: int) -> int:
+        """Return the bytes of a block."""
+        return self._sizes[offset]
 
     @property
     def top_bytes(self) -> int:

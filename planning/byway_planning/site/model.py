@@ -24,6 +24,9 @@ from byway_planning.site.tiles import Cells, Tile
 
 #: Rows or columns of one patch; 4096 cells of 0.1 m are more than any sensor sees at once.
 PATCH_CELLS_MAX = 4096
+#: A millimetre is finer than any sensor, and bounds how many patch cells a tile cell looks at.
+PATCH_CELL_M_MIN = 0.001
+PATCH_CELL_M_MAX = 100.0
 UNKNOWN = 2
 
 
@@ -124,8 +127,13 @@ class SiteModel:
         Args:
             corner_m: Lower left corner of the patch.
             cell_m: Side of a patch cell; a patch that does not fit the site's own cells is
-                resampled, occupied before unknown before free.
+                resampled, occupied before unknown before free. Cells of the site that it covers
+                only in part can only get worse by it.
             cells: Shape (rows, columns), row 0 at the lowest y; 0 free, 1 occupied, 2 unknown.
+
+        Raises:
+            SiteError: unknown_layer, outlines_only, bad_cells, too_large, not_finite or
+                outside_limits (when all of it lies outside).
         """
         owner = self._layer(layer)
         if owner.settings.outlines_only:
@@ -160,7 +168,10 @@ class SiteModel:
 
     @staticmethod
     def _checked_patch(corner_m: tuple[float, float], cell_m: float, cells: Cells) -> Cells:
-        patch = np.array(cells)
+        try:
+            patch = np.array(cells)
+        except ValueError as fault:
+            raise SiteError("bad_cells", f"a patch has rows and columns: {fault}") from None
         if patch.ndim != 2 or patch.size == 0:
             raise SiteError("bad_cells", f"a patch has rows and columns, got shape {patch.shape}")
         if max(patch.shape) > PATCH_CELLS_MAX:
@@ -168,11 +179,13 @@ class SiteModel:
                 "too_large", f"a patch may have {PATCH_CELLS_MAX} rows and columns at most, "
                 f"got {patch.shape}"
             )  # fmt: skip
-        if not np.isfinite([*corner_m, cell_m]).all() or not 0.001 <= cell_m <= 100.0:
+        if not np.isfinite([*corner_m, cell_m]).all():
+            raise SiteError("not_finite", f"corner_m {corner_m} and cell_m {cell_m} must be finite")
+        if not PATCH_CELL_M_MIN <= cell_m <= PATCH_CELL_M_MAX:
             raise SiteError(
-                "not_finite", f"corner_m {corner_m} and cell_m {cell_m} must be finite, the cell "
-                f"between 0.001 and 100 m"
-            )  # fmt: skip
+                "bad_cells",
+                f"cell_m lies between {PATCH_CELL_M_MIN} and {PATCH_CELL_M_MAX} m, got {cell_m}",
+            )
         if patch.dtype != np.uint8 or patch.max() > UNKNOWN:
             raise SiteError(
                 "bad_cells",
@@ -284,12 +297,15 @@ class SiteModel:
 
     @staticmethod
     def _check_id(name: str, what: str) -> None:
-        raw = name.encode()
-        if not 0 < len(raw) <= ID_BYTES_MAX or b"\0" in raw:
+        try:
+            size = 0 if "\0" in name else len(name.encode())
+        except UnicodeEncodeError:
+            size = 0
+        if not 0 < size <= ID_BYTES_MAX:
             raise SiteError(
                 "too_large",
-                f"the id of a {what} has 1 to {ID_BYTES_MAX} bytes and no zero byte; "
-                f"{name[:80]!r} has {len(raw)}",
+                f"the id of a {what} has 1 to {ID_BYTES_MAX} bytes of text without zeros, not "
+                f"{name[:80]!r}",
             )
 
     def _tiles_in(self, x0: float, y0: float, x1: float, y1: float) -> list[Tile]:

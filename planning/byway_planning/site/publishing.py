@@ -91,6 +91,7 @@ class Publisher:
                 name: (self._tables[name].prepare(self._memory), self._tables[name].count)
                 for name in TABLES
             }
+            self._check_reserve(draft)
         except MemoryFull:
             self._withdraw(draft)
             raise
@@ -133,6 +134,12 @@ class Publisher:
         )  # fmt: skip
         for tile, block, state in zip(tiles, blocks, states.tolist(), strict=True):
             self._swap(draft, "field_of", tile, block if state == 0 else None, state)
+
+    def _check_reserve(self, draft: _Draft) -> None:
+        taken = sum(map(self._memory.size_of, draft.fresh))
+        given_back = sum(map(self._memory.size_of, draft.replaced))
+        if self._memory.is_short and taken > given_back:
+            raise MemoryFull("the site has little room left, and only for what makes it smaller")
 
     def _swap(
         self,

@@ -5,6 +5,8 @@ from functools import cached_property
 
 import numpy as np
 
+from byway_planning.site.shapes import COORDINATE_M_MAX
+
 #: Tiles a site may have: the tables of one revision stay below 10 MB.
 TILES_MAX = 400_000
 
@@ -18,8 +20,8 @@ class SiteSettings:
         limits_m: x_min, y_min, x_max, y_max in the site's frame; everything outside is blocked.
         cell_m: Side of a cell. Distances are exact to a fraction of it.
         origin_m: The site's origin in the coordinates that callers use (survey coordinates, say).
-        reach_m: Where the distance field is cut off; beyond it a coarse clearance serves. 0 for
-            3.2 m or eight cells, whichever is more.
+        reach_m: Where the distance field is cut off, at the latest after a tile; beyond it a
+            coarse clearance serves. 0 for 3.2 m or eight cells, whichever is more.
         tile_cells: Cells along one side of a tile; a power of two.
 
     Raises:
@@ -41,7 +43,14 @@ class SiteSettings:
         if self.reach_m == 0.0:
             object.__setattr__(self, "reach_m", max(3.2, 8.0 * self.cell_m))
         if not np.isfinite([*self.limits_m, *self.origin_m]).all():
-            raise ValueError(f"limits_m and origin_m must be finite, got {self.limits_m}")
+            raise ValueError(
+                f"limits_m and origin_m must be finite, got {self.limits_m} and {self.origin_m}"
+            )
+        if max(abs(value) for value in self.limits_m) > COORDINATE_M_MAX:
+            raise ValueError(
+                f"limits_m must lie within {COORDINATE_M_MAX:.0f} m of the site's origin, got "
+                f"{self.limits_m}; survey coordinates need origin_m"
+            )
         x0, y0, x1, y1 = self.limits_m
         if not (x0 < x1 and y0 < y1):
             raise ValueError(f"limits_m must be x_min < x_max, y_min < y_max, got {self.limits_m}")
@@ -49,8 +58,8 @@ class SiteSettings:
             raise ValueError(f"cell_m must lie between 0.005 and 2 m, got {self.cell_m}")
         if self.tile_cells not in (16, 32, 64, 128):
             raise ValueError(f"tile_cells must be 16, 32, 64 or 128, got {self.tile_cells}")
-        if not self.cell_m * 4 <= self.reach_m:
-            raise ValueError(f"reach_m must be at least 4 cells, got {self.reach_m}")
+        if not self.cell_m * 4 <= self.reach_m < np.inf:
+            raise ValueError(f"reach_m must be finite and at least 4 cells, got {self.reach_m}")
         rows, columns = self.tiles
         if rows * columns > TILES_MAX:
             raise ValueError(
@@ -78,7 +87,8 @@ class SiteSettings:
     @cached_property
     def bucket_side(self) -> int:
         """Buckets along one side of a tile: about 1.6 m, so that a vehicle touches few."""
-        return max(1, round(self.tile_m / 1.6))
+        # More than 32 would make the empty buckets of a tile larger than its distances.
+        return min(max(1, round(self.tile_m / 1.6)), 32)
 
     @cached_property
     def tiles(self) -> tuple[int, int]:

@@ -10,6 +10,8 @@ from byway_planning.kernel import kernel
 
 #: Corners of one polygon; a footprint is tested against every edge near it, so this bounds a check.
 VERTICES_MAX: Final = 4096
+#: Beyond this a site's own coordinates lose micrometres, and squares of them much more.
+COORDINATE_M_MAX: Final = 1e6
 #: Bytes of an obstacle's id in UTF-8; ids travel inside snapshots in slots of this size.
 ID_BYTES_MAX: Final = 64
 
@@ -43,7 +45,10 @@ class PolygonShape:
     box_m: Limits = field(init=False)
 
     def __post_init__(self) -> None:
-        ring = np.array(self.vertices_m, np.float64)
+        try:
+            ring = np.array(self.vertices_m, np.float64)
+        except (TypeError, ValueError) as fault:
+            raise SiteError("too_few_vertices", f"vertices are pairs of numbers: {fault}") from None
         if ring.ndim != 2 or ring.shape[1:] != (2,) or len(ring) < 3:
             raise SiteError(
                 "too_few_vertices",
@@ -56,16 +61,19 @@ class PolygonShape:
         if not np.isfinite(ring).all():
             row = int(np.nonzero(~np.isfinite(ring).all(axis=1))[0][0])
             raise SiteError("not_finite", f"vertex {row} is {ring[row].tolist()}", vertex=row)
+        _check_near(float(np.abs(ring).max()))
         if len(ring) > 3 and (ring[0] == ring[-1]).all():
             ring = ring[:-1]
         area_m2 = signed_area_m2(ring)
         crossing = first_crossing(ring)
         if crossing is not None:
-            raise SiteError(
-                "crossing_polygon",
-                f"edge {crossing[0]} meets edge {crossing[1]}; the outline must not touch itself",
-                edges=list(crossing),
-            )
+            i, j = crossing
+            text = f"edge {i} meets edge {j}; the outline must not touch itself"
+            same = np.flatnonzero((ring == np.roll(ring, -1, axis=0)).all(axis=1))
+            if len(same):
+                i, j = int(same[0]), (int(same[0]) + 1) % len(ring)
+                text = f"vertices {i} and {j} are the same; leave one out"
+            raise SiteError("crossing_polygon", text, edges=[i, j])
         if abs(area_m2) < 1e-8:
             raise SiteError("too_few_vertices", f"the polygon has no area ({area_m2:.3g} m2)")
         if area_m2 < 0.0:
@@ -84,7 +92,7 @@ class DiscShape:
     A disc: centre and radius > 0, metres in the site's frame.
 
     Raises:
-        SiteError: not_finite or bad_radius.
+        SiteError: not_finite, bad_radius or too_large.
     """
 
     x_m: float
@@ -96,6 +104,7 @@ class DiscShape:
             raise SiteError("not_finite", f"disc {self.x_m, self.y_m, self.radius_m}")
         if self.radius_m <= 0.0:
             raise SiteError("bad_radius", f"a disc needs a radius > 0 m, got {self.radius_m}")
+        _check_near(max(abs(self.x_m), abs(self.y_m), self.radius_m))
 
     @property
     def box_m(self) -> Limits:
@@ -104,6 +113,15 @@ class DiscShape:
 
 
 Shape = PolygonShape | DiscShape
+
+
+def _check_near(largest_m: float) -> None:
+    if largest_m > COORDINATE_M_MAX:
+        raise SiteError(
+            "too_large",
+            f"{largest_m:.6g} m is more than {COORDINATE_M_MAX:.0f} m from the origin of the site; "
+            f"survey coordinates need origin_m",
+        )
 
 
 def signed_area_m2(ring: npt.NDArray[np.float64]) -> float:
