@@ -30,9 +30,11 @@ import numpy.typing as npt
 
 from byway_planning.bounds.outgrown import Outgrown
 from byway_planning.bounds.sight import (
+    GRAZE_M,
     LIMITS,
     MET,
     NOTHING,
+    SAME_TURN_RAD,
     UNMET,
     WORK,
     arc_blocker,
@@ -66,8 +68,9 @@ ARRIVED: Final = 1
 NO_WAY: Final = 2
 CRAMPED: Final = 3  # more room is needed: see ROOM_FOR, and twice the bends
 
-#: Tangents this far off the arc of a corner count: cross products of unit vectors.
-OFF_ARC: Final = 1e-9
+#: Tangents this far off the arc of a corner count. Where two circles just touch, the direction
+#: between them is only known to the square root of the rounding of their distance.
+OFF_ARC: Final = SAME_TURN_RAD
 #: A bend that is this much shorter than another in the same place does not count as better.
 SAME_M: Final = 1e-12
 #: Work of taking one hope, in pairs of circles tried.
@@ -142,9 +145,11 @@ def _tangent(
     vx, vy = x1 - x0, y1 - y0
     square = vx * vx + vy * vy
     across = w0 - w1
-    if square <= across * across or square < 1e-18:
+    apart = abs(across) - GRAZE_M
+    if square < 1e-18 or (apart > 0.0 and square <= apart * apart):
         return 0.0, 0.0, -1.0
-    length = math.sqrt(square - across * across)
+    # circles that touch, in a gap just as wide as the disc, are passed between as well
+    length = math.sqrt(max(square - across * across, 0.0))
     return (length * vx - across * vy) / square, (length * vy + across * vx) / square, length
 
 
@@ -191,10 +196,10 @@ def _hope(ground: Outgrown, ends: Ends, chase: Chase, bend: int, to: int) -> Non
     x1 += r1 * n1x
     y1 += r1 * n1y
     if (
-        x1 - ground.x_m_min < ends.radius_m - OFF_ARC
-        or ground.x_m_max - x1 < ends.radius_m - OFF_ARC
-        or y1 - ground.y_m_min < ends.radius_m - OFF_ARC
-        or ground.y_m_max - y1 < ends.radius_m - OFF_ARC
+        x1 - ground.x_m_min < ends.radius_m - GRAZE_M
+        or ground.x_m_max - x1 < ends.radius_m - GRAZE_M
+        or y1 - ground.y_m_min < ends.radius_m - GRAZE_M
+        or ground.y_m_max - y1 < ends.radius_m - GRAZE_M
     ):
         return
     n = chase.counts[HOPES]
@@ -273,7 +278,8 @@ def _is_covered(
     bend = chase.last_bend[at]
     while bend >= 0:
         bx, by = chase.bends[bend, NX], chase.bends[bend, NY]
-        if all_round or side * (bx * ny - by * nx) >= -OFF_ARC:
+        # half of what `_hope` allows: no departure may fall between the two
+        if all_round or side * (bx * ny - by * nx) >= -0.5 * OFF_ARC:
             turn = turn_between(side, bx, by, nx, ny)
             if chase.bends[bend, LENGTH] + radius * turn <= length + SAME_M:
                 if _arc_is_free(ground, ends, chase, bend, turn) == NOTHING:

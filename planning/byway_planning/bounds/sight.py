@@ -22,6 +22,9 @@ Wholes = npt.NDArray[np.int64]
 #: kilometres lose 1e-12 m), far below what any length would show.
 GRAZE_M: Final = 1e-7
 
+#: Directions this close count as one; see `chase.OFF_ARC`.
+SAME_TURN_RAD: Final = 1e-5
+
 #: Marks of obstacles.
 UNMET: Final = 0
 MET: Final = 1  # the string may bend round its corners
@@ -143,7 +146,7 @@ def turn_between(side: int, ax: float, ay: float, bx: float, by: float) -> float
     """
     angle = math.atan2(side * (ax * by - ay * bx), ax * bx + ay * by)
     if angle < 0.0:
-        angle = 0.0 if angle > -1e-7 else angle + 2.0 * math.pi
+        angle = 0.0 if angle > -2.0 * SAME_TURN_RAD else angle + 2.0 * math.pi
     return angle
 
 

@@ -123,12 +123,42 @@ def test_a_gap_is_passed_by_what_fits(gap_m, is_open):
     assert (found_m < 12.0) if is_open else found_m == math.inf
 
 
-def test_an_arc_through_a_closed_gap_is_refused():
-    """Two corners stand nearer than the disc is wide; the way round both is much longer."""
-    corners = [box(-2.0, 3.0, 4.0, 5.9), box(2.0, -3.0, 4.0, 5.9)]  # 0.1 m apart at the middle
-    found_m = bound_of(solids_of(corners), disc(0.5), (-2.0, -1.5), (2.0, 1.5))
-    assert found_m > 12.0
-    assert found_m <= graph_length(corners, 0.5, (-2.0, -1.5), (2.0, 1.5), outer=True) + 1e-9
+@settings(max_examples=50, deadline=None)
+@given(st.floats(-3.0, 3.0), st.floats(-0.9, 0.9), st.sampled_from([0.0, 1000.0]), st.booleans())
+def test_a_gap_just_as_wide_as_the_disc_is_open(turned, aside_m, away_m, round_ends):
+    """Where corners face each other at just the width of the disc, the string touches both."""
+    walls = [box(-10.5, 0.0, 20.0, 0.5), box(10.5 + aside_m, aside_m, 20.0, 0.5)]
+    ends = [(-0.5, 0.0, 0.3), (0.5, 0.0, 0.3)]
+
+    def length_m(radius_m: float) -> float:
+        rings = [moved(ring, turned, (away_m, -away_m)) for ring in walls]
+        discs = (
+            [(*moved(p[:2], turned, (away_m, -away_m)), p[2]) for p in ends] if round_ends else []
+        )
+        limits = (away_m - 30.0, -away_m - 30.0, away_m + 30.0, -away_m + 30.0)
+        start, goal = (moved(p, turned, (away_m, -away_m)) for p in ((-3.0, -4.0), (3.0, 4.0)))
+        return bound_of(solids_of(rings, discs, limits_m=limits), disc(radius_m), start, goal)
+
+    width_m = min(
+        math.hypot(1.0 + aside_m, max(abs(aside_m) - 0.5, 0.0)), 0.4 if round_ends else 9.0
+    )
+    assert length_m(0.5 * width_m) < length_m(0.5 * width_m - 1e-4) + 1e-2
+
+
+@pytest.mark.parametrize(
+    ("half_gap_m", "half_width_m", "start", "goal"),
+    [
+        (0.499, 1.0, (-5, -3), (5, -3)),  # between the tips, 2 mm too narrow
+        (0.0, 0.001, (-0.5002, -4), (0.5002, -4)),  # tip to tip: the arc crosses from side to side
+    ],
+)
+def test_an_arc_through_a_closed_gap_is_refused(half_gap_m, half_width_m, start, goal):
+    """Two needles, from below and from above. All is free but the arc round a tip."""
+    needle = np.array([(0.0, -half_gap_m), (-half_width_m, -6.0), (half_width_m, -6.0)])
+    fence = (-9.0, -6.0, 9.0, 6.0)
+    shut = solids_of([needle, -needle], limits_m=fence)
+    assert bound_of(shut, disc(0.5), start, goal) == math.inf
+    assert bound_of(solids_of([needle], limits_m=fence), disc(0.5), start, goal) < 14.0
 
 
 scenes = st.builds(random_polygons, st.integers(0, 10**6), st.integers(1, 7))
