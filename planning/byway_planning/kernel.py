@@ -17,7 +17,6 @@ and a `NamedTuple` class whose fields carry such texts (see `numba_type`).
 
 import contextlib
 import logging
-import shutil
 from collections.abc import Callable, Iterator
 from typing import Any, Final, TypeVar
 
@@ -147,11 +146,9 @@ def warm(progress: Callable[[int, int, str], None] | None = None) -> None:
             progress(done, len(_ENTRIES), name)
         try:
             dispatcher.compile(signature)
-        except (OSError, EOFError, ValueError) as fault:
-            log.warning("kernel cache unreadable, building %s again: %s", name, fault)
-            root = kernel_cache.cache_root()
-            if root is not None:
-                shutil.rmtree(root / dispatcher.py_func.__module__, ignore_errors=True)
+        except Exception as fault:  # what a pickle of nonsense raises is anybody's guess
+            log.warning("building %s without its cache, which gave %r", name, fault)
+            kernel_cache.forget(dispatcher.py_func.__module__)
             dispatcher.compile(signature)
         dispatcher.disable_compile()
         _WARM.add(name)

@@ -16,10 +16,11 @@ import ast
 import functools
 import hashlib
 import os
+import shutil
 import tempfile
 from collections.abc import Callable, Iterator
 from importlib import metadata
-from importlib.util import find_spec
+from importlib.util import find_spec, resolve_name
 from pathlib import Path
 from typing import Any
 
@@ -64,9 +65,11 @@ def _imports_of(module: str) -> tuple[str, tuple[str, ...]]:
     for node in ast.walk(ast.parse(source)):
         if isinstance(node, ast.Import):
             found |= {alias.name for alias in node.names}
-        elif isinstance(node, ast.ImportFrom) and node.module:
-            found.add(node.module)
-            found |= {f"{node.module}.{alias.name}" for alias in node.names}
+        elif isinstance(node, ast.ImportFrom):
+            base = "." * node.level + (node.module or "")
+            base = resolve_name(base, spec.parent) if node.level else base
+            found.add(base)
+            found |= {f"{base}.{alias.name}" for alias in node.names}
     ours = sorted(name for name in found if name.startswith(PACKAGE + ".") and _is_module(name))
     return hashlib.sha256(source).hexdigest(), tuple(ours)
 
@@ -78,9 +81,8 @@ def _is_module(name: str) -> bool:
         return False
 
 
-@functools.cache
-def stamp_of(module: str) -> str:
-    """Digest of a module and of all it imports from this package, directly or not."""
+def closure_of(module: str) -> dict[str, str]:
+    """Return a module and all it imports from this package, directly or not, with digests."""
     seen: dict[str, str] = {}
     waiting = [module]
     while waiting:
@@ -88,8 +90,22 @@ def stamp_of(module: str) -> str:
         if name not in seen:
             seen[name], imports = _imports_of(name)
             waiting.extend(imports)
-    text = "".join(f"{name}={digest};" for name, digest in sorted(seen.items()))
+    return seen
+
+
+@functools.cache
+def stamp_of(module: str) -> str:
+    """Digest of a module and of all it imports from this package."""
+    text = "".join(f"{name}={digest};" for name, digest in sorted(closure_of(module).items()))
     return hashlib.sha256(text.encode()).hexdigest()
+
+
+def forget(module: str) -> None:
+    """Throw away what is kept of the kernels of a module and of all it calls."""
+    root = cache_root()
+    if root is not None:
+        for name in closure_of(module):
+            shutil.rmtree(root / name, ignore_errors=True)
 
 
 class ClosureLocator(_CacheLocator):  # type: ignore[misc]
