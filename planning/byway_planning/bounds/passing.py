@@ -50,7 +50,8 @@ def _depth(body: Body, x: float, y: float) -> float:
         if (ay > 0.0) != (by > 0.0) and (ax * by - bx * ay > 0.0) == (by > ay):
             inside = not inside
         before = i
-    return float((best if inside else -best) + body.skin_m)
+    # the radius that the body states may be a trifle too small; nothing here is above it
+    return float(min((best if inside else -best) + body.skin_m, body.inner_radius_m))
 
 
 @kernel(Body, "f8[:, ::1]")
@@ -137,6 +138,6 @@ def passing_radius_m(body: Body) -> float:
     """
     Radius of the largest disc that lower bounds for this body look at: prepare for this one.
 
-    Negative or 0 where there is none (the origin outside the body, and no room inside it).
+    Not above `inner_radius_m` and the clearance together. Negative or 0 where there is none (the origin outside the body, and no room inside it).
     """
     return max(disc[2] for disc in passing_discs(body)) + body.clearance_m - CHECKED_M

@@ -92,6 +92,7 @@ def test_discs_lie_inside_the_body():
             assert radius_m <= depth + 1e-12
             bends = np.linspace(-0.25, 0.25, 41)
             assert np.hypot(1.0 - bends * y, bends * x).max() <= stretch + 1e-12
+        assert passing_radius_m(vehicle.body()) <= vehicle.inner_radius_m
         assert discs[-1][2] >= 0.998 * vehicle.inner_radius_m - 0.02
     assert len(passing_discs(car().body())) == 1, "as large as any already"
     assert passing_discs(Disc(radius_m=0.7).body()) == [(0.0, 0.0, 0.7, 1.0)]
