@@ -138,6 +138,6 @@ def passing_radius_m(body: Body) -> float:
     """
     Radius of the largest disc that lower bounds for this body look at: prepare for this one.
 
-    Not above `inner_radius_m` and the clearance together. Negative or 0 where there is none (the origin outside the body, and no room inside it).
+    Not above `inner_radius_m` and the clearance together. Negative or 0 where there is none.
     """
     return max(disc[2] for disc in passing_discs(body)) + body.clearance_m - CHECKED_M
