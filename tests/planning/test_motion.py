@@ -129,6 +129,30 @@ def test_a_fork_drives_with_a_post_between_its_arms(layer):
     assert motion_free(place.scene, fork, -1.0, 0.0, 0.0, 0.33, 0.3)
 
 
+@pytest.mark.parametrize("curvature", [1 / 3, -1 / 3])
+@pytest.mark.parametrize("sign", [1.0, -1.0])
+def test_a_corner_that_swings_out_between_two_poses_is_seen(curvature, sign):
+    """Its arc lies outside of the chord that it ends on, by more than a centimetre here."""
+    body = car(BOX).body()
+    side = math.copysign(1.0, curvature)
+    # The outer front corner, seen from the centre of the turn at (0, side * 3).
+    ahead, across = 3.5, -0.95 * side - 3.0 * side
+    radius, first = math.hypot(ahead, across), math.atan2(across, ahead)
+    for length in (0.2, 0.45, 1.1):
+        turn = sign * length * curvature
+        for part in (0.3, 0.5, 0.8):
+            for more_m, free in ((-0.004, False), (0.0075, True)):
+                at = first + part * turn
+                x, y = (radius + more_m) * math.cos(at), (radius + more_m) * math.sin(at)
+                post = (10.0 + x, 10.0 + 3.0 * side + y, 0.001)
+                place = world((0.0, 0.0, 20.0, 20.0), discs=[post])
+                end = poses_along((10.0, 10.0, 0.0), curvature, sign * length, length)[-1]
+                assert pose_free(place.scene, body, 10.0, 10.0, 0.0)
+                assert pose_free(place.scene, body, *end)
+                found = motion_free(place.scene, body, 10.0, 10.0, 0.0, curvature, sign * length)
+                assert found == free
+
+
 def test_segments_are_driven_one_after_another():
     wall = np.array([(6.0, 4.0), (7.0, 4.0), (7.0, 8.0), (6.0, 8.0)])
     place = world((-10.0, -10.0, 20.0, 20.0), polygons=[wall])

@@ -138,6 +138,16 @@ def blocked_of(snapshot: Snapshot) -> Cells:
     return out
 
 
+def solids_of(snapshot: Snapshot) -> tuple[list[list[float]], list[list[float]]]:
+    """Boxes of polygons and discs that can be met; what was dropped is out of the world."""
+    solids = snapshot.solids()
+    boxes = solids.boxes_m[np.isfinite(solids.boxes_m).all(axis=1)]
+    discs = solids.discs_m[solids.discs_m[:, 2] > 0.0]
+    rest = solids.discs_m[solids.discs_m[:, 2] <= 0.0]
+    assert (np.abs(rest[:, :2]) > 1e9).all()
+    return sorted(boxes.tolist()), sorted(discs.tolist())
+
+
 def read_all(snapshot: Snapshot) -> dict[str, Any]:
     """Everything that a reader can see, in a form in which equal sites are equal."""
     scene = snapshot.scene()
@@ -164,6 +174,7 @@ def read_all(snapshot: Snapshot) -> dict[str, Any]:
         "far": scene.far_m.tobytes(),
         "buckets": buckets_of(scene),
         "blocked": blocked_of(snapshot).tobytes(),
+        "solids": solids_of(snapshot),
     }
 
 
