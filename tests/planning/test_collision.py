@@ -7,7 +7,14 @@ import pytest
 import shapely
 from tests.planning.collision_twins import BOX, FORK, VEHICLES, World, car, random_world, world
 
-from byway_planning.collision import CONTACT_M, NEAR_M, excesses_kernel, pose_excess, pose_free
+from byway_planning.collision import (
+    CONTACT_M,
+    NEAR_M,
+    _cell_of,
+    excesses_kernel,
+    pose_excess,
+    pose_free,
+)
 from byway_planning.site import LayerSettings, Site, SiteModel, SiteSettings
 from byway_planning.vehicles.models import Car, Disc
 
@@ -181,6 +188,22 @@ def test_a_clearance_is_kept_and_no_more():
     body = car(BOX, 0.3).body()
     assert pose_excess(place.scene, body, 6.15, 10.0, 0.0) == pytest.approx(0.05, abs=1e-12)
     assert pose_excess(place.scene, body, 6.25, 10.0, 0.0) <= 0.0
+
+
+def test_points_next_to_the_limits_are_in_the_outermost_cells():
+    """Differences are rounded, and must not be rounded out of the tables."""
+    rng = np.random.default_rng(4)
+    rounded_out = 0
+    for x0, tiles in zip(rng.uniform(-50.0, 50.0, 200), rng.integers(1, 9, 200), strict=True):
+        limits_m = (x0, x0, x0 + tiles * 1.6, x0 + tiles * 1.6)
+        scene = SiteModel(SiteSettings(limits_m, 0.1, tile_cells=16)).publish().scene()
+        low, high = np.nextafter(x0, np.inf), np.nextafter(limits_m[2], -np.inf)
+        assert _cell_of.py_func(scene, low, low)[2:] == (0, 0, 0, 0)
+        last = scene.field_of.shape[0] - 1
+        u, _, *place = _cell_of.py_func(scene, high, high)
+        assert place == [last, last, 15, 15]
+        rounded_out += u >= 16 * (last + 1)
+    assert rounded_out > 0
 
 
 def test_nonsense_poses_collide():
