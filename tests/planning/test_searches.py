@@ -149,7 +149,7 @@ def test_a_flood_is_dijkstras_algorithm_on_the_free_squares(seed):
     for stretch in (1e6, 1.2):
         cost = np.empty(mask.shape, np.int32)
         told = flood_kernel(
-            mask, origin, other, stretch, cost, room.heads, room.entries, room.links
+            mask, origin, other, stretch, 0, cost, room.heads, room.entries, room.links
         )
         found = np.where(cost.ravel() >= UNREACHED, np.inf, cost.ravel())
         assert told == min(wanted[other], UNREACHED)

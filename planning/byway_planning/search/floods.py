@@ -78,23 +78,25 @@ def room_mask_kernel(
                     out[i * per + r + 1, j * per + c + 1] = 1 if free else 0
 
 
-@kernel("ru1[:, ::1]", "i8", "i8", "f8", "i4[:, ::1]", "i4[::1]", "i4[::1]", "i4[::1]")
+@kernel("ru1[:, ::1]", "i8", "i8", "f8", "i8", "i4[:, ::1]", "i4[::1]", "i4[::1]", "i4[::1]")
 def flood_kernel(
     mask: Mask,
     origin: int,
     other: int,
     stretch: float,
+    beyond: int,
     cost: Whole4,
     heads: Whole4,
     entries: Whole4,
     links: Whole4,
 ) -> int:
     """
-    Fill `cost` from one square until `stretch` times the cost of the other is reached.
+    Fill `cost` from one square until `stretch` times the cost of the other, and more, is reached.
 
     Args:
         mask: 1 where the disc may be, 0 all along the border. The two ends count as free.
         origin, other: Squares, numbered row by row.
+        beyond: Cost to go on for after that.
         heads: Shape (BUCKETS,). entries, links: room for 8 entries a square.
 
     Returns:
@@ -131,7 +133,7 @@ def flood_kernel(
             if costs[at] != now:
                 continue
             if at == other:
-                until = min(until, int(now * stretch) + 4 * SIDE_STEP)
+                until = min(until, int(now * stretch) + beyond)
             for turn in range(8):
                 if turn < 4:
                     step = (1, -1, width, -width)[turn]
@@ -263,9 +265,10 @@ class FloodGround:
         *,
         slack_cells: float,
         stretch: float,
+        beyond_m: float,
     ) -> tuple[Flood, float]:
         """
-        Flood from one point until well past another.
+        Flood from one point until `stretch` times as far as another, `beyond_m` and some squares.
 
         Returns:
             The flood, and the path length of the other point (inf when it is not reached).
@@ -277,6 +280,7 @@ class FloodGround:
             self.square_of(*origin),
             self.square_of(*other),
             stretch,
+            4 * SIDE_STEP + math.ceil(beyond_m / self.side_m * SIDE_STEP),
             cost,
             room.heads,
             room.entries,
