@@ -396,8 +396,21 @@ def pose_excess(scene: Scene, body: Body, x: float, y: float, heading: float) ->
         return quick
     if quick == -math.inf:
         return 0.0
+    return _exact_excess(scene, body, x, y, c, s, EXACT_M)
+
+
+@kernel()
+def exact_excess(scene: Scene, body: Body, x: float, y: float, heading: float, cap: float) -> float:
+    """The excess at a pose, exact up to a cap; slower where there is much room."""
+    return _exact_excess(scene, body, x, y, math.cos(heading), math.sin(heading), cap)
+
+
+@kernel()
+def _exact_excess(
+    scene: Scene, body: Body, x: float, y: float, c: float, s: float, cap: float
+) -> float:
     hard, outline = body.clearance_m, body.outline_m
-    best = exact_raster(scene, outline, body.skin_m, x, y, c, s, hard + EXACT_M)
+    best = exact_raster(scene, outline, body.skin_m, x, y, c, s, hard + cap)
     if scene.outline_discs.shape[0] > 0 and best > 0.0:
         best = exact_outlines(scene, body, outline, x, y, c, s, 0.0, best)
     if best > hard and _is_swallowed(scene, body, x, y, c, s):

@@ -121,24 +121,31 @@ def _planned(run: Run, workshop: Workshop, wishes: Wishes) -> Outcome:
         if blocked:
             return run.outcome("start_blocked", blocked)
         run.start_clearance_m = min(0.0, run.body.clearance_m) - run.vehicle.start_overlap_m
-    openings: list[Floats | None] = [None]
+    openings: list[Floats] = []
     if run.start_speed_mps != 0.0:
-        openings = list(_rolling(run, near))
+        openings = _rolling(run, near)
         if not openings or not _fits_limits(run):
             return run.outcome("start_too_fast")
     elif near:
-        openings = list(leaving(scene, run.body, run.start, run.vehicle.start_overlap_m))
+        openings = leaving(scene, run.body, run.start, run.vehicle.start_overlap_m)
         if not openings:
             return run.outcome("start_blocked", _blockages(run, run.start, -math.inf))
     run.bound = curve_bound(run.body, run.start, run.goal)
     goal = run.goal if closing is None else _read_only(closing[0, :3])
-    guide = guide_for(_ground(run), workshop.floods, run.body, run.start, goal)
+    # What starts too near to something has room for less than the hard clearance around there.
+    ground = _ground(run, min(run.body.clearance_m, run.start_clearance_m))
+    guide = guide_for(ground, workshop.floods, run.body, run.start, goal)
     if not guide.reached:
         return run.outcome("no_route")
+    if not openings:
+        question = Question(scene, run.body, run.start, goal, run.seed, guide)
+        search(run, workshop, question, wishes, None, closing)
+    ground = _ground(run, run.body.clearance_m)
     for opening in _ranked(run, guide, openings):
-        start = run.start if opening is None else end_of(opening)
+        start = end_of(opening)
+        guide = guide_for(ground, workshop.floods, run.body, start, goal)
         question = Question(scene, run.body, start, goal, run.seed, guide)
-        if search(run, workshop, question, wishes, opening, closing):
+        if guide.reached and search(run, workshop, question, wishes, opening, closing):
             break
     return run.answer()
 
@@ -229,7 +236,7 @@ def _fits_limits(run: Run) -> bool:
     return abs(run.start_speed_mps) <= top + 1e-9
 
 
-def _ground(run: Run) -> FloodGround:
+def _ground(run: Run, clearance_m: float) -> FloodGround:
     kept, scene, body = run.snapshot.kept, run.snapshot.scene(), run.body
     if "used_tiles" not in kept:
         kept["used_tiles"] = used_tiles(scene)
@@ -237,9 +244,9 @@ def _ground(run: Run) -> FloodGround:
     margin_m = 2.0 * (body.outer_radius_m + body.turn_radius_m + body.clearance_m)
     ends = [middle_of(body, run.start), middle_of(body, run.goal)]
     window = window_for(scene, used, ends, margin_m)
-    key = ("ground", body.inner_radius_m + body.clearance_m, window)
+    key = ("ground", body.inner_radius_m + clearance_m, window)
     if key not in kept:
-        kept[key] = FloodGround(scene, body.inner_radius_m + body.clearance_m, window)
+        kept[key] = FloodGround(scene, body.inner_radius_m + clearance_m, window)
     return cast(FloodGround, kept[key])
 
 
@@ -256,19 +263,23 @@ def _rolling(run: Run, near: bool) -> list[Floats]:
     )
 
 
-def _ranked(run: Run, guide: Guide, openings: list[Floats | None]) -> list[Floats | None]:
-    """Return the openings that lead somewhere, the most promising first."""
+def _ranked(run: Run, guide: Guide, openings: list[Floats]) -> list[Floats]:
+    """
+    Return the openings, the most promising first.
 
-    def estimate(opening: Floats | None) -> float:
-        if opening is None:
-            return 0.0
+    Those to which the flood did not come are last: it may only have stopped before.
+    """
+
+    def estimate(opening: Floats) -> tuple[bool, float]:
         end = end_of(opening)
         flood_length_m = float(flood_length_kernel(guide.to_goal, *middle_of(run.body, end)))
-        curve_m = float(direct_length_kernel(run.body, end, run.goal))
-        return path_cost(opening, run.body) + max(flood_length_m, curve_m)
+        cost = path_cost(opening, run.body)
+        cost += float(direct_length_kernel(run.body, end, run.goal))
+        if flood_length_m == math.inf:
+            return True, cost
+        return False, max(cost, path_cost(opening, run.body) + flood_length_m)
 
-    ranked = sorted((estimate(opening), i) for i, opening in enumerate(openings))
-    return [openings[i] for cost, i in ranked if cost < math.inf]
+    return sorted(openings, key=estimate)
 
 
 def _read_only(pose: Floats) -> Floats:

@@ -12,7 +12,7 @@ from typing import Final
 import numpy as np
 import numpy.typing as npt
 
-from byway_planning.collision import CONTACT_M, pose_excess
+from byway_planning.collision import CONTACT_M, exact_excess, pose_excess
 from byway_planning.curves.word import advance
 from byway_planning.kernel import kernel
 from byway_planning.motion import motion_reach
@@ -48,11 +48,13 @@ def leave_kernel(
         core: The body drawn in by `overlap`, without clearance: its distance, less the
             overlap, is the signed distance of the body, which must not fall on the way.
     """
+    # Exact: a bound that is only right in being below the distance would seem to fall.
+    enough = overlap + body.clearance_m + CONTACT_M + ROOM_M
     best = -math.inf
     at = 0.0
     while at <= longest:
         x, y, h = advance(pose[0], pose[1], pose[2], curvature, sign * at)
-        signed = pose_excess(scene, core, x, y, h) - overlap
+        signed = exact_excess(scene, core, x, y, h, enough) - overlap
         if signed <= -overlap or signed < best - ROUNDING_M:
             return -1.0
         best = max(best, signed)
@@ -86,7 +88,7 @@ def leaving(
         backward: The motions will be driven the other way round, from their end to the pose.
     """
     core = _core_of(body, overlap_m)
-    longest = 2.0 * body.outer_radius_m + 2.0 * body.turn_radius_m
+    longest = 2.0 * (body.outer_radius_m + body.turn_radius_m + body.clearance_m)
     found: list[tuple[float, Floats]] = []
     headings = [float(pose[2])]
     if body.kind == DISC:
