@@ -6,21 +6,14 @@ import math
 import numpy as np
 import pytest
 import shapely
-from scipy.sparse import coo_array
-from scipy.sparse.csgraph import dijkstra
 
 from byway_planning import Car, Disc, ForwardCar, Site
 from byway_planning.curves import shortest_curve
 from byway_planning.dice import new_dice, uniform
 from byway_planning.kernel import kernel
 from byway_planning.search.floods import (
-    DIAGONAL_STEP,
-    PROOF_CELLS,
-    SIDE_STEP,
-    UNREACHED,
     FloodGround,
     FloodRoom,
-    flood_kernel,
     used_tiles,
     window_for,
 )
@@ -124,59 +117,6 @@ def check_drivable(path: np.ndarray, vehicle: Vehicle, q: Question, polygons=WAL
 
 
 # -- floods, heap, table --------------------------------------------------------------------
-
-
-@pytest.mark.parametrize("seed", range(4))
-def test_a_flood_is_dijkstras_algorithm_on_the_free_squares(seed):
-    """Against scipy.sparse.csgraph, over the whole grid and with an early stop."""
-    rng = np.random.default_rng(seed)
-    mask = np.pad((rng.random((24, 31)) < 0.7).astype(np.uint8), 1)
-    free = np.argwhere(mask)
-    origin, other = (int(r * mask.shape[1] + c) for r, c in free[rng.integers(len(free), size=2)])
-    rows, columns, costs = [], [], []
-    for r, c in free:
-        for dr in (-1, 0, 1):
-            for dc in (-1, 0, 1):
-                if (dr or dc) and mask[r + dr, c + dc]:
-                    rows.append(r * mask.shape[1] + c)
-                    columns.append((r + dr) * mask.shape[1] + c + dc)
-                    costs.append(DIAGONAL_STEP if dr and dc else SIDE_STEP)
-    graph = coo_array((costs, (rows, columns)), shape=(mask.size, mask.size)).tocsr()
-    wanted = dijkstra(graph, indices=origin)
-    room = FloodRoom()
-    room.fit(mask.size)
-    mask.flags.writeable = False
-    for stretch in (1e6, 1.2):
-        cost = np.empty(mask.shape, np.int32)
-        told = flood_kernel(
-            mask, origin, other, stretch, 0, cost, room.heads, room.entries, room.links
-        )
-        found = np.where(cost.ravel() >= UNREACHED, np.inf, cost.ravel())
-        assert told == min(wanted[other], UNREACHED)
-        until = wanted[other] * stretch
-        near = wanted <= until
-        assert (found[near] == wanted[near]).all()
-
-
-def test_the_proving_mask_keeps_every_square_that_could_hold_the_disc():
-    rng = np.random.default_rng(5)
-    polygons = {
-        f"p{i}": np.array(
-            shapely.convex_hull(
-                shapely.multipoints(rng.uniform((2, 2), (38, 22)) + rng.normal(0, 0.8, (6, 2)))
-            ).exterior.coords
-        )[:-1]
-        for i in range(40)
-    }
-    scene = Site.from_shapes(polygons, limits_m=LIMITS).snapshot.scene()
-    world = shapely.union_all([shapely.Polygon(p) for p in polygons.values()])
-    ground = FloodGround(scene, 0.9, (0, 0, *scene.field_of.shape))
-    mask = ground.mask(PROOF_CELLS)
-    points = rng.uniform((0.1, 0.1), (39.9, 23.9), (4000, 2))
-    room_m = shapely.distance(shapely.points(points), world)
-    for (x, y), free_m in zip(points, room_m, strict=True):
-        if free_m >= 0.9:
-            assert mask.ravel()[ground.square_of(x, y)] == 1
 
 
 def test_the_heap_gives_what_heapq_gives():

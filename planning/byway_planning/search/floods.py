@@ -30,6 +30,8 @@ UNREACHED: Final = 2**30
 FINE_SQUARES_MAX: Final = 90_000
 #: Slack, in cells of the site, of the mask that guides: what a search can mostly drive through.
 GUIDE_CELLS: Final = 1.0
+#: The limits of the site are kept to this much, which is more than a route is allowed to miss.
+EXACT_M: Final = 0.001
 
 
 class Flood(NamedTuple):
@@ -49,9 +51,21 @@ class Flood(NamedTuple):
 describe(Flood, "f8", "f8", "f8", "ri4[:, ::1]")
 
 
-@kernel(Scene, "i8", "i8", "i8", "f8", "u1[:, ::1]")
+@kernel()
+def _holds(low: float, high: float, first: float, last: float) -> bool:
+    """Do two intervals meet?"""
+    return high >= first and low <= last
+
+
+@kernel(Scene, "i8", "i8", "i8", "f8", "f8", "u1[:, ::1]")
 def room_mask_kernel(
-    scene: Scene, level: int, first_row: int, first_column: int, wanted_m: float, out: Mask
+    scene: Scene,
+    level: int,
+    first_row: int,
+    first_column: int,
+    radius_m: float,
+    slack_m: float,
+    out: Mask,
 ) -> None:
     """
     Mark the squares of a grid that may hold the middle of a disc.
@@ -59,7 +73,8 @@ def room_mask_kernel(
     Args:
         level: 0 for squares of `room_cells` cells, 1 for squares four times as wide.
         first_row, first_column: Tile at the lower left of the grid.
-        wanted_m: The distance that must be reached somewhere in a square.
+        radius_m: Of the disc; the limits of the site are kept exactly.
+        slack_m: How far the distances of the raster may be below the true ones.
         out: Shape (rows + 2, columns + 2): whole tiles in such squares, and a border of 0.
     """
     out[:, :] = 0
@@ -67,14 +82,25 @@ def room_mask_kernel(
     fine = side // scene.room_cells
     per = fine if level == 0 else side // (4 * scene.room_cells)
     base = (side + 1) * (side + 1) + (0 if level == 0 else fine * fine)
+    square_m = side * scene.cell_m / per
+    inset = radius_m - EXACT_M
+    south, north = scene.y_m_min + inset, scene.y_m_max - inset
+    west, east = scene.x_m_min + inset, scene.x_m_max - inset
     for i in range((out.shape[0] - 2) // per):
         for j in range((out.shape[1] - 2) // per):
             offset = scene.field_of[first_row + i, first_column + j]
             for r in range(per):
+                y = scene.corner_y_m + ((first_row + i) * per + r) * square_m
+                if not _holds(y, y + square_m, south, north):
+                    continue
                 for c in range(per):
                     free = offset == OPEN
                     if offset >= 0:
-                        free = scene.floats[offset + base + r * per + c] >= wanted_m
+                        there = scene.floats[offset + base + r * per + c]
+                        free = there >= radius_m - slack_m
+                    if free:
+                        x = scene.corner_x_m + ((first_column + j) * per + c) * square_m
+                        free = _holds(x, x + square_m, west, east)
                     out[i * per + r + 1, j * per + c + 1] = 1 if free else 0
 
 
@@ -244,8 +270,9 @@ class FloodGround:
         found = self._masks.get(slack_cells)
         if found is None:
             found = np.empty(self.shape, np.uint8)
-            wanted = self._radius_m - slack_cells * self._scene.cell_m
-            room_mask_kernel(self._scene, self.level, *self._window[:2], wanted, found)
+            slack_m = slack_cells * self._scene.cell_m
+            first = self._window[:2]
+            room_mask_kernel(self._scene, self.level, *first, self._radius_m, slack_m, found)
             found.flags.writeable = False
             self._masks[slack_cells] = found
         return found
