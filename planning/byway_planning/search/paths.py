@@ -69,7 +69,7 @@ def sum_up(body: Body, course: Course) -> None:
 
 @kernel()
 def append(course: Course, x: float, y: float, heading: float, k: float, length: float) -> None:
-    """Add an element; one that goes on like the last one lengthens it."""
+    """Add an element, for which there is room; one that goes on like the last one lengthens it."""
     if abs(length) < SHORT_M:
         return
     n = course.used[0]
@@ -128,14 +128,21 @@ def copy_course(source: Course, target: Course) -> None:
 
 
 @kernel("rf8[:, ::1]", Body, Course)
-def load_course_kernel(path: Floats, body: Body, course: Course) -> None:
-    """Fill a course from a path (n, 5); headings of a vehicle on wheels are made continuous."""
+def load_course_kernel(path: Floats, body: Body, course: Course) -> bool:
+    """
+    Fill a course from a path (n, 5); headings of a vehicle on wheels are made continuous.
+
+    Returns:
+        Whether it found room; if not, the course is of no use.
+    """
     course.used[0] = 0
     end = math.nan
     for i in range(path.shape[0]):
         heading = path[i, 2]
         if i > 0 and body.turn_radius_m > 0.0:
             heading = end + wrap(heading - end)
+        if course.used[0] == course.rows.shape[0]:
+            return False
         append(course, path[i, 0], path[i, 1], heading, path[i, 3], path[i, 4])
         end = heading + path[i, 3] * path[i, 4]
     if course.used[0] == 0:
@@ -144,6 +151,7 @@ def load_course_kernel(path: Floats, body: Body, course: Course) -> None:
         course.rows[0, 4] = 0.0
         course.used[0] = 1
     sum_up(body, course)
+    return True
 
 
 def path_from(course: Course) -> Floats:

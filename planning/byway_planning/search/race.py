@@ -25,7 +25,7 @@ from byway_planning.search.lattice import (
     path_of,
     restart,
 )
-from byway_planning.search.method import EXHAUSTED, FOUND, FULL, RUNNING
+from byway_planning.search.method import EXHAUSTED, FOUND, RUNNING
 from byway_planning.search.paths import cost_of, load_course_kernel, path_from
 from byway_planning.search.question import Question
 from byway_planning.search.trees import ConnectedTrees
@@ -129,9 +129,8 @@ class Auto:
     # -- the schedule -----------------------------------------------------------------------
 
     def _run(self) -> Iterator[int]:
-        if self._first is not None:
-            self._found_first(self._first)
-        elif not (yield from self._race()):
+        known = self._first is not None and self._keep(self._first)
+        if not known and not (yield from self._race()):
             yield EXHAUSTED
             return
         yield from self._improve(self._polish, FIRST_IDLE_MAX)
@@ -206,19 +205,21 @@ class Auto:
                 return (yield from self._grow_trees(math.inf))
             for runner in tuple(runners):
                 status = self._advance(runner.lattice, backward=runner.backward, iterations=size)
-                if status == FOUND:
+                if status == FOUND and self._keep(path_of(runner.lattice, self._q.body)):
                     self._winner_backward = runner.backward
-                    yield self._found_first(path_of(runner.lattice, self._q.body))
+                    yield FOUND
                     return True
-                if status in (EXHAUSTED, FULL):
+                if status != RUNNING:
                     runners = [other for other in runners if other is not runner]
                 yield RUNNING
             size = min(int(size * SLICE_GROWTH), SLICE_MAX)
 
-    def _found_first(self, path: Floats) -> int:
-        load_course_kernel(path, self._q.body, self._polish.course)
+    def _keep(self, path: Floats) -> bool:
+        """Take a first path for the best one, unless it has too many elements to be polished."""
+        if not load_course_kernel(path, self._q.body, self._polish.course):
+            return False
         self._best = cost_of(self._polish.course)
-        return FOUND
+        return True
 
     def _improve(self, polish: Polish, idle_max: int, tries: int = 10**9) -> Iterator[int]:
         """Polish a path; the best one tells when it got better."""
@@ -264,17 +265,19 @@ class Auto:
         while True:
             status = self._trees.advance(TREE_SLICE)
             self._work += 3 * TREE_SLICE  # a sample costs about three expansions
-            if status == FOUND:
-                if load:
-                    yield self._found_first(self._trees.path())
+            if status == FOUND and not load:
+                return True
+            if status == FOUND and self._keep(self._trees.path()):
+                yield FOUND
                 return True
             yield RUNNING
-            if status in (EXHAUSTED, FULL):
+            if status != RUNNING:
                 self._trees.restart(bound_m)
 
     def _adopt(self, path: Floats) -> Iterator[int]:
         """Polish an alternative until it idles; keep the better of it and the best."""
-        load_course_kernel(path, self._q.body, self._other.course)
+        if not load_course_kernel(path, self._q.body, self._other.course):
+            return
         self._other.marks[IDLE] = 0
         yield from self._improve(self._other, IDLE_MAX)
         if cost_of(self._other.course) < self._best:
