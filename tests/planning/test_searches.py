@@ -1,6 +1,5 @@
 """The searches: what they find can be driven, slices do not matter, and outside laws hold."""
 
-import heapq
 import math
 
 import numpy as np
@@ -8,7 +7,6 @@ import pytest
 import shapely
 
 from byway_planning import Car, Disc, ForwardCar, Site
-from byway_planning.curves import shortest_curve
 from byway_planning.dice import new_dice, uniform
 from byway_planning.kernel import kernel
 from byway_planning.search.floods import (
@@ -17,7 +15,6 @@ from byway_planning.search.floods import (
     used_tiles,
     window_for,
 )
-from byway_planning.search.heap import pop, push
 from byway_planning.search.improve import IDLE, improve_kernel, new_polish
 from byway_planning.search.lattice import (
     advance_lattice_kernel,
@@ -25,14 +22,12 @@ from byway_planning.search.lattice import (
     path_of,
     restart,
 )
-from byway_planning.search.lengths import HALF, STEP, TURNS, guessed_length, lengths_of
 from byway_planning.search.method import EXHAUSTED, FOUND, FULL, RUNNING
 from byway_planning.search.methods import METHODS, make_method
 from byway_planning.search.neighbours import nearest_k
 from byway_planning.search.paths import cost_of, load_course_kernel, path_cost, path_from
 from byway_planning.search.question import Question, guide_for
 from byway_planning.search.workshop import Workshop
-from byway_planning.vehicles.body import CAR
 from byway_planning.vehicles.models import Vehicle
 
 LIMITS = (0.0, 0.0, 40.0, 24.0)
@@ -119,37 +114,6 @@ def check_drivable(path: np.ndarray, vehicle: Vehicle, q: Question, polygons=WAL
 # -- floods, heap, table --------------------------------------------------------------------
 
 
-def test_the_heap_gives_what_heapq_gives():
-    rng = np.random.default_rng(6)
-    keys, values = np.empty(500), np.empty(500, np.int32)
-    size, twin = 0, []
-    for i in range(2000):
-        if size < 400 and (size == 0 or rng.random() < 0.6):
-            key = float(rng.integers(10**9))
-            size = push.py_func(keys, values, size, key, i)
-            heapq.heappush(twin, key)
-        else:
-            assert keys[0] == heapq.heappop(twin)
-            size = pop.py_func(keys, values, size)
-
-
-def test_the_table_of_lengths_holds_the_curves_at_its_points_for_every_radius():
-    lengths = lengths_of(CAR)
-    rng = np.random.default_rng(7)
-    for i, j, k in rng.integers((0, 0, 0), (2 * HALF + 1, 2 * HALF + 1, TURNS), (200, 3)):
-        goal = ((i - HALF) * STEP, (j - HALF) * STEP, k * 2 * math.pi / TURNS)
-        one = Car(
-            footprint_m=BOX, turn_radius_m_min=1.0, reverse_factor=1.0, direction_change_m=0.0
-        )
-        wanted = shortest_curve(one, (0.0, 0.0, 0.0), goal).length_m
-        assert lengths.table[i, j, k] == pytest.approx(wanted, abs=1e-5)
-        if max(abs(goal[0]), abs(goal[1])) < (HALF - 1) * STEP:
-            scaled = guessed_length(
-                lengths, 5.0, 1.0, 2.0, 0.0, 1.0 + 5 * goal[0], 2.0 + 5 * goal[1], goal[2]
-            )
-            assert scaled == pytest.approx(5.0 * wanted, abs=1e-4)
-
-
 # -- lattice --------------------------------------------------------------------------------
 
 
@@ -174,35 +138,6 @@ def lattice_path(vehicle: Vehicle, q: Question, *, backward: bool, step: int) ->
             break
     assert status == FOUND
     return path_of(lattice, q.body)
-
-
-@pytest.mark.parametrize("name", VEHICLES)
-@pytest.mark.parametrize("backward", [False, True])
-def test_a_lattice_finds_drivable_paths_from_either_end_in_any_slices(name, backward):
-    vehicle = VEHICLES[name]
-    q = question(vehicle)
-    paths = [lattice_path(vehicle, q, backward=backward, step=step) for step in (1, 7, 1000)]
-    assert paths[0].tobytes() == paths[1].tobytes() == paths[2].tobytes()
-    check_drivable(paths[0], vehicle, q)
-
-
-def test_a_lattice_in_a_pen_is_exhausted_and_one_without_memory_is_full():
-    pen = {
-        "west": [(30.0, 14.0), (30.4, 14.0), (30.4, 23.0), (30.0, 23.0)],
-        "south": [(30.0, 14.0), (39.0, 14.0), (39.0, 14.4), (30.0, 14.4)],
-        "east": [(38.6, 14.0), (39.0, 14.0), (39.0, 23.0), (38.6, 23.0)],
-        "north": [(30.0, 22.6), (39.0, 22.6), (39.0, 23.0), (30.0, 23.0)],
-    }
-    inside = question(CAR_, pen, start=(33.0, 18.0, 0.0), goal=(36.0, 19.0, 0.0))
-    outside = read_only((5.0, 5.0, 0.0))
-    lattice = new_lattice(60_000)
-    knobs = {"cell_m": 0.7, "headings": 64, "arc_m": 1.1, "weight": 2.0, "change_m": 0.5}
-    restart(lattice, backward=False, start=inside.start, goal=outside, **knobs)
-    args = (inside.scene, inside.body, lattice, inside.to_goal, inside.lengths)
-    assert advance_lattice_kernel(*args, 100_000) == EXHAUSTED
-    small, q = new_lattice(64), question(CAR_)
-    restart(small, backward=False, start=q.start, goal=q.goal, **knobs)
-    assert advance_lattice_kernel(q.scene, q.body, small, q.to_goal, q.lengths, 10**6) == FULL
 
 
 # -- improvement ----------------------------------------------------------------------------

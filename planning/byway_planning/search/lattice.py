@@ -203,6 +203,11 @@ def _shoot(scene: Scene, body: Body, lattice: Lattice, node: int) -> bool:
         *(ax, ay, ah, bx, by, bh),
         lattice.shot,
     )
+    came = lattice.moves[node]
+    if body.kind == CAR and count > 0 and came >= 0:
+        beside = lattice.shot[0, 1] if lattice.marks[SENSE] > 0 else lattice.shot[count - 1, 1]
+        if (came >= 3) != (beside < 0.0):
+            cost += body.direction_change_m
     if lattice.driven[node] + cost >= lattice.knobs[BOUND]:
         return False
     if body.kind == DISC and count > 0:

@@ -284,11 +284,23 @@ def grow_two_kernel(
             continue
         other = _nearest(body, two, forest, not from_start, p[0], p[1], p[2])
         end, met = _grow(scene, body, two, forest, other, not from_start, p[0], p[1], p[2])
-        if met and one.costs[node] + two.costs[end] < bound:
+        cost = one.costs[node] + two.costs[end] + _meeting_change(body, one, node, two, end)
+        if met and cost < bound:
             marks[MEET_A] = node if from_start else end
             marks[MEET_B] = end if from_start else node
             return FOUND
     return RUNNING
+
+
+@kernel()
+def _meeting_change(body: Body, one: Tree, node: int, two: Tree, end: int) -> float:
+    """Cost of the change of direction where two trees meet, if there is one."""
+    if body.kind != CAR or one.counts[node] == 0 or two.counts[end] == 0:
+        return 0.0
+    ahead = one.segments[node, 2 * one.counts[node] - 1]
+    back = two.segments[end, 2 * two.counts[end] - 1]
+    # Both lead outwards: the vehicle drives one of them the other way round.
+    return body.direction_change_m if (ahead < 0.0) == (back < 0.0) else 0.0
 
 
 @kernel()

@@ -1,7 +1,7 @@
 """Questions for the searches, and what a path has to be, by plain formulas and shapely."""
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 
 import numpy as np
 import numpy.typing as npt
@@ -9,6 +9,7 @@ import shapely
 from tests.planning.route_scenes import after
 
 from byway_planning import Car, Disc, ForwardCar, Site
+from byway_planning.collision import CONTACT_M
 from byway_planning.search.floods import FloodGround, FloodRoom, used_tiles, window_for
 from byway_planning.search.lattice import (
     Lattice,
@@ -19,7 +20,7 @@ from byway_planning.search.lattice import (
 )
 from byway_planning.search.method import FOUND, RUNNING, Method
 from byway_planning.search.paths import path_cost
-from byway_planning.search.question import Question, guide_for
+from byway_planning.search.question import Question, excess_kernel, guide_for
 from byway_planning.vehicles.models import Vehicle
 
 Floats = npt.NDArray[np.float64]
@@ -89,6 +90,22 @@ def question(
     begin, end = read_only(start), read_only(goal)
     guide = guide_for(ground, FloodRoom(), body, begin, end)
     return Question(scene, body, begin, end, seed, guide)
+
+
+def random_questions(
+    vehicle: Vehicle, seed: int, count: int
+) -> Iterator[tuple[Question, dict[str, Ring]]]:
+    """Yield questions among random boxes, with free ends that the floods join."""
+    rng = np.random.default_rng(seed)
+    while count > 0:
+        corners = rng.uniform((0.0, 0.0), (36.0, 20.0), (int(rng.integers(2, 14)), 2))
+        boxes = {f"b{i}": box(x, y, *rng.uniform(0.1, 4.0, 2)) for i, (x, y) in enumerate(corners)}
+        start, goal = rng.uniform((2.0, 2.0, -4.0), (38.0, 22.0, 4.0), (2, 3))
+        q = question(vehicle, boxes, tuple(start), tuple(goal))
+        ends = [excess_kernel(q.scene, q.body, pose) for pose in (q.start, q.goal)]
+        if min(ends) > CONTACT_M and q.guide.reached:
+            count -= 1
+            yield q, boxes
 
 
 def drive(path: Floats, step_m: float) -> Floats:
