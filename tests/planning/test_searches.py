@@ -15,7 +15,6 @@ from byway_planning.search.floods import (
     used_tiles,
     window_for,
 )
-from byway_planning.search.improve import IDLE, improve_kernel, new_polish
 from byway_planning.search.lattice import (
     advance_lattice_kernel,
     new_lattice,
@@ -25,7 +24,7 @@ from byway_planning.search.lattice import (
 from byway_planning.search.method import EXHAUSTED, FOUND, FULL, RUNNING
 from byway_planning.search.methods import METHODS, make_method
 from byway_planning.search.neighbours import nearest_k
-from byway_planning.search.paths import cost_of, load_course_kernel, path_cost, path_from
+from byway_planning.search.paths import path_cost
 from byway_planning.search.question import Question, guide_for
 from byway_planning.search.workshop import Workshop
 from byway_planning.vehicles.models import Vehicle
@@ -138,48 +137,6 @@ def lattice_path(vehicle: Vehicle, q: Question, *, backward: bool, step: int) ->
             break
     assert status == FOUND
     return path_of(lattice, q.body)
-
-
-# -- improvement ----------------------------------------------------------------------------
-
-
-@pytest.mark.parametrize("name", VEHICLES)
-def test_polishing_keeps_a_path_drivable_and_never_dearer(name):
-    vehicle = VEHICLES[name]
-    q = question(vehicle)
-    first = lattice_path(vehicle, q, backward=False, step=500)
-    results = []
-    for step in (40, 4000):
-        polish = new_polish(new_dice(3))
-        load_course_kernel(read_only(first), q.body, polish.course)
-        costs = [cost_of(polish.course)]
-        for _ in range(4000 // step):
-            improve_kernel(q.scene, q.body, polish, step, 10**9)
-            costs.append(cost_of(polish.course))
-        assert costs == sorted(costs, reverse=True)
-        assert costs[-1] < costs[0]
-        path = path_from(polish.course)
-        assert path_cost(path, q.body) == pytest.approx(costs[-1], abs=1e-6)
-        check_drivable(path, vehicle, q)
-        results.append(path.tobytes())
-    assert results[0] == results[1]
-
-
-def test_polishing_a_disc_comes_near_the_known_shortest_way_round_a_square():
-    """Two tangents and an arc round each of two corners: 2 sqrt(5) + 2 and the arcs' excess."""
-    square = {"square": [(15.0, 10.0), (17.0, 10.0), (17.0, 12.0), (15.0, 12.0)]}
-    radius = 0.5
-    disc = Disc(radius_m=radius, clearance_m=0.0)
-    q = question(disc, square, start=(13.0, 11.0, 0.0), goal=(19.0, 11.0, 0.0))
-    grown = shapely.Polygon(square["square"]).buffer(radius, quad_segs=200)
-    hull = shapely.convex_hull(shapely.union(grown, shapely.MultiPoint([(13, 11), (19, 11)])))
-    exact = hull.exterior.length / 2.0  # the scene is symmetric about the line of the ends
-    polish = new_polish(new_dice(4))
-    first = lattice_path(disc, q, backward=False, step=500)
-    load_course_kernel(read_only(first), q.body, polish.course)
-    improve_kernel(q.scene, q.body, polish, 30_000, 10**9)
-    assert exact - 1e-6 <= cost_of(polish.course) < 1.01 * exact
-    assert polish.marks[IDLE] >= 0
 
 
 # -- trees, all methods ---------------------------------------------------------------------

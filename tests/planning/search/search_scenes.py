@@ -95,7 +95,7 @@ def question(
 def random_questions(
     vehicle: Vehicle, seed: int, count: int
 ) -> Iterator[tuple[Question, dict[str, Ring]]]:
-    """Yield questions among random boxes, with free ends that the floods join."""
+    """Yield questions among random boxes: the ends free, joined by a flood, but not by a curve."""
     rng = np.random.default_rng(seed)
     while count > 0:
         corners = rng.uniform((0.0, 0.0), (36.0, 20.0), (int(rng.integers(2, 14)), 2))
@@ -103,7 +103,7 @@ def random_questions(
         start, goal = rng.uniform((2.0, 2.0, -4.0), (38.0, 22.0, 4.0), (2, 3))
         q = question(vehicle, boxes, tuple(start), tuple(goal))
         ends = [excess_kernel(q.scene, q.body, pose) for pose in (q.start, q.goal)]
-        if min(ends) > CONTACT_M and q.guide.reached:
+        if min(ends) > CONTACT_M and q.guide.reached and q.direct() is None:
             count -= 1
             yield q, boxes
 
