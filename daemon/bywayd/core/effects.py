@@ -18,7 +18,7 @@ from typing import Literal, TypeAlias
 
 from byway.frames import Header
 from byway.messages import Message, Site
-from byway.packed import Bytes
+from byway.packed import Bytes, Column
 from bywayd.core.events import Outcome, Peer
 from bywayd.core.instants import Instant
 
@@ -242,6 +242,51 @@ class DescribeSite:
     message: Site
 
 
+@dataclass(frozen=True, slots=True)
+class WatchRoute:
+    """
+    Check this route on the current snapshot and on every one to come, until `Unwatch`. Answered
+    by `GuardSeen` as soon as possible, and again whenever the answer is another.
+
+    The route is in `columns` and `packed`: the seven columns of a route, metres of the site as
+    clients see it. Numbers of guards are never used twice; a successor of a surveyor that died
+    is told all that stand, under the same numbers.
+    """
+
+    surveyor: int
+    guard: int
+    #: The vehicle's `KnownVehicle.settings`. Opaque.
+    vehicle: object
+    columns: Mapping[str, Column]
+    packed: Bytes
+    left_out: tuple[str, ...]
+    #: None: that of the vehicle.
+    clearance_m: float | None
+    #: Where the vehicle is, along the route from its start; what lies behind does not matter.
+    progress_m: float
+
+
+@dataclass(frozen=True, slots=True)
+class MoveGuard:
+    """
+    The vehicle is somewhere else on its guarded route. No answer, unless the state is another.
+
+    For a guard that is not watched it is to be ignored.
+    """
+
+    surveyor: int
+    guard: int
+    progress_m: float
+
+
+@dataclass(frozen=True, slots=True)
+class Unwatch:
+    """Look after this route no more. For a guard that is not watched it is to be ignored."""
+
+    surveyor: int
+    guard: int
+
+
 # -- to the runtime ----------------------------------------------------------------------------
 
 
@@ -283,6 +328,9 @@ Effect: TypeAlias = (
     | ApplyChanges
     | ReleaseBefore
     | DescribeSite
+    | WatchRoute
+    | MoveGuard
+    | Unwatch
     | Log
     | Wake
     | Stop

@@ -5,7 +5,7 @@ Three kinds of origin:
 
 * clients and sources, through the two ROUTER sockets (`Received`, `Unreadable`, `Undeliverable`),
 * the crew, through the socket pairs and pidfds (`Worker...`, `Surveyor...`, `SnapshotReady`,
-  `SiteDescribed`),
+  `GuardSeen`, `SiteDescribed`),
 * the runtime itself (`Started`, `Tick`, `Vitals`, `StopAsked`).
 
 Rules for the runtime:
@@ -35,6 +35,9 @@ from byway.packed import Bytes
 OutcomeKind: TypeAlias = Literal[
     "route", "start_blocked", "goal_blocked", "start_too_fast", "no_route", "not_found"
 ]
+
+#: What a guarded route can be blocked by.
+BlockKind: TypeAlias = Literal["polygon", "disc", "cell", "limits", "track"]
 
 #: Facts for a program beside a sentence for a person.
 Facts: TypeAlias = Mapping[str, object]
@@ -76,6 +79,30 @@ class Refusal:
     #: A sentence for a person, with the offending value.
     text: str
     facts: Facts
+
+
+@dataclass(frozen=True, slots=True)
+class Block:
+    """
+    The first place of a guarded route, ahead of its vehicle, where the body meets something.
+
+    In metres of the site as clients see it (origin included), like the route it is about.
+    """
+
+    #: Along the route, from its start.
+    at_m: float
+    #: The route's own time there.
+    t_s: float
+    #: The pose of the vehicle there.
+    x_m: float
+    y_m: float
+    heading_rad: float
+    kind: BlockKind
+    #: What is in the way; empty if that cannot be said (cells, the limits of the site).
+    layer: str
+    id: str
+    #: How deep the body, clearance included, would be in it.
+    depth_m: float
 
 
 # -- from clients and sources ------------------------------------------------------------------
@@ -234,6 +261,26 @@ class SnapshotReady:
 
 
 @dataclass(frozen=True, slots=True)
+class GuardSeen:
+    """
+    What a guarded route comes to on a snapshot: said once after `WatchRoute`, and after that
+    whenever it is another than was said last.
+
+    Comes after the `SnapshotReady` of that revision. One about a guard that has been unwatched
+    meanwhile is passed over.
+    """
+
+    surveyor: int
+    guard: int
+    #: Of the snapshot that was looked at.
+    revision: int
+    #: None: the route is free from where the vehicle was last said to be.
+    blocked: Block | None
+    #: Why the route cannot be watched at all: a sentence. The guard is given up then.
+    fault: str = ""
+
+
+@dataclass(frozen=True, slots=True)
 class SiteDescribed:
     """The answer to one `DescribeSite`, or why there is none: goes to the asker as it is."""
 
@@ -304,6 +351,7 @@ Event: TypeAlias = (
     | SurveyorReady
     | SurveyorAlive
     | SnapshotReady
+    | GuardSeen
     | SiteDescribed
     | SurveyorLost
     | Started
