@@ -255,6 +255,9 @@ class WatchRoute:
 
     surveyor: int
     guard: int
+    #: Whose route it is, and how the outside calls the guard: for descriptions of the site.
+    unit: str
+    name: str
     #: The vehicle's `KnownVehicle.settings`. Opaque.
     vehicle: object
     columns: Mapping[str, Column]
