@@ -115,14 +115,14 @@ def nearest_node(
     best, best_cost = -1, math.inf
     for i in range(found):
         node = forest.near[i]
-        _, _, cost = _curve(body, tree, int(node), outward, x, y, h, forest.word)
+        _, _, cost = curve_from(body, tree, int(node), outward, x, y, h, forest.word)
         if cost < best_cost:
             best, best_cost = int(node), cost
     return best
 
 
 @kernel()
-def _curve(
+def curve_from(
     body: Body, tree: Tree, node: int, outward: bool, x: float, y: float, h: float, out: Floats
 ) -> tuple[int, float, float]:
     """The curve between a node and a pose as segments that lead away from the node."""
@@ -189,7 +189,7 @@ def grow(
 
     Returns (the last node added or the node itself, whether the pose was reached).
     """
-    count, _, _ = _curve(body, tree, node, outward, x, y, h, forest.word)
+    count, _, _ = curve_from(body, tree, node, outward, x, y, h, forest.word)
     p = tree.poses[node]
     px, py, ph = p[0], p[1], p[2]
     if body.kind == DISC and count > 0:

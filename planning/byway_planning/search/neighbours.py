@@ -275,3 +275,30 @@ def within_radius(
                     out_index[found] = i
                 found += 1
     return found
+
+
+@kernel()
+def within_radius_grid(
+    grid: NodeGrid,
+    nodes: Floats,
+    x_m: float,
+    y_m: float,
+    heading_rad: float,
+    heading_weight_m: float,
+    radius_m: float,
+    out_index: Indices,
+) -> int:
+    """The same nodes as `within_radius`, in another order, from a grid that holds them all."""
+    found = 0
+    c0, c1 = _column(grid, x_m - radius_m), _column(grid, x_m + radius_m)
+    r0, r1 = _row(grid, y_m - radius_m), _row(grid, y_m + radius_m)
+    for r in range(r0, r1 + 1):
+        for c in range(c0, c1 + 1):
+            i = grid.heads[r * grid.columns + c]
+            while i != NOBODY:
+                if distance_m(nodes, i, x_m, y_m, heading_rad, heading_weight_m) <= radius_m:
+                    if found < len(out_index):
+                        out_index[found] = i
+                    found += 1
+                i = grid.after[i]
+    return found

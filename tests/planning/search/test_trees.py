@@ -112,9 +112,14 @@ def check_tree(tree: Tree, body: Body, outward: bool) -> int:
     """Poses, costs and lengths of all nodes, computed again from the stored words."""
     used = int(tree.used[0])
     last_sign = {0: 0.0}
+    children: dict[int, list[int]] = {}
     for node in range(1, used):
+        children.setdefault(int(tree.parents[node]), []).append(node)
+    below = list(children[0])  # a parent may be younger than its child, where trees are rewired
+    while below:
+        node = below.pop()
+        below += children.get(node, [])
         parent = int(tree.parents[node])
-        assert 0 <= parent < node
         count = int(tree.counts[node])
         word = tree.segments[node, : 2 * count].reshape(count, 2)
         assert 1 <= count <= 5
@@ -135,6 +140,7 @@ def check_tree(tree: Tree, body: Body, outward: bool) -> int:
         assert body.turn_radius_m == 0.0 or turn_between(pose[2], tree.poses[node, 2]) < 1e-9
         assert tree.costs[node] == pytest.approx(cost, abs=1e-9)
         assert (word[:, 1] != 0.0).all()
+    assert len(last_sign) == used  # all hang together
     return used
 
 
