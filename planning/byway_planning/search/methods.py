@@ -14,6 +14,7 @@ from byway_planning.search.lattice import (
 from byway_planning.search.method import Method
 from byway_planning.search.question import Question
 from byway_planning.search.race import FINE, Auto, scale_of
+from byway_planning.search.roadmap import LazyRoadmap
 from byway_planning.search.sampling import SAMPLERS
 from byway_planning.search.star import StarTree
 from byway_planning.search.trees import ConnectedTrees, SingleTree
@@ -61,9 +62,14 @@ METHODS: Final[dict[str, str]] = {
     "auto": "lattices from both ends, then other corridors and polishing; the best answers",
     "lattice": "one weighted A* over position and heading; few changes of direction, no polishing",
     "rrt": "one rapidly exploring tree; simple, explores everywhere, long detours",
+    "prm": "a roadmap, its curves tested when a way leads over them; goes on towards the least",
     "rrt_star": "one tree that rewires itself; slow to start, its cost goes on towards the least",
     "rrt_connect": "a tree from each end; finds ways that a lattice is too coarse for",
 }
+
+
+#: Those that draw samples, and so take a sampler.
+SAMPLING: Final = ("rrt", "rrt_connect", "rrt_star", "prm")
 
 
 def check_method(name: str, sampler: str | None) -> None:
@@ -80,7 +86,7 @@ def check_method(name: str, sampler: str | None) -> None:
         raise ValueError(f"there is no method {name!r}; known: {', '.join(sorted(METHODS))}")
     if sampler is not None and sampler not in SAMPLERS:
         raise ValueError(f"there is no sampler {sampler!r}; known: {', '.join(sorted(SAMPLERS))}")
-    if sampler is not None and name not in ("rrt", "rrt_connect", "rrt_star"):
+    if sampler is not None and name not in SAMPLING:
         raise ValueError(f"method {name!r} does not sample; leave the sampler out")
 
 
@@ -99,6 +105,8 @@ def make_method(
     """
     if name == "rrt":
         return SingleTree(question, sampler or "goal_biased")
+    if name == "prm":
+        return LazyRoadmap(question, sampler or "halton")
     if name == "rrt_star":
         return StarTree(question, sampler or "uniform")
     if name == "rrt_connect":

@@ -30,7 +30,7 @@ from byway_planning.search.forest import (
 )
 from byway_planning.search.method import FOUND, FULL, RUNNING
 from byway_planning.search.question import Question
-from byway_planning.search.sampling import GOAL_BIASED, draw, new_sampler
+from byway_planning.search.sampling import GOAL_BIASED, Sampler, draw, new_sampler
 from byway_planning.site.scene import Scene
 from byway_planning.vehicles.body import CAR, Body
 
@@ -85,7 +85,7 @@ def grow_two_kernel(
         if node == near:
             continue
         p = one.poses[node]
-        if one.costs[node] + TRUST * _left(body, left, p[0], p[1], p[2]) >= bound:
+        if one.costs[node] + TRUST * flooded(body, left, p[0], p[1], p[2]) >= bound:
             continue
         other = nearest_node(body, two, forest, not from_start, p[0], p[1], p[2])
         end, met = grow(scene, body, two, forest, other, not from_start, p[0], p[1], p[2])
@@ -98,7 +98,8 @@ def grow_two_kernel(
 
 
 @kernel()
-def _left(body: Body, flood: Flood, x: float, y: float, h: float) -> float:
+def flooded(body: Body, flood: Flood, x: float, y: float, h: float) -> float:
+    """What is left to go from a pose, as the inscribed disc was flooded."""
     c, s = math.cos(h), math.sin(h)
     return flood_m(
         flood,
@@ -160,6 +161,23 @@ def corridor_of(question: Question) -> tuple[Floats, Floats]:
     return cells, np.ones(len(rows))
 
 
+def sampler_for(question: Question, name: str) -> Sampler:
+    """Return a sampler by its name, set up for a question."""
+    scene = question.scene
+    cells, weights = corridor_of(question) if name == "corridor" else (None, None)
+    x_m, y_m, heading_rad = (float(value) for value in question.goal)
+    return new_sampler(
+        name,
+        (scene.x_m_min, scene.y_m_min, scene.x_m_max, scene.y_m_max),
+        seed=question.seed + 2,
+        goal=(x_m, y_m, heading_rad),
+        share=GOAL_BIAS if name == "goal_biased" else CORRIDOR_SHARE,
+        cells=cells,
+        weights=weights,
+        turned_share=0.15 if question.body.kind == CAR else 0.0,
+    )
+
+
 class Trees:
     """What the searches by trees share: making, tracing, statistics."""
 
@@ -167,24 +185,11 @@ class Trees:
         self._q = question
         scene = question.scene
         bounds = (scene.x_m_min, scene.y_m_min, scene.x_m_max, scene.y_m_max)
-        reversing = question.body.kind == CAR
-        cells, weights = (None, None)
-        if sampler == "corridor":
-            cells, weights = corridor_of(question)
         self._forest = Forest(
             new_tree(bounds, nodes_max),
             new_tree(bounds, nodes_max),
             np.zeros(MARKS, np.int64),
-            new_sampler(
-                sampler,
-                bounds,
-                seed=question.seed + 2,
-                goal=(float(question.goal[0]), float(question.goal[1]), float(question.goal[2])),
-                share=GOAL_BIAS if sampler == "goal_biased" else CORRIDOR_SHARE,
-                cells=cells,
-                weights=weights,
-                turned_share=0.15 if reversing else 0.0,
-            ),
+            sampler_for(question, sampler),
             new_dice(question.seed + 3),
             np.zeros(3),
             np.zeros((5, 2)),
