@@ -30,19 +30,30 @@ from byway_planning.search.floods import Flood
 from byway_planning.search.forest import HEADING_WEIGHT
 from byway_planning.search.heap import pop, push
 from byway_planning.search.method import FOUND, FULL, RUNNING
-from byway_planning.search.neighbours import NodeGrid, clear, insert, nearest_k_grid, new_grid
+from byway_planning.search.neighbours import (
+    NodeGrid,
+    clear,
+    insert,
+    nearest_k_grid,
+    new_grid,
+    within_radius_grid,
+)
 from byway_planning.search.paths import path_cost
 from byway_planning.search.question import Question
 from byway_planning.search.sampling import Sampler, draw
 from byway_planning.search.trees import TRUST, flooded, sampler_for
 from byway_planning.site.scene import Scene
-from byway_planning.vehicles.body import DISC, Body
+from byway_planning.vehicles.body import DISC, FORWARD_CAR, Body
 
 Floats = npt.NDArray[np.float64]
 Wholes = npt.NDArray[np.int64]
 Links = npt.NDArray[np.int32]
 
-NODES_MAX: Final = 8000
+NODES_MAX: Final = 4000
+#: Nodes that a new one is tried with.
+NEAR_MAX: Final = 2048
+#: In turning radii, for what cannot reverse.
+FORWARD_REACH: Final = 2.5
 #: Ways out of a node; a new one takes the place of the dearest.
 WAYS_MAX: Final = 48
 #: Poses of the first roadmap, and how much it grows by whenever no way is left, or one was found.
@@ -92,14 +103,15 @@ class Roadmap(NamedTuple):
     dice: Dice
     sample: Floats  # (3,)
     word: Floats  # (5, 2)
-    near: Wholes  # (WAYS_MAX,)
+    near: Wholes  # (NEAR_MAX,)
+    prices: Floats  # (NEAR_MAX,)
 
 
 describe(
     Roadmap,
     *("f8[:, ::1]", "i4[:, ::1]", "f8[:, ::1]", "i1[:, ::1]", "i4[::1]", "i8[::1]", NodeGrid),
     *("f8[::1]", "i4[::1]", "i4[::1]", "f8[::1]", "i4[::1]", "i8[::1]", Sampler, "u8[::1]"),
-    *("f8[::1]", "f8[:, ::1]", "i8[::1]"),
+    *("f8[::1]", "f8[:, ::1]", "i8[::1]", "f8[::1]"),
 )
 
 
@@ -126,7 +138,8 @@ def new_roadmap(
         new_dice(seed),
         np.zeros(3),
         np.zeros((5, 2)),
-        np.zeros(WAYS_MAX, np.int64),
+        np.zeros(NEAR_MAX, np.int64),
+        np.zeros(NEAR_MAX),
     )
 
 
@@ -143,9 +156,8 @@ def _curve(body: Body, p: Floats, q: Floats, out: Floats) -> tuple[int, float, f
 
 
 @kernel()
-def _lead(body: Body, map_: Roadmap, a: int, b: int) -> None:
+def _lead(map_: Roadmap, a: int, b: int, cost: float) -> None:
     """Make a way from one node to another, untested."""
-    _, _, cost = _curve(body, map_.poses[a], map_.poses[b], map_.word)
     slot = map_.counts[a]
     if slot == WAYS_MAX:
         slot = 0
@@ -162,26 +174,50 @@ def _lead(body: Body, map_: Roadmap, a: int, b: int) -> None:
 
 
 @kernel()
+def _candidates(body: Body, map_: Roadmap, pose: Floats, wanted: int) -> int:
+    """
+    Write to `near` the nodes that are worth a curve; returns how many.
+
+    What cannot reverse drives a circle to most of the nodes close by, so all within some turning
+    radii are looked at: with the nearest alone more poses make such a roadmap no better.
+    """
+    weight = HEADING_WEIGHT * body.turn_radius_m
+    x, y, h = pose[0], pose[1], pose[2]
+    if body.kind != FORWARD_CAR:
+        return nearest_k_grid(map_.grid, map_.poses, x, y, h, weight, 2 * wanted, map_.near)
+    reach = FORWARD_REACH * body.turn_radius_m
+    found = within_radius_grid(map_.grid, map_.poses, x, y, h, 0.0, reach, map_.near)
+    if found < wanted:
+        return nearest_k_grid(map_.grid, map_.poses, x, y, h, weight, wanted, map_.near)
+    return int(min(found, map_.near.shape[0]))
+
+
+@kernel()
 def _add(body: Body, map_: Roadmap, pose: Floats) -> None:
-    """Add a node with ways to and from those near it."""
+    """Add a node with ways to and from those that are nearest by their curves."""
     n = int(map_.used[0])
     for i in range(3):
         map_.poses[n, i] = pose[i]
     map_.counts[n] = 0
-    if n > 0:
-        d = 2.0 if body.kind == DISC else 3.0
-        wanted = math.ceil(math.e * (1.0 + 1.0 / d) * math.log(n + 1.0))
-        weight = HEADING_WEIGHT * body.turn_radius_m
-        found = nearest_k_grid(
-            map_.grid,
-            map_.poses,
-            *(pose[0], pose[1], pose[2], weight),
-            min(wanted, WAYS_MAX),
-            map_.near,
-        )
+    d = 2.0 if body.kind == DISC else 3.0
+    wanted = min(math.ceil(math.e * (1.0 + 1.0 / d) * math.log(n + 1.0)), WAYS_MAX)
+    found = _candidates(body, map_, pose, wanted)
+    for outward in range(2):
         for i in range(found):
-            _lead(body, map_, n, int(map_.near[i]))
-            _lead(body, map_, int(map_.near[i]), n)
+            other = map_.poses[map_.near[i]]
+            a, b = (map_.poses[n], other) if outward else (other, map_.poses[n])
+            _, _, map_.prices[i] = _curve(body, a, b, map_.word)
+        for _ in range(min(wanted, found)):
+            best = 0
+            for i in range(1, found):
+                if map_.prices[i] < map_.prices[best]:
+                    best = i
+            cost, other_node = map_.prices[best], int(map_.near[best])
+            map_.prices[best] = math.inf
+            if outward:
+                _lead(map_, n, other_node, cost)
+            else:
+                _lead(map_, other_node, n, cost)
     map_.used[0] = n + 1
     insert(map_.grid, n, pose[0], pose[1])
 
