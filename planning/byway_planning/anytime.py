@@ -36,6 +36,9 @@ WORTH_TELLING: Final = 0.005
 #: Time set aside for the last route, in runs of making and checking one, and at least.
 LAST_ROUTES: Final = 1.5
 LAST_S: Final = 0.0004
+#: Of the budget, and of all time, kept for what would have to move while nothing is found.
+REMEDY_SHARE: Final = 0.15
+REMEDY_S_MAX: Final = 0.05
 #: Work on the lower bound beside each slice of search, and in all: about 0.4 and 20 ms.
 BOUND_SLICE: Final = 40_000
 BOUND_WORK_MAX: Final = 2_000_000
@@ -171,6 +174,13 @@ class Run:
         )
 
     @property
+    def reserve_s(self) -> float:
+        """What is kept at the end: for a last check, or to say what would have to move."""
+        if self.best is None:
+            return LAST_S + min(REMEDY_SHARE * self.began_s, REMEDY_S_MAX)
+        return LAST_S + LAST_ROUTES * self.check_s
+
+    @property
     def best_cost(self) -> float:
         """Cost of the best route so far; inf without one."""
         return math.inf if self.best is None else self.best.cost
@@ -232,7 +242,7 @@ def search(
     newest: Floats | None = None
     work = 0
     status = FOUND
-    while work < wishes.work_max and run.time_left() > LAST_S + LAST_ROUTES * run.check_s:
+    while work < wishes.work_max and run.time_left() > run.reserve_s:
         if run.best is not None or work >= PROOF_AFTER:
             run.raise_bound()
             if good_enough() or run.bound == math.inf:

@@ -4,6 +4,7 @@ import math
 from dataclasses import dataclass, field
 from typing import Literal
 
+from byway_planning.remedy import Remedy
 from byway_planning.route import Route
 
 Kind = Literal["route", "start_blocked", "goal_blocked", "start_too_fast", "no_route", "not_found"]
@@ -42,6 +43,9 @@ class Outcome:
     first_s: float | None = None  # when the first verified route was there
     total_s: float = 0.0
     blocked_by: tuple[Blockage, ...] = ()
+    #: Without a route: what would have to move, where time was left to look. For `not_found` the
+    #: disc may be larger than the inscribed one, and nothing is proved. Site's outer coordinates.
+    remedy: Remedy | None = None
     statistics: dict[str, int | float | str] = field(default_factory=dict)
 
     @property

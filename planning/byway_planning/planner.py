@@ -5,6 +5,7 @@ a route has to begin and end. The search itself is in `anytime`.
 
 import math
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 from typing import cast
 
 import numpy as np
@@ -16,6 +17,7 @@ from byway_planning.collision import CONTACT_M
 from byway_planning.kernel import ensure_warm
 from byway_planning.outcome import Blockage, Outcome
 from byway_planning.prefix import end_of, leaving, reversed_path, rolling
+from byway_planning.remedy import Remedy, remedy, squares_in
 from byway_planning.search.floods import FloodGround, Window, used_tiles, window_for
 from byway_planning.search.methods import check_method
 from byway_planning.search.paths import path_cost
@@ -102,7 +104,33 @@ def plan(
     )
     wishes = Wishes(method, sampler, gap_wanted, math.inf if work_max is None else work_max)
     with borrowed() as workshop:
-        return _planned(run, workshop, wishes)
+        outcome = _planned(run, workshop, wishes)
+    if outcome.kind in ("no_route", "not_found"):
+        return replace(outcome, remedy=_remedy(run, outcome.kind), total_s=run.elapsed_s())
+    return outcome
+
+
+def _remedy(run: Run, kind: str) -> Remedy | None:
+    """
+    Look for what would have to move, with half of the time that is left.
+
+    Where nothing is proved the inscribed disc mostly gets through: then a larger one, half way to
+    the one round the whole vehicle, tells which obstacles make it tight.
+    """
+    run.statistics["proved_s" if kind == "no_route" else "searched_s"] = run.elapsed_s()
+    body, (x, y) = run.body, run.snapshot.origin_m
+    start, goal = middle_of(body, run.start), middle_of(body, run.goal)
+    radii_m = [body.inner_radius_m]
+    if kind == "not_found":
+        radii_m.append(0.5 * (body.inner_radius_m + body.outer_radius_m))
+    found: Remedy | None = None
+    for radius_m in radii_m:
+        squares = squares_in(0.5 * run.time_left())
+        reach_m = radius_m + body.clearance_m
+        found = remedy(run.snapshot, run.left_out, start, goal, reach_m, squares) or found
+        if found is not None and found.movables:
+            break
+    return None if found is None else found.moved(x, y)
 
 
 def _planned(run: Run, workshop: Workshop, wishes: Wishes) -> Outcome:

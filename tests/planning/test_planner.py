@@ -330,3 +330,62 @@ def test_the_budget_is_kept_within_a_slice(yard):
 
 
 _: Callable[[], float] = forever
+
+
+# -- without a route: what would have to move ---------------------------------------------------
+
+
+def _room(x: float, y: float, side: float) -> dict[str, list[tuple[float, float]]]:
+    wall = 0.4
+    return {
+        "south": [(x, y), (x + side, y), (x + side, y + wall), (x, y + wall)],
+        "north": [
+            (x, y + side - wall), (x + side, y + side - wall), (x + side, y + side), (x, y + side)
+        ],
+        "west": [(x, y), (x + wall, y), (x + wall, y + side), (x, y + side)],
+        "east": [
+            (x + side - wall, y), (x + side, y), (x + side, y + side), (x + side - wall, y + side)
+        ],
+    }  # fmt: skip
+
+
+@pytest.mark.parametrize("origin_m", [(0.0, 0.0), (500_000.0, 5_000_000.0)])
+def test_a_sealed_goal_names_what_would_have_to_move(origin_m: tuple[float, float]) -> None:
+    ox, oy = origin_m
+    polygons = {n: [(x + ox, y + oy) for x, y in r] for n, r in _room(30.0, 10.0, 16.0).items()}
+    limits_m = (ox, oy, ox + 60.0, oy + 40.0)
+    site = Site.from_shapes(polygons, limits_m=limits_m, origin_m=origin_m)
+    car = Car(
+        footprint_m=[(-0.6, -0.7), (2.2, -0.7), (2.2, 0.7), (-0.6, 0.7)], turn_radius_m_min=3.0
+    )
+    outcome = plan(
+        site, car, (ox + 5.0, oy + 18.0, 0.0), (ox + 37.0, oy + 18.0, 0.0),
+        time_left=lambda: 1.0, seed=1,
+    )  # fmt: skip
+    assert outcome.kind == "no_route"
+    assert outcome.remedy is not None
+    (only,) = outcome.remedy.movables
+    assert only.obstacle == "west"
+    assert (only.x_m, only.y_m) == pytest.approx((ox + 30.2, oy + 18.0))
+    x, y = outcome.remedy.way_m[0]
+    assert ox + 4.4 < x < ox + 7.2  # the middle of the largest disc in the outline
+    assert y == pytest.approx(oy + 18.0)
+
+
+def test_what_was_not_found_names_what_makes_it_tight() -> None:
+    """A lane hardly wider than the truck with a right angle in it; the disc turns there."""
+    polygons = {
+        "inner": [(0.0, 0.0), (20.0, 0.0), (20.0, 20.0), (0.0, 20.0)],
+        "right": [(22.6, 0.0), (40.0, 0.0), (40.0, 40.0), (22.6, 40.0)],
+        "top": [(0.0, 22.6), (22.6, 22.6), (22.6, 40.0), (0.0, 40.0)],
+    }
+    truck = ForwardCar(
+        footprint_m=[(-1.0, -1.1), (6.0, -1.1), (6.0, 1.1), (-1.0, 1.1)], turn_radius_m_min=7.0
+    )
+    site = Site.from_shapes(polygons, limits_m=(0.0, 0.0, 40.0, 40.0))
+    outcome = planned(site, truck, (21.3, 2.0, math.pi / 2), (7.0, 21.3, math.pi), work=2000)
+    assert outcome.kind == "not_found"
+    assert outcome.remedy is not None
+    assert outcome.remedy.movables
+    assert {each.obstacle for each in outcome.remedy.movables} <= set(polygons)
+    assert outcome.remedy.disc_radius_m >= truck.body().inner_radius_m
