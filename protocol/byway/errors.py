@@ -5,10 +5,11 @@ Everything Byway raises on purpose, sorted by whose fault it was.
   + SenderFault     what was sent cannot be served; sending it again changes nothing
     - BadMessage  UnsupportedVersion  UnknownKind  TooLarge  BadValue  BadGeometry
     - OutsideLimits  UnknownVehicle  UnknownLayer  UnknownRequest  NotOwner  Conflict
+    - Forbidden
   + Withdrawn       a replan that ended without an answer because somebody wanted it so
     - Superseded  Cancelled
   + Unavailable     right question, wrong moment
-    - Overloaded  Warming  Stopping  NewEpoch
+    - Overloaded  Warming  Stopping  NewEpoch  StaleLayer
   + DaemonFault     the daemon broke
     - Internal
   + LinkFault       found out by the client; these codes never travel
@@ -139,6 +140,12 @@ class Conflict(SenderFault):
     default_code = "conflict"
 
 
+class Forbidden(SenderFault):
+    """The key of the sender does not allow this."""
+
+    default_code = "forbidden"
+
+
 class Withdrawn(BywayError):
     """A replan that ended without an answer because somebody wanted it so."""
 
@@ -189,6 +196,12 @@ class NewEpoch(Unavailable):
     default_code = "new_epoch"
 
 
+class StaleLayer(Unavailable):
+    """A layer that replans depend on has not changed for too long."""
+
+    default_code = "stale_layer"
+
+
 class DaemonFault(BywayError):
     """The daemon broke."""
 
@@ -224,7 +237,8 @@ class BadReply(LinkFault):
 _CODED: Final = (
     *(BadMessage, UnsupportedVersion, UnknownKind, TooLarge, BadValue, BadGeometry),
     *(OutsideLimits, UnknownVehicle, UnknownLayer, UnknownRequest, NotOwner, Conflict),
-    *(Superseded, Cancelled, Overloaded, Warming, Stopping, NewEpoch, Internal),
+    *(Forbidden, Superseded, Cancelled),
+    *(Overloaded, Warming, Stopping, NewEpoch, StaleLayer, Internal),
 )
 
 #: Every code that may travel, with its class.

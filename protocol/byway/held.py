@@ -61,6 +61,8 @@ class HeldLayer:
                     self._forget(obstacle_id)
             case messages.Patch():
                 self._take_patch(message, packed)
+            case messages.Scan() | messages.Track():
+                pass  # of the moment: a daemon that was started again is told the next one
             case messages.ReplaceLayer():
                 self._take_settings(message)
                 self._clear()

@@ -30,7 +30,7 @@ reply_bytes_max: Final = 128 * 1024 * 1024
 
 #: ZeroMQ closes the connection of a peer that sends more than this in one frame, without a
 #: word; it stands above the bounds so that a little too much still gets a clear error.
-requests_frame_bytes_max: Final = 2 * body_bytes_max
+requests_frame_bytes_max: Final = 1024 * 1024  # a route to be guarded has 49 bytes a row
 updates_frame_bytes_max: Final = 2 * packed_bytes_max
 
 #: Names of layers, vehicles, units, obstacles, methods, sources, requests: one shape for all.
@@ -73,6 +73,21 @@ budget_s_max: Final = 60.0
 #: Seconds until an obstacle expires or a lease ends: a year and a day.
 expiry_s_max: Final = 366.0 * 86_400.0
 
+#: Seconds. What was seen longer ago is history, not a change of the site.
+age_s_max: Final = 60.0
+
+#: Metres that a beam of a range sensor may reach.
+range_m_max: Final = 1000.0
+
+#: Beams of one scan.
+beams_max: Final = 65_536
+
+#: Tracks in one change.
+tracks_max: Final = 1024
+
+#: Rows of a route that is to be guarded: 3 km in steps of 0.3 m, and some.
+guard_rows_max: Final = 16_384
+
 #: Whole numbers on the wire fit a signed 64-bit integer.
 number_max: Final = 2**63 - 1
 
@@ -99,6 +114,11 @@ def told() -> dict[str, int | float]:
         "coordinate_m_max": coordinate_m_max,
         "budget_s_max": budget_s_max,
         "expiry_s_max": expiry_s_max,
+        "age_s_max": age_s_max,
+        "range_m_max": range_m_max,
+        "beams_max": beams_max,
+        "tracks_max": tracks_max,
+        "guard_rows_max": guard_rows_max,
         "unacknowledged_max": unacknowledged_max,
         "answers_kept_s": answers_kept_s,
     }

@@ -9,7 +9,7 @@ The models hold what is in the body of a message. What names and addresses it is
 (see frames.py); long numbers lie in a third frame, of which the body has the `columns`.
 """
 
-from typing import Annotated, Any, ClassVar, Final, TypeAlias
+from typing import Annotated, Any, ClassVar, Final, Literal, TypeAlias
 
 from pydantic import BaseModel, ConfigDict, Field, StringConstraints
 
@@ -43,6 +43,12 @@ Budget: TypeAlias = Annotated[
 ]
 Expiry: TypeAlias = Annotated[
     float, Field(strict=True, allow_inf_nan=False, gt=0.0, le=limits.expiry_s_max)
+]
+Age: TypeAlias = Annotated[
+    float, Field(strict=True, allow_inf_nan=False, ge=0.0, le=limits.age_s_max)
+]
+Range: TypeAlias = Annotated[
+    float, Field(strict=True, allow_inf_nan=False, gt=0.0, le=limits.range_m_max)
 ]
 Ratio: TypeAlias = Annotated[float, Field(strict=True, allow_inf_nan=False, ge=0.0, le=1.0)]
 Point: TypeAlias = tuple[Metres, Metres]
@@ -106,6 +112,9 @@ class Replan(Request):
     start_speed_mps: Real = 0.0
     start_curvature_per_m: Real = 0.0
     gap_wanted: Ratio = 0.0
+    guard: Flag = False
+    replan_on_alert: Flag = False
+    silence_s: Expiry | None = None
 
 
 class Cancel(Request):
@@ -131,6 +140,7 @@ class Site(Request):
     layers: Annotated[list[Name], Field(max_length=limits.left_out_max)] | None = None
     box_m: Box | None = None
     cells: Flag = True
+    guards: Flag = False
 
 
 class Vehicles(Request):
@@ -145,7 +155,44 @@ class Health(Request):
     kind = "health"
 
 
+class Guard(Request):
+    """Have a route watched that a unit is going to drive; its columns are those of a route."""
+
+    kind = "guard"
+    vehicle: Name
+    unit: Name
+    leave_out: Annotated[list[Name], Field(max_length=limits.left_out_max)] = []
+    clearance_m: Distance | None = None
+    progress_m: Distance = 0.0
+    silence_s: Expiry | None = None
+    replan_on_alert: Flag = False
+    budget_s: Budget = 0.2
+    columns: Columns
+
+
+class Progress(Request):
+    """Tell where on its guarded route a unit is."""
+
+    kind = "progress"
+    unit: Name
+    progress_m: Distance
+    speed_mps: Real | None = None
+    guard: Name | None = None
+
+
+class Release(Request):
+    """Have the route of a unit watched no more."""
+
+    kind = "release"
+    unit: Name
+    guard: Name | None = None
+
+
 # -- changes of the site ----------------------------------------------------------------------
+
+
+#: What becomes of replans and of those who watch when a layer has not changed for too long.
+WhenStale: TypeAlias = Literal["ignore", "report", "refuse"]
 
 
 class Claim(Change):
@@ -155,6 +202,10 @@ class Claim(Change):
     lease_s: Expiry | None = None
     unknown_blocks: Flag | None = None
     outlines_only: Flag | None = None
+    durable: Flag | None = None
+    expected_period_s: Expiry | None = None
+    when_stale: WhenStale | None = None
+    decay_s: Expiry | None = None
 
 
 class Put(Change):
@@ -163,6 +214,7 @@ class Put(Change):
     kind = "put"
     polygons: Count = 0
     discs: Count = 0
+    boxes: Count = 0
     expires_in_s: Expiry | None = None
     columns: Columns
 
@@ -174,8 +226,13 @@ class ReplaceLayer(Change):
     lease_s: Expiry | None = None
     unknown_blocks: Flag | None = None
     outlines_only: Flag | None = None
+    durable: Flag | None = None
+    expected_period_s: Expiry | None = None
+    when_stale: WhenStale | None = None
+    decay_s: Expiry | None = None
     polygons: Count = 0
     discs: Count = 0
+    boxes: Count = 0
     expires_in_s: Expiry | None = None
     columns: Columns
 
@@ -193,11 +250,34 @@ class Patch(Change):
     kind = "patch"
     corner_m: Point
     cell_m: Annotated[float, Field(strict=True, ge=limits.cell_m_min, le=limits.cell_m_max)]
+    heading_rad: Heading = 0.0
+    columns: Columns
+
+
+class Scan(Change):
+    """One sweep of a range sensor: frees the cells along its beams, fills those at their ends."""
+
+    kind = "scan"
+    origin: Pose
+    range_m_max: Range
+    range_m_min: Distance = 0.0
+    age_s: Age = 0.0
+    columns: Columns
+
+
+class Track(Change):
+    """Obstacles that move; those whose ids are there already are where this says."""
+
+    kind = "track"
+    polygons: Count = 0
+    discs: Count = 0
+    age_s: Age = 0.0
+    expires_in_s: Expiry | None = None
     columns: Columns
 
 
 #: Whatever a source may send.
-AnyChange: TypeAlias = Claim | Put | ReplaceLayer | Drop | Patch
+AnyChange: TypeAlias = Claim | Put | ReplaceLayer | Drop | Patch | Scan | Track
 
 
 # -- replies to requests ----------------------------------------------------------------------
@@ -237,6 +317,7 @@ class AnswerMessage(Reply):
     waited_s: Seconds
     total_s: Seconds
     attempts: Count = 1
+    guard: Text | None = None
     outcome: Blob
 
 
@@ -245,6 +326,34 @@ class Noted(Reply):
 
     kind = "noted"
     replans: list[Text]
+
+
+class BlockedIs(BaseModel):
+    """Where a guarded route is blocked, and by what."""
+
+    model_config = ConfigDict(frozen=True, defer_build=True)
+    distance_m: Real
+    time_s: Real
+    at_m: Real
+    x_m: Real
+    y_m: Real
+    heading_rad: Real
+    kind: Text
+    layer: Text = ""
+    id: Text = ""
+    depth_m: Real
+
+
+class GuardIs(Reply):
+    """The reply to `guard`, `progress` and `release`."""
+
+    kind = "guard_is"
+    unit: Text
+    guard: Text
+    state: Text
+    revision: Count
+    progress_m: Real
+    blocked: BlockedIs | None = None
 
 
 class ErrorMessage(Reply):
@@ -266,6 +375,33 @@ class CellsIs(BaseModel):
     cell_m: Real
 
 
+class TrackIs(BaseModel):
+    """One track in `site_is`, carried forward to the moment of the reply."""
+
+    model_config = ConfigDict(frozen=True, defer_build=True)
+    layer: Text
+    id: Text
+    pose: tuple[Real, Real, Real]
+    velocity_mps: tuple[Real, Real]
+    turn_rate_radps: Real
+    uncertainty_m: Real
+    growth_mps: Real
+    age_s: Real
+    outline: Text
+    sweep: list[Text] = []
+
+
+class GuardedIs(BaseModel):
+    """One guarded route in `site_is`: the column of that name has its poses."""
+
+    model_config = ConfigDict(frozen=True, defer_build=True)
+    unit: Text
+    progress_m: Real
+    state: Text
+    column: Text
+    blocked: BlockedIs | None = None
+
+
 class LayerIs(BaseModel):
     """One layer in `site_is`. Its obstacles lie in the columns after those of earlier layers."""
 
@@ -273,6 +409,8 @@ class LayerIs(BaseModel):
     layer: Text
     unknown_blocks: Flag = False
     outlines_only: Flag = False
+    durable: Flag = False
+    decay_s: Real | None = None
     polygons: Count
     discs: Count
     cells: list[CellsIs] = []
@@ -286,6 +424,8 @@ class SiteIs(Reply):
     origin_m: tuple[Real, Real] = (0.0, 0.0)
     limits_m: tuple[Real, Real, Real, Real] | None = None
     layers: list[LayerIs]
+    tracks: list[TrackIs] = []
+    guards: list[GuardedIs] = []
     columns: dict[str, Column]
 
 
@@ -313,6 +453,10 @@ class LayerHealth(BaseModel):
     age_s: Seconds | None = None
     lease_left_s: Seconds | None = None
     obstacles: Count = 0
+    tracks: Count = 0
+    durable: Flag = False
+    expected_period_s: Seconds | None = None
+    stale: Flag = False
 
 
 class Histogram(BaseModel):
@@ -387,6 +531,68 @@ class BetterMessage(Reply):
     outcome: Blob
 
 
+class Alert(Reply):
+    """A guarded route is blocked ahead of its unit."""
+
+    kind = "alert"
+    unit: Text
+    guard: Text
+    revision: Count
+    blocked: BlockedIs
+
+
+class Cleared(Reply):
+    """A guarded route that was blocked is free again."""
+
+    kind = "cleared"
+    unit: Text
+    guard: Text
+    revision: Count
+
+
+class GuardLost(Reply):
+    """A unit has said nothing for too long; its route is watched no more."""
+
+    kind = "guard_lost"
+    unit: Text
+    guard: Text
+    silent_s: Seconds
+    text: Text = ""
+
+
+class Rerouted(Reply):
+    """A new route for a unit whose guarded one is blocked; it is guarded already."""
+
+    kind = "rerouted"
+    unit: Text
+    guard: Text
+    was: Text
+    from_m: Real
+    in_s: Seconds
+    revision: Count
+    outcome: Blob
+
+
+class RerouteFailed(Reply):
+    """No new route for a unit whose guarded one is blocked."""
+
+    kind = "reroute_failed"
+    unit: Text
+    guard: Text
+    reason: Text
+    text: Text = ""
+
+
+class LayerState(Reply):
+    """A layer has become stale or fresh, or has lost its owner."""
+
+    kind = "layer_state"
+    layer: Text
+    state: Text
+    source: Text | None = None
+    age_s: Seconds | None = None
+
+
 class Listening(Reply):
     """A subscription to this topic has reached the daemon."""
 
@@ -416,6 +622,26 @@ class BlockageIs(BaseModel):
     depth_m: Real
 
 
+class MovableIs(BaseModel):
+    """One obstacle that would have to move: by its id, or "cells" at a place."""
+
+    model_config = ConfigDict(frozen=True, defer_build=True)
+    layer: Text
+    id: Text
+    x_m: Real
+    y_m: Real
+
+
+class RemedyIs(BaseModel):
+    """What would have to move for a disc to get through, and its way."""
+
+    model_config = ConfigDict(frozen=True, defer_build=True)
+    movables: list[MovableIs]
+    way_m: list[tuple[Real, Real]]
+    disc_radius_m: Real
+    proved: Flag = False
+
+
 class OutcomeIs(BaseModel):
     """What a worker found: the `outcome` of `answer` and `better`, packed by msgpack again."""
 
@@ -428,6 +654,7 @@ class OutcomeIs(BaseModel):
     seed: Count
     left_out: list[Text] = []
     blocked_by: list[BlockageIs] = []
+    remedy: RemedyIs | None = None
     statistics: dict[str, Fact] = {}
     length_m: Real | None = None
     duration_s: Real | None = None
@@ -435,14 +662,20 @@ class OutcomeIs(BaseModel):
     columns: Columns = {}
 
 
-REQUESTS: Final = (Hello, Replan, Cancel, Finish, Site, Vehicles, Health)
-CHANGES: Final = (Claim, Put, Drop, ReplaceLayer, Patch)
+REQUESTS: Final = (
+    *(Hello, Replan, Cancel, Finish, Site, Vehicles, Health),
+    *(Guard, Progress, Release),
+)
+CHANGES: Final = (Claim, Put, Drop, ReplaceLayer, Patch, Scan, Track)
 REQUEST_REPLIES: Final = (
-    *(Welcome, Accepted, AnswerMessage, Noted, ErrorMessage),
+    *(Welcome, Accepted, AnswerMessage, Noted, GuardIs, ErrorMessage),
     *(SiteIs, VehiclesAre, HealthIs),
 )
 CHANGE_REPLIES: Final = (Acknowledged, Refused, Resend, ErrorMessage)
-EVENTS: Final = (BetterMessage, HealthIs, Listening)
+EVENTS: Final = (
+    *(BetterMessage, HealthIs, Listening),
+    *(Alert, Cleared, GuardLost, Rerouted, RerouteFailed, LayerState),
+)
 
 
 def every_message() -> tuple[type[Message], ...]:

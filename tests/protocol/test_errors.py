@@ -7,7 +7,7 @@ from byway import errors, limits
 
 
 def test_every_code_has_one_class() -> None:
-    assert len(errors.CODES) == 19
+    assert len(errors.CODES) == 21
     for code, kind in errors.CODES.items():
         error = errors.from_code(code, "text", {"a": 1}, 0.5)
         assert type(error) is kind
