@@ -10,15 +10,17 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
-from byway.messages import Acknowledged
+from byway.messages import Acknowledged, Cleared, Message
 from bywayd.core.answers import Answers
 from bywayd.core.dispatch import Dispatch
 from bywayd.core.docket import Docket, Held
 from bywayd.core.events import Outcome
 from bywayd.core.expiries import Expiries
+from bywayd.core.guards import Guard, Guards
 from bywayd.core.instants import Instant
 from bywayd.core.ledger import Entry, Ledger
 from bywayd.core.outbox import Outbox
+from bywayd.core.rerouting import Rerouting
 from bywayd.core.snapshots import Snapshot, Snapshots
 from bywayd.core.surveying import Surveying
 
@@ -27,6 +29,9 @@ true_ended = Docket.ended
 true_decide = Ledger.decide
 true_publish = Outbox.publish
 true_forsake = Surveying._forsake
+true_guards_publish = Guards.publish
+true_move = Guards.move
+true_change_over = Rerouting._change_over
 true_pop_due = Expiries.pop_due
 
 
@@ -77,6 +82,31 @@ def decide_without_refusals(ledger: Ledger, refusals: object, revision: int, now
 def number_nothing(outbox: Outbox, topic: str, *args: Any, **more: Any) -> None:
     outbox._streams.clear()
     true_publish(outbox, topic, *args, **more)
+
+
+def take_up_no_guards(guards: Guards, surveyor: int) -> None:
+    guards._surveyor = surveyor
+
+
+def move_without_hearing(
+    guards: Guards, guard: Guard, progress_m: float, speed_mps: float | None, now: Instant
+) -> None:
+    alarm = guards._alarms.at(guard.number)
+    true_move(guards, guard, progress_m, speed_mps, now)
+    if alarm is not None:
+        guards._alarms.set(guard.number, alarm)
+
+
+def publish_no_good_news(guards: Guards, guard: Guard, message: Message, *more: Any) -> None:
+    if not isinstance(message, Cleared):
+        true_guards_publish(guards, guard, message, *more)
+
+
+def publish_first(rerouting: Rerouting, *args: Any) -> None:
+    effects = rerouting._outbox._effects
+    first = len(effects)
+    true_change_over(rerouting, *args)
+    effects[first:] = reversed(effects[first:])
 
 
 def take_gaps(ledger: Ledger, peer: Any, header: Any, size: int, now: Instant) -> Any:
@@ -139,6 +169,29 @@ CANARIES = {
     "routes on old revisions pass for new ones": Canary(
         *(Docket, "ended", pass_off_as_new),
         "was verified at the revision that its answer names",
+    ),
+    "routes are forgotten with the surveyor that watched them": Canary(
+        Guards, "surveyor_ready", take_up_no_guards, "what stands is watched"
+    ),
+    "every look at a blocked route is told": Canary(
+        *(Guards, "_is_news", lambda self, told, seen: True),
+        "nothing is said without a reason",
+    ),
+    "that a route is free again is kept back": Canary(
+        *(Guards, "publish", publish_no_good_news), "what the surveyor sees is told"
+    ),
+    "vehicles may be silent for ever": Canary(
+        Guards, "settle", lambda self, now: None, "no silence is without end"
+    ),
+    "guards are lost before their time": Canary(
+        *(Guards, "move", move_without_hearing), "a guard is lost after the silence"
+    ),
+    "a new guard stands beside the old one": Canary(
+        *(Guards, "_end", lambda self, guard: None), "one guard stands a unit|known|is bounded"
+    ),
+    "routes are watched after they are published": Canary(
+        *(Rerouting, "_change_over", publish_first),
+        "a new route is watched first|only guards that stand are spoken of",
     ),
     "events are not numbered": Canary(Outbox, "publish", number_nothing, "streams are numbered"),
 }

@@ -11,19 +11,17 @@ from collections import defaultdict
 from collections.abc import Callable
 from dataclasses import dataclass, field
 
+from tests.simulation.guardcheck import GuardCheck
+from tests.simulation.promises import BrokenPromise, promise
+
 from byway import messages
+from byway.packed import Bytes
 from bywayd.core import effects, events
+from bywayd.core.front_settings import FrontSettings
+
+__all__ = ["BrokenPromise", "Checkers", "describes", "promise"]
 
 FINALS = (messages.AnswerMessage, messages.ErrorMessage)
-
-
-class BrokenPromise(AssertionError):
-    """The core did what it must never do."""
-
-
-def promise(kept: bool, text: str, *facts: object) -> None:
-    if not kept:
-        raise BrokenPromise(f"{text}: {', '.join(map(str, facts))}" if facts else text)
 
 
 @dataclass(slots=True)
@@ -34,6 +32,7 @@ class Request:
     #: What each body that came in under this id asked for; the first counts.
     body: bytes = b""
     unit: str = ""
+    ask: messages.Replan | None = None
     budget_ns: int = 0
     arrivals: int = 0
     conflicts: int = 0
@@ -62,7 +61,9 @@ class Numbers:
 class Checkers:
     """One life of the daemon: a new epoch gets new checkers."""
 
-    def __init__(self, epoch: str, sees: Callable[[str, int, int], bool]) -> None:
+    def __init__(
+        self, epoch: str, sees: Callable[[str, int, int], bool], settings: FrontSettings
+    ) -> None:
         self.epoch = epoch
         self.sees = sees
         self.requests: dict[str, Request] = {}
@@ -74,6 +75,11 @@ class Checkers:
         #: (outcome body, revision): routes that a worker found or checked.
         self.verified: set[tuple[bytes, int]] = set()
         self.costs: dict[bytes, float] = {}
+        #: Whose replan an outcome is about; that of a guard's own goes to the same goal.
+        self.about: dict[bytes, str] = {}
+        self.guards = GuardCheck(
+            settings.guard_silence_s, settings.guard_news_m, settings.guards_max, self.verified
+        )
         #: Revisions read by tasks under way, by (worker, job).
         self.reading: dict[tuple[int, int], int] = {}
         self.released_before = 0
@@ -92,13 +98,14 @@ class Checkers:
             request.body = body
             request.arrivals += 1
             if request.arrivals == 1 and isinstance(came, messages.Replan):
-                request.unit = came.unit
+                request.unit, request.ask = came.unit, came
                 request.budget_ns = round(came.budget_s * 1e9)
         else:
             request.conflicts += 1
 
-    def found(self, body: bytes, cost: float, revision: int) -> None:
+    def found(self, body: bytes, cost: float, revision: int, about: str) -> None:
         """A worker has verified a route on this revision."""
+        self.about[body] = about
         self.verified.add((body, revision))
         self.costs[body] = cost
 
@@ -109,6 +116,7 @@ class Checkers:
         promise(effect.header.epoch == self.epoch, "every reply names the epoch")
         promise(effect.header.kind == effect.message.kind, "a header names its message")
         message = effect.message
+        self.guards.reply(effect, now_ns)
         if isinstance(message, messages.Acknowledged | messages.Refused):
             self._told_source(message)
         elif effect.peer.channel == "requests" and effect.header.id.startswith("replan"):
@@ -159,9 +167,11 @@ class Checkers:
             promise(request.conflicts >= 0, "a conflict is told for another body", request.id)
         else:
             promise(isinstance(message, FINALS), "a replan gets an answer", message.kind)
-            self._final(request, message, now_ns)
+            self._final(request, message, effect.packed, now_ns)
 
-    def _final(self, request: Request, message: messages.Message, now_ns: int) -> None:
+    def _final(
+        self, request: Request, message: messages.Message, packed: Bytes, now_ns: int
+    ) -> None:
         request.finals += 1
         promise(
             request.finals <= request.arrivals, "an answer is repeated to repeats only", request.id
@@ -182,6 +192,8 @@ class Checkers:
             )
         if isinstance(message, messages.AnswerMessage):
             self._answer(request, message)
+            assert request.ask is not None
+            self.guards.answer(request.ask, message, packed, now_ns)
 
     def _answer(self, request: Request, message: messages.AnswerMessage) -> None:
         body, revision = bytes(message.outcome), message.revision
@@ -204,9 +216,7 @@ class Checkers:
             "a route was verified at the revision that its answer names",
             *(request.id, revision),
         )
-        promise(
-            body.startswith(request.id.encode() + b"|"), "an answer is about its replan", request.id
-        )
+        promise(self.about[body] == request.id, "an answer is about its replan", request.id)
         if request.best is not None and request.best[0] == revision:
             promise(
                 self.costs[body] <= request.best[1], "the answer repeats the best route", request.id
@@ -218,6 +228,8 @@ class Checkers:
         self.streams[effect.topic] += 1
         promise(number == self.streams[effect.topic], "streams are numbered", effect.topic, number)
         message = effect.message
+        if self.guards.publish(effect, now_ns):
+            return
         if isinstance(message, messages.HealthIs):
             self._rises(message.revision)
             return
@@ -284,10 +296,12 @@ class Checkers:
         used = {bytes(r.final.outcome) for r in self.requests.values() if _is_answer(r.final)}
         if len(self.costs) > 20_000:
             live = set(self.requests)
-            gone = [b for b in self.costs if b not in used and _id_of(b) not in live]
+            gone = [b for b in self.costs if b not in used and self.about[b] not in live]
             for body in gone:
                 del self.costs[body]
-            self.verified = {entry for entry in self.verified if entry[0] in self.costs}
+                del self.about[body]
+            self.verified &= {entry for entry in self.verified if entry[0] in self.costs}
+        self.guards.forget(now_ns, after_ns)
 
     def open(self) -> list[str]:
         """Return who was taken in and has no answer."""
@@ -300,10 +314,6 @@ class Checkers:
 
 def _is_answer(message: messages.Message | None) -> bool:
     return isinstance(message, messages.AnswerMessage)
-
-
-def _id_of(body: bytes) -> str:
-    return body.split(b"|", 1)[0].decode()
 
 
 def describes(event: events.Event) -> str:

@@ -80,6 +80,12 @@ class Clients:
             )
         elif rng.random() < 0.1:
             fields = {"leave_out": ["outlines"]}
+        if rng.random() < 0.2:
+            fields |= {
+                "guard": True,
+                "replan_on_alert": rng.random() < 0.5,
+                "silence_s": rng.choice([None, 1.0]),
+            }
         if budget_s is None:
             budget_s = rng.choice([0.004, 0.01, 0.02, 0.05, 0.05, 0.1, 0.25, 1.5])
         message = messages.Replan(

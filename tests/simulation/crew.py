@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
+from tests.simulation import routes
 from tests.simulation.checkers import promise
 from tests.simulation.surveyor import Surveyor
 from tests.simulation.times import MS
@@ -190,9 +191,10 @@ class Crew:
         self.say(0, events.WorkerBetter(worker.number, job.job, self._outcome(job, cost)))
 
     def _outcome(self, job: effects.Job, cost: float) -> events.Outcome:
-        body = f"replan{int(job.goal[0])}|{cost!r}|{job.job}|{self.life}".encode()
-        self.world.checkers.found(body, cost, job.revision)
-        return events.Outcome("route", cost, body, b"columns", path=job.job)
+        columns, packed = routes.table(job.start[0], job.goal[0], job.start_speed_mps)
+        body = routes.body(columns, cost, job=job.job, life=self.life)
+        self.world.checkers.found(body, cost, job.revision, f"replan{int(job.goal[0])}")
+        return events.Outcome("route", cost, body, packed, path=job.job)
 
     def _end(self, life: int, number: int, job: effects.Job) -> None:
         world, rng = self.world, self.world.rng
@@ -211,7 +213,7 @@ class Crew:
             outcome = self._outcome(job, worker.best)
         else:
             kind = rng.choice(["not_found", "not_found", "no_route", "start_blocked"])
-            body = f"replan{int(job.goal[0])}|none|{kind}".encode()
+            body = routes.body({}, None, kind, job=job.job)
             outcome = events.Outcome(kind, float("inf"), body)  # type: ignore[arg-type]
         self.say(0, events.WorkerDone(number, job.job, outcome))
 

@@ -37,6 +37,7 @@ FAULTS = {
     "surveyor_raves": 0.02,
     "refuse": 0.2,  # (a change) the surveyor does not take it
     "trespass": 0.1,  # (a change) it is for a layer of somebody else
+    "driver_silent": 0.05,  # (a turn of a driver) it says nothing for longer than it may
     "fall_silent": 0.02,  # a source says nothing for a while
     "restart": 0.0003,  # (an event) the daemon is killed, and another takes its place
     "lag": 0.3,  # (a tick) the front gets its turn late, within what its margin allows
@@ -47,6 +48,7 @@ RATES = {
     "replans": (20.0, 600.0),
     "changes": (10.0, 300.0),
     "questions": (0.5, 20.0),
+    "drives": (5.0, 100.0),  # what drivers ask and tell
 }
 
 

@@ -12,6 +12,7 @@ from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 from tests.simulation.checkers import promise
+from tests.simulation.lookout import Lookout, truth
 from tests.simulation.times import MS, SECOND
 
 from byway import frames, messages, obstacles
@@ -65,6 +66,7 @@ class Surveyor:
         self.may_come_again: set[int] = set()
         #: When each change of a source first and last reached the front.
         self.arrived: dict[tuple[str, str, int], tuple[int, int]] = {}
+        self.lookout = Lookout(self)
 
     def carry_out(self, effect: effects.Effect) -> None:
         """Do what the front wants."""
@@ -84,6 +86,8 @@ class Surveyor:
                 self.release(effect)
             case effects.DescribeSite():
                 self.describe(effect)
+            case effects.WatchRoute() | effects.MoveGuard() | effects.Unwatch():
+                self.lookout.carry_out(effect)
             case _:
                 raise AssertionError(effect)
 
@@ -91,6 +95,7 @@ class Surveyor:
         world, rng = self.world, self.world.rng
         promise(self.number is None, "one surveyor at a time", effect.surveyor)
         self.number, self.hung = effect.surveyor, False
+        self.lookout = Lookout(self)
         self.busy_until_ns = world.now_ns
         if effect.revision is None:
             self.model = Model(layers={"fixed": {}, "outlines": {}})
@@ -159,6 +164,7 @@ class Surveyor:
             effect.surveyor, batch, revision, {"revision": revision}, tuple(refusals), 1000, counts
         )
         self.crew.say(0, ready)
+        self.lookout.look_at_all()
 
     def _apply_one(self, change: effects.Change) -> None:
         world = self.world
@@ -263,6 +269,17 @@ class Surveyor:
                 first, last = self.arrived[tokens[token]]
                 if expires_at + (last - first) + 20 * MS < self.world.now_ns:
                     found.append(f"{name}/{id}")
+        return found
+
+    def unheard(self) -> list[str]:
+        """Return guards whose listeners know other things than are true."""
+        found = []
+        for watched in self.lookout.watched.values():
+            name = watched.order.name
+            known = self.world.checkers.guards.known.get(name)
+            told = known is not None and known.told is not None
+            if told != (truth(watched, self.model) is not None):
+                found.append(name)
         return found
 
     def check_site(self) -> None:

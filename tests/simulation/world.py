@@ -19,6 +19,7 @@ from typing import Any
 from tests.simulation.checkers import BrokenPromise, Checkers, describes, promise
 from tests.simulation.clients import Clients
 from tests.simulation.crew import Crew
+from tests.simulation.drivers import Drivers
 from tests.simulation.odds import Odds
 from tests.simulation.sources import Sources
 from tests.simulation.times import MS, SECOND
@@ -79,8 +80,10 @@ class World:
         self.crew = Crew(self)
         self.clients = Clients(self)
         self.sources = Sources(self)
+        self.drivers = Drivers(self)
         self.restart()
         self.clients.begin()
+        self.drivers.begin()
         self.sources.begin()
 
     # -- time ---------------------------------------------------------------------------------
@@ -110,7 +113,7 @@ class World:
         """The daemon is killed with all its processes, and another takes its place."""
         self.lives += 1
         self.epoch = f"epoch{self.lives}"
-        self.checkers = Checkers(self.epoch, self.crew.surveyor.sees)
+        self.checkers = Checkers(self.epoch, self.crew.surveyor.sees, self.settings)
         self.crew.all_gone()
         self.front = self.make_front(self.settings, self.epoch, self.seed + self.lives)
         self._wake_serial = 0
@@ -127,13 +130,17 @@ class World:
             return
         self.event_count += 1
         self.story.append(f"{self.now_ns / MS:.3f} {describes(event)}")
+        self.checkers.guards.hands_in(event)
         out = self.front.handle(event, Instant(self.now_ns))
         if self.keep_digest:
             self.digest.update(repr(out).encode())
         for effect in out:
+            self.checkers.guards.effect(effect, self.now_ns)
             self._carry_out(effect)
+        self.checkers.guards.turn_ends(self.now_ns)
         if self.event_count % CHECK_EVERY == 0:
             self.front.check()
+            self.checkers.guards.check(self.now_ns)
             self._check_bounds()
         if self.event_count % FORGET_EVERY == 0:
             self.checkers.forget(self.now_ns, 60 * SECOND)
@@ -149,6 +156,8 @@ class World:
                 self.checkers.publish(effect, self.now_ns)
                 if effect.topic == "health" and not self.chance("lose"):
                     self.at(self._transit_ns(), self.sources.hear_health, effect)
+                elif effect.topic.startswith("guard.") and not self.chance("lose"):
+                    self.at(self._transit_ns(), self.drivers.hear_event, effect)
             case effects.Wake():
                 self._wake_serial += 1
                 lag_ns = self.rng.uniform(0, 0.2 * MS) if self.chance("lag") else 0
@@ -180,7 +189,10 @@ class World:
             self.hand_in(make())
 
     def _send_reply(self, effect: effects.Reply) -> None:
-        receiver = self.clients if effect.peer.channel == "requests" else self.sources
+        receiver: Clients | Drivers | Sources = self.sources
+        if effect.peer.channel == "requests":
+            is_driver = effect.peer.identity.startswith(b"driver")
+            receiver = self.drivers if is_driver else self.clients
         if self.chance("lose"):
             if self.rng.random() < 0.5:
                 self.at(0, self.hand_in, events.Undeliverable(effect.peer))
@@ -198,7 +210,7 @@ class World:
 
     def _check_bounds(self) -> None:
         front, settings = self.front, self.settings
-        open_max = settings.waiting_max + 2 * settings.workers
+        open_max = settings.waiting_max + 2 * settings.workers + len(front.guards)
         promise(len(front.answering.open) <= open_max, "open replans are bounded")
         promise(len(front.snapshots.pins()) <= 2 * settings.workers + 1, "pins are bounded")
         ledger = front.ledger.statistics()
@@ -245,6 +257,8 @@ class World:
             "changes are not acknowledged": self.sources.unacknowledged(),
             "sources live in the past": self.sources.belated(),
             "workers are missing": workers.idle + workers.busy < self.settings.workers,
+            "guards are asked for": self.checkers.guards.waiting(self.now_ns),
+            "alerts are due": self.crew.surveyor.unheard(),
             "no surveyor": not self.front.surveying.is_ready,
             "obstacles that have expired are there": self.crew.surveyor.overdue(),
         }

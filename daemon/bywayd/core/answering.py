@@ -7,6 +7,8 @@ that somebody did not want the answer any more. A repeat of the request gets the
 
 from __future__ import annotations
 
+from typing import TypeAlias
+
 from byway import frames, messages
 from byway.frames import Header
 from byway.messages import AnswerMessage, ErrorMessage, OutcomeIs
@@ -15,11 +17,15 @@ from bywayd.core.answers import Answered, Answers
 from bywayd.core.docket import Act, Docket, Held
 from bywayd.core.events import Outcome, Peer
 from bywayd.core.front_settings import FrontSettings
+from bywayd.core.guarding import Guarding
 from bywayd.core.health import Health
 from bywayd.core.instants import Duration, Instant
 from bywayd.core.invariant import invariant, known
 from bywayd.core.outbox import Outbox, error_of
 from bywayd.core.snapshots import Snapshots
+
+#: A replan of our own, and what a client would be told.
+Ended: TypeAlias = tuple[Docket, AnswerMessage | ErrorMessage]
 
 #: How much a job that has just ended says about how long the next will hold its worker.
 _HOLD_WEIGHT = 0.1
@@ -29,12 +35,18 @@ class Answering:
     """Owned by the front. Knows all open replans; whoever ends one does it here."""
 
     def __init__(
-        self, settings: FrontSettings, outbox: Outbox, health: Health, snapshots: Snapshots
+        self,
+        settings: FrontSettings,
+        outbox: Outbox,
+        health: Health,
+        snapshots: Snapshots,
+        guarding: Guarding,
     ) -> None:
         # -- shared with the rest of the front -------------------------------------------------
         self._outbox = outbox
         self._health = health
         self._snapshots = snapshots
+        self._guarding = guarding
         # -- state -----------------------------------------------------------------------------
         #: Every replan that was taken in and has no answer yet, by request id.
         self.open: dict[str, Docket] = {}
@@ -42,6 +54,8 @@ class Answering:
         self.answers = Answers(settings.answers_max, settings.answers_bytes_max, keep)
         #: The same for requests that were not taken in; a flood of those must not push out answers.
         self.refusals = Answers(settings.answers_max, settings.answers_bytes_max, keep)
+        #: Replans of our own that have ended, with what a client would be told.
+        self._ended: list[Ended] = []
         #: A running mean of how long a job holds its worker.
         self._hold_s = 0.0
         self._workers = settings.workers
@@ -76,10 +90,18 @@ class Answering:
         invariant(docket.phase == "answered", "who is answered has ended", docket.story)
         message, packed = self._message(docket, act, waiting, now)
         del self.open[docket.id]
+        if docket.peer is None:
+            self._ended.append((docket, message))
+            return
         size = len(message.outcome) if isinstance(message, AnswerMessage) else 0
         self.answers.keep(docket.id, docket.body, message, size, packed, now)
         self._outbox.reply(docket.peer, docket.header, message, packed)
         self._take_stock(docket, message, now)
+
+    def take_ended(self) -> list[Ended]:
+        """Return the replans of our own that have ended since the last time."""
+        ended, self._ended = self._ended, []
+        return ended
 
     def _message(
         self, docket: Docket, act: Act, waiting: int, now: Instant
@@ -115,6 +137,7 @@ class Answering:
         arrived = docket.times.arrived
         begun = docket.begun_at or now
         first = docket.first_at if held.outcome.kind == "route" else None
+        guard = self._guarding.of_answer(docket, held.outcome, now)
         return AnswerMessage(
             unit=docket.ask.unit,
             revision=held.revision,
@@ -123,6 +146,7 @@ class Answering:
             total_s=now.since(arrived).s,
             attempts=docket.attempts,
             outcome=held.outcome.body,
+            guard=None if guard is None else guard.id,
         )
 
     def _take_stock(

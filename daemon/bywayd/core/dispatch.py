@@ -75,12 +75,15 @@ class Dispatch:
         return self._workers.idle_count > 0 or not self.room.is_full
 
     def enter(self, docket: Docket, now: Instant) -> None:
-        """Let a replan that was taken in wait for a worker; it takes the place of an older one."""
-        older = self.room.of_unit(docket.ask.unit)
+        """Let a replan wait for a worker; it takes the place of an older one of its slot."""
+        older = self.room.of_unit(docket.slot)
         if older is not None:
             self._act(older, older.move("supersede", now), now)
         self._answering.take_in(docket)
-        self.room.enter(docket)
+        if docket.guard is None:
+            self.room.enter(docket)
+        else:
+            self.room.return_to(docket)  # before all others
         self._alarms.set(docket.id, docket.times.start_by)
         self._restless = True
 
@@ -226,7 +229,7 @@ class Dispatch:
             if docket is None:
                 return
             self.room.leave(docket)
-            self._at_work[docket.ask.unit] = docket
+            self._at_work[docket.slot] = docket
             if docket.begun_at is None:
                 self._health.observe("waited_s", now.since(docket.times.arrived))
             deadline = docket.times.work_by
@@ -289,7 +292,7 @@ class Dispatch:
         self._act(docket, docket.move("lost_early" if again else "lost_late", now), now)
 
     def _has_another_try(self, docket: Docket, now: Instant) -> bool:
-        newer = self.room.of_unit(docket.ask.unit)
+        newer = self.room.of_unit(docket.slot)
         return newer is None and not self._draining and docket.has_another_try(now)
 
     # -- acts ----------------------------------------------------------------------------------
@@ -297,6 +300,8 @@ class Dispatch:
     def _act(self, docket: Docket, act: Act, now: Instant, worker: int | None = None) -> None:
         """Do what a docket has decided. `worker` is idle and has just been at it."""
         if act == "publish":
+            if docket.guard is not None:
+                return  # there is nobody who could use it before the new guard stands
             best = known(docket.best, "what is published is there", docket.story)
             self._health.count("better_total")
             message = better_message(docket, best, now)
@@ -319,8 +324,8 @@ class Dispatch:
         waiting = len(self.room)
         if self.room.holds(docket):
             self.room.leave(docket)
-        if self._at_work.get(docket.ask.unit) is docket:
-            del self._at_work[docket.ask.unit]
+        if self._at_work.get(docket.slot) is docket:
+            del self._at_work[docket.slot]
         self._alarms.clear(docket.id)
         task = self._tasks.of_docket(docket)
         if task is not None:
@@ -373,7 +378,7 @@ class Dispatch:
             )
         for unit, docket in self._at_work.items():
             invariant(
-                self._answering.open.get(docket.id) is docket and docket.ask.unit == unit,
+                self._answering.open.get(docket.id) is docket and docket.slot == unit,
                 "who is at work is open",
                 docket.story,
             )

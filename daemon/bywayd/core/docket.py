@@ -151,8 +151,11 @@ class Docket:
     #: What must be left for another try.
     retry_left_min: Duration
     # -- changed by the front only -------------------------------------------------------------
-    #: Where the answer goes: whoever sent the request, or repeated it, last.
-    peer: Peer
+    #: Where the answer goes: whoever sent the request, or repeated it, last. None for a replan of
+    #: our own.
+    peer: Peer | None
+    #: For a replan of our own: the number of the guard that wants a new route.
+    guard: int | None = None
     phase: Phase = "waiting"
     #: The task under way, if a worker is at it, and that worker.
     task: int | None = None
@@ -175,6 +178,11 @@ class Docket:
     def id(self) -> str:
         """The id of the request."""
         return self.header.id
+
+    @property
+    def slot(self) -> str:
+        """Whose turn it is: replans of one slot follow each other. A unit's guard has its own."""
+        return self.ask.unit if self.guard is None else f"~{self.ask.unit}"
 
     def move(self, move: Move, now: Instant) -> Act:
         """Go where the table says, and return what is to be done."""

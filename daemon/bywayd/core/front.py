@@ -5,9 +5,10 @@ The front: every decision of the daemon behind one method.
 owns what they are about, lets each part do what time has made due, and says when it has to be
 called again. The parts:
 
-    intake --> dispatch --> answering --> outbox
-       \\          \\--> room, roster (workers), snapshots
+    intake, rerouting --> dispatch --> answering --> outbox
+       \\                  \\--> room, roster (workers), snapshots
         \\--> surveying --> ledger --> sources, layers, expiries
+                   \\--> guarding --> guards
 """
 
 from __future__ import annotations
@@ -23,12 +24,15 @@ from bywayd.core.dispatch import Dispatch
 from bywayd.core.effects import Effect, PingWorker, SpawnWorker, Stop, Wake
 from bywayd.core.events import Event, Peer
 from bywayd.core.front_settings import FrontSettings
+from bywayd.core.guarding import Guarding
+from bywayd.core.guards import Guards
 from bywayd.core.health import Health
 from bywayd.core.instants import Duration, Instant
 from bywayd.core.intake import Intake
 from bywayd.core.invariant import invariant
 from bywayd.core.ledger import Ledger
 from bywayd.core.outbox import Outbox
+from bywayd.core.rerouting import Rerouting
 from bywayd.core.roster import Manners, Order, Roster
 from bywayd.core.snapshots import Snapshots
 from bywayd.core.surveying import Surveying
@@ -60,10 +64,21 @@ class Front:
         self.workers = Roster("worker", settings.workers, _manners(settings, surveyor=False))
         self.surveyors = Roster("surveyor", 1, _manners(settings, surveyor=True))
         self.ledger = Ledger(settings, self.outbox, self.health)
+        self.guards = Guards(settings, self.outbox, self.health)
+        self.guarding = Guarding(settings, self.outbox, self.health, self.guards)
         self.surveying = Surveying(
-            settings, self.outbox, self.health, self.snapshots, self.surveyors, self.ledger
+            settings,
+            self.outbox,
+            self.health,
+            self.snapshots,
+            self.surveyors,
+            self.ledger,
+            self.guards,
+            self.guarding,
         )
-        self.answering = Answering(settings, self.outbox, self.health, self.snapshots)
+        self.answering = Answering(
+            settings, self.outbox, self.health, self.snapshots, self.guarding
+        )
         self.dispatch = Dispatch(
             settings, self.outbox, self.health, self.snapshots, self.workers, self.answering
         )
@@ -78,6 +93,17 @@ class Front:
             self.dispatch,
             self.ledger,
             self.surveying,
+            self.guards,
+            self.guarding,
+        )
+        self.rerouting = Rerouting(
+            settings,
+            seed,
+            self.outbox,
+            self.health,
+            self.guards,
+            self.answering,
+            self.dispatch,
         )
         # -- what the runtime measured last ---------------------------------------------------
         self.vitals: events.Vitals | None = None
@@ -93,7 +119,10 @@ class Front:
         #: Why the daemon is ending, once it is.
         self._stop_why = ""
         self._stopped = False
-        self._on: Final[dict[type, Callable[[Any, Instant], None]]] = {
+        self._on: Final = self._handlers()
+
+    def _handlers(self) -> dict[type, Callable[[Any, Instant], None]]:
+        return {
             events.Received: self._received,
             events.Unreadable: self._unreadable,
             events.Undeliverable: self._undeliverable,
@@ -107,6 +136,7 @@ class Front:
             events.SurveyorReady: self._surveyor_ready,
             events.SurveyorAlive: self._surveyor_alive,
             events.SnapshotReady: self._snapshot_ready,
+            events.GuardSeen: self._guard_seen,
             events.SiteDescribed: self._site_described,
             events.SurveyorLost: self._surveyor_lost,
             events.Started: self._started,
@@ -157,6 +187,12 @@ class Front:
                 self.intake.replan(peer, came, message, now)
             case messages.Cancel() | messages.Finish():
                 self.intake.end(peer, header, message, now)
+            case messages.Guard():
+                self.intake.guard(peer, came, message, now)
+            case messages.Progress():
+                self.guarding.progress(peer, header, message, now)
+            case messages.Release():
+                self.guarding.release(peer, came, message, now)
             case messages.Site():
                 self.intake.site(peer, header, message)
             case messages.Vehicles():
@@ -226,6 +262,10 @@ class Front:
         self.surveyors.heard(event.surveyor, now)
         self.surveying.snapshot(event, now)
 
+    def _guard_seen(self, event: events.GuardSeen, now: Instant) -> None:
+        self.surveyors.heard(event.surveyor, now)
+        self.surveying.saw(event, now)
+
     def _site_described(self, event: events.SiteDescribed, now: Instant) -> None:
         self.surveyors.heard(event.surveyor, now)
         self.surveying.described(event, now)
@@ -262,6 +302,8 @@ class Front:
             open=len(self.answering.open),
             pending=self.ledger.pending,
         )
+        self.rerouting.stopping = True
+        self.guarding.stop(now)
         self.dispatch.drain(now)
         self.surveying.stop()
         self._alarms.set("drain", now + self._drain_max)
@@ -274,7 +316,11 @@ class Front:
         for order in self.workers.due(now):
             self._carry_out(order, now)
         self.ledger.settle(now)
+        self.guards.settle(now)
+        self.guarding.settle(now)
         self.dispatch.settle(now)
+        while self.rerouting.settle(now):
+            self.dispatch.settle(now)
         self.surveying.settle(now)
         is_drained = not self.answering.open and self.ledger.pending == 0
         while (alarm := self._alarms.pop_due(now)) is not None:
@@ -316,6 +362,8 @@ class Front:
             self.surveyors.next_alarm(),
             self.ledger.next_alarm(),
             self.dispatch.next_alarm(),
+            self.guards.next_alarm(),
+            self.guarding.next_alarm(),
             self._alarms.next(),
         )
         at = min((alarm for alarm in found if alarm is not None), default=None)
@@ -347,6 +395,9 @@ class Front:
             self.surveying,
             self.answering,
             self.dispatch,
+            self.guards,
+            self.guarding,
+            self.rerouting,
             self.health,
             self._alarms,
         ):

@@ -100,6 +100,24 @@ class FrontSettings:
     #: Obstacles that may have an expiry at a time.
     expiries_max: int = 100_000
 
+    # -- guards --------------------------------------------------------------------------------
+
+    #: Guards that may stand at a time: each is looked at on every revision.
+    guards_max: int = 256
+    #: ... and no more than so many bytes of their routes (a kilometre takes about 0.3 MB).
+    guards_bytes_max: int = 64 * 1024 * 1024
+    #: A unit that says nothing for this long loses its guard, unless it asked for another time.
+    guard_silence_s: float = 5.0
+    #: The budget of a replan that an alert brings about, for guards that came with a replan.
+    guard_budget_s: float = 0.2
+    #: Such a new route begins where the vehicle is this long after the end of that budget: time
+    #: for the message to arrive, and for the vehicle to take it up.
+    guard_margin_s: float = 0.1
+    #: Who asks for a guard is answered when the surveyor has looked, or after this time.
+    guard_check_s: float = 0.1
+    #: Listeners hear of it when an obstacle that they know moves this far along the route.
+    guard_news_m: float = 0.5
+
     # -- memory of answers ---------------------------------------------------------------------
 
     #: Answered requests that are remembered, so that a repeat gets the same answer again.
@@ -131,6 +149,7 @@ class FrontSettings:
         invariant(self.source_window >= 1, "a source may have a change under way")
         invariant(self.batch_changes_max >= 1, "a batch holds a change")
         invariant(self.answers_max >= 1, "an answer is remembered")
+        invariant(self.guards_max >= 1, "a guard may stand")
 
     @property
     def waiting_max(self) -> int:

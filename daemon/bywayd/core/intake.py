@@ -15,6 +15,8 @@ from bywayd.core.dispatch import Dispatch
 from bywayd.core.docket import Docket, times_of
 from bywayd.core.events import Peer
 from bywayd.core.front_settings import FrontSettings
+from bywayd.core.guarding import Guarding
+from bywayd.core.guards import Guards
 from bywayd.core.health import Health
 from bywayd.core.instants import Duration, Instant
 from bywayd.core.ledger import Ledger
@@ -54,6 +56,8 @@ class Intake:
         dispatch: Dispatch,
         ledger: Ledger,
         surveying: Surveying,
+        guards: Guards,
+        guarding: Guarding,
     ) -> None:
         # -- fixed -----------------------------------------------------------------------------
         self._settings = settings
@@ -67,6 +71,8 @@ class Intake:
         self._dispatch = dispatch
         self._ledger = ledger
         self._surveying = surveying
+        self._guards = guards
+        self._guarding = guarding
         # -- state -----------------------------------------------------------------------------
         #: Replans taken in since the start.
         self._serial = 0
@@ -131,6 +137,24 @@ class Intake:
     def _why_not(self, header: frames.Header, ask: messages.Replan) -> ErrorMessage | None:
         """Return why a replan cannot be taken in, the reasons that stay before those that pass."""
         settings = self._settings
+        refused = self._why_not_at_all(header, ask)
+        if refused is not None:
+            return refused
+        if ask.guard and not self._guards.has_room(ask.unit):
+            text = f"{len(self._guards)} guards stand already"
+            return error_of("overloaded", text, {"guards": len(self._guards)})
+        if self._dispatch.room.of_unit(ask.unit) is None and not self._dispatch.has_room:
+            waiting = len(self._dispatch.room)
+            text = f"{waiting} replans wait for {settings.workers} workers already"
+            retry_after_s = self._answering.retry_after_s(waiting)
+            return error_of("overloaded", text, {"waiting": waiting}, retry_after_s)
+        return None
+
+    def _why_not_at_all(
+        self, header: frames.Header, ask: messages.Replan | messages.Guard
+    ) -> ErrorMessage | None:
+        """Return why nothing can be done about a route, whoever else wants what."""
+        settings = self._settings
         if self.stopping:
             return error_of("stopping", "the daemon is on its way out")
         if header.epoch and header.epoch != self._outbox.epoch:
@@ -150,11 +174,6 @@ class Intake:
         if not self.is_warm:
             text = "the daemon is not ready yet"
             return error_of("warming", text, retry_after_s=settings.warming_retry_s)
-        if self._dispatch.room.of_unit(ask.unit) is None and not self._dispatch.has_room:
-            waiting = len(self._dispatch.room)
-            text = f"{waiting} replans wait for {settings.workers} workers already"
-            retry_after_s = self._answering.retry_after_s(waiting)
-            return error_of("overloaded", text, {"waiting": waiting}, retry_after_s)
         return None
 
     def _why_not_leave_out(self, name: str) -> ErrorMessage | None:
@@ -195,6 +214,18 @@ class Intake:
             else:
                 self._dispatch.finish(docket, now)
         self._outbox.reply(peer, header, Noted(replans=[docket.id for docket in found]))
+
+    # -- guards --------------------------------------------------------------------------------
+
+    def guard(self, peer: Peer, came: frames.Received, ask: messages.Guard, now: Instant) -> None:
+        """Let a guard stand, or say why not."""
+        if self._guarding.is_repeat(peer, came):
+            return
+        refused = self._why_not_at_all(came.header, ask)
+        if refused is None:
+            self._guarding.take(peer, came, ask, now)
+        else:
+            self._guarding.refuse(peer, came, refused, now)
 
     # -- the rest ------------------------------------------------------------------------------
 

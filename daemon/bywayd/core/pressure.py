@@ -47,9 +47,9 @@ def pressure(
     found = Pressure()
     impatient = 0
     for docket in room:
-        older = at_work.get(docket.ask.unit)
-        if older is docket:
-            impatient += 1  # it had a worker, and lost it
+        older = at_work.get(docket.slot)
+        if older is docket or docket.guard is not None:
+            impatient += 1  # it had a worker, and lost it; or a vehicle drives towards something
         elif older is not None:
             _make_way(found, older, docket, now)
         else:

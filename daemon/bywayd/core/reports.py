@@ -8,10 +8,12 @@ from bywayd.core.answering import Answering
 from bywayd.core.dispatch import Dispatch
 from bywayd.core.events import Vitals
 from bywayd.core.front_settings import FrontSettings
+from bywayd.core.guards import Guards
 from bywayd.core.health import Health
 from bywayd.core.instants import Instant
 from bywayd.core.ledger import Ledger
 from bywayd.core.outbox import error_of
+from bywayd.core.rerouting import Rerouting
 from bywayd.core.roster import Roster
 from bywayd.core.snapshots import Snapshots
 from bywayd.core.surveying import Surveying
@@ -28,6 +30,8 @@ class Reported(Protocol):
     surveying: Surveying
     answering: Answering
     dispatch: Dispatch
+    guards: Guards
+    rerouting: Rerouting
     vitals: Vitals | None
     wall: tuple[float, Instant] | None
     began: Instant | None
@@ -81,6 +85,9 @@ def health(front: Reported, now: Instant) -> HealthIs:
         "changes_pending": ledger.pending,
         "expiries": ledger.expiries,
         "answers_kept": len(front.answering.answers),
+        "guards": len(front.guards),
+        "guards_blocked": sum(guard.told is not None for guard in front.guards),
+        "reroutes": len(front.rerouting),
         "revisions_pinned": len(front.snapshots.pins()),
         **({} if vitals is None else vitals.facts),
     }
@@ -88,6 +95,7 @@ def health(front: Reported, now: Instant) -> HealthIs:
         "site": front.surveying.memory_bytes,
         "changes_pending": ledger.pending_bytes,
         "answers_kept": front.answering.answers.size_bytes,
+        "guards": front.guards.size_bytes,
         **({} if vitals is None else vitals.memory_bytes),
     }
     waiting = len(front.dispatch.room)

@@ -20,8 +20,10 @@ from bywayd.core.effects import (
     ReleaseBefore,
     SpawnSurveyor,
 )
-from bywayd.core.events import Peer, SiteDescribed, SnapshotReady, SurveyorReady
+from bywayd.core.events import GuardSeen, Peer, SiteDescribed, SnapshotReady, SurveyorReady
 from bywayd.core.front_settings import FrontSettings
+from bywayd.core.guarding import Guarding
+from bywayd.core.guards import Guards
 from bywayd.core.health import Health
 from bywayd.core.instants import Instant
 from bywayd.core.invariant import invariant
@@ -57,6 +59,8 @@ class Surveying:
         snapshots: Snapshots,
         surveyors: Roster,
         ledger: Ledger,
+        guards: Guards,
+        guarding: Guarding,
     ) -> None:
         # -- shared with the rest of the front -------------------------------------------------
         self._settings = settings
@@ -65,6 +69,8 @@ class Surveying:
         self._snapshots = snapshots
         self._roster = surveyors
         self._ledger = ledger
+        self._guards = guards
+        self._guarding = guarding
         # -- state -----------------------------------------------------------------------------
         #: The surveyor that is ready; None while there is none.
         self._ready: int | None = None
@@ -115,6 +121,7 @@ class Surveying:
             self._nonsense(number, f"took up revision {event.revision}")
         else:
             self._ready = number
+            self._guards.surveyor_ready(number)
             self.memory_bytes = event.memory_bytes
             self._outbox.log("info", "surveyor.ready", surveyor=number, revision=event.revision)
 
@@ -133,6 +140,16 @@ class Surveying:
             self.memory_bytes = event.memory_bytes
             self.obstacles = dict(event.obstacles)
             self._ledger.decide(event.refusals, event.revision, now)
+
+    def saw(self, event: GuardSeen, now: Instant) -> None:
+        """A guarded route has been looked at."""
+        number = event.surveyor
+        if number != self._ready:
+            return  # it has been killed: its successor looks again
+        if event.revision > self._snapshots.revision or not self._guards.was_given(event.guard):
+            self._nonsense(number, f"saw guard {event.guard} at revision {event.revision}")
+        else:
+            self._guarding.saw(event, now)
 
     def described(self, event: SiteDescribed, now: Instant) -> None:
         """A question about the site has its answer."""
@@ -208,6 +225,7 @@ class Surveying:
         if self._ready == number:
             self._ready = None
             self._batch = None
+            self._guards.surveyor_gone()
         for task, ticket in list(self._tickets.items()):
             if ticket.surveyor == number:
                 ticket.surveyor = None

@@ -3,6 +3,7 @@ Replans that no worker is at yet, and which of them is next.
 
 At most one waits for each unit; those whose unit has another one at work wait for that. Those
 that had a worker and lost it go first: their time is running out, and they have been promised.
+So do new routes for vehicles that drive towards something.
 Otherwise first come, first served as long as the line is short. When it is longer than there are
 workers, newest first: in an overload the oldest are about to be too late anyway, and serving
 them first would make every answer late (measured: at 1.5 times capacity, first come first served
@@ -35,7 +36,7 @@ class WaitingRoom:
         self._line: dict[str, Docket] = {}
         #: The same ones by unit.
         self._by_unit: dict[str, Docket] = {}
-        #: Those that had a worker already.
+        #: Those that go first.
         self._again: dict[str, Docket] = {}
 
     def __len__(self) -> int:
@@ -60,20 +61,20 @@ class WaitingRoom:
 
     def enter(self, docket: Docket) -> None:
         """Take in a newcomer."""
-        unit = docket.ask.unit
+        unit = docket.slot
         invariant(unit not in self._by_unit, "one replan of a unit waits", docket.story)
         self._line[docket.id] = docket
         self._by_unit[unit] = docket
 
     def return_to(self, docket: Docket) -> None:
-        """Take in one that has lost its worker."""
+        """Take in one that has lost its worker, or that a vehicle in motion waits for."""
         self._again[docket.id] = docket
 
     def leave(self, docket: Docket) -> None:
         """Let one go, wherever it goes."""
         if self._again.pop(docket.id, None) is None:
             del self._line[docket.id]
-            del self._by_unit[docket.ask.unit]
+            del self._by_unit[docket.slot]
 
     def next(self, busy_units: Container[str]) -> Docket | None:
         """Return whose turn it is, leaving out newcomers of units that have one at work."""
@@ -81,7 +82,7 @@ class WaitingRoom:
             return docket
         crowded = len(self._line) > self._workers
         for docket in reversed(self._line.values()) if crowded else self._line.values():
-            if docket.ask.unit not in busy_units:
+            if docket.slot not in busy_units:
                 return docket
         return None
 
@@ -99,6 +100,6 @@ class WaitingRoom:
         for docket in self:
             invariant(docket.phase == "waiting", "who waits is in phase waiting", docket.story)
         invariant(
-            {d.ask.unit: d for d in self._line.values()} == self._by_unit,
+            {d.slot: d for d in self._line.values()} == self._by_unit,
             "each unit's waiting replan is known by its unit",
         )

@@ -91,12 +91,18 @@ class Desk:
         return self.say(messages.Replan(**told), id, after_ms=after_ms, epoch=epoch)  # type: ignore[arg-type]
 
     def say(
-        self, message: messages.Message, id: str = "q", *, after_ms: float = 0.0, epoch: str = ""
+        self,
+        message: messages.Message,
+        id: str = "q",
+        packed: bytes = b"",
+        *,
+        after_ms: float = 0.0,
+        epoch: str = "",
     ) -> list[effects.Effect]:
         """A client sends any message."""
         header = frames.Header(message.kind, id, epoch=epoch, traceparent=f"trace-{id}")
         body = msgpack.packb(message.model_dump())
-        came = frames.Received(header, message, body, b"")
+        came = frames.Received(header, message, body, packed)
         return self.hand_in(events.Received(self.peer, came), after_ms)
 
     def better(self, cost: float, job: int = 1, worker: int = 1, after_ms: float = 1.0) -> None:
