@@ -106,6 +106,12 @@ class AnswersSection(Section):
     budget_s_max: Annotated[float, Field(gt=0.0, le=limits.budget_s_max)] = limits.budget_s_max
 
 
+class GuardsSection(Section):
+    count_max: Annotated[int, Field(ge=1, le=4096)] = 256
+    silence_s: Annotated[float, Field(gt=0.0, le=limits.expiry_s_max)] = 5.0
+    budget_s: Annotated[float, Field(gt=0.0, le=limits.budget_s_max)] = 0.2
+
+
 class LogSection(Section):
     level: Literal["debug", "info", "warning", "error"] = "info"
     form: Literal["auto", "human", "json"] = "auto"
@@ -128,6 +134,7 @@ class Settings(BaseSettings):
     sockets: SocketsSection
     workers: WorkersSection = WorkersSection()
     answers: AnswersSection = AnswersSection()
+    guards: GuardsSection = GuardsSection()
     log: LogSection = LogSection()
     vehicles: dict[Name, Annotated[VehicleSection, Field(discriminator="model")]] = Field(
         min_length=1
@@ -185,7 +192,8 @@ def load(file: Path | None = None) -> Settings:
     except tomllib.TOMLDecodeError as fault:
         raise BadSettings([Mistake(str(file), "", f"not TOML: {fault}")]) from None
     merged = {**embedded, **told}
-    for section in {"site", "sockets", "workers", "answers", "log"} & embedded.keys() & told.keys():
+    sections = {"site", "sockets", "workers", "answers", "guards", "log"}
+    for section in sections & embedded.keys() & told.keys():
         if isinstance(told[section], dict):
             merged[section] = {**embedded[section], **told[section]}
     mistakes = _unknown_variables()
@@ -325,6 +333,7 @@ def _known_keys(section: Location, merged: Mapping[str, Any]) -> list[str]:
         "sockets": SocketsSection,
         "workers": WorkersSection,
         "answers": AnswersSection,
+        "guards": GuardsSection,
         "log": LogSection,
     }
     found = sections.get(str(section[0]))
