@@ -123,7 +123,7 @@ class GuardCheck:
                 if effect.name not in self.known:
                     # Its silence is known when its asker is answered.
                     from_x_m, _ = routes.ends(effect.columns, effect.packed)
-                    self.known[effect.name] = Known(effect.unit, now_ns, 10**18, from_x_m)
+                    self.known[effect.name] = Known(effect.unit, 0, 10**18, from_x_m)
                     self._replaces(effect.name)
             case effects.Unwatch():
                 promise(effect.guard in self.watched, "what is unwatched was watched")
@@ -153,6 +153,8 @@ class GuardCheck:
         """A client is told that its guard stands."""
         silence_ns = round((self.silence_s if silence_s is None else silence_s) * 1e9)
         known = self.known.setdefault(name, Known(unit, heard_ns, silence_ns, x_m))
+        # It may have told its progress before anybody was told that the guard stands.
+        known.heard_ns = max(known.heard_ns, heard_ns)
         known.silence_ns = silence_ns
         known.from_x_m = x_m
         self._replaces(name)

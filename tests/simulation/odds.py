@@ -62,11 +62,13 @@ class Odds:
     clients: int = 4
     sources: int = 3
     units: int = 6
+    guards_max: int = 256
 
     @classmethod
     def draw(cls, rng: random.Random) -> Odds:
         """Return the odds of one day."""
         alive = rng.sample(sorted(FAULTS), rng.randint(1, len(FAULTS)))
+        units = rng.randint(1, 12)
         return cls(
             {
                 name: FAULTS[name] * rng.uniform(0.02, 1.0) if name in alive else 0.0
@@ -76,7 +78,9 @@ class Odds:
             workers=rng.randint(1, 5),
             clients=rng.randint(1, 6),
             sources=rng.randint(1, 4),
-            units=rng.randint(1, 12),
+            units=units,
+            # On some days there is not room for the guards of all.
+            guards_max=rng.choice([max(1, units - 1), 256]),
         )
 
     def calm(self) -> None:

@@ -50,6 +50,7 @@ def settings_for(odds: Odds) -> FrontSettings:
         answers_bytes_max=64 * 1024 * 1024,
         answers_kept_s=30.0,
         budget_max_s=10.0,
+        guards_max=odds.guards_max,
     )
 
 

@@ -27,8 +27,6 @@ from bywayd.core.instants import Duration, Instant
 from bywayd.core.invariant import invariant, known
 from bywayd.core.outbox import Outbox, error_of
 
-#: Replies to guards and releases that are remembered, for each guard that may stand.
-_REPLIES_PER_GUARD = 4
 #: Progress beyond the end of a route by more than this is about another route.
 _BEYOND_M_MAX = 0.5
 
@@ -60,7 +58,7 @@ class Guarding:
         self._alarms: Alarms[int] = Alarms()
         #: What was replied lately, so that a repeat changes nothing.
         self._replied = Answers(
-            _REPLIES_PER_GUARD * settings.guards_max,
+            settings.answers_max,
             settings.answers_bytes_max,
             Duration.of_s(settings.answers_kept_s),
         )
