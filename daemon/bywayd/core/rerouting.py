@@ -167,7 +167,7 @@ class Rerouting:
         there = course.place(course.way_at(here.t_s + guard.pace * later_s))
         if course.stand_after(there.way_m, abs(there.speed_mps), braking) < block.at_m:
             return TurnOff(there.way_m, brakes=abs(there.speed_mps) <= STANDING_MPS)
-        speed = abs(here.speed_mps) * min(guard.pace, 1.0)
+        speed = abs(here.speed_mps) * guard.pace
         return TurnOff(course.stand_after(way_m, speed, braking), brakes=True)
 
     # -- ending --------------------------------------------------------------------------------
