@@ -103,5 +103,5 @@ def shape_from(
 ) -> Shape:
     """Rebuild the shape in a slot of published tables."""
     if kind == "polygon":
-        return PolygonShape(vertices[starts[row] : starts[row + 1]])
+        return PolygonShape.trusted(vertices[starts[row] : starts[row + 1]])
     return DiscShape(*(float(value) for value in discs[row]))
