@@ -31,6 +31,7 @@ from bywayd.runtime.translate import (
     event_of,
     job_message,
     outcome_message,
+    watch_message,
 )
 from bywayd.runtime.vitals import Memories, Turns
 from bywayd.runtime.watch import Watch
@@ -95,6 +96,11 @@ class Loop:
             effects.ApplyChanges: self._apply_changes,
             effects.ReleaseBefore: self._release_before,
             effects.DescribeSite: self._describe_site,
+            effects.WatchRoute: self._watch_route,
+            effects.MoveGuard: lambda e: self._tell(
+                *("surveyor", e.surveyor, "move"), guard=e.guard, progress_m=e.progress_m
+            ),
+            effects.Unwatch: lambda e: self._tell("surveyor", e.surveyor, "unwatch", guard=e.guard),
             effects.Log: self._log,
             effects.Wake: self._set_wake,
             effects.Stop: self._stop,
@@ -260,6 +266,9 @@ class Loop:
     def _describe_site(self, effect: effects.DescribeSite) -> None:
         question = effect.message.model_dump()
         self._tell("surveyor", effect.surveyor, "describe", ticket=effect.ticket, question=question)
+
+    def _watch_route(self, effect: effects.WatchRoute) -> None:
+        self._tell("surveyor", effect.surveyor, "watch", **watch_message(effect))
 
     def _log(self, effect: effects.Log) -> None:
         getattr(self._logger, effect.level)(effect.event, **effect.facts)

@@ -5,6 +5,7 @@ Plain maps on the one side, the core's records on the other; nothing is decided 
 core calls opaque passes through as it is.
 """
 
+import math
 from collections.abc import Callable, Mapping
 from typing import Any, Final, TypeAlias, get_args
 
@@ -86,6 +87,25 @@ def _site_described(number: int, message: Message) -> events.Event:
     return events.SiteDescribed(number, ticket, described, _bytes(message["packed"]))
 
 
+def _guard_seen(number: int, message: Message) -> events.Event:
+    told = message["blocked"]
+    block = None
+    if told is not None:
+        if told["kind"] not in get_args(events.BlockKind):
+            raise ValueError(f"nothing on a site is called {told['kind']!r}")
+        reals = {name: float(told[name]) for name in _BLOCK_REALS}
+        if not all(map(math.isfinite, reals.values())):
+            raise ValueError(f"a place that is nowhere: {reals}")
+        block = events.Block(
+            **reals, kind=told["kind"], layer=str(told["layer"]), id=str(told["id"])
+        )
+    return events.GuardSeen(
+        number, int(message["guard"]), int(message["revision"]), block, str(message["fault"])
+    )
+
+
+_BLOCK_REALS: Final = ("at_m", "t_s", "x_m", "y_m", "heading_rad", "depth_m")
+
 _Maker: TypeAlias = Callable[[int, Message], events.Event]
 
 _WORKER_SAYS: Final[Mapping[str, _Maker]] = {
@@ -108,6 +128,7 @@ _SURVEYOR_SAYS: Final[Mapping[str, _Maker]] = {
     "alive": lambda number, _: events.SurveyorAlive(number),
     "snapshot": _snapshot_ready,
     "site": _site_described,
+    "guard": _guard_seen,
 }
 
 
@@ -158,4 +179,19 @@ def change_message(change: effects.Change) -> Message:
         "message": None if told is None else told.model_dump(),
         "packed": bytes(change.packed),
         "ids": change.ids,
+    }
+
+
+def watch_message(watch: effects.WatchRoute) -> Message:
+    """Return a route to watch for the surveyor; its numbers are not looked at."""
+    return {
+        "guard": watch.guard,
+        "unit": watch.unit,
+        "name": watch.name,
+        "vehicle": watch.vehicle,
+        "columns": {name: column.model_dump() for name, column in watch.columns.items()},
+        "packed": bytes(watch.packed),
+        "left_out": watch.left_out,
+        "clearance_m": watch.clearance_m,
+        "progress_m": watch.progress_m,
     }

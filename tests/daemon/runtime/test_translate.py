@@ -3,6 +3,7 @@
 import pytest
 
 from byway import messages
+from byway.packed import Column
 from bywayd.core import effects, events
 from bywayd.core.instants import Instant
 from bywayd.runtime.translate import (
@@ -11,11 +12,23 @@ from bywayd.runtime.translate import (
     event_of,
     job_message,
     outcome_message,
+    watch_message,
 )
 
 FOUND = {"kind": "route", "cost": 12.5, "body": b"b", "packed": b"p", "path": [1, 2]}
 OUTCOME = events.Outcome("route", 12.5, b"b", b"p", [1, 2])
 REFUSAL = {"index": 2, "code": "bad_geometry", "text": "t", "facts": {"id": "a"}}
+BLOCK = {
+    "at_m": 6.0,
+    "t_s": 4.0,
+    "x_m": 1.0,
+    "y_m": 2.0,
+    "heading_rad": 0.5,
+    "depth_m": 0.1,
+    "kind": "disc",
+    "layer": "stacks",
+    "id": "a",
+}
 SNAPSHOT = {"revision": 7, "handle": {"revision": 7}, "memory_bytes": 4096}
 
 
@@ -75,6 +88,16 @@ SNAPSHOT = {"revision": 7, "handle": {"revision": 7}, "memory_bytes": 4096}
             },
             events.SiteDescribed(3, 9, messages.SiteIs(revision=7, layers=[], columns={}), b""),
         ),
+        (
+            "surveyor",
+            {"say": "guard", "guard": 5, "blocked": BLOCK, "fault": "", **SNAPSHOT},
+            events.GuardSeen(3, 5, 7, events.Block(**BLOCK)),
+        ),
+        (
+            "surveyor",
+            {"say": "guard", "guard": 5, "blocked": None, "fault": "odd", **SNAPSHOT},
+            events.GuardSeen(3, 5, 7, None, "odd"),
+        ),
     ],
 )
 def test_each_thing_the_crew_says_is_an_event(role, message, event):
@@ -97,6 +120,10 @@ def test_each_thing_the_crew_says_is_an_event(role, message, event):
         (
             "surveyor",
             {"say": "snapshot", "batch": 4, "refusals": [{}], "obstacles": {}, **SNAPSHOT},
+        ),
+        *(
+            ("surveyor", {"say": "guard", "guard": 5, "blocked": bad, "fault": "", **SNAPSHOT})
+            for bad in ({**BLOCK, "kind": "ghost"}, {**BLOCK, "at_m": float("nan")}, {}, 7)
         ),
     ],
 )
@@ -144,3 +171,13 @@ def test_a_change_travels_with_its_message_and_its_columns():
         "packed": b"",
         "ids": ("a",),
     }
+
+
+def test_a_route_to_watch_travels_with_its_columns():
+    column = Column(dtype="<f8", shape=(2,), offset=0)
+    watch = effects.WatchRoute(
+        3, 5, "tug-3", "guard5", {"model": "car"}, {"t_s": column}, b"16 bytes", ("own",), 0.1, 2.0
+    )
+    message = watch_message(watch)
+    assert message["columns"] == {"t_s": {"dtype": "<f8", "shape": (2,), "offset": 0}}
+    assert {*effects.WatchRoute.__slots__} - {"surveyor"} == message.keys()
