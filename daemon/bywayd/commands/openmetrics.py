@@ -30,6 +30,7 @@ TIMES: Final = {
     "first_s": "From the arrival of a replan to its first verified route",
     "waited_s": "From the arrival of a replan to the beginning of its first job",
     "recheck_s": "Checking a found route again on a newer revision",
+    "alert_s": "From the acknowledgement of a change to the alert that it blocks a guarded route",
     "visible_s": "From the arrival of a change of the site to the snapshot that has it",
     "late_s": "By how much answers missed the end of their budget",
 }

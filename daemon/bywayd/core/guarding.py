@@ -213,17 +213,20 @@ class Guarding:
 
     # -- what the surveyor sees ----------------------------------------------------------------
 
-    def saw(self, event: GuardSeen, now: Instant) -> None:
-        """The surveyor has looked at a guarded route."""
-        guard = self._guards.saw(event, now)
+    def saw(self, event: GuardSeen, now: Instant) -> bool:
+        """The surveyor has looked at a guarded route; True if that was worth an alert."""
+        guard = self._guards.get(event.guard)
+        if guard is None:
+            return False
+        alerts = self._guards.saw(guard, event, now)
         waiting = self._waiting.get(event.guard)
-        if guard is None or waiting is None:
-            return
-        self._forget(event.guard)
-        if event.fault:
-            self._end(waiting, error_of("bad_geometry", event.fault), now)
-        else:
-            self._end(waiting, self._guards.describe(guard, now), now)
+        if waiting is not None:
+            self._forget(event.guard)
+            if event.fault:
+                self._end(waiting, error_of("bad_geometry", event.fault), now)
+            else:
+                self._end(waiting, self._guards.describe(guard, now), now)
+        return alerts
 
     # -- time ----------------------------------------------------------------------------------
 

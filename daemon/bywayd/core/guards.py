@@ -36,8 +36,6 @@ State: TypeAlias = Literal["clear", "blocked", "unchecked", "released"]
 _CRAWLING_MPS = 0.1
 #: A vehicle that is faster than its route is believed up to this.
 _PACE_MAX = 1.5
-#: Progress beyond the end of a route by more than this is about another route.
-BEYOND_M_MAX = 0.5
 
 
 @dataclass(frozen=True, slots=True)
@@ -277,36 +275,39 @@ class Guards:
             )
         )
 
-    def saw(self, event: GuardSeen, now: Instant) -> Guard | None:
-        """Take in what the surveyor at work has seen; the guard, if it still stands."""
-        guard = self._guards.get(event.guard)
-        if guard is None:
-            return None
+    def saw(self, guard: Guard, event: GuardSeen, now: Instant) -> bool:
+        """Take in what the surveyor at work has seen; True if that was worth an alert."""
         guard.seen, guard.blocked = event.revision, event.blocked
         if event.fault:
             self._give_up(guard, event.fault, now)
-        elif event.blocked is None:
-            if guard.told is not None:
-                guard.told = None
-                self.wanting.pop(guard.number, None)
-                self._health.count("cleared_total")
-                cleared = messages.Cleared(
-                    unit=guard.terms.unit, guard=guard.id, revision=event.revision
-                )
-                self.publish(guard, cleared)
-        elif guard.told is None or self._is_news(guard.told, event.blocked):
-            guard.told = event.blocked
-            if guard.terms.replan_on_alert:
-                self.wanting[guard.number] = None
-            self._health.count("alerts_total")
-            alert = messages.Alert(
-                unit=guard.terms.unit,
-                guard=guard.id,
-                revision=event.revision,
-                blocked=guard.outside(event.blocked, now),
-            )
-            self.publish(guard, alert)
-        return guard
+            return False
+        if event.blocked is None:
+            self._clear(guard, event.revision)
+            return False
+        if guard.told is not None and not self._is_news(guard.told, event.blocked):
+            return False
+        guard.told = event.blocked
+        if guard.terms.replan_on_alert:
+            self.wanting[guard.number] = None
+        self._health.count("alerts_total")
+        alert = messages.Alert(
+            unit=guard.terms.unit,
+            guard=guard.id,
+            revision=event.revision,
+            blocked=guard.outside(event.blocked, now),
+        )
+        self.publish(guard, alert)
+        return True
+
+    def _clear(self, guard: Guard, revision: int) -> None:
+        if guard.told is None:
+            return
+        guard.told = None
+        self.wanting.pop(guard.number, None)
+        self._health.count("cleared_total")
+        self.publish(
+            guard, messages.Cleared(unit=guard.terms.unit, guard=guard.id, revision=revision)
+        )
 
     def _is_news(self, told: Block, seen: Block) -> bool:
         """Whether a vehicle that knows of the one should hear of the other."""

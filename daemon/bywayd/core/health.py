@@ -28,6 +28,7 @@ Timed: TypeAlias = Literal[
     "first_s",  # ... to its first verified route
     "waited_s",  # ... to the beginning of its first job
     "recheck_s",  # from sending a route to be checked on a newer revision to the verdict
+    "alert_s",  # from the acknowledgement of a revision to an alert that it brought about
     "visible_s",  # from the arrival of a change to the snapshot that has it
     "late_s",  # by how much an answer missed the end of its budget
 ]
@@ -36,6 +37,7 @@ TIMED: Final[tuple[Timed, ...]] = (
     "first_s",
     "waited_s",
     "recheck_s",
+    "alert_s",
     "visible_s",
     "late_s",
 )

@@ -81,6 +81,8 @@ class Surveying:
         self._task_serial = 0
         #: For the health record.
         self.memory_bytes = 0
+        #: The newest revision that a batch has made, and when it became visible.
+        self._visible: tuple[int, Instant] | None = None
         self.obstacles: dict[str, int] = {}
 
     # -- what clients want ---------------------------------------------------------------------
@@ -137,6 +139,8 @@ class Surveying:
             self._nonsense(number, f"went back to revision {event.revision}")
         else:
             self._batch = None
+            if self._visible is None or event.revision > self._visible[0]:
+                self._visible = (event.revision, now)
             self.memory_bytes = event.memory_bytes
             self.obstacles = dict(event.obstacles)
             self._ledger.decide(event.refusals, event.revision, now)
@@ -149,7 +153,9 @@ class Surveying:
         if event.revision > self._snapshots.revision or not self._guards.was_given(event.guard):
             self._nonsense(number, f"saw guard {event.guard} at revision {event.revision}")
         else:
-            self._guarding.saw(event, now)
+            alerts = self._guarding.saw(event, now)
+            if alerts and self._visible is not None and self._visible[0] == event.revision:
+                self._health.observe("alert_s", now.since(self._visible[1]))
 
     def described(self, event: SiteDescribed, now: Instant) -> None:
         """A question about the site has its answer."""

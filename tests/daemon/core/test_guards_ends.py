@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import pytest
 from tests.daemon.core.coursetables import outcome, straight
-from tests.daemon.core.frontdesk import nothing, route
+from tests.daemon.core.frontdesk import nothing, put, route
 from tests.daemon.core.guarddesk import GuardDesk, block, ready
 
 from byway import messages
@@ -195,6 +195,20 @@ def test_the_health_record_counts_guards(guarded: GuardDesk) -> None:
     assert (health.counts["guards"], health.counts["guards_blocked"]) == (1, 1)
     assert health.counts["alerts_total"] == 1
     assert health.memory_bytes["guards"] > 0
+
+
+def test_how_long_an_alert_takes_after_the_acknowledgement_is_observed(
+    guarded: GuardDesk,
+) -> None:
+    message, packed = put("live", "a")
+    guarded.change(message, packed)
+    guarded.publish(guarded.one(effects.ApplyChanges).batch)
+    guarded.saw(block(), after_ms=3.0)
+    assert guarded.front.health.statistics().observed["alert_s"] == 1
+    # A vehicle that moves, or a guard that begins, is not what made it late.
+    guarded.guard(unit="w", id="h")
+    guarded.saw(block(), 2, revision=1)
+    assert guarded.front.health.statistics().observed["alert_s"] == 1
 
 
 def test_a_guard_that_nobody_would_miss_is_a_defect(guarded: GuardDesk) -> None:
