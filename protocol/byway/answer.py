@@ -11,21 +11,11 @@ import numpy.typing as npt
 
 from byway import frames, messages
 from byway.errors import BadReply, SenderFault
-from byway.packed import Bytes, check_columns, read
+from byway.packed import ROUTE_COLUMNS, Bytes, check_columns, read, route_columns
 
 #: The columns of a route, in the order of the table.
-ROUTE_TABLE: Final = np.dtype(
-    [
-        ("t_s", "<f8"),
-        ("x_m", "<f8"),
-        ("y_m", "<f8"),
-        ("heading_rad", "<f8"),
-        ("curvature_per_m", "<f8"),
-        ("speed_mps", "<f8"),
-        ("gear", "i1"),
-    ]
-)
-_FLOATS: Final = ("t_s", "x_m", "y_m", "heading_rad", "curvature_per_m", "speed_mps")
+ROUTE_TABLE: Final = np.dtype(list(ROUTE_COLUMNS))
+_FLOATS: Final = tuple(name for name, dtype in ROUTE_COLUMNS if dtype == "<f8")
 
 
 @dataclass(frozen=True, slots=True)
@@ -206,11 +196,7 @@ def _found(
 def _route(told: messages.OutcomeIs, packed: Bytes) -> Route:
     """Return the route of an outcome. Raises SenderFault."""
     row_count = told.columns["t_s"].shape[0] if "t_s" in told.columns else 0
-    check_columns(
-        told.columns,
-        packed,
-        {**dict.fromkeys(_FLOATS, ("<f8", (row_count,))), "gear": ("i1", (row_count,))},
-    )
+    check_columns(told.columns, packed, route_columns(row_count))
     table = np.empty(row_count, ROUTE_TABLE)
     for name, column in told.columns.items():
         table[name] = read(column, packed)

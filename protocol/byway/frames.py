@@ -14,7 +14,7 @@ from typing import Any, Final, TypeVar
 import msgpack
 from pydantic import BaseModel, ValidationError
 
-from byway import limits, messages, obstacles
+from byway import limits, messages, obstacles, scans, tracks
 from byway.errors import (
     BadMessage,
     BadValue,
@@ -25,7 +25,7 @@ from byway.errors import (
     UnsupportedVersion,
 )
 from byway.header import Header as Header  # part of what the door hands out
-from byway.packed import Bytes, check_columns
+from byway.packed import Bytes, check_columns, route_columns
 
 Model = TypeVar("Model", bound=BaseModel)
 
@@ -72,7 +72,13 @@ def _door(
 
 
 #: To the daemon.
-REQUESTS: Final = _door("requests", messages.REQUESTS, limits.body_bytes_max, 0, strict=True)
+REQUESTS: Final = _door(
+    "requests",
+    messages.REQUESTS,
+    limits.body_bytes_max,
+    limits.guard_packed_bytes_max,
+    strict=True,
+)
 UPDATES: Final = _door(
     "updates", messages.CHANGES, limits.body_bytes_max, limits.packed_bytes_max, strict=True
 )
@@ -123,8 +129,14 @@ def encode_header(header: Header) -> bytes:
 
 
 def encode_body(message: BaseModel) -> bytes:
-    """Return the second frame of a message, or an outcome."""
-    return _packb(message.model_dump(exclude_none=True))
+    """
+    Return the second frame of a message, or an outcome.
+
+    What a client sends has no field that is as it is by default: a daemon that is older than the
+    field would refuse the message for it.
+    """
+    is_request = isinstance(message, messages.Request)
+    return _packb(message.model_dump(exclude_none=True, exclude_defaults=is_request))
 
 
 def _packb(value: object) -> bytes:
@@ -293,14 +305,34 @@ def _check_sense(message: messages.Message, packed: Bytes) -> None:
             obstacles.check(message, packed)
         case messages.Patch():
             check_columns(message.columns, packed, {"cells": ("u1", (None, None))})
+        case messages.Scan():
+            scans.check(message, packed)
+        case messages.Track():
+            tracks.check(message, packed)
+        case messages.Guard():
+            _check_route(message, packed)
         case messages.Cancel() | messages.Finish():
             if (message.replan is None) == (message.unit is None):
                 raise BadValue("name either the replan or the unit", {"field": "replan"})
-        case messages.AnswerMessage() | messages.BetterMessage() | messages.SiteIs():
+        case messages.AnswerMessage() | messages.BetterMessage() | messages.Rerouted():
             pass  # their columns are checked where they are read
+        case messages.SiteIs():
+            pass
         case _:
             if len(packed):
                 raise BadMessage(f"{message.kind} has no packed columns")
+
+
+def _check_route(message: messages.Guard, packed: Bytes) -> None:
+    rows = message.columns["t_s"].shape[0] if "t_s" in message.columns else 0
+    if rows > limits.guard_rows_max:
+        raise TooLarge(
+            f"a route of {rows} rows, the most is {limits.guard_rows_max}",
+            {"rows": rows, "rows_max": limits.guard_rows_max},
+        )
+    check_columns(message.columns, packed, route_columns(rows))
+    if rows == 0:
+        raise BadMessage("a route has one row or more", {"field": "columns.t_s"})
 
 
 def error_message(error: BywayError) -> messages.ErrorMessage:

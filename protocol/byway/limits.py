@@ -87,6 +87,15 @@ tracks_max: Final = 1024
 
 #: Rows of a route that is to be guarded: 3 km in steps of 0.3 m, and some.
 guard_rows_max: Final = 16_384
+#: Bytes of its columns: six of 8 bytes and one of 1 a row, each rounded up.
+guard_packed_bytes_max: Final = guard_rows_max * (6 * 8 + 1)
+
+#: What nothing on a site does: it bounds the ground that a track may claim.
+track_speed_mps_max: Final = 100.0
+track_turn_rate_radps_max: Final = 10.0
+#: Metres, and metres a second, by which a track may be wrong.
+track_uncertainty_m_max: Final = 50.0
+track_growth_mps_max: Final = 50.0
 
 #: Whole numbers on the wire fit a signed 64-bit integer.
 number_max: Final = 2**63 - 1
@@ -119,6 +128,10 @@ def told() -> dict[str, int | float]:
         "beams_max": beams_max,
         "tracks_max": tracks_max,
         "guard_rows_max": guard_rows_max,
+        "track_speed_mps_max": track_speed_mps_max,
+        "track_turn_rate_radps_max": track_turn_rate_radps_max,
+        "track_uncertainty_m_max": track_uncertainty_m_max,
+        "track_growth_mps_max": track_growth_mps_max,
         "unacknowledged_max": unacknowledged_max,
         "answers_kept_s": answers_kept_s,
     }

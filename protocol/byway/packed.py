@@ -31,6 +31,21 @@ _NAMES: Final[Mapping[str, str]] = {dtype.str: name for name, dtype in DTYPES.it
 Bytes: TypeAlias = bytes | memoryview
 
 
+#: The columns of a route: their names and number formats, in this order.
+ROUTE_COLUMNS: Final = (
+    ("t_s", "<f8"),
+    ("x_m", "<f8"),
+    ("y_m", "<f8"),
+    ("heading_rad", "<f8"),
+    ("curvature_per_m", "<f8"),
+    ("speed_mps", "<f8"),
+    ("gear", "i1"),
+)
+
+#: {name: (dtype, shape)}; None in a shape stands for any length.
+Expected: TypeAlias = Mapping[str, tuple[str, tuple[int | None, ...]]]
+
+
 class Column(BaseModel):
     """Where one column lies in the packed frame, and how to read it."""
 
@@ -89,7 +104,7 @@ def pack(arrays: Mapping[str, npt.NDArray[Any]]) -> tuple[dict[str, Column], byt
 def check_columns(
     columns: Mapping[str, Column],
     packed: Bytes,
-    expected: Mapping[str, tuple[str, tuple[int | None, ...]]] | None = None,
+    expected: Expected | None = None,
 ) -> None:
     """
     Check that the columns lie inside the packed frame and fill it; touch none of its bytes.
@@ -137,6 +152,11 @@ def _check_shape(name: str, column: Column, dtype: str, shape: tuple[int | None,
 
 def _bad_column(name: str, problem: str) -> BadMessage:
     return BadMessage(f"column {name}: {problem}", {"field": f"columns.{name}"})
+
+
+def route_columns(rows: int) -> Expected:
+    """Return what `check_columns` shall expect of a route."""
+    return {name: (dtype, (rows,)) for name, dtype in ROUTE_COLUMNS}
 
 
 def read(column: Column, packed: Bytes) -> npt.NDArray[Any]:

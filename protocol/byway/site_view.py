@@ -1,15 +1,15 @@
-"""The site as a daemon describes it: obstacles and cells by layer."""
+"""The site as a daemon describes it: obstacles and cells by layer, what moves, what is guarded."""
 
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
-from typing import TypeVar
+from dataclasses import dataclass, field
+from typing import Any, TypeVar
 
 import numpy as np
 import numpy.typing as npt
 
 from byway import frames, messages, obstacles
 from byway.errors import BadReply, SenderFault
-from byway.packed import Column, check_columns, read
+from byway.packed import Column, Expected, check_columns, read
 
 Shape = TypeVar("Shape")
 
@@ -38,9 +38,12 @@ class LayerView:
     Attributes:
         unknown_blocks: Unknown cells, and ground that was never patched, count as occupied.
         outlines_only: Obstacles only, no cells; a replan may leave the layer out.
-        polygons: {id: array (n, 2)}, metres.
+        polygons: {id: array (n, 2)}, metres: outlines, those of boxes among them.
         discs: {id: (x, y, radius)}, metres.
         cells: Rectangles that do not overlap.
+        holes: {id: arrays (m, 2)}, metres: of those polygons that have some.
+        durable: What is acknowledged in it survives the daemon.
+        decay_s: How long holds what a scan says; None: for ever.
     """
 
     unknown_blocks: bool
@@ -48,6 +51,56 @@ class LayerView:
     polygons: Mapping[str, npt.NDArray[np.float64]]
     discs: Mapping[str, tuple[float, float, float]]
     cells: tuple[Cells, ...]
+    holes: Mapping[str, tuple[npt.NDArray[np.float64], ...]] = field(default_factory=dict)
+    durable: bool = False
+    decay_s: float | None = None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class TrackView:
+    """
+    An obstacle that moves, at the moment of the reply.
+
+    Attributes:
+        layer, id: Its name.
+        pose: x_m, y_m, heading_rad of its body.
+        velocity_mps, turn_rate_radps: How it moves.
+        uncertainty_m, growth_mps: How far it may be from there, and how fast that grows.
+        age_s: Since it was seen.
+        outline_m: (n, 2), in the frame of its body.
+        sweep_m: Outlines (n, 2) in the site: what is blocked for it.
+    """
+
+    layer: str
+    id: str
+    pose: tuple[float, float, float]
+    velocity_mps: tuple[float, float]
+    turn_rate_radps: float
+    uncertainty_m: float
+    growth_mps: float
+    age_s: float
+    outline_m: npt.NDArray[np.float64]
+    sweep_m: tuple[npt.NDArray[np.float64], ...]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class GuardedView:
+    """
+    A guarded route.
+
+    Attributes:
+        unit: Whose it is.
+        progress_m: How far along it the unit is.
+        state: "clear", "blocked", "unchecked".
+        poses: (n, 3): x_m, y_m, heading_rad from start to goal.
+        blocked: Where and by what, if it is.
+    """
+
+    unit: str
+    progress_m: float
+    state: str
+    poses: npt.NDArray[np.float64]
+    blocked: messages.BlockedIs | None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -61,6 +114,8 @@ class SiteView:
         origin_m: Of the daemon's own frame; all coordinates here are those of the sources.
         limits_m: x_min, y_min, x_max, y_max; outside is blocked. None: without limits.
         layers: By name.
+        tracks: What moves.
+        guards: Routes that are watched, if they were asked for.
     """
 
     revision: int
@@ -68,6 +123,8 @@ class SiteView:
     origin_m: tuple[float, float]
     limits_m: tuple[float, float, float, float] | None
     layers: Mapping[str, LayerView]
+    tracks: tuple[TrackView, ...] = ()
+    guards: tuple[GuardedView, ...] = ()
 
 
 def site_view(received: frames.Received) -> SiteView:
@@ -76,45 +133,64 @@ def site_view(received: frames.Received) -> SiteView:
     if not isinstance(message, messages.SiteIs):
         raise BadReply(f"a {received.header.kind} where a site_is was due")
     try:
+        check_columns(message.columns, received.packed, _expected(message))
         layers = _layers(message, received)
+        tables = {name: read(column, received.packed) for name, column in message.columns.items()}
     except (SenderFault, KeyError) as fault:
         raise BadReply(f"the site cannot be read: {fault}") from fault
     return SiteView(
-        message.revision, received.header.epoch, message.origin_m, message.limits_m, layers
+        message.revision,
+        received.header.epoch,
+        message.origin_m,
+        message.limits_m,
+        layers,
+        tuple(_track(told, tables) for told in message.tracks),
+        tuple(
+            GuardedView(each.unit, each.progress_m, each.state, tables[each.column], each.blocked)
+            for each in message.guards
+        ),
     )
+
+
+def _expected(message: messages.SiteIs) -> Expected:
+    outlines = [name for track in message.tracks for name in (track.outline, *track.sweep)]
+    return {
+        **obstacles.shape_columns(
+            sum(layer.polygons for layer in message.layers),
+            sum(layer.discs for layer in message.layers),
+            has_holes="rings" in message.columns,
+        ),
+        **{each.column: ("u1", (None, None)) for layer in message.layers for each in layer.cells},
+        **{name: ("<f8", (None, 2)) for name in outlines},
+        **{guard.column: ("<f8", (None, 3)) for guard in message.guards},
+    }
 
 
 def _layers(message: messages.SiteIs, received: frames.Received) -> dict[str, LayerView]:
     packed = received.packed
     polygon_count = sum(layer.polygons for layer in message.layers)
     disc_count = sum(layer.discs for layer in message.layers)
-    shapes_at = {
-        "ids": ("u1", (None,)),
-        "starts": ("<i8", (polygon_count + 1,)),
-        "vertices_m": ("<f8", (None, 2)),
-        "discs_m": ("<f8", (disc_count, 3)),
-    }
-    cells_at = {
-        cells.column: ("u1", (None, None)) for layer in message.layers for cells in layer.cells
-    }
-    check_columns(message.columns, packed, {**shapes_at, **cells_at})
     ids = _ids(message.columns["ids"], received, polygon_count + disc_count)
-    rings, discs = obstacles.shapes_in(message.columns, packed)
-    rings_left, discs_left = iter(rings), iter(discs)
+    polygons, discs = obstacles.shapes_in(message.columns, packed)
+    polygons_left, discs_left = iter(polygons), iter(discs)
     polygon_ids, disc_ids = iter(ids[:polygon_count]), iter(ids[polygon_count:])
-    return {
-        layer.layer: LayerView(
+    found: dict[str, LayerView] = {}
+    for layer in message.layers:
+        rings = _take(layer.polygons, polygon_ids, polygons_left)
+        found[layer.layer] = LayerView(
             layer.unknown_blocks,
             layer.outlines_only,
-            _take(layer.polygons, polygon_ids, rings_left),
+            {each: outline for each, (outline, *_) in rings.items()},
             _take(layer.discs, disc_ids, discs_left),
             tuple(
                 Cells(cells.corner_m, cells.cell_m, read(message.columns[cells.column], packed))
                 for cells in layer.cells
             ),
+            {each: tuple(holes) for each, (_, *holes) in rings.items() if holes},
+            layer.durable,
+            layer.decay_s,
         )
-        for layer in message.layers
-    }
+    return found
 
 
 def _ids(column: Column, received: frames.Received, count: int) -> list[str]:
@@ -128,3 +204,18 @@ def _ids(column: Column, received: frames.Received, count: int) -> list[str]:
 
 def _take(count: int, ids: Iterator[str], found: Iterator[Shape]) -> dict[str, Shape]:
     return {next(ids): next(found) for _ in range(count)}
+
+
+def _track(told: messages.TrackIs, tables: Mapping[str, npt.NDArray[Any]]) -> TrackView:
+    return TrackView(
+        told.layer,
+        told.id,
+        told.pose,
+        told.velocity_mps,
+        told.turn_rate_radps,
+        told.uncertainty_m,
+        told.growth_mps,
+        told.age_s,
+        tables[told.outline],
+        tuple(tables[name] for name in told.sweep),
+    )
