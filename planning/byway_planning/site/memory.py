@@ -98,6 +98,11 @@ class Memory:
         size = len(self._bytes)
         return self._used_bytes > size - min(size // 8, RESERVE_BYTES)
 
+    def has_room_for(self, size: int) -> bool:
+        """Whether a block of this size could be taken, if the memory can grow to its end."""
+        largest = self._free_by_size[-1][0] if self._free_by_size else 0
+        return rounded_bytes(size) <= max(largest, len(self._bytes) - self._top)
+
     def size_of(self, offset: int) -> int:
         """Return the bytes of a block."""
         return self._sizes[offset]

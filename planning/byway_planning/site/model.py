@@ -7,26 +7,28 @@ the tiles that changed and the distances around them, writes them to fresh block
 tables; the blocks of the revision before stay until `release_before` says that nobody reads it.
 """
 
+import itertools
 import math
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 
 import numpy as np
 import numpy.typing as npt
 
 from byway_planning.site.memory import Memory
+from byway_planning.site.movers import Movers
+from byway_planning.site.patches import Patch
+from byway_planning.site.places import overlaps_limits, tiles_in, tiles_of, touches_limits
 from byway_planning.site.publishing import Publisher
-from byway_planning.site.raster import resample_kernel
+from byway_planning.site.raster import changed_span_kernel
 from byway_planning.site.records import Records
+from byway_planning.site.scans import Seen, apply_marks_kernel, checked_scan, fade_kernel
 from byway_planning.site.settings import LayerSettings, SiteSettings
-from byway_planning.site.shapes import ID_BYTES_MAX, PolygonShape, Shape, SiteError
+from byway_planning.site.shapes import ID_BYTES_MAX, Limits, Shape, SiteError
 from byway_planning.site.snapshot import Handle, Snapshot, handle_for
 from byway_planning.site.tiles import Cells, Tile
+from byway_planning.site.tracks import Track, piece_id
 
-#: Rows or columns of one patch; 4096 cells of 0.1 m are more than any sensor sees at once.
-PATCH_CELLS_MAX = 4096
-#: A millimetre is finer than any sensor, and bounds how many patch cells a tile cell looks at.
-PATCH_CELL_M_MIN = 0.001
-PATCH_CELL_M_MAX = 100.0
 UNKNOWN = 2
 
 
@@ -35,6 +37,12 @@ class _Layer:
     index: int
     settings: LayerSettings
     cells: dict[Tile, Cells] = field(default_factory=dict)
+    #: When each cell was last scanned, for a layer that forgets; inf: never.
+    stamps: dict[Tile, npt.NDArray[np.float64]] = field(default_factory=dict)
+    #: Not later than when the first of them is forgotten.
+    first_stamp_s: float = math.inf
+    #: Recovered cells whose stamps are lost: they count as scanned at the next `carry`.
+    lost_stamps: bool = False
 
 
 class SiteModel:
@@ -48,12 +56,17 @@ class SiteModel:
         self._records = Records()
         #: Obstacles by tile: all and only those that may touch the tile, outlines not.
         self._by_tile: dict[Tile, dict[tuple[int, str], Shape]] = {}
-        self._publisher = Publisher(settings, self.memory, self._records)
+        self._movers = Movers()
+        tables = {**self._records.tables, **self._movers.tables}
+        self._publisher = Publisher(settings, self.memory, tables)
         #: What the newest snapshot does not show yet: tiles, and cells of layers in tiles.
         self._dirty: set[Tile] = set()
         self._dirty_cells: set[tuple[str, Tile]] = set()
         self._changed = True
         self._snapshot: Snapshot | None = None
+        #: Boxes around what has changed since the newest snapshot, and since the one before it.
+        self._boxes: list[Limits] = []
+        self.changed_m: npt.NDArray[np.float64] = np.empty((0, 4))
 
     # -- changes ----------------------------------------------------------------------------
 
@@ -71,37 +84,53 @@ class SiteModel:
         self._layers[name] = _Layer(len(self._layers), settings)
         self._changed = True
         if settings.unknown_blocks:
+            self._boxes.append(self.settings.limits_m)
             rows, columns = self.settings.tiles
             self._dirty |= {(r, c) for r in range(rows) for c in range(columns)}
 
     def put(self, layer: str, obstacle_id: str, shape: Shape) -> None:
         """Add an obstacle to a layer, or replace the one of that id."""
-        owner = self._layer(layer)
+        self._layer(layer)
         self._check_id(obstacle_id, "obstacle")
-        x0, y0, x1, y1 = shape.box_m
-        a0, b0, a1, b1 = self.settings.limits_m
-        if x1 < a0 or x0 > a1 or y1 < b0 or y0 > b1:
+        if not touches_limits(self.settings, shape.box_m):
             raise SiteError(
                 "outside_limits",
-                f"obstacle {obstacle_id!r} spans {shape.box_m}, the site only {(a0, b0, a1, b1)}",
+                f"obstacle {obstacle_id!r} spans {shape.box_m}, the site only "
+                f"{self.settings.limits_m}",
             )
         self.drop(layer, obstacle_id)
+        self._put(layer, obstacle_id, shape)
+
+    def _put(self, layer: str, obstacle_id: str, shape: Shape) -> None:
+        owner = self._layer(layer)
+        self._drop(layer, obstacle_id)
         self._records.put(owner.index, obstacle_id, shape)
         self._changed = True
+        self._boxes.append(shape.box_m)
         if not owner.settings.outlines_only:
-            for tile in self._tiles_of(shape):
+            for tile in tiles_of(self.settings, shape):
                 self._by_tile.setdefault(tile, {})[owner.index, obstacle_id] = shape
                 self._dirty.add(tile)
 
     def drop(self, layer: str, obstacle_id: str) -> bool:
-        """Remove an obstacle; tell whether there was one."""
+        """Remove an obstacle, moving or not; tell whether there was one."""
+        self._layer(layer)
+        if self._movers.forget(layer, obstacle_id):
+            for i in range(self._movers.pieces.pop((layer, obstacle_id), 0)):
+                self._drop(layer, piece_id(obstacle_id, i))
+            self._changed = True
+            return True
+        return self._drop(layer, obstacle_id)
+
+    def _drop(self, layer: str, obstacle_id: str) -> bool:
         owner = self._layer(layer)
         shape = self._records.drop(owner.index, obstacle_id)
         if shape is None:
             return False
         self._changed = True
+        self._boxes.append(shape.box_m)
         if not owner.settings.outlines_only:
-            for tile in self._tiles_of(shape):
+            for tile in tiles_of(self.settings, shape):
                 here = self._by_tile[tile]
                 del here[owner.index, obstacle_id]
                 if not here:
@@ -112,89 +141,209 @@ class SiteModel:
     def clear(self, layer: str) -> None:
         """Forget all obstacles and cells of a layer."""
         owner = self._layer(layer)
+        for name in self._movers.of(layer):
+            self.drop(layer, name)
         for name in self._records.names(owner.index):
             self.drop(layer, name)
-        for tile in owner.cells:
-            self._dirty.add(tile)
-            self._dirty_cells.add((layer, tile))
-            self._changed = True
-        owner.cells.clear()
+        for tile in list(owner.cells):
+            self._write(layer, owner, tile, self._base(owner))
+        owner.stamps.clear()
+        owner.first_stamp_s = math.inf
 
-    def patch(self, layer: str, corner_m: tuple[float, float], cell_m: float, cells: Cells) -> None:
+    def patch(
+        self,
+        layer: str,
+        corner_m: tuple[float, float],
+        cell_m: float,
+        cells: Cells,
+        heading_rad: float = 0.0,
+    ) -> None:
         """
         Overwrite a rectangle of cells.
 
         Args:
-            corner_m: Lower left corner of the patch.
+            corner_m: Corner of the patch: the lower left one before it is turned.
             cell_m: Side of a patch cell; a patch that does not fit the site's own cells is
-                resampled, occupied before unknown before free. Cells of the site that it covers
-                only in part can only get worse by it.
+                resampled: a cell of the site whose middle it covers takes the worst of what
+                overlaps it, one whose middle it does not cover can only become occupied.
             cells: Shape (rows, columns), row 0 at the lowest y; 0 free, 1 occupied, 2 unknown.
+            heading_rad: Of the rows; the patch is turned about its corner.
 
         Raises:
             SiteError: unknown_layer, outlines_only, bad_cells, too_large, not_finite or
                 outside_limits (when all of it lies outside).
         """
-        owner = self._layer(layer)
-        if owner.settings.outlines_only:
-            raise SiteError("outlines_only", f"layer {layer!r} holds outlines only, no cells")
-        patch = self._checked_patch(corner_m, cell_m, cells)
-        height, width = patch.shape[0] * cell_m, patch.shape[1] * cell_m
-        x, y = corner_m
-        a0, b0, a1, b1 = self.settings.limits_m
-        if x >= a1 or y >= b1 or x + width <= a0 or y + height <= b0:
+        owner = self._with_cells(layer)
+        patch = Patch(corner_m, cell_m, cells, heading_rad)
+        if not overlaps_limits(self.settings, patch.box_m):
             raise SiteError(
                 "outside_limits",
-                f"the patch spans x {x} to {x + width}, y {y} to {y + height}; the site only "
-                f"{(a0, b0, a1, b1)}",
+                f"the patch spans {patch.box_m}, the site only {self.settings.limits_m}",
             )
-        side = self.settings.tile_cells
-        # What a tile without cells stands for; no tile is kept for that.
-        base = np.full((side, side), UNKNOWN if owner.settings.unknown_blocks else 0, np.uint8)
-        for tile in self._tiles_in(x, y, x + width, y + height):
-            old = owner.cells.get(tile, base)
-            new = old.copy()
-            tx, ty = self.settings.corner_m(tile)
-            resample_kernel(patch, x, y, cell_m, new, tx, ty, self.settings.cell_m)
-            if (new == old).all():
-                continue
-            if (new == base).all():
-                del owner.cells[tile]
-            else:
-                owner.cells[tile] = new
-            self._dirty.add(tile)
-            self._dirty_cells.add((layer, tile))
-            self._changed = True
+        for tile in tiles_in(self.settings, *patch.box_m):
+            new = self._cells_of(owner, tile).copy()
+            patch.write(new, self.settings.corner_m(tile), self.settings.cell_m)
+            stamps = owner.stamps.get(tile)
+            if stamps is not None:
+                patch.unstamp(stamps, self.settings.corner_m(tile), self.settings.cell_m)
+            self._write(layer, owner, tile, new)
 
-    @staticmethod
-    def _checked_patch(corner_m: tuple[float, float], cell_m: float, cells: Cells) -> Cells:
-        try:
-            patch = np.array(cells)
-        except ValueError as fault:
-            raise SiteError("bad_cells", f"a patch has rows and columns: {fault}") from None
-        if patch.ndim != 2 or patch.size == 0:
-            raise SiteError("bad_cells", f"a patch has rows and columns, got shape {patch.shape}")
-        if max(patch.shape) > PATCH_CELLS_MAX:
+    def scan(
+        self,
+        layer: str,
+        origin: tuple[float, float, float],
+        bearings_rad: npt.ArrayLike,
+        ranges_m: npt.ArrayLike,
+        range_m_max: float,
+        *,
+        range_m_min: float = 0.0,
+        at_s: float = 0.0,
+    ) -> None:
+        """
+        Free the cells along the beams of a range sensor, and fill those at their ends.
+
+        Args:
+            origin: x_m, y_m, heading_rad of the sensor.
+            bearings_rad, ranges_m: Shape (n,). A range that is not below `range_m_max` met
+                nothing; one below `range_m_min` says nothing.
+            at_s: When it was measured, for layers that forget; a clock of the caller's.
+
+        Raises:
+            SiteError: unknown_layer, outlines_only, bad_scan, not_finite, too_large or
+                outside_limits (when the sensor stands outside).
+        """
+        owner = self._with_cells(layer)
+        beams = checked_scan(origin, bearings_rad, ranges_m, range_m_max, range_m_min)
+        x, y, _ = origin
+        if not touches_limits(self.settings, (x, y, x, y)):
             raise SiteError(
-                "too_large", f"a patch may have {PATCH_CELLS_MAX} rows and columns at most, "
-                f"got {patch.shape}"
-            )  # fmt: skip
-        if not np.isfinite([*corner_m, cell_m]).all():
-            raise SiteError("not_finite", f"corner_m {corner_m} and cell_m {cell_m} must be finite")
-        if not PATCH_CELL_M_MIN <= cell_m <= PATCH_CELL_M_MAX:
-            raise SiteError(
-                "bad_cells",
-                f"cell_m lies between {PATCH_CELL_M_MIN} and {PATCH_CELL_M_MAX} m, got {cell_m}",
+                "outside_limits",
+                f"the sensor at {x, y} stands outside of the site, {self.settings.limits_m}",
             )
-        if patch.dtype != np.uint8 or patch.max() > UNKNOWN:
-            raise SiteError(
-                "bad_cells",
-                f"cells are uint8: 0 free, 1 occupied, 2 unknown; got {patch.dtype} up to "
-                f"{patch.max()}",
-            )
-        patch = np.ascontiguousarray(patch)
-        patch.flags.writeable = False
-        return patch
+        s = self.settings
+        seen = Seen(x, y, *beams, s.limits_m[:2], s.cell_m, s.tile_cells, s.tiles)
+        for tile, marks in zip(seen.tiles, seen.marks, strict=True):
+            new = self._cells_of(owner, tile).copy()
+            apply_marks_kernel(marks, new, self._stamps_of(owner, tile), at_s)
+            self._write(layer, owner, tile, new)
+        if owner.settings.decay_s is not None and seen.tiles:
+            owner.first_stamp_s = min(owner.first_stamp_s, at_s + owner.settings.decay_s)
+
+    def track(self, layer: str, track_id: str, track: Track) -> None:
+        """
+        Add an obstacle that moves, or tell where the one of that id is now.
+
+        It lies on the site with what it sweeps from its `at_s` on; see `carry`.
+        """
+        self._with_cells(layer)
+        self._check_id(track_id, "track")
+        pieces = track.sweep(track.at_s, self.settings.sweep_s)
+        boxes = np.array([piece.box_m for piece in pieces])
+        low, high = boxes[:, :2].min(axis=0), boxes[:, 2:].max(axis=0)
+        if not touches_limits(self.settings, (*low.tolist(), *high.tolist())):
+            raise SiteError("outside_limits", f"track {track_id!r} is outside of the site")
+        self.drop(layer, track_id)
+        self._movers.take(layer, track_id, track)
+        self._lay(layer, track_id, pieces)
+
+    def carry(self, now_s: float) -> None:
+        """Carry tracks forward to an instant, and forget what was scanned too long ago."""
+        for (layer, track_id), track in list(self._movers.items()):
+            if track.moves:
+                self._lay(layer, track_id, track.sweep(now_s, self.settings.sweep_s))
+        for name, owner in self._layers.items():
+            decay_s = owner.settings.decay_s
+            if decay_s is None:
+                continue
+            if owner.lost_stamps:
+                for tile, cells in owner.cells.items():
+                    stamps = self._stamps_of(owner, tile)
+                    stamps[(cells != self._base(owner)) & (stamps == math.inf)] = now_s
+                owner.first_stamp_s = min(owner.first_stamp_s, now_s + decay_s)
+                owner.lost_stamps = False
+            if owner.first_stamp_s <= now_s:
+                self._fade(name, owner, now_s - decay_s)
+
+    def next_carry_s(self, now_s: float) -> float | None:
+        """Return when there is something to carry or to forget, after `now_s`; None for never."""
+        due = [
+            now_s if owner.lost_stamps else max(now_s, owner.first_stamp_s)
+            for owner in self._layers.values()
+            if owner.lost_stamps or owner.first_stamp_s < math.inf
+        ]
+        if self._movers.any_moves:
+            due.append(now_s + self.settings.carry_every_s)
+        return min(due, default=None)
+
+    def tracks(self) -> Iterator[tuple[str, str, Track]]:
+        """Yield (layer, id, track) of every obstacle that moves."""
+        for (layer, track_id), track in self._movers.items():
+            yield layer, track_id, track
+
+    def _lay(self, layer: str, track_id: str, pieces: list[Shape]) -> None:
+        """Put the pieces of a sweep where those before lay."""
+        before = self._movers.pieces.get((layer, track_id), 0)
+        inside = [piece for piece in pieces if touches_limits(self.settings, piece.box_m)]
+        for i, piece in enumerate(inside):
+            self._put(layer, piece_id(track_id, i), piece)
+        for i in range(len(inside), before):
+            self._drop(layer, piece_id(track_id, i))
+        self._movers.pieces[layer, track_id] = len(inside)
+        self._changed = True
+
+    def _fade(self, name: str, owner: _Layer, before_s: float) -> None:
+        first_s = math.inf
+        for tile, stamps in list(owner.stamps.items()):
+            new = self._cells_of(owner, tile).copy()
+            _, tile_first_s = fade_kernel(new, stamps, before_s, UNKNOWN)
+            self._write(name, owner, tile, new)
+            if tile_first_s == math.inf:
+                del owner.stamps[tile]
+            first_s = min(first_s, tile_first_s)
+        owner.first_stamp_s = first_s + (owner.settings.decay_s or 0.0)
+
+    # -- cells of a layer -------------------------------------------------------------------
+
+    def _with_cells(self, name: str) -> _Layer:
+        owner = self._layer(name)
+        if owner.settings.outlines_only:
+            text = f"layer {name!r} holds outlines only: no cells, and nothing that moves"
+            raise SiteError("outlines_only", text)
+        return owner
+
+    def _cells_of(self, owner: _Layer, tile: Tile) -> Cells:
+        cells = owner.cells.get(tile)
+        return self._base(owner) if cells is None else cells
+
+    def _base(self, owner: _Layer) -> Cells:
+        """What a tile without cells stands for; no tile is kept for that."""
+        side = self.settings.tile_cells
+        return np.full((side, side), UNKNOWN if owner.settings.unknown_blocks else 0, np.uint8)
+
+    def _stamps_of(self, owner: _Layer, tile: Tile) -> npt.NDArray[np.float64]:
+        if owner.settings.decay_s is None:
+            return np.empty((0, 0))
+        if tile not in owner.stamps:
+            side = self.settings.tile_cells
+            owner.stamps[tile] = np.full((side, side), math.inf)
+        return owner.stamps[tile]
+
+    def _write(self, name: str, owner: _Layer, tile: Tile, new: Cells) -> None:
+        """Make these the cells of a tile, if they are others."""
+        old = self._cells_of(owner, tile)
+        r0, r1, c0, c1 = changed_span_kernel(old, new)
+        if r0 < 0:
+            return
+        if (new == self._base(owner)).all():
+            owner.cells.pop(tile, None)
+        else:
+            owner.cells[tile] = new
+        self._dirty.add(tile)
+        self._dirty_cells.add((name, tile))
+        self._changed = True
+        x, y = self.settings.corner_m(tile)
+        cell = self.settings.cell_m
+        self._boxes.append((x + c0 * cell, y + r0 * cell, x + (c1 + 1) * cell, y + (r1 + 1) * cell))
 
     # -- publishing -------------------------------------------------------------------------
 
@@ -207,6 +356,7 @@ class SiteModel:
         """
         if not self._changed and self._snapshot is not None:
             return self._snapshot
+        self._movers.write({name: layer.index for name, layer in self._layers.items()})
         places = self._publisher.publish(
             self.revision + 1,
             self._dirty,
@@ -220,6 +370,8 @@ class SiteModel:
         self._dirty.clear()
         self._dirty_cells.clear()
         self._changed = False
+        self.changed_m = np.array(self._boxes, np.float64).reshape(-1, 4)
+        self._boxes.clear()
         layers = {name: layer.settings for name, layer in self._layers.items()}
         handle = handle_for(self.revision, self.settings, layers, places)
         self._snapshot = Snapshot(self.memory.buffer, handle, self.settings)
@@ -267,24 +419,34 @@ class SiteModel:
         for name, settings in snapshot.layers().items():
             model._layers[name] = _Layer(len(model._layers), settings)
         for layer, name, shape in snapshot.obstacles():
-            model.put(layer, name, shape)
+            model._put(layer, name, shape)
+        for layer, name, track in snapshot.tracks():
+            model._movers.take(layer, name, track)
+            ids = (piece_id(name, i) for i in itertools.count())
+            index = model._layers[layer].index
+            known = set(model._records.names(index))
+            model._movers.pieces[layer, name] = sum(
+                1 for _ in itertools.takewhile(known.__contains__, ids)
+            )
         for name, owner in model._layers.items():
             for corner, cells in snapshot.cells(name):
                 # By its middle: a corner belongs to its neighbours as well.
                 x, y = (c + snapshot.settings.tile_m / 2 for c in corner)
-                tile = model._tiles_in(x, y, x, y)[0]
+                tile = tiles_in(model.settings, x, y, x, y)[0]
                 owner.cells[tile] = cells.copy()
+            owner.lost_stamps = owner.settings.decay_s is not None and bool(owner.cells)
         others = [Snapshot.attach(memory, each) for each in in_use]
         model._publisher.adopt(snapshot, others, model._filled_tiles(), model._content)
         model.revision = snapshot.revision
         model._snapshot = snapshot
         model._dirty.clear()
+        model._boxes.clear()
         model._changed = False
         return model
 
     def _filled_tiles(self) -> set[Tile]:
         if any(layer.settings.unknown_blocks for layer in self._layers.values()):
-            return set(self._tiles_in(*self.settings.limits_m))
+            return set(tiles_in(self.settings, *self.settings.limits_m))
         return set(self._by_tile).union(*(layer.cells for layer in self._layers.values()))
 
     # -- places -----------------------------------------------------------------------------
@@ -307,47 +469,3 @@ class SiteModel:
                 f"the id of a {what} has 1 to {ID_BYTES_MAX} bytes of text without zeros, not "
                 f"{name[:80]!r}",
             )
-
-    def _tiles_in(self, x0: float, y0: float, x1: float, y1: float) -> list[Tile]:
-        """Tiles that a box touches, its border included."""
-        s = self.settings
-        rows, columns = s.tiles
-        c0 = math.floor((x0 - s.limits_m[0]) / s.tile_m - 1e-9)
-        c1 = math.floor((x1 - s.limits_m[0]) / s.tile_m + 1e-9)
-        r0 = math.floor((y0 - s.limits_m[1]) / s.tile_m - 1e-9)
-        r1 = math.floor((y1 - s.limits_m[1]) / s.tile_m + 1e-9)
-        return [
-            (r, c)
-            for r in range(max(r0, 0), min(r1, rows - 1) + 1)
-            for c in range(max(c0, 0), min(c1, columns - 1) + 1)
-        ]
-
-    def _tiles_of(self, shape: Shape) -> list[Tile]:
-        """Tiles that a shape may touch: those of its box, less what lies beside long edges."""
-        tiles = self._tiles_in(*shape.box_m)
-        if len(tiles) <= 9 or not isinstance(shape, PolygonShape):
-            return tiles
-        side = self.settings.tile_m
-        ring = shape.vertices_m
-        ahead = np.roll(ring, -1, axis=0)
-        length = np.hypot(*(ahead - ring).T)
-        normal = np.column_stack([ring[:, 1] - ahead[:, 1], ahead[:, 0] - ring[:, 0]])
-        normal /= np.maximum(length, 1e-12)[:, None]
-        convex = _is_convex(ring)
-        kept = []
-        for tile in tiles:
-            x, y = self.settings.corner_m(tile)
-            middle = np.array([x + side / 2, y + side / 2])
-            # Inside distance to each edge's line; a convex shape misses a tile that lies beyond
-            # one of them as a whole.
-            inside = ((middle - ring) * normal).sum(axis=1)
-            reach = np.abs(normal).sum(axis=1) * side / 2 + 1e-6
-            if not convex or (inside >= -reach).all():
-                kept.append(tile)
-        return kept
-
-
-def _is_convex(ring: npt.NDArray[np.float64]) -> bool:
-    d = np.roll(ring, -1, axis=0) - ring
-    e = np.roll(d, -1, axis=0)
-    return bool((d[:, 0] * e[:, 1] - d[:, 1] * e[:, 0] >= -1e-12).all())

@@ -13,7 +13,6 @@ import numpy as np
 import numpy.typing as npt
 
 from byway_planning.site.memory import Memory, MemoryFull
-from byway_planning.site.records import Records
 from byway_planning.site.scene import OPEN, field_block_floats
 from byway_planning.site.settings import SiteSettings
 from byway_planning.site.shapes import Shape
@@ -43,7 +42,7 @@ class _Draft:
 class Publisher:
     """See the module text."""
 
-    def __init__(self, settings: SiteSettings, memory: Memory, records: Records) -> None:
+    def __init__(self, settings: SiteSettings, memory: Memory, tables: Mapping[str, Table]) -> None:
         self._settings = settings
         self._memory = memory
         self._rasters = Rasters(settings)
@@ -58,7 +57,7 @@ class Publisher:
         self._tables = {
             **self._of_tiles,
             "far_m": self._rasters.far,
-            **records.tables,
+            **tables,
             "layer_cells": self._layer_cells,
         }
         #: (revision from which on they are not read, blocks, editions), oldest first.
@@ -136,9 +135,17 @@ class Publisher:
             self._swap(draft, "field_of", tile, block if state == 0 else None, state)
 
     def _check_reserve(self, draft: _Draft) -> None:
+        """
+        Let no tile grow that would leave no room to make the site smaller.
+
+        What makes it smaller is written beside the old as well: tables in new editions.
+        """
         taken = sum(map(self._memory.size_of, draft.fresh))
         given_back = sum(map(self._memory.size_of, draft.replaced))
-        if self._memory.is_short and taken > given_back:
+        if taken <= given_back:
+            return
+        largest = max(table.wanted_bytes for table in self._tables.values())
+        if self._memory.is_short or not self._memory.has_room_for(largest):
             raise MemoryFull("the site has little room left, and only for what makes it smaller")
 
     def _swap(
@@ -199,7 +206,7 @@ class Publisher:
             self._memory.give_back(offset)
         self._free_slots += [slot for slot in draft.slots.values() if slot is not None]
         for table in self._tables.values():
-            table.withdraw()
+            table.withdraw(self._memory)
 
     def _commit(self, revision: int, draft: _Draft) -> None:
         for key, slot in draft.slots.items():

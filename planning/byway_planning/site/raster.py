@@ -83,10 +83,10 @@ def resample_kernel(
     """
     Overwrite the cells of a tile that a patch covers.
 
-    A tile cell takes the worst of the patch cells that it overlaps, occupied before unknown
-    before free, so a finer tile repeats and a coarser one is on the safe side. A tile cell that
-    the patch covers only in part can only get worse by it. Borders that agree within a millionth
-    of a patch cell count as equal. 0 free, 1 occupied, 2 unknown.
+    A cell whose middle the patch covers takes the worst of the patch cells that it overlaps,
+    occupied before unknown before free, so a finer tile repeats and a coarser one is on the safe
+    side. One whose middle it does not cover can only become occupied. Borders that agree within
+    a millionth of a patch cell count as equal. 0 free, 1 occupied, 2 unknown.
     """
     slack = 1e-6
     rows, columns = patch.shape
@@ -97,19 +97,62 @@ def resample_kernel(
         y0 = (cy - py) / pcell + r * ratio
         y1 = y0 + ratio
         r0, r1 = max(math.floor(y0 + slack), 0), min(math.ceil(y1 - slack), rows)
-        whole_row = y0 >= -slack and y1 <= rows + slack
+        row_inside = slack < 0.5 * (y0 + y1) < rows - slack
         for c in range(first, last + 1):
             x0 = (cx - px) / pcell + c * ratio
             x1 = x0 + ratio
             c0, c1 = max(math.floor(x0 + slack), 0), min(math.ceil(x1 - slack), columns)
             if r0 >= r1 or c0 >= c1:
                 continue
-            value = 0 if whole_row and x0 >= -slack and x1 <= columns + slack else out[r, c]
+            inside = row_inside and slack < 0.5 * (x0 + x1) < columns - slack
+            value = 0 if inside else out[r, c]
             for i in range(r0, r1):
                 for j in range(c0, c1):
-                    if patch[i, j] == 1 or (patch[i, j] == 2 and value == 0):
+                    if patch[i, j] == 1 or (patch[i, j] == 2 and value == 0 and inside):
                         value = patch[i, j]
             out[r, c] = value
+
+
+@kernel("ru1[:, ::1]", "rf8[::1]", "u1[:, ::1]", "f8", "f8", "f8")
+def resample_turned_kernel(
+    patch: Cells, place: Points, out: Cells, cx: float, cy: float, cell: float
+) -> None:
+    """
+    The same for a patch that is turned about its corner.
+
+    Args:
+        place: x, y of the corner, side of a patch cell, heading of the rows.
+
+    Two squares overlap unless a line along a side of either keeps them apart; the sides of the
+    patch give the range of its cells that are looked at, those of the tile are tested.
+    """
+    slack = 1e-6
+    rows, columns = patch.shape
+    pcell = place[2]
+    c, s = math.cos(place[3]) / pcell, math.sin(place[3]) / pcell
+    half = 0.5 * cell * (abs(c) + abs(s))  # of a tile's cell, along a side of the patch
+    apart = 0.5 * cell / pcell + 0.5 * pcell * (abs(c) + abs(s)) - slack
+    cosine, sine = pcell * c, pcell * s
+    for row in range(out.shape[0]):
+        for column in range(out.shape[1]):
+            dx = cx + (column + 0.5) * cell - place[0]
+            dy = cy + (row + 0.5) * cell - place[1]
+            u, v = c * dx + s * dy, c * dy - s * dx  # of its middle, in cells of the patch
+            j0, j1 = math.floor(u - half + slack), math.ceil(u + half - slack)
+            i0, i1 = math.floor(v - half + slack), math.ceil(v + half - slack)
+            j0, j1, i0, i1 = max(j0, 0), min(j1, columns), max(i0, 0), min(i1, rows)
+            if i0 >= i1 or j0 >= j1:
+                continue
+            inside = slack < u < columns - slack and slack < v < rows - slack
+            value = 0 if inside else out[row, column]
+            for i in range(i0, i1):
+                for j in range(j0, j1):
+                    a, b = j + 0.5 - u, i + 0.5 - v
+                    if abs(cosine * a - sine * b) >= apart or abs(sine * a + cosine * b) >= apart:
+                        continue
+                    if patch[i, j] == 1 or (patch[i, j] == 2 and value == 0 and inside):
+                        value = patch[i, j]
+            out[row, column] = value
 
 
 @kernel()

@@ -14,7 +14,8 @@ import numpy.typing as npt
 from byway_planning.site.shapes import ID_BYTES_MAX, DiscShape, PolygonShape, Shape
 from byway_planning.site.tables import Table
 
-NAME = np.dtype(f"S{ID_BYTES_MAX}")
+#: Room for the number of a piece of a track's sweep.
+NAME = np.dtype(f"S{ID_BYTES_MAX + 8}")
 NOWHERE: Final = (np.inf, np.inf, -np.inf, -np.inf)
 #: A disc without radius, farther away than any site.
 NO_DISC: Final = (1e12, 1e12, 0.0)

@@ -1,5 +1,6 @@
 """Settings of a site and of its layers."""
 
+import math
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -9,6 +10,8 @@ from byway_planning.site.shapes import COORDINATE_M_MAX
 
 #: Tiles a site may have: the tables of one revision stay below 10 MB.
 TILES_MAX = 400_000
+#: Nobody knows where somebody will be in a minute.
+SWEEP_S_MAX = 60.0
 
 
 @dataclass(frozen=True)
@@ -23,6 +26,8 @@ class SiteSettings:
         reach_m: Where the distance field is cut off, at the latest after a tile; beyond it a
             coarse clearance serves. 0 for 3.2 m or eight cells, whichever is more.
         tile_cells: Cells along one side of a tile; a power of two.
+        sweep_s: How far ahead the sweep of a track is blocked.
+        carry_every_s: How often tracks are carried forward.
 
     Raises:
         ValueError: With the field, its value and what to do.
@@ -33,12 +38,14 @@ class SiteSettings:
     origin_m: tuple[float, float] = (0.0, 0.0)
     reach_m: float = 0.0
     tile_cells: int = 64
+    sweep_s: float = 3.0
+    carry_every_s: float = 0.1
 
     def __post_init__(self) -> None:
         # Kernels have one signature: a whole number where a float belongs would be another.
         for name in ("limits_m", "origin_m"):
             object.__setattr__(self, name, tuple(float(value) for value in getattr(self, name)))
-        for name in ("cell_m", "reach_m"):
+        for name in ("cell_m", "reach_m", "sweep_s", "carry_every_s"):
             object.__setattr__(self, name, float(getattr(self, name)))
         if self.reach_m == 0.0:
             object.__setattr__(self, "reach_m", max(3.2, 8.0 * self.cell_m))
@@ -60,6 +67,10 @@ class SiteSettings:
             raise ValueError(f"tile_cells must be 16, 32, 64 or 128, got {self.tile_cells}")
         if not self.cell_m * 4 <= self.reach_m < np.inf:
             raise ValueError(f"reach_m must be finite and at least 4 cells, got {self.reach_m}")
+        if not 0.0 <= self.sweep_s <= SWEEP_S_MAX:
+            raise ValueError(f"sweep_s must be within 0 and {SWEEP_S_MAX:g} s, got {self.sweep_s}")
+        if not 0.0 < self.carry_every_s < math.inf:
+            raise ValueError(f"carry_every_s must be above 0 s, got {self.carry_every_s}")
         rows, columns = self.tiles
         if rows * columns > TILES_MAX:
             raise ValueError(
@@ -112,11 +123,15 @@ class LayerSettings:
         unknown_blocks: Cells that are unknown, and ground where nothing was ever sent, block.
         outlines_only: The layer holds polygons and discs only, never enters a raster, and may be
             left out of a replan (a unit's own outline, say).
+        decay_s: How long holds what a scan says of a cell; then it is unknown. None: for ever.
     """
 
     unknown_blocks: bool = False
     outlines_only: bool = False
+    decay_s: float | None = None
 
     def __post_init__(self) -> None:
+        if self.decay_s is not None and not 0.0 < self.decay_s < math.inf:
+            raise ValueError(f"decay_s must be above 0 s, got {self.decay_s}")
         if self.unknown_blocks and self.outlines_only:
             raise ValueError("a layer of outlines only has no cells that could be unknown")

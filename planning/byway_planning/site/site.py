@@ -7,7 +7,8 @@ import numpy as np
 import numpy.typing as npt
 
 from byway_planning.kernel import ensure_warm
-from byway_planning.site.model import PATCH_CELLS_MAX, SiteModel
+from byway_planning.site.model import SiteModel
+from byway_planning.site.patches import PATCH_CELLS_MAX
 from byway_planning.site.settings import LayerSettings, SiteSettings
 from byway_planning.site.shapes import DiscShape, PolygonShape, Shape
 from byway_planning.site.snapshot import Snapshot

@@ -15,11 +15,13 @@ import numpy.typing as npt
 
 from byway_planning.site.edges import polygon_items
 from byway_planning.site.memory import Memory
+from byway_planning.site.movers import TRACK_COLUMNS, track_from
 from byway_planning.site.records import NAME, NO_DISC, NOWHERE, shape_from
 from byway_planning.site.scene import FAR_PER_TILE, Scene, field_block_floats
 from byway_planning.site.settings import LayerSettings, SiteSettings
 from byway_planning.site.shapes import Shape
 from byway_planning.site.solids import Solids
+from byway_planning.site.tracks import Track
 
 Handle = dict[str, Any]
 Array = npt.NDArray[Any]
@@ -38,6 +40,9 @@ TABLES: Final[dict[str, tuple[npt.DTypeLike, int]]] = {
     "discs": (np.float64, 3),
     "disc_layers": (np.int32, 0),
     "disc_names": (NAME, 0),
+    "tracks": (np.float64, TRACK_COLUMNS),
+    "track_names": (NAME, 0),
+    "track_corners": (np.float64, 2),  # of their outlines, in their own frames
     "layer_cells": (np.int64, 3),  # layer (-1: free row), tile, offset of its tile_cells^2 cells
 }
 
@@ -53,7 +58,8 @@ class Snapshot:
         self.revision: int = handle["revision"]
         self.settings = settings or _settings_from(handle["settings"])
         self._layers = {
-            name: LayerSettings(unknown, outlines) for name, unknown, outlines in handle["layers"]
+            name: LayerSettings(unknown, outlines, decay_s)
+            for name, unknown, outlines, decay_s in handle["layers"]
         }
         self._names = list(self._layers)
         #: What others derive from this snapshot and want to find again; dies with it.
@@ -105,6 +111,14 @@ class Snapshot:
             kind, row, self.table("vertices"), self.table("starts"), self.table("discs")
         )
 
+    def tracks(self) -> Iterator[tuple[str, str, Track]]:
+        """Yield (layer, id, track) of every obstacle that moves."""
+        rows = self.table("tracks")
+        names, corners = self.table("track_names"), self.table("track_corners")
+        for row, name in zip(rows, names, strict=True):
+            layer, track = track_from(row, corners)
+            yield self._names[layer], bytes(name).decode(), track
+
     def cells(self, layer: str) -> Iterator[tuple[tuple[float, float], npt.NDArray[np.uint8]]]:
         """Yield (lower left corner, cells (n, n)) of every tile that a layer has cells in."""
         index = self._names.index(layer)
@@ -126,7 +140,8 @@ class Snapshot:
         found = {}
         for name, (offset, rows) in self.handle["tables"].items():
             dtype, columns = TABLES[name]
-            found[name] = offset, np.dtype(dtype).itemsize * rows * max(columns, 1)
+            # An empty table has a block as well.
+            found[name] = offset, max(np.dtype(dtype).itemsize * rows * max(columns, 1), 1)
         return found
 
     def blocks(self) -> dict[int, int]:
@@ -247,7 +262,7 @@ class Snapshot:
 
 def _settings_from(told: Mapping[str, Any]) -> SiteSettings:
     limits_m, origin_m = tuple(told["limits_m"]), tuple(told["origin_m"])
-    return SiteSettings(limits_m, told["cell_m"], origin_m, told["reach_m"], told["tile_cells"])
+    return SiteSettings(**{**told, "limits_m": limits_m, "origin_m": origin_m})
 
 
 def handle_for(
@@ -263,7 +278,8 @@ def handle_for(
             "revision": revision,
             "settings": {field.name: getattr(settings, field.name) for field in fields(settings)},
             "layers": [
-                [name, layer.unknown_blocks, layer.outlines_only] for name, layer in layers.items()
+                [name, layer.unknown_blocks, layer.outlines_only, layer.decay_s]
+                for name, layer in layers.items()
             ],
             "tables": {name: list(place) for name, place in tables.items()},
         },

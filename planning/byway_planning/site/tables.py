@@ -126,13 +126,21 @@ class Table:
             memory.give_back(edition.offset)
             edition = None
         if edition is None:
-            size = rows.nbytes + rows.nbytes // 4  # room to grow in
+            size = rows.nbytes + rows.nbytes // 4  # room to grow in, if there is so much
+            if not memory.has_room_for(size):
+                size = rows.nbytes
             edition = Edition(memory.take(size), size)
         self._next = edition
         flat = rows.reshape(-1).view(np.uint8)
         block = memory.buffer[edition.offset : edition.offset + len(flat)]
         copy_pages_kernel(flat, self._changed_in, edition.number, PAGE_BYTES, block)
         return edition.offset
+
+    @property
+    def wanted_bytes(self) -> int:
+        """What the next edition but one takes; nothing if a block for it is at hand."""
+        fits = any(spare.size >= self.view.nbytes for spare in self._spares)
+        return 0 if fits else self.view.nbytes
 
     def commit(self) -> Edition | None:
         """Make the prepared edition the table's own; return the one it replaces, if any."""
@@ -144,11 +152,15 @@ class Table:
         self._is_changed = False
         return old
 
-    def withdraw(self) -> None:
-        """Take a prepared edition back."""
-        if self._next is not None:
+    def withdraw(self, memory: Memory) -> None:
+        """Take a prepared edition back; one that was made for it leaves no trace."""
+        if self._next is None:
+            return
+        if self._next.number:
             self._spares.append(self._next)
-            self._next = None
+        else:
+            memory.give_back(self._next.offset)
+        self._next = None
 
     def give_back(self, edition: Edition, memory: Memory) -> None:
         """Take in an edition that nobody reads any more."""

@@ -78,7 +78,7 @@ def resampled(
     out = tile.copy()
     rows, columns = patch.shape
     rank = {0: 0, 2: 1, 1: 2}
-    slack = 2e-6 * cell
+    slack = 1e-6 * cell
     for r in range(tile.shape[0]):
         for c in range(tile.shape[1]):
             seen = [
@@ -94,14 +94,10 @@ def resampled(
             ]
             if not seen:
                 continue
-            whole = (
-                r * cell_m >= corner[1] - slack
-                and c * cell_m >= corner[0] - slack
-                and (r + 1) * cell_m <= corner[1] + rows * cell + slack
-                and (c + 1) * cell_m <= corner[0] + columns * cell + slack
-            )
+            x, y = (c + 0.5) * cell_m - corner[0], (r + 0.5) * cell_m - corner[1]
+            inside = slack < x < columns * cell - slack and slack < y < rows * cell - slack
             worst = max(seen, key=lambda value: rank[value])
-            out[r, c] = worst if whole else max(worst, int(tile[r, c]), key=lambda v: rank[v])
+            out[r, c] = worst if inside else 1 if worst == 1 else tile[r, c]
     return out
 
 

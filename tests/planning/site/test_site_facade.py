@@ -12,7 +12,7 @@ from tests.planning.site.site_twins import (
 )
 
 from byway_planning.site import Site, SiteError
-from byway_planning.site.model import PATCH_CELLS_MAX
+from byway_planning.site.patches import PATCH_CELLS_MAX
 from byway_planning.site.scene import OPEN, SOLID
 
 KILN = [(10.0, 5.0), (18.0, 5.0), (18.0, 9.0), (10.0, 9.0)]

@@ -24,7 +24,7 @@ from byway_planning.site import (
     SiteModel,
     SiteSettings,
 )
-from byway_planning.site.model import PATCH_CELLS_MAX
+from byway_planning.site.patches import PATCH_CELLS_MAX
 from byway_planning.site.scene import OPEN, SOLID
 from byway_planning.site.shapes import ID_BYTES_MAX
 

@@ -48,7 +48,7 @@ def test_every_edition_reads_as_the_table_was(steps):
         elif what in ("publish", "fail"):
             offset = table.prepare(memory)
             if what == "fail":
-                table.withdraw()
+                table.withdraw(memory)
                 continue
             old = table.commit()
             if old is not None:
@@ -124,7 +124,7 @@ def test_a_table_that_finds_no_room_is_published_later():
     table.append(np.ones(5000, np.uint8))
     with pytest.raises(MemoryFull):
         table.prepare(memory)
-    table.withdraw()
+    table.withdraw(memory)
     table.empty()
     table.append(np.full(100, 3, np.uint8))
     offset = published(table, memory)
