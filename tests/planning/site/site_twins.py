@@ -104,8 +104,8 @@ def expected_field(filled: npt.NDArray[np.bool_], cell_m: float, reach_cells: in
     return distances
 
 
-def buckets_of(scene: Scene) -> dict[tuple[int, int, int], tuple[int, set[tuple[float, ...]]]]:
-    """What is around the reference point and the set of items, by tile and bucket."""
+def buckets_of(scene: Scene) -> dict[tuple[int, int, int], tuple[int, list[list[float]]]]:
+    """What is around the reference point and the items in order, by tile and bucket."""
     found = {}
     per = scene.bucket_side**2
     for r, c in tiles_of(scene):
@@ -116,9 +116,7 @@ def buckets_of(scene: Scene) -> dict[tuple[int, int, int], tuple[int, set[tuple[
         for b in range(per):
             first, last = (int(scene.wholes[at + b + i]) for i in range(2))
             rows = scene.numbers[base + 5 * first : base + 5 * last].reshape(-1, 5)
-            items = {tuple(float(v) for v in row) for row in rows}
-            assert len(items) == len(rows), "an item is listed twice in one bucket"
-            found[r, c, b] = int(scene.wholes[at + per + 1 + b]), items
+            found[r, c, b] = int(scene.wholes[at + per + 1 + b]), sorted(rows.tolist())
     return found
 
 

@@ -234,10 +234,10 @@ def test_what_changed_is_told_in_boxes() -> None:
         [3.0, 2.0, 4.0, 3.0],
         [4.5, 4.5, 5.5, 5.5],
     ]
-    model.patch("fixed", (1.0, 5.0), 0.1, np.eye(3, dtype=np.uint8))
+    model.patch("fixed", (1.3, 5.0), 0.1, np.eye(3, dtype=np.uint8))
     model.publish()
     ((x0, y0, x1, y1),) = model.changed_m.tolist()
-    assert (x0, y0, x1, y1) == pytest.approx((1.0, 5.0, 1.3, 5.3))
-    model.patch("fixed", (1.0, 5.0), 0.1, np.eye(3, dtype=np.uint8))
+    assert (x0, y0, x1, y1) == pytest.approx((1.3, 5.0, 1.6, 5.3))
+    model.patch("fixed", (1.3, 5.0), 0.1, np.eye(3, dtype=np.uint8))
     revision = model.revision
     assert model.publish().revision == revision  # the same again is no change
