@@ -21,6 +21,7 @@ from byway.messages import Message, Site
 from byway.packed import Bytes, Column
 from bywayd.core.events import Outcome, Peer
 from bywayd.core.instants import Instant
+from bywayd.core.kept import ClerkEffect
 
 # -- to clients, sources, listeners ------------------------------------------------------------
 
@@ -147,6 +148,8 @@ class LayerFlags:
 
     unknown_blocks: bool = False
     outlines_only: bool = False
+    #: What is acknowledged survives the daemon: the clerk's business, not the surveyor's.
+    durable: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -314,6 +317,8 @@ class Stop:
     """Everything open has been answered: flush the sockets and end. The last effect."""
 
     why: str
+    #: The daemon cannot do what it is there for, and whoever started it is to be told.
+    is_failure: bool = False
 
 
 Effect: TypeAlias = (
@@ -334,6 +339,7 @@ Effect: TypeAlias = (
     | WatchRoute
     | MoveGuard
     | Unwatch
+    | ClerkEffect
     | Log
     | Wake
     | Stop

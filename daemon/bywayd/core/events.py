@@ -5,7 +5,7 @@ Three kinds of origin:
 
 * clients and sources, through the two ROUTER sockets (`Received`, `Unreadable`, `Undeliverable`),
 * the crew, through the socket pairs and pidfds (`Worker...`, `Surveyor...`, `SnapshotReady`,
-  `GuardSeen`, `SiteDescribed`),
+  `GuardSeen`, `SiteDescribed`; those of the clerk are in `kept`),
 * the runtime itself (`Started`, `Tick`, `Vitals`, `StopAsked`).
 
 Rules for the runtime:
@@ -30,6 +30,7 @@ from byway import frames
 from byway.errors import SenderFault
 from byway.messages import ErrorMessage, SiteIs
 from byway.packed import Bytes
+from bywayd.core.kept import ClerkEvent
 
 #: What planning came to. Names as in the protocol; an outcome is never an error.
 OutcomeKind: TypeAlias = Literal[
@@ -354,6 +355,7 @@ Event: TypeAlias = (
     | GuardSeen
     | SiteDescribed
     | SurveyorLost
+    | ClerkEvent
     | Started
     | Tick
     | Vitals

@@ -7,7 +7,7 @@ called again. The parts:
 
     intake, rerouting --> dispatch --> answering --> outbox
        \\                  \\--> room, roster (workers), snapshots
-        \\--> surveying --> ledger --> sources, layers, expiries
+        \\--> surveying, keeping --> ledger --> sources, layers, expiries
                    \\--> guarding --> guards
 """
 
@@ -17,7 +17,7 @@ from collections.abc import Callable
 from typing import Any, Final
 
 from byway import frames, messages
-from bywayd.core import events, reports
+from bywayd.core import events, kept, reports
 from bywayd.core.alarms import Alarms
 from bywayd.core.answering import Answering
 from bywayd.core.dispatch import Dispatch
@@ -30,6 +30,7 @@ from bywayd.core.health import Health
 from bywayd.core.instants import Duration, Instant
 from bywayd.core.intake import Intake
 from bywayd.core.invariant import invariant
+from bywayd.core.keeping import Keeping
 from bywayd.core.ledger import Ledger
 from bywayd.core.outbox import Outbox
 from bywayd.core.rerouting import Rerouting
@@ -61,9 +62,11 @@ class Front:
         self.outbox = Outbox(epoch, settings.units_max)
         self.health = Health()
         self.snapshots = Snapshots()
-        self.workers = Roster("worker", settings.workers, _manners(settings, surveyor=False))
+        self.workers = Roster("worker", settings.workers, _manners(settings))
         self.surveyors = Roster("surveyor", 1, _manners(settings, surveyor=True))
+        self.clerks = Roster("clerk", int(settings.keeps), _manners(settings, clerk=True))
         self.ledger = Ledger(settings, self.outbox, self.health)
+        self.keeping = Keeping(settings, self.outbox, self.health, self.clerks, self.ledger)
         self.guards = Guards(settings, self.outbox, self.health)
         self.guarding = Guarding(settings, self.outbox, self.health, self.guards)
         self.surveying = Surveying(
@@ -118,6 +121,7 @@ class Front:
         self._wake: Instant | None = None
         #: Why the daemon is ending, once it is.
         self._stop_why = ""
+        self._is_failing = False
         self._stopped = False
         self._on: Final = self._handlers()
 
@@ -139,6 +143,13 @@ class Front:
             events.GuardSeen: self._guard_seen,
             events.SiteDescribed: self._site_described,
             events.SurveyorLost: self._surveyor_lost,
+            kept.ClerkReady: self.keeping.ready,
+            kept.ClerkAlive: lambda event, now: self.clerks.heard(event.clerk, now),
+            kept.ClerkHindered: self._clerk_hindered,
+            kept.ClerkUnfit: self._clerk_unfit,
+            kept.Recalled: self.keeping.recalled,
+            kept.ChangesKept: self.keeping.kept,
+            kept.ClerkLost: lambda event, now: self.keeping.lost(event.clerk, event.why, now),
             events.Started: self._started,
             events.Tick: self._tick,
             events.Vitals: self._vitals,
@@ -273,12 +284,25 @@ class Front:
     def _surveyor_lost(self, event: events.SurveyorLost, now: Instant) -> None:
         self.surveying.lost(event.surveyor, event.why, now)
 
+    # -- from the clerk -----------------------------------------------------------------------
+
+    def _clerk_hindered(self, event: kept.ClerkHindered, now: Instant) -> None:
+        self.clerks.heard(event.clerk, now)
+        self.keeping.hindered(event, now)
+
+    def _clerk_unfit(self, event: kept.ClerkUnfit, now: Instant) -> None:
+        self.clerks.heard(event.clerk, now)
+        if self.keeping.unfit(event):
+            self._is_failing = True
+            self._stop_asked(events.StopAsked(event.why), now)
+
     # -- from the runtime ---------------------------------------------------------------------
 
     def _started(self, event: events.Started, now: Instant) -> None:
         invariant(self.began is None, "the front is started once")
         self.began = now
         self.wall = (event.wall_s, now)
+        self.clerks.open(now)
         self.surveyors.open(now)
         self.workers.open(now)
         self._alarms.set("health", now + self._health_every)
@@ -313,6 +337,8 @@ class Front:
     def _settle(self, now: Instant) -> None:
         for order in self.surveyors.due(now):
             self._carry_out_surveyor(order)
+        for order in self.clerks.due(now):
+            self.keeping.carry_out(order)
         for order in self.workers.due(now):
             self._carry_out(order, now)
         self.ledger.settle(now)
@@ -322,7 +348,9 @@ class Front:
         while self.rerouting.settle(now):
             self.dispatch.settle(now)
         self.surveying.settle(now)
-        is_drained = not self.answering.open and self.ledger.pending == 0
+        self.keeping.settle(now)
+        unsettled = self.ledger.pending + self.keeping.pending
+        is_drained = self._is_failing or (not self.answering.open and unsettled == 0)
         while (alarm := self._alarms.pop_due(now)) is not None:
             if alarm == "health":
                 self._alarms.set("health", now + self._health_every)
@@ -353,13 +381,15 @@ class Front:
     def _end(self, now: Instant) -> None:
         self.dispatch.stop(now)
         self._stopped = True
-        self.outbox.log("info", "front.stopped", why=self._stop_why, pending=self.ledger.pending)
-        self.outbox.add(Stop(self._stop_why))
+        pending = self.ledger.pending + self.keeping.pending
+        self.outbox.log("info", "front.stopped", why=self._stop_why, pending=pending)
+        self.outbox.add(Stop(self._stop_why, self._is_failing))
 
     def _set_wake(self) -> None:
         found = (
             self.workers.next_alarm(),
             self.surveyors.next_alarm(),
+            self.clerks.next_alarm(),
             self.ledger.next_alarm(),
             self.dispatch.next_alarm(),
             self.guards.next_alarm(),
@@ -391,7 +421,9 @@ class Front:
             self.snapshots,
             self.workers,
             self.surveyors,
+            self.clerks,
             self.ledger,
+            self.keeping,
             self.surveying,
             self.answering,
             self.dispatch,
@@ -404,8 +436,9 @@ class Front:
             part.check()
 
 
-def _manners(settings: FrontSettings, *, surveyor: bool) -> Manners:
+def _manners(settings: FrontSettings, *, surveyor: bool = False, clerk: bool = False) -> Manners:
     silence_s = settings.surveyor_silence_s if surveyor else settings.worker_silence_s
+    silence_s = settings.clerk_silence_s if clerk else silence_s
     return Manners(
         start_time_max=Duration.of_s(settings.start_time_max_s),
         silence=Duration.of_s(silence_s),

@@ -100,6 +100,22 @@ class FrontSettings:
     #: Obstacles that may have an expiry at a time.
     expiries_max: int = 100_000
 
+    # -- what is kept --------------------------------------------------------------------------
+
+    #: Whether there is a file for durable layers.
+    keeps: bool = False
+    #: Where it is, for whoever is told that there is none, or that it is full.
+    keep_setting: str = "[keep] file"
+    #: How large it may grow: obstacles and patches beyond that are refused.
+    keep_bytes_max: int = 256 * 1024 * 1024
+    #: Patches that no newer one covers: all of them have to be laid again at the start.
+    keep_patches_max: int = 4096
+    #: Bytes of changes that are visible and wait for the disk.
+    keep_pending_bytes_max: int = 64 * 1024 * 1024
+    #: A clerk that says nothing for this long while it owes an answer is killed: a disk may take
+    #: its time for one commit.
+    clerk_silence_s: float = 20.0
+
     # -- guards --------------------------------------------------------------------------------
 
     #: Guards that may stand at a time: each is looked at on every revision.

@@ -30,6 +30,7 @@ Timed: TypeAlias = Literal[
     "recheck_s",  # from sending a route to be checked on a newer revision to the verdict
     "alert_s",  # from the acknowledgement of a revision to an alert that it brought about
     "visible_s",  # from the arrival of a change to the snapshot that has it
+    "kept_s",  # ... to its being on the disk, for durable layers
     "late_s",  # by how much an answer missed the end of its budget
 ]
 TIMED: Final[tuple[Timed, ...]] = (
@@ -39,6 +40,7 @@ TIMED: Final[tuple[Timed, ...]] = (
     "recheck_s",
     "alert_s",
     "visible_s",
+    "kept_s",
     "late_s",
 )
 

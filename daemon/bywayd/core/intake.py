@@ -187,8 +187,12 @@ class Intake:
 
     @property
     def is_warm(self) -> bool:
-        """Whether there has ever been a snapshot, and a worker to plan on it."""
-        return self._snapshots.current is not None and self._workers.was_ready
+        """Whether the site is there, with all that is kept of it, and a worker to plan on it."""
+        return (
+            self._snapshots.current is not None
+            and self._workers.was_ready
+            and self._ledger.is_complete
+        )
 
     def end(
         self,

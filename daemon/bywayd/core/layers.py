@@ -86,6 +86,7 @@ class Layers:
         outlines_only: bool | None,
         lease_s: float | None,
         now: Instant,
+        durable: bool | None = None,
     ) -> Layer | No:
         """
         Give a layer to a source, making it if there is none of that name.
@@ -98,11 +99,16 @@ class Layers:
             if len(self._layers) >= self._count_max:
                 text = f"the site has {len(self._layers)} layers, the most is {self._count_max}"
                 return No("too_large", text, {"layers_max": self._count_max})
-            layer = Layer(name, LayerFlags(bool(unknown_blocks), bool(outlines_only)))
+            flags = LayerFlags(bool(unknown_blocks), bool(outlines_only), bool(durable))
+            layer = Layer(name, flags)
             self._layers[name] = layer
         elif layer.owner not in (None, source) and layer.lease is not None:
             return self._not_owner(layer)
-        for flag, told in (("unknown_blocks", unknown_blocks), ("outlines_only", outlines_only)):
+        for flag, told in (
+            ("unknown_blocks", unknown_blocks),
+            ("outlines_only", outlines_only),
+            ("durable", durable),
+        ):
             is_so = getattr(layer.flags, flag)
             if told is not None and told != is_so:
                 text = f"layer {name} has {flag} {is_so}, and that cannot be changed"
@@ -113,6 +119,19 @@ class Layers:
             self._alarms.clear(name)
         else:
             self._alarms.set(name, now + layer.lease)
+        return layer
+
+    def recall(self, name: str, flags: LayerFlags) -> Layer:
+        """
+        Return the layer that the clerk remembers, as the settings have it if they name it.
+
+        Nobody owns it. It is made even where there are as many layers as there may be: what it
+        holds must not be forgotten.
+        """
+        layer = self._layers.get(name)
+        if layer is None:
+            layer = self._layers[name] = Layer(name, flags)
+            self._count_max = max(self._count_max, len(self._layers))
         return layer
 
     def to_change(self, source: str, name: str, now: Instant) -> Layer | No:

@@ -5,7 +5,8 @@ Changes are taken in by number and without gaps, wait in one line for the survey
 batches, and are acknowledged, cumulatively for each source, when the snapshot that contains them
 is current: so every replan sent after an acknowledgement sees what was acknowledged. A change
 that is refused, here or by the surveyor, counts as decided like any other, and the source is told
-which one and why before the acknowledgement passes it.
+which one and why before the acknowledgement passes it. Where a change is one of a durable layer,
+the acknowledgement waits for the disk as well.
 
 A batch whose surveyor died is handed out again as it was; changes can be applied twice.
 """
@@ -21,47 +22,22 @@ from byway.errors import SenderFault
 from byway.messages import Acknowledged, Refused, Resend
 from byway.packed import Bytes
 from bywayd.core.effects import Change
+from bywayd.core.entries import Batch, Entry
 from bywayd.core.events import Peer, Refusal
 from bywayd.core.expiries import Expiries
 from bywayd.core.front_settings import FrontSettings
 from bywayd.core.health import Health
 from bywayd.core.instants import Duration, Instant
 from bywayd.core.invariant import invariant, known
+from bywayd.core.keepline import KeepLine
+from bywayd.core.keepsakes import keepsake_of, recalled_entry, why_never_kept, why_not_kept
+from bywayd.core.kept import Keepsake, Recollection
 from bywayd.core.layers import Layer, Layers, No
 from bywayd.core.outbox import Outbox
 from bywayd.core.sources import Source, Sources
 
 #: Obstacles that expire together and go to the surveyor in one change.
 _DROP_IDS_MAX = 1000
-
-
-@dataclass(frozen=True, slots=True)
-class Entry:
-    """One change in the line: of a source, or of the ledger itself when something expires."""
-
-    arrived: Instant
-    #: None for the ledger's own.
-    source: str | None
-    number: int
-    #: What the surveyor is to do; None when it is refused already.
-    change: Change | None
-    no: No | None = None
-    #: Obstacles put by it, if its layer has expiries.
-    ids: tuple[str, ...] = ()
-    expires_at: Instant | None = None
-    size_bytes: int = 0
-
-
-@dataclass(frozen=True, slots=True)
-class Batch:
-    """Entries that are decided together, in order."""
-
-    entries: tuple[Entry, ...]
-
-    @property
-    def changes(self) -> tuple[Change, ...]:
-        """What the surveyor is to do, in order."""
-        return tuple(entry.change for entry in self.entries if entry.change is not None)
 
 
 @dataclass(frozen=True, slots=True)
@@ -89,6 +65,12 @@ class Ledger:
         self.sources = Sources(settings.sources_max, limits.refusals_kept)
         self.layers = Layers(settings.layers, settings.layers_max, self._heard_at)
         self._expiries = Expiries(settings.expiries_max)
+        #: Visible, and not on the disk yet.
+        self.keepline = KeepLine()
+        #: Whether sources are listened to: not before all that is kept has been recalled.
+        self.is_open = not settings.keeps
+        #: Recalled, and not visible yet.
+        self._recalled = 0
         #: Taken in and not handed out yet, in order of arrival over all sources.
         self._line: deque[Entry] = deque()
         #: Handed out and not decided.
@@ -159,7 +141,8 @@ class Ledger:
     def _has_room(self, source: Source, size: int) -> bool:
         settings = self._settings
         return (
-            source.undecided < settings.source_window
+            self.is_open
+            and source.undecided < settings.source_window
             and self._pending_bytes + size <= settings.pending_bytes_max
         )
 
@@ -195,6 +178,9 @@ class Ledger:
     def _entry(
         self, source: Source, message: messages.Change, packed: Bytes, size: int, now: Instant
     ) -> Entry | No:
+        no = why_never_kept(message, self._settings)
+        if no is not None:
+            return no
         match message:
             case messages.Claim() | messages.ReplaceLayer():
                 layer = self.layers.claim(
@@ -204,11 +190,16 @@ class Ledger:
                     message.outlines_only,
                     message.lease_s,
                     now,
+                    message.durable,
                 )
             case _:
                 layer = self.layers.to_change(source.name, message.layer, now)
         if isinstance(layer, No):
             return layer
+        if layer.flags.durable:
+            no = why_not_kept(message, self.keepline, self._settings)
+            if no is not None:
+                return no
         return self._entry_for(layer, source, message, packed, size, now)
 
     def _entry_for(
@@ -306,6 +297,8 @@ class Ledger:
         self._out = None
         refused = {refusal.index: refusal for refusal in refusals}
         last: dict[str, int] = {}
+        #: Of the last change of each source that is to be kept.
+        positions: dict[str, int] = {}
         index = 0
         for entry in batch.entries:
             no = entry.no
@@ -314,18 +307,29 @@ class Ledger:
                 no = None if found is None else No(found.code, found.text, found.facts)
                 self._settle_change(entry, entry.change, no, now)
                 index += 1
+                if no is None and entry.change.settings.durable and not entry.is_recalled:
+                    position = self.keepline.append(keepsake_of(entry, entry.change))
+                    if entry.source is not None:
+                        positions[entry.source] = position
             if entry.source is not None:
                 last[entry.source] = entry.number
                 self._tell(entry.source, entry, no, now)
         self._revision = revision
         for name, number in last.items():
             source = self._source(name)
-            source.decided = number
-            self._acknowledge(source, revision)
+            if source.settle(number, positions.get(name, 0), self.keepline.kept_to):
+                self._acknowledge(source, revision)
 
     def _settle_change(self, entry: Entry, change: Change, no: No | None, now: Instant) -> None:
         self._pending_bytes -= entry.size_bytes
         name = change.layer
+        if entry.is_recalled:
+            self._recalled -= 1
+            if no is not None:
+                self._health.count("recalls_refused_total")
+                self._outbox.log(
+                    "error", "keep.recall_refused", layer=name, code=no.code, text=no.text
+                )
         if change.what in ("put", "replace"):
             self._expiries.decided(
                 name,
@@ -340,6 +344,12 @@ class Ledger:
             layer = self._layer(name)
             layer.is_visible = True
             layer.changed_at = now
+
+    def kept(self) -> None:
+        """More of the keep line is on the disk: some sources have waited for that."""
+        for source in self.sources:
+            if source.let_go(self.keepline.kept_to):
+                self._acknowledge(source, self._revision)
 
     def _tell(self, name: str, entry: Entry, no: No | None, now: Instant) -> None:
         if no is None:
@@ -369,6 +379,25 @@ class Ledger:
         self._outbox.reply(source.peer, None, message)
 
     # -- time ----------------------------------------------------------------------------------
+
+    def recall(self, found: Sequence[Recollection], now: Instant) -> None:
+        """Take in what the clerk has kept since the last life of the daemon."""
+        for recollection in found:
+            change = recollection.change
+            layer = self.layers.recall(change.layer, change.settings)
+            if layer.flags.durable:
+                self._append(recalled_entry(recollection, layer, self._expiries, now))
+                self._recalled += 1
+                self._health.count("recalled_total")
+            elif change.what == "claim":
+                # The settings say so: what it held is not to come back some other day either.
+                self._outbox.log("warning", "keep.layer_forgotten", layer=layer.name)
+                self.keepline.append(Keepsake(Change("claim", layer.name, layer.flags)))
+
+    @property
+    def is_complete(self) -> bool:
+        """Whether everything that was kept is visible."""
+        return self.is_open and self._recalled == 0
 
     def settle(self, now: Instant) -> None:
         """Drop what has expired; take layers away whose owners have been silent for too long."""
@@ -408,7 +437,7 @@ class Ledger:
 
     @property
     def pending(self) -> int:
-        """Changes that are not decided."""
+        """Changes that are not visible or refused."""
         return len(self._line) + (0 if self._out is None else len(self._out.entries))
 
     def statistics(self) -> LedgerStatistics:
@@ -426,7 +455,12 @@ class Ledger:
         self.sources.check()
         self.layers.check()
         self._expiries.check()
+        self.keepline.check()
         entries = [*(() if self._out is None else self._out.entries), *self._line]
+        invariant(
+            self._recalled == sum(entry.is_recalled for entry in entries),
+            "what is recalled becomes visible",
+        )
         invariant(
             self._pending_bytes == sum(entry.size_bytes for entry in entries),
             "the size of what is pending is known",
@@ -436,7 +470,7 @@ class Ledger:
             if entry.source is not None:
                 undecided.setdefault(entry.source, []).append(entry.number)
         for source in self.sources:
-            numbers = list(range(source.decided + 1, source.have + 1))
+            numbers = list(range(source.settled + 1, source.have + 1))
             invariant(
                 undecided.pop(source.name, []) == numbers, "every number taken in is decided once"
             )

@@ -11,6 +11,7 @@ from bywayd.core.front_settings import FrontSettings
 from bywayd.core.guards import Guards
 from bywayd.core.health import Health
 from bywayd.core.instants import Instant
+from bywayd.core.keeping import Keeping
 from bywayd.core.ledger import Ledger
 from bywayd.core.outbox import error_of
 from bywayd.core.rerouting import Rerouting
@@ -27,6 +28,7 @@ class Reported(Protocol):
     workers: Roster
     surveyors: Roster
     ledger: Ledger
+    keeping: Keeping
     surveying: Surveying
     answering: Answering
     dispatch: Dispatch
@@ -89,6 +91,7 @@ def health(front: Reported, now: Instant) -> HealthIs:
         "guards_blocked": sum(guard.told is not None for guard in front.guards),
         "reroutes": len(front.rerouting),
         "revisions_pinned": len(front.snapshots.pins()),
+        **front.keeping.counts(),
         **({} if vitals is None else vitals.facts),
     }
     memory = {
@@ -96,6 +99,8 @@ def health(front: Reported, now: Instant) -> HealthIs:
         "changes_pending": ledger.pending_bytes,
         "answers_kept": front.answering.answers.size_bytes,
         "guards": front.guards.size_bytes,
+        "keep_pending": front.ledger.keepline.size_bytes,
+        "kept": front.ledger.keepline.stock.size_bytes,
         **({} if vitals is None else vitals.memory_bytes),
     }
     waiting = len(front.dispatch.room)
@@ -118,6 +123,7 @@ def health(front: Reported, now: Instant) -> HealthIs:
                 age_s=None if layer.changed_at is None else now.since(layer.changed_at).s,
                 lease_left_s=front.ledger.layers.lease_left_s(layer, now),
                 obstacles=front.surveying.obstacles.get(layer.name, 0),
+                durable=layer.flags.durable,
             )
             for layer in front.ledger.layers
         },

@@ -8,7 +8,7 @@ of a number is remembered long enough to be told again in the same words.
 
 from __future__ import annotations
 
-from collections import OrderedDict
+from collections import OrderedDict, deque
 from collections.abc import Iterator
 from dataclasses import dataclass, field
 
@@ -28,8 +28,12 @@ class Source:
     heard_at: Instant
     #: The last number taken in, without a gap before it.
     have: int = 0
-    #: The last number decided: visible or refused, and so are all before it.
+    #: The last number decided: visible (and on the disk, if its layer is durable) or refused,
+    #: and so are all before it.
     decided: int = 0
+    #: Numbers that are visible or refused and wait for the disk, each with the position in the
+    #: keep line that it waits for. Both rise.
+    held: deque[tuple[int, int]] = field(default_factory=deque)
     #: What was refused lately, by number. Bounded.
     refusals: OrderedDict[int, Refused] = field(default_factory=OrderedDict)
     #: The number that was asked for last, and when.
@@ -40,6 +44,35 @@ class Source:
     def undecided(self) -> int:
         """Changes taken in and not decided."""
         return self.have - self.decided
+
+    @property
+    def settled(self) -> int:
+        """The last number that is visible or refused, whatever the disk has of it."""
+        return self.held[-1][1] if self.held else self.decided
+
+    def settle(self, number: int, position: int, kept_to: int) -> bool:
+        """
+        Note that all up to a number are visible or refused; True if they are decided by that.
+
+        Args:
+            position: In the keep line, of the last of them that is to be kept; 0 if none is.
+            kept_to: How far the keep line has got.
+        """
+        if self.held and position <= self.held[-1][0]:
+            self.held[-1] = (self.held[-1][0], number)
+        elif position > kept_to:
+            self.held.append((position, number))
+        else:
+            self.decided = number
+            return True
+        return False
+
+    def let_go(self, kept_to: int) -> bool:
+        """Decide what is on the disk by now; True if anything is."""
+        was = self.decided
+        while self.held and self.held[0][0] <= kept_to:
+            self.decided = self.held.popleft()[1]
+        return self.decided > was
 
     def remember_refusal(self, refused: Refused, count_max: int) -> None:
         """Keep a refusal to tell it again; the oldest are forgotten."""
@@ -96,5 +129,8 @@ class Sources:
         """Stop with a `Defect` if numbers are out of order, or memory is not bounded."""
         invariant(len(self._sources) <= self._count_max, "sources are bounded")
         for source in self._sources.values():
-            invariant(0 <= source.decided <= source.have, "numbers are decided in order")
+            numbers = [source.decided, *(number for _, number in source.held), source.have]
+            invariant(numbers == sorted(numbers), "numbers are decided in order")
+            positions = [position for position, _ in source.held]
+            invariant(positions == sorted(set(positions)), "what is held is held in order")
             invariant(len(source.refusals) <= self._refusals_max, "refusals are forgotten")
