@@ -66,6 +66,24 @@ class SiteSection(Section):
 class LayerSection(Section):
     unknown_blocks: bool = False
     outlines_only: bool = False
+    durable: bool = False
+
+
+class KeepSection(Section):
+    #: Where durable layers outlast the daemon; nothing is kept without it.
+    file: str | None = None
+    bytes_max: Annotated[int, Field(ge=1024 * 1024, le=64 * 1024**3)] = 256 * 1024 * 1024
+
+    @field_validator("file")
+    @classmethod
+    def _file_is_absolute(cls, file: str | None) -> str | None:
+        if file is None:
+            return None
+        path = Path(file.replace("{state}", str(state_folder()))).expanduser()
+        if not path.is_absolute():
+            # A service is started from wherever, and must find its layers again.
+            raise ValueError(f"{file}: must be an absolute path, or begin with {{state}}")
+        return str(path)
 
 
 class SocketsSection(Section):
@@ -130,6 +148,7 @@ class Settings(BaseSettings):
     )
 
     site: SiteSection = SiteSection()
+    keep: KeepSection = KeepSection()
     layers: dict[Name, LayerSection] = Field(default_factory=dict)
     sockets: SocketsSection
     workers: WorkersSection = WorkersSection()
@@ -139,6 +158,17 @@ class Settings(BaseSettings):
     vehicles: dict[Name, Annotated[VehicleSection, Field(discriminator="model")]] = Field(
         min_length=1
     )
+
+    @field_validator("layers")
+    @classmethod
+    def _durable_layers_have_a_file(
+        cls, layers: dict[str, LayerSection], info: ValidationInfo
+    ) -> dict[str, LayerSection]:
+        keep = info.data.get("keep")
+        for name, layer in layers.items():
+            if layer.durable and keep is not None and keep.file is None:
+                raise ValueError(f"{name} is durable, and there is no file for it: set [keep] file")
+        return layers
 
     @classmethod
     def settings_customise_sources(
@@ -192,7 +222,7 @@ def load(file: Path | None = None) -> Settings:
     except tomllib.TOMLDecodeError as fault:
         raise BadSettings([Mistake(str(file), "", f"not TOML: {fault}")]) from None
     merged = {**embedded, **told}
-    sections = {"site", "sockets", "workers", "answers", "guards", "log"}
+    sections = {"site", "sockets", "workers", "answers", "guards", "log", "keep"}
     for section in sections & embedded.keys() & told.keys():
         if isinstance(told[section], dict):
             merged[section] = {**embedded[section], **told[section]}
@@ -214,6 +244,14 @@ def runtime_folder() -> Path:
         if os.environ.get(variable):
             return Path(os.environ[variable]) / "byway"
     return Path(tempfile.gettempdir()) / f"byway-{os.getuid()}"
+
+
+def state_folder() -> Path:
+    """Where what is kept lives: a folder of this user that outlasts the machine's restart."""
+    for variable in ("STATE_DIRECTORY", "XDG_STATE_HOME"):
+        if os.environ.get(variable):
+            return Path(os.environ[variable]) / "byway"
+    return Path.home() / ".local" / "state" / "byway"
 
 
 def _read(file: Path | None) -> str:
@@ -330,6 +368,7 @@ def _known_keys(section: Location, merged: Mapping[str, Any]) -> list[str]:
     sections: dict[str, type[Section]] = {
         "site": SiteSection,
         "layers": LayerSection,
+        "keep": KeepSection,
         "sockets": SocketsSection,
         "workers": WorkersSection,
         "answers": AnswersSection,

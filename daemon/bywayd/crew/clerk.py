@@ -33,7 +33,7 @@ retry_s: Final = 0.5
 idle_s: Final = 0.25
 
 #: What one answer to "recall" holds at most: a piece that the front gets through in a few turns.
-recall_count_max: Final = 128
+recall_count_max: Final = 64
 recall_bytes_max: Final = 1024 * 1024
 
 
@@ -96,7 +96,7 @@ class Clerk:
                 self._channel.wait_put({"say": "hindered", "text": str(fault)})
             # Whatever comes in meanwhile is for later, or the end of us.
             self._waiting.extend(self._channel.wait_take(retry_s))
-        self._say("kept", store, batch=message["batch"])
+        self._say("kept", store, task=message["task"])
 
     def _with_signs_of_life(self, work: Iterable[None]) -> None:
         for _ in work:

@@ -81,7 +81,7 @@ class Ground:
         rows, columns = message["columns"]["cells"]["shape"]
         self._corner_m: Point = (x_m, y_m)
         self._cos, self._sin = math.cos(heading_rad), math.sin(heading_rad)
-        self._length_m, self._width_m = columns * cell_m, rows * cell_m
+        self._length_m, self._width_m = float(columns * cell_m), float(rows * cell_m)
         self._corners_m = [
             (x_m + self._cos * u - self._sin * v, y_m + self._sin * u + self._cos * v)
             for u in (0.0, self._length_m)

@@ -13,14 +13,15 @@ import os
 import signal
 import time
 from collections import deque
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from typing import Any, Final, Protocol
 
 import structlog
 
-from bywayd.core import effects, events
+from bywayd.core import effects, events, kept
 from bywayd.core.instants import SECOND_NS, Instant
 from bywayd.runtime.alarm import Alarm
+from bywayd.runtime.clerking import keepsake_message, recall_begin
 from bywayd.runtime.clock import SystemClock
 from bywayd.runtime.logs import LogWriter
 from bywayd.runtime.outside import Outside
@@ -52,12 +53,18 @@ class Loop:
     """One life of the front. `run` returns when the core has said `Stop`."""
 
     def __init__(
-        self, clock: SystemClock, watch: Watch, site_settings: dict[str, Any], logs: LogWriter
+        self,
+        clock: SystemClock,
+        watch: Watch,
+        site_settings: dict[str, Any],
+        logs: LogWriter,
+        keep_file: str = "",
     ) -> None:
         # -- fixed ----------------------------------------------------------------------------
         self._clock = clock
         self._watch = watch
         self._site_settings = site_settings
+        self._keep_file = keep_file
         self._logs = logs
         # Bound once: the lazy one costs as much again at every line.
         self._logger = structlog.get_logger().bind()
@@ -73,6 +80,8 @@ class Loop:
         self._wake: Instant | None = None
         self._vitals_at = clock.now()
         self._stopped: str | None = None
+        #: The core has stopped because it cannot do what it is there for.
+        self.has_failed = False
         self._stops_asked = 0
         self._turns = Turns()
         self._memories = Memories()
@@ -101,6 +110,13 @@ class Loop:
                 *("surveyor", e.surveyor, "move"), guard=e.guard, progress_m=e.progress_m
             ),
             effects.Unwatch: lambda e: self._tell("surveyor", e.surveyor, "unwatch", guard=e.guard),
+            kept.SpawnClerk: lambda e: self._crew.spawn(
+                "clerk", e.clerk, {"do": "begin", "file": self._keep_file}
+            ),
+            kept.KillClerk: lambda e: self._crew.kill("clerk", e.clerk, e.why),
+            kept.PingClerk: lambda e: self._tell("clerk", e.clerk, "ping"),
+            kept.RecallChanges: self._recall_changes,
+            kept.KeepChanges: self._keep_changes,
             effects.Log: self._log,
             effects.Wake: self._set_wake,
             effects.Stop: self._stop,
@@ -195,10 +211,7 @@ class Loop:
         self.hand_in(event)
 
     def _lose(self, role: Role, number: int, why: str) -> None:
-        if role == "worker":
-            self.hand_in(events.WorkerLost(number, why))
-        else:
-            self.hand_in(events.SurveyorLost(number, why))
+        self.hand_in(_LOST[role](number, why))
 
     def _look_at_doors(self) -> None:
         if self._outside.doorman.look():
@@ -270,6 +283,14 @@ class Loop:
     def _watch_route(self, effect: effects.WatchRoute) -> None:
         self._tell("surveyor", effect.surveyor, "watch", **watch_message(effect))
 
+    def _recall_changes(self, effect: kept.RecallChanges) -> None:
+        place = recall_begin if effect.place is None else effect.place
+        self._tell("clerk", effect.clerk, "recall", task=effect.task, place=place)
+
+    def _keep_changes(self, effect: kept.KeepChanges) -> None:
+        changes = [keepsake_message(each, self._clock.host_ns) for each in effect.keepsakes]
+        self._tell("clerk", effect.clerk, "keep", task=effect.task, changes=changes)
+
     def _log(self, effect: effects.Log) -> None:
         getattr(self._logger, effect.level)(effect.event, **effect.facts)
 
@@ -279,6 +300,7 @@ class Loop:
 
     def _stop(self, effect: effects.Stop) -> None:
         self._stopped = effect.why
+        self.has_failed = effect.is_failure
 
     # -- once a second ----------------------------------------------------------------------
 
@@ -309,6 +331,13 @@ class Loop:
         }
 
 
+_LOST: Final[Mapping[Role, Callable[[int, str], events.Event]]] = {
+    "worker": events.WorkerLost,
+    "surveyor": events.SurveyorLost,
+    "clerk": kept.ClerkLost,
+}
+
+
 def _name_of(member: Member) -> str:
-    # There is one surveyor, and its successors go on under the same name.
-    return "surveyor" if member.role == "surveyor" else f"worker_{member.number}"
+    # There is one surveyor and one clerk, and successors go on under the same name.
+    return f"worker_{member.number}" if member.role == "worker" else member.role

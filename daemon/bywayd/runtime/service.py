@@ -30,10 +30,11 @@ from bywayd.runtime.clock import SystemClock
 from bywayd.runtime.logs import start_logging
 from bywayd.runtime.loop import Loop
 from bywayd.runtime.outside import Outside
+from bywayd.runtime.processes import signals_of_the_front
 from bywayd.runtime.sockets import DoorFault, IpcFolder, SocketName, ipc_folders
-from bywayd.runtime.staff import Staff, StaffSettings, TemplateFailed, signals_of_the_front
+from bywayd.runtime.staff import Staff, StaffSettings, TemplateFailed
 from bywayd.runtime.watch import Watch
-from bywayd.settings import Settings
+from bywayd.settings import Settings, state_folder
 
 #: A worker owes a sign of life every 100 ms. When the machine is full it is niced and may have to
 #: wait its turn; longer than this, something is wrong with it, and most budgets are not over yet.
@@ -102,7 +103,12 @@ def _serve(settings: Settings, skills: str, logs: Any) -> int:
         signals = closing.enter_context(_signals())
         memory = SiteMemory.create(site_memory_bytes_max)
         closing.callback(memory.close)
-        loop = Loop(clock, watch, _site_settings(settings), logs)
+        keep_file = settings.keep.file or ""
+        if keep_file and Path(keep_file).parent == state_folder():
+            # Only this one: another that is missing may be a disk that is not there yet, and
+            # must not be taken for a site without anything in it.
+            state_folder().mkdir(mode=0o700, parents=True, exist_ok=True)
+        loop = Loop(clock, watch, _site_settings(settings), logs, keep_file)
         staff_settings = StaffSettings(skills, settings.workers.nice, settings.workers.cores)
         staff = Staff(staff_settings, memory, watch, loop.reports())
         closing.callback(staff.end)
@@ -117,7 +123,7 @@ def _serve(settings: Settings, skills: str, logs: Any) -> int:
         gc.freeze()
         why = loop.run(core, outside, staff, signals)
         log.info("daemon.ended", why=why)
-    return ended_well
+    return cannot_work if loop.has_failed else ended_well
 
 
 def _hold(folder: Path) -> IpcFolder:
@@ -166,7 +172,7 @@ def _front_settings(settings: Settings, outside: Outside) -> FrontSettings:
             for name, section in settings.vehicles.items()
         },
         layers={
-            name: LayerFlags(layer.unknown_blocks, layer.outlines_only)
+            name: LayerFlags(layer.unknown_blocks, layer.outlines_only, durable=layer.durable)
             for name, layer in settings.layers.items()
         },
         updates_endpoints=tuple(outside.endpoints["updates"]),
@@ -175,6 +181,8 @@ def _front_settings(settings: Settings, outside: Outside) -> FrontSettings:
         workers=settings.workers.count,
         margin_s=settings.answers.margin_s,
         budget_max_s=settings.answers.budget_s_max,
+        keeps=settings.keep.file is not None,
+        keep_bytes_max=settings.keep.bytes_max,
         guards_max=settings.guards.count_max,
         guard_silence_s=settings.guards.silence_s,
         guard_budget_s=settings.guards.budget_s,

@@ -12,6 +12,7 @@ If the template dies, nobody else does; a new one is started, and newcomers wait
 
 import contextlib
 import os
+import select
 import signal
 import socket
 import subprocess
@@ -30,21 +31,23 @@ from bywayd.crew.channel import (
     channel_pair,
 )
 from bywayd.crew.memory import SiteMemory
+from bywayd.runtime.processes import signals_of_the_front, single_threaded, start_module
 from bywayd.runtime.watch import Watch
 
-Role: TypeAlias = Literal["worker", "surveyor"]
+Role: TypeAlias = Literal["worker", "surveyor", "clerk"]
 Message: TypeAlias = dict[str, Any]
 
 #: What a worker may leave unread before it counts as stuck: some jobs.
 worker_unsent_bytes_max: Final = 4 * 1024 * 1024
 #: What the surveyor may leave unread: one batch is out at a time, and it may be large.
 surveyor_unsent_bytes_max: Final = 512 * 1024 * 1024
+#: What the clerk may leave unread while the disk keeps it: one batch is out at a time.
+clerk_unsent_bytes_max: Final = 64 * 1024 * 1024
+#: How long the clerk may take, at the end, to leave its file in order.
+clerk_leave_s: Final = 1.0
 
 #: A template that dies so often before it was ever warm will not come right by itself.
 template_failures_max: Final = 3
-
-#: Signals that end the front in order; the crew must outlive them until the front says so.
-signals_of_the_front: Final = frozenset({signal.SIGINT, signal.SIGTERM, signal.SIGHUP})
 
 
 class TemplateFailed(Exception):
@@ -138,10 +141,6 @@ class Staff:
             *("--skills", self.settings.skills, "--nice", str(self.settings.nice)),
             *(("--cores", *map(str, self.settings.cores)) if self.settings.cores else ()),
         ]
-        # One thread each: workers share the cores by being processes.
-        single = dict.fromkeys(
-            ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS"), "1"
-        )
         # A blocked signal stays blocked through exec and fork; Ctrl-C and a service manager
         # reach the whole group, and only the front shall act on them.
         before = signal.pthread_sigmask(signal.SIG_BLOCK, signals_of_the_front)
@@ -152,7 +151,7 @@ class Staff:
                 stdout=self._said_to,
                 stderr=self._said_to,
                 pass_fds=(its.fileno(), self.memory.descriptor),
-                env={**os.environ, **single},
+                env={**os.environ, **single_threaded},
             )
         finally:
             signal.pthread_sigmask(signal.SIG_SETMASK, before)
@@ -193,10 +192,13 @@ class Staff:
         if member is None:
             return
         member.pid = news["pid"]
-        try:
-            member.pidfd = os.pidfd_open(news["pid"])
-        except ProcessLookupError:  # reaped already; its channel says that it is gone
-            return
+        # One that is reaped already has closed its channel, which says that it is gone.
+        with contextlib.suppress(ProcessLookupError):
+            self._hold(member, news["pid"])
+
+    def _hold(self, member: Member, pid: int) -> None:
+        """From now on this number means this process and no other."""
+        member.pidfd = os.pidfd_open(pid)
         self.watch.add(member.pidfd, lambda: self._member_ended(member))
         if member.killed:
             self._kill_now(member)
@@ -234,18 +236,27 @@ class Staff:
             first: A message that it finds waiting.
         """
         ours, its = channel_pair()
-        bytes_max = worker_unsent_bytes_max if role == "worker" else surveyor_unsent_bytes_max
-        member = Member(role, number, Channel(ours, unsent_bytes_max=bytes_max))
+        member = Member(role, number, Channel(ours, unsent_bytes_max=_unsent_bytes_max[role]))
         self.members[role, number] = member
         self.watch.add(member.channel, lambda: self._hear(member))
-        order = msgpack.packb({"role": role, "number": number})
         # If the template is dead or its queue full, the closed channel reports the loss.
         with contextlib.suppress(OSError):
-            if self._template is not None:
+            if role == "clerk":
+                self._start_clerk(member, its)
+            elif self._template is not None:
+                order = msgpack.packb({"role": role, "number": number})
                 socket.send_fds(self._template.control, [order], [its.fileno()])
         its.close()
         if first is not None:
             self.put(role, number, first)
+
+    def _start_clerk(self, member: Member, its: socket.socket) -> None:
+        """Start a clerk of its own: it must not wait until the template is warm."""
+        descriptor = its.fileno()
+        told = {"front-pid": os.getpid(), "channel": descriptor, "number": member.number}
+        arguments = [word for name, value in told.items() for word in (f"--{name}", str(value))]
+        member.pid = start_module("bywayd.crew.clerk", arguments, descriptor, self._said_to)
+        self._hold(member, member.pid)
 
     def put(self, role: Role, number: int, message: Mapping[str, Any]) -> None:
         """Send a message; a member that cannot take it is on its way to be lost."""
@@ -368,10 +379,19 @@ class Staff:
                 if text:
                     self.reports.said(text)
 
+    def _dismiss_clerks(self) -> None:
+        """Close the channel of a clerk that is well: it leaves its file in order, and ends."""
+        for member in self.members.values():
+            if member.role == "clerk" and member.pidfd is not None and not member.killed:
+                self.watch.remove(member.channel)
+                member.channel.close()
+                select.select([member.pidfd], [], [], clerk_leave_s)
+
     def end(self) -> None:
         """Kill everybody and take leave of them."""
         self._ended = True
         template = self._template
+        self._dismiss_clerks()
         for member in self.members.values():
             self._kill(member, "the daemon ends")
         if template is not None:
@@ -389,6 +409,13 @@ class Staff:
         self.watch.remove(self._said_from)
         os.close(self._said_from)
         os.close(self._said_to)
+
+
+_unsent_bytes_max: Final[Mapping[Role, int]] = {
+    "worker": worker_unsent_bytes_max,
+    "surveyor": surveyor_unsent_bytes_max,
+    "clerk": clerk_unsent_bytes_max,
+}
 
 
 def _reap(pidfd: int | None, *, wait: bool = False) -> str:

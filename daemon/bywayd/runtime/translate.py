@@ -13,6 +13,7 @@ from byway import frames, messages
 from byway.errors import BywayError
 from bywayd.core import effects, events
 from bywayd.core.instants import Instant
+from bywayd.runtime.clerking import CLERK_SAYS
 from bywayd.runtime.staff import Role
 
 Message: TypeAlias = dict[str, Any]
@@ -32,7 +33,7 @@ def event_of(role: Role, number: int, message: Message) -> events.Event:
     Raises:
         Nonsense: If it is not one; a wild write in a kernel can do that.
     """
-    make = (_WORKER_SAYS if role == "worker" else _SURVEYOR_SAYS).get(str(message.get("say")))
+    make = _SAYS[role].get(str(message.get("say")))
     if make is None:
         raise Nonsense(f"said {str(message.get('say'))[:40]!r}")
     try:
@@ -129,6 +130,12 @@ _SURVEYOR_SAYS: Final[Mapping[str, _Maker]] = {
     "snapshot": _snapshot_ready,
     "site": _site_described,
     "guard": _guard_seen,
+}
+
+_SAYS: Final[Mapping[Role, Mapping[str, _Maker]]] = {
+    "worker": _WORKER_SAYS,
+    "surveyor": _SURVEYOR_SAYS,
+    "clerk": CLERK_SAYS,
 }
 
 
