@@ -10,11 +10,11 @@ tables; the blocks of the revision before stay until `release_before` says that 
 import itertools
 import math
 from collections.abc import Iterator
-from dataclasses import dataclass, field
 
 import numpy as np
 import numpy.typing as npt
 
+from byway_planning.site.layer import Layer
 from byway_planning.site.memory import Memory
 from byway_planning.site.movers import Movers
 from byway_planning.site.patches import Patch
@@ -22,27 +22,12 @@ from byway_planning.site.places import overlaps_limits, tiles_in, tiles_of, touc
 from byway_planning.site.publishing import Publisher
 from byway_planning.site.raster import changed_span_kernel
 from byway_planning.site.records import Records
-from byway_planning.site.scans import Seen, apply_marks_kernel, checked_scan, fade_kernel
+from byway_planning.site.scans import Seen, apply_marks_kernel, checked_scan
 from byway_planning.site.settings import LayerSettings, SiteSettings
 from byway_planning.site.shapes import ID_BYTES_MAX, Limits, Shape, SiteError
 from byway_planning.site.snapshot import Handle, Snapshot, handle_for
 from byway_planning.site.tiles import Cells, Tile
 from byway_planning.site.tracks import Track, piece_id
-
-UNKNOWN = 2
-
-
-@dataclass
-class _Layer:
-    index: int
-    settings: LayerSettings
-    cells: dict[Tile, Cells] = field(default_factory=dict)
-    #: When each cell was last scanned, for a layer that forgets; inf: never.
-    stamps: dict[Tile, npt.NDArray[np.float64]] = field(default_factory=dict)
-    #: Not later than when the first of them is forgotten.
-    first_stamp_s: float = math.inf
-    #: Recovered cells whose stamps are lost: they count as scanned at the next `carry`.
-    lost_stamps: bool = False
 
 
 class SiteModel:
@@ -52,7 +37,7 @@ class SiteModel:
         self.settings = settings
         self.memory = memory or Memory.private()
         self.revision = 0
-        self._layers: dict[str, _Layer] = {}
+        self._layers: dict[str, Layer] = {}
         self._records = Records()
         #: Obstacles by tile: all and only those that may touch the tile, outlines not.
         self._by_tile: dict[Tile, dict[tuple[int, str], Shape]] = {}
@@ -81,7 +66,7 @@ class SiteModel:
                     f"layer {name!r} exists with {layer.settings}, not {settings}",
                 )
             return
-        self._layers[name] = _Layer(len(self._layers), settings)
+        self._layers[name] = Layer(len(self._layers), settings, self.settings.tile_cells)
         self._changed = True
         if settings.unknown_blocks:
             self._boxes.append(self.settings.limits_m)
@@ -115,8 +100,9 @@ class SiteModel:
     def drop(self, layer: str, obstacle_id: str) -> bool:
         """Remove an obstacle, moving or not; tell whether there was one."""
         self._layer(layer)
-        if self._movers.forget(layer, obstacle_id):
-            for i in range(self._movers.pieces.pop((layer, obstacle_id), 0)):
+        mover = self._movers.forget(layer, obstacle_id)
+        if mover is not None:
+            for i in range(mover.pieces):
                 self._drop(layer, piece_id(obstacle_id, i))
             self._changed = True
             return True
@@ -146,9 +132,8 @@ class SiteModel:
         for name in self._records.names(owner.index):
             self.drop(layer, name)
         for tile in list(owner.cells):
-            self._write(layer, owner, tile, self._base(owner))
-        owner.stamps.clear()
-        owner.first_stamp_s = math.inf
+            self._write(layer, owner, tile, owner.base())
+        owner.forget_stamps()
 
     def patch(
         self,
@@ -181,7 +166,7 @@ class SiteModel:
                 f"the patch spans {patch.box_m}, the site only {self.settings.limits_m}",
             )
         for tile in tiles_in(self.settings, *patch.box_m):
-            new = self._cells_of(owner, tile).copy()
+            new = owner.cells_of(tile).copy()
             patch.write(new, self.settings.corner_m(tile), self.settings.cell_m)
             stamps = owner.stamps.get(tile)
             if stamps is not None:
@@ -223,121 +208,82 @@ class SiteModel:
         s = self.settings
         seen = Seen(x, y, *beams, s.limits_m[:2], s.cell_m, s.tile_cells, s.tiles)
         for tile, marks in zip(seen.tiles, seen.marks, strict=True):
-            new = self._cells_of(owner, tile).copy()
-            apply_marks_kernel(marks, new, self._stamps_of(owner, tile), at_s)
+            new = owner.cells_of(tile).copy()
+            apply_marks_kernel(marks, new, owner.stamps_for(tile, at_s), at_s)
             self._write(layer, owner, tile, new)
-        if owner.settings.decay_s is not None and seen.tiles:
-            owner.first_stamp_s = min(owner.first_stamp_s, at_s + owner.settings.decay_s)
 
     def track(self, layer: str, track_id: str, track: Track) -> None:
         """
         Add an obstacle that moves, or tell where the one of that id is now.
 
-        It lies on the site with what it sweeps from its `at_s` on; see `carry`.
+        It blocks what it may sweep in the `sweep_s` after its `at_s`, until it is carried.
+
+        Raises:
+            SiteError: unknown_layer, outlines_only, too_large (the id), or outside_limits (when
+                it stays outside for that time).
         """
         self._with_cells(layer)
         self._check_id(track_id, "track")
-        pieces = track.sweep(track.at_s, self.settings.sweep_s)
-        boxes = np.array([piece.box_m for piece in pieces])
-        low, high = boxes[:, :2].min(axis=0), boxes[:, 2:].max(axis=0)
-        if not touches_limits(self.settings, (*low.tolist(), *high.tolist())):
-            raise SiteError("outside_limits", f"track {track_id!r} is outside of the site")
+        pieces = self._sweep(track, track.at_s)
+        if not pieces:
+            raise SiteError(
+                "outside_limits",
+                f"track {track_id!r} at {track.pose} stays outside of the site, "
+                f"{self.settings.limits_m}",
+            )
         self.drop(layer, track_id)
         self._movers.take(layer, track_id, track)
-        self._lay(layer, track_id, pieces)
+        self._lay(layer, track_id, pieces, track.at_s)
+        self._changed = True
 
     def carry(self, now_s: float) -> None:
         """Carry tracks forward to an instant, and forget what was scanned too long ago."""
-        for (layer, track_id), track in list(self._movers.items()):
-            if track.moves:
-                self._lay(layer, track_id, track.sweep(now_s, self.settings.sweep_s))
+        for (layer, track_id), track in self._movers.due(now_s, self.settings.carry_every_s):
+            self._lay(layer, track_id, self._sweep(track, now_s), now_s)
         for name, owner in self._layers.items():
-            decay_s = owner.settings.decay_s
-            if decay_s is None:
-                continue
-            if owner.lost_stamps:
-                for tile, cells in owner.cells.items():
-                    stamps = self._stamps_of(owner, tile)
-                    stamps[(cells != self._base(owner)) & (stamps == math.inf)] = now_s
-                owner.first_stamp_s = min(owner.first_stamp_s, now_s + decay_s)
-                owner.lost_stamps = False
-            if owner.first_stamp_s <= now_s:
-                self._fade(name, owner, now_s - decay_s)
+            for tile, cells in owner.faded(now_s):
+                self._write(name, owner, tile, cells)
 
     def next_carry_s(self, now_s: float) -> float | None:
-        """Return when there is something to carry or to forget, after `now_s`; None for never."""
-        due = [
-            now_s if owner.lost_stamps else max(now_s, owner.first_stamp_s)
-            for owner in self._layers.values()
-            if owner.lost_stamps or owner.first_stamp_s < math.inf
-        ]
-        if self._movers.any_moves:
-            due.append(now_s + self.settings.carry_every_s)
-        return min(due, default=None)
+        """Return when there is something to carry or to forget, from `now_s` on; None for never."""
+        due = [owner.next_due_s(now_s) for owner in self._layers.values()]
+        due.append(self._movers.next_due_s(now_s, self.settings.carry_every_s))
+        return min((each for each in due if each is not None), default=None)
 
     def tracks(self) -> Iterator[tuple[str, str, Track]]:
         """Yield (layer, id, track) of every obstacle that moves."""
         for (layer, track_id), track in self._movers.items():
             yield layer, track_id, track
 
-    def _lay(self, layer: str, track_id: str, pieces: list[Shape]) -> None:
-        """Put the pieces of a sweep where those before lay."""
-        before = self._movers.pieces.get((layer, track_id), 0)
-        inside = [piece for piece in pieces if touches_limits(self.settings, piece.box_m)]
-        for i, piece in enumerate(inside):
-            self._put(layer, piece_id(track_id, i), piece)
-        for i in range(len(inside), before):
-            self._drop(layer, piece_id(track_id, i))
-        self._movers.pieces[layer, track_id] = len(inside)
-        self._changed = True
+    def _sweep(self, track: Track, now_s: float) -> list[Shape]:
+        """What blocks until the track is carried the next time, and `sweep_s` from then on."""
+        ahead_s = self.settings.sweep_s + self.settings.carry_every_s
+        shapes = track.sweep(now_s, ahead_s)
+        return [shape for shape in shapes if overlaps_limits(self.settings, shape.box_m)]
 
-    def _fade(self, name: str, owner: _Layer, before_s: float) -> None:
-        first_s = math.inf
-        for tile, stamps in list(owner.stamps.items()):
-            new = self._cells_of(owner, tile).copy()
-            _, tile_first_s = fade_kernel(new, stamps, before_s, UNKNOWN)
-            self._write(name, owner, tile, new)
-            if tile_first_s == math.inf:
-                del owner.stamps[tile]
-            first_s = min(first_s, tile_first_s)
-        owner.first_stamp_s = first_s + (owner.settings.decay_s or 0.0)
+    def _lay(self, layer: str, track_id: str, pieces: list[Shape], now_s: float) -> None:
+        """Put the pieces of a sweep from `now_s` on where those before lay."""
+        for i, piece in enumerate(pieces):
+            self._put(layer, piece_id(track_id, i), piece)
+        for i in range(len(pieces), self._movers.laid(layer, track_id, len(pieces), now_s)):
+            self._drop(layer, piece_id(track_id, i))
 
     # -- cells of a layer -------------------------------------------------------------------
 
-    def _with_cells(self, name: str) -> _Layer:
+    def _with_cells(self, name: str) -> Layer:
         owner = self._layer(name)
         if owner.settings.outlines_only:
             text = f"layer {name!r} holds outlines only: no cells, and nothing that moves"
             raise SiteError("outlines_only", text)
         return owner
 
-    def _cells_of(self, owner: _Layer, tile: Tile) -> Cells:
-        cells = owner.cells.get(tile)
-        return self._base(owner) if cells is None else cells
-
-    def _base(self, owner: _Layer) -> Cells:
-        """What a tile without cells stands for; no tile is kept for that."""
-        side = self.settings.tile_cells
-        return np.full((side, side), UNKNOWN if owner.settings.unknown_blocks else 0, np.uint8)
-
-    def _stamps_of(self, owner: _Layer, tile: Tile) -> npt.NDArray[np.float64]:
-        if owner.settings.decay_s is None:
-            return np.empty((0, 0))
-        if tile not in owner.stamps:
-            side = self.settings.tile_cells
-            owner.stamps[tile] = np.full((side, side), math.inf)
-        return owner.stamps[tile]
-
-    def _write(self, name: str, owner: _Layer, tile: Tile, new: Cells) -> None:
+    def _write(self, name: str, owner: Layer, tile: Tile, new: Cells) -> None:
         """Make these the cells of a tile, if they are others."""
-        old = self._cells_of(owner, tile)
+        old = owner.cells_of(tile)
         r0, r1, c0, c1 = changed_span_kernel(old, new)
         if r0 < 0:
             return
-        if (new == self._base(owner)).all():
-            owner.cells.pop(tile, None)
-        else:
-            owner.cells[tile] = new
+        owner.keep(tile, new)
         self._dirty.add(tile)
         self._dirty_cells.add((name, tile))
         self._changed = True
@@ -417,17 +363,15 @@ class SiteModel:
         snapshot = Snapshot.attach(memory, handle)
         model = cls(snapshot.settings, memory)
         for name, settings in snapshot.layers().items():
-            model._layers[name] = _Layer(len(model._layers), settings)
+            model._layers[name] = Layer(len(model._layers), settings, model.settings.tile_cells)
         for layer, name, shape in snapshot.obstacles():
             model._put(layer, name, shape)
         for layer, name, track in snapshot.tracks():
             model._movers.take(layer, name, track)
+            known = set(model._records.names(model._layers[layer].index))
             ids = (piece_id(name, i) for i in itertools.count())
-            index = model._layers[layer].index
-            known = set(model._records.names(index))
-            model._movers.pieces[layer, name] = sum(
-                1 for _ in itertools.takewhile(known.__contains__, ids)
-            )
+            pieces = sum(1 for _ in itertools.takewhile(known.__contains__, ids))
+            model._movers.laid(layer, name, pieces, -math.inf)
         for name, owner in model._layers.items():
             for corner, cells in snapshot.cells(name):
                 # By its middle: a corner belongs to its neighbours as well.
@@ -451,7 +395,7 @@ class SiteModel:
 
     # -- places -----------------------------------------------------------------------------
 
-    def _layer(self, name: str) -> _Layer:
+    def _layer(self, name: str) -> Layer:
         if name not in self._layers:
             known = ", ".join(sorted(self._layers)) or "none"
             raise SiteError("unknown_layer", f"there is no layer {name!r}; known: {known}")

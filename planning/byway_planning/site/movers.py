@@ -4,7 +4,9 @@ The tracks of a site: who moves where, and which pieces of their sweeps lie on i
 Owned by one SiteModel, which puts and drops the pieces like any other obstacle.
 """
 
+import math
 from collections.abc import Iterator
+from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
@@ -22,13 +24,20 @@ Key = tuple[str, str]
 TRACK_COLUMNS: Final = 15
 
 
+@dataclass
+class Mover:
+    """A track, how many pieces of its sweep lie on the site, and since when."""
+
+    track: Track
+    pieces: int = 0
+    laid_s: float = -math.inf
+
+
 class Movers:
     """Tracks by layer and id, and their tables."""
 
     def __init__(self) -> None:
-        self._tracks: dict[Key, Track] = {}
-        #: How many pieces of each lie on the site.
-        self.pieces: dict[Key, int] = {}
+        self._movers: dict[Key, Mover] = {}
         self._is_written = False
         self.tables = {
             "tracks": Table(np.float64, TRACK_COLUMNS),
@@ -36,32 +45,52 @@ class Movers:
             "track_corners": Table(np.float64, 2),
         }
 
-    def __len__(self) -> int:
-        return len(self._tracks)
-
     def items(self) -> Iterator[tuple[Key, Track]]:
         """Yield what moves."""
-        yield from self._tracks.items()
+        for key, mover in self._movers.items():
+            yield key, mover.track
 
     def of(self, layer: str) -> list[str]:
         """Return the ids of the tracks of a layer."""
-        return [track_id for name, track_id in self._tracks if name == layer]
+        return [track_id for name, track_id in self._movers if name == layer]
 
     def take(self, layer: str, track_id: str, track: Track) -> None:
-        """Remember a track, or that it is elsewhere now."""
-        self._tracks[layer, track_id] = track
+        """Remember a track, no piece of which lies on the site."""
+        self._movers[layer, track_id] = Mover(track)
         self._is_written = False
 
-    def forget(self, layer: str, track_id: str) -> bool:
-        """Forget a track; tell whether there was one."""
-        known = self._tracks.pop((layer, track_id), None) is not None
-        self._is_written &= not known
-        return known
+    def laid(self, layer: str, track_id: str, pieces: int, now_s: float) -> int:
+        """Note that pieces of a sweep from `now_s` on lie on the site; return how many lay."""
+        mover = self._movers[layer, track_id]
+        before, mover.pieces, mover.laid_s = mover.pieces, pieces, now_s
+        return before
 
-    @property
-    def any_moves(self) -> bool:
-        """Whether any of them has to be carried forward."""
-        return any(track.moves for track in self._tracks.values())
+    def forget(self, layer: str, track_id: str) -> Mover | None:
+        """Forget a track; return what was known of it."""
+        mover = self._movers.pop((layer, track_id), None)
+        self._is_written &= mover is None
+        return mover
+
+    def due(self, now_s: float, every_s: float) -> list[tuple[Key, Track]]:
+        """
+        Return what has to be carried forward by now.
+
+        Nothing, mostly: a site may change hundreds of times between two turns. When it is one's
+        turn, those that were not just carried go along, so that turns fall together.
+        """
+        next_s = self.next_due_s(now_s, every_s)
+        if next_s is None or next_s > now_s:
+            return []
+        return [
+            (key, mover.track)
+            for key, mover in self._movers.items()
+            if mover.track.moves and mover.laid_s + 0.5 * every_s <= now_s
+        ]
+
+    def next_due_s(self, now_s: float, every_s: float) -> float | None:
+        """Return when something has to be carried forward, from `now_s` on; None for never."""
+        laid_s = [mover.laid_s for mover in self._movers.values() if mover.track.moves]
+        return max(now_s, min(laid_s) + every_s) if laid_s else None
 
     def write(self, layers: dict[str, int]) -> None:
         """Bring the tables up to date; `layers` numbers them."""
@@ -70,23 +99,29 @@ class Movers:
         self._is_written = True
         for table in self.tables.values():
             table.empty()
-        for (layer, track_id), track in self._tracks.items():
+        if not self._movers:
+            return
+        rows: list[tuple[float, ...]] = []
+        rings: list[npt.NDArray[np.float64]] = [np.empty((0, 2))]
+        count = 0
+        for (layer, _), track in self.items():
             shape = track.shape
-            first = self.tables["track_corners"].count
-            middle, radius = (0.0, 0.0), 0.0
+            first, disc = count, (0.0, 0.0, 0.0)
             if isinstance(shape, PolygonShape):
-                self.tables["track_corners"].append(shape.vertices_m)
+                rings.append(shape.vertices_m)
+                count += len(shape.vertices_m)
             else:
-                middle, radius = (shape.x_m, shape.y_m), shape.radius_m
-            last = self.tables["track_corners"].count
-            self.tables["tracks"].append(
+                disc = (shape.radius_m, shape.x_m, shape.y_m)
+            rows.append(
                 (
-                    *(layers[layer], first, last, radius, *middle, *track.pose),
-                    *(*track.velocity_mps, track.turn_rate_radps),
-                    *(track.uncertainty_m, track.growth_mps, track.at_s),
+                    *(layers[layer], first, count, *disc, *track.pose, *track.velocity_mps),
+                    *(track.turn_rate_radps, track.uncertainty_m, track.growth_mps, track.at_s),
                 )
             )
-            self.tables["track_names"].append(np.array([track_id.encode()], NAME))
+        self.tables["tracks"].append(rows)
+        names = [track_id.encode() for _, track_id in self._movers]
+        self.tables["track_names"].append(np.array(names, NAME))
+        self.tables["track_corners"].append(np.concatenate(rings))
 
 
 def track_from(row: npt.NDArray[np.float64], corners: npt.NDArray[np.float64]) -> tuple[int, Track]:

@@ -138,19 +138,52 @@ def on_site(model: SiteModel) -> dict[str, tuple[float, float, float, float]]:
 def test_tracks_are_carried_forward_and_go_when_dropped() -> None:
     model = site(sweep_s=2.0)
     model.track("movers", "ann", walker(5.0, 5.0, velocity_mps=(1.0, 0.0), at_s=100.0))
-    assert on_site(model)["ann~0"] == pytest.approx((4.7, 4.7, 7.3, 5.3), abs=0.02)
+    # Two seconds and a tenth: it is not carried before then.
+    assert on_site(model)["ann~0"] == pytest.approx((4.7, 4.7, 7.4, 5.3), abs=0.02)
     assert model.next_carry_s(100.0) == pytest.approx(100.1)
     first = model.revision
     model.carry(103.0)
-    assert on_site(model)["ann~0"] == pytest.approx((7.7, 4.7, 10.3, 5.3), abs=0.02)
+    assert on_site(model)["ann~0"] == pytest.approx((7.7, 4.7, 10.4, 5.3), abs=0.02)
     assert model.revision == first + 1
     (box,) = {tuple(b) for b in model.changed_m.round(1).tolist() if b[0] > 7.0}
-    assert box == pytest.approx((7.7, 4.7, 10.3, 5.3), abs=0.1)
+    assert box == pytest.approx((7.7, 4.7, 10.4, 5.3), abs=0.1)
     assert [(layer, name) for layer, name, _ in model.publish().tracks()] == [("movers", "ann")]
     assert model.drop("movers", "ann")
     assert not model.drop("movers", "ann")
     assert on_site(model) == {}
     assert model.next_carry_s(103.0) is None
+
+
+def test_a_site_that_changes_often_is_not_carried_each_time() -> None:
+    """At every instant, what lies there covers the next two seconds."""
+    model = site(sweep_s=2.0, carry_every_s=0.1)
+    ann = walker(5.0, 5.0, velocity_mps=(1.0, 0.0), at_s=100.0)
+    bob = walker(5.0, 15.0, velocity_mps=(-1.0, 0.0), at_s=100.06)
+    model.track("movers", "ann", ann)
+    model.track("movers", "bob", bob)
+    revisions = set()
+    for now_s in np.arange(100.06, 101.0, 0.002):
+        model.carry(now_s)
+        snapshot = model.publish()
+        revisions.add(snapshot.revision)
+        boxes = on_site(model)
+        for name, track, side in (("ann~0", ann, 0), ("bob~0", bob, 2)):
+            ends = [track.pose_at(now_s + t)[0] for t in (0.0, 2.0)]
+            assert boxes[name][0] <= min(ends) - 0.3
+            assert boxes[name][2] >= max(ends) + 0.3
+            assert abs(boxes[name][side] - track.pose_at(now_s)[0]) < 0.45
+    assert 8 <= len(revisions) <= 12  # both in one turn, though they came at different times
+
+
+def test_standing_tracks_and_those_outside_make_no_revisions() -> None:
+    model = site(sweep_s=1.0)
+    model.track("movers", "post", walker(5.0, 5.0, uncertainty_m=0.1))
+    assert model.next_carry_s(3.0) is None
+    model.track("movers", "ann", walker(59.0, 5.0, velocity_mps=(1.0, 0.0)))
+    model.carry(10.0)
+    revision = model.publish().revision
+    model.carry(20.0)
+    assert model.publish().revision == revision
 
 
 def test_a_track_takes_the_place_of_an_obstacle_of_its_id_and_the_other_way_round() -> None:
