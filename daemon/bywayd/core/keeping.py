@@ -211,8 +211,6 @@ class Keeping:
         self._kill(number, f"spoke nonsense: {what}")
 
     def _kill(self, number: int, why: str) -> None:
-        if self._roster.phase(number) == "killed":
-            return
         self._roster.kill(number, why)
         self._health.count("clerks_killed_total")
         self._outbox.add(KillClerk(number, why))

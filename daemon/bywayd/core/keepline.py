@@ -20,9 +20,10 @@ _BATCH_BYTES_MAX = 16 * 1024 * 1024
 class KeepLine:
     """What waits for the clerk, what is out, and how much is kept already."""
 
-    __slots__ = ("_end", "_out", "_size_bytes", "_waiting", "kept_to", "stock")
+    __slots__ = ("_end", "_out", "_size_bytes", "_size_bytes_max", "_waiting", "kept_to", "stock")
 
-    def __init__(self) -> None:
+    def __init__(self, size_bytes_max: int) -> None:
+        self._size_bytes_max = size_bytes_max
         self._waiting: deque[Keepsake] = deque()
         #: What the clerk was given and has not answered.
         self._out: tuple[Keepsake, ...] = ()
@@ -41,6 +42,13 @@ class KeepLine:
     def size_bytes(self) -> int:
         """How much is not on the disk yet."""
         return self._size_bytes
+
+    def has_room(self, size_bytes: int) -> bool:
+        """
+        Whether one more change may be taken in. It has a room of its own, so that a disk that
+        takes nothing does not fill that of live layers.
+        """
+        return not self._size_bytes or self._size_bytes + size_bytes <= self._size_bytes_max
 
     def append(self, keepsake: Keepsake) -> int:
         """Put something at the end, and return its position."""

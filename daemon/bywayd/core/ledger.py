@@ -66,7 +66,7 @@ class Ledger:
         self.layers = Layers(settings.layers, settings.layers_max, self._heard_at)
         self._expiries = Expiries(settings.expiries_max)
         #: Visible, and not on the disk yet.
-        self.keepline = KeepLine()
+        self.keepline = KeepLine(settings.keep_pending_bytes_max)
         #: Whether sources are listened to: not before all that is kept has been recalled.
         self.is_open = not settings.keeps
         #: Recalled, and not visible yet.
@@ -87,7 +87,7 @@ class Ledger:
     ) -> None:
         """Take in a change, or say why not."""
         size = len(came.body) + len(came.packed)
-        source = self._next_in_turn(peer, came.header, size, now)
+        source = self._next_in_turn(peer, came.header, size, now, message.layer)
         if source is None:
             return
         source.have = came.header.number
@@ -113,7 +113,12 @@ class Ledger:
         return True
 
     def _next_in_turn(
-        self, peer: Peer, header: frames.Header, size_bytes: int, now: Instant
+        self,
+        peer: Peer,
+        header: frames.Header,
+        size_bytes: int,
+        now: Instant,
+        layer: str = "",
     ) -> Source | None:
         """Return the source if its next number can be taken in; otherwise it is told why not."""
         source = self.sources.heard(header.source, peer, now)
@@ -133,13 +138,15 @@ class Ledger:
             self._health.count("gaps_total")
             self._ask_again(source, "gap", now)
             return None
-        if not self._has_room(source, size_bytes):
+        if not self._has_room(source, size_bytes, layer):
             self._ask_again(source, "full", now, self._settings.resend_every_s)
             return None
         return source
 
-    def _has_room(self, source: Source, size: int) -> bool:
-        settings = self._settings
+    def _has_room(self, source: Source, size: int, layer_name: str) -> bool:
+        settings, layer = self._settings, self.layers.get(layer_name)
+        if layer is not None and layer.flags.durable and not self.keepline.has_room(size):
+            return False
         return (
             self.is_open
             and source.undecided < settings.source_window

@@ -45,11 +45,13 @@ def obstacle_rows(
 
 
 def _one_by_one(found: Shapes) -> Iterator[tuple[str, Shapes]]:
-    kinds = {kind: getattr(found, kind) for kind in Shapes.__slots__}
-    for kind, by_id in kinds.items():
-        for obstacle_id, shape in by_id.items():
-            alone = {each: {obstacle_id: shape} if each == kind else {} for each in kinds}
-            yield obstacle_id, Shapes(**alone)
+    for each, ring in found.polygons.items():
+        holes = {each: found.holes[each]} if each in found.holes else {}
+        yield each, Shapes({each: ring}, {}, holes)
+    for each, disc in found.discs.items():
+        yield each, Shapes({}, {each: disc})
+    for each, box in found.boxes.items():
+        yield each, Shapes({}, {}, {}, {each: box})
 
 
 def _put_fields(message: Mapping[str, Any]) -> dict[str, Any]:

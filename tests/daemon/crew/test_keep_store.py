@@ -434,3 +434,26 @@ def test_tidying_up_leaves_everything_where_it_was(store, file):
     assert discs_of(recalled(store)) == {("stacks", "a"): (1, 1, 1)}
     keep(store, drop("a"))
     assert store.tidy()
+
+
+def test_holes_and_boxes_come_back_as_they_were(store):
+    ring = [(0.0, 0.0), (9.0, 0.0), (9.0, 9.0), (0.0, 9.0)]
+    hole = [(1 / 3, 1.0), (2.0, 1.0), (2.0, 2.0)]
+    found = obstacles.shapes(
+        {"hall": {"outline": ring, "holes": [hole]}, "kiln": ring},
+        {},
+        {"crate": (1.0, 2.0, 0.3, 4.0, 5.0)},
+    )
+    fields, packed = obstacles.pack_shapes(found)
+    message = messages.Put(layer="stacks", **fields).model_dump()
+    keep(store, change("put", message=message, packed=packed))
+    back = {}
+    for told in recalled(store)[1:]:
+        one = messages.Put(layer="stacks", **told["message"])
+        obstacles.check(one, told["packed"])
+        back[told["ids"][0]] = obstacles.unpack_shapes(one, told["packed"])
+    assert back.keys() == {"hall", "kiln", "crate"}
+    assert np.array_equal(back["hall"].holes["hall"][0], hole)
+    assert np.array_equal(back["hall"].polygons["hall"], ring)
+    assert back["kiln"].holes == {}
+    assert back["crate"].boxes == {"crate": (1.0, 2.0, 0.3, 4.0, 5.0)}
