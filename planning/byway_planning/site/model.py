@@ -237,7 +237,12 @@ class SiteModel:
         self._changed = True
 
     def carry(self, now_s: float) -> None:
-        """Carry tracks forward to an instant, and forget what was scanned too long ago."""
+        """
+        Carry tracks forward to an instant, and forget what was scanned too long ago.
+
+        Afterwards all that a track may sweep from `now_s` to `now_s + sweep_s` is blocked. It
+        may be called with every change: what was carried a moment ago stays as it is.
+        """
         for (layer, track_id), track in self._movers.due(now_s, self.settings.carry_every_s):
             self._lay(layer, track_id, self._sweep(track, now_s), now_s)
         for name, owner in self._layers.items():
@@ -256,8 +261,8 @@ class SiteModel:
             yield layer, track_id, track
 
     def _sweep(self, track: Track, now_s: float) -> list[Shape]:
-        """What blocks until the track is carried the next time, and `sweep_s` from then on."""
-        ahead_s = self.settings.sweep_s + self.settings.carry_every_s
+        """What blocks until the track is carried again, at the latest, and `sweep_s` from then."""
+        ahead_s = self.settings.sweep_s + 2.0 * self.settings.carry_every_s
         shapes = track.sweep(now_s, ahead_s)
         return [shape for shape in shapes if overlaps_limits(self.settings, shape.box_m)]
 

@@ -22,6 +22,10 @@ Key = tuple[str, str]
 #: layer, first and last corner (equal for a disc), radius, middle of a disc, pose, velocity, turn
 #: rate, uncertainty, growth, when it was seen.
 TRACK_COLUMNS: Final = 15
+#: Tracks carried in one turn take some 5 ms.
+TURN_TRACKS: Final = 10
+#: Clocks are rounded to nanoseconds on the way.
+EARLY_S: Final = 1e-6
 
 
 @dataclass
@@ -73,19 +77,23 @@ class Movers:
 
     def due(self, now_s: float, every_s: float) -> list[tuple[Key, Track]]:
         """
-        Return what has to be carried forward by now.
+        Return what has to be carried forward by now, some at a time.
 
         Nothing, mostly: a site may change hundreds of times between two turns. When it is one's
-        turn, those that were not just carried go along, so that turns fall together.
+        turn, others that were not just carried go along, so that turns fall together; but no
+        more than a few, so that no change has to wait for all. Whose sweep was laid two turns
+        ago goes in any case.
         """
-        next_s = self.next_due_s(now_s, every_s)
-        if next_s is None or next_s > now_s:
-            return []
-        return [
-            (key, mover.track)
+        waiting = [
+            (mover.laid_s, key, mover.track)
             for key, mover in self._movers.items()
             if mover.track.moves and mover.laid_s + 0.5 * every_s <= now_s
         ]
+        waiting.sort(key=lambda each: each[0])
+        if not waiting or waiting[0][0] + every_s > now_s + EARLY_S:
+            return []
+        late = sum(laid_s + 2.0 * every_s <= now_s + EARLY_S for laid_s, _, _ in waiting)
+        return [(key, track) for _, key, track in waiting[: max(late, TURN_TRACKS)]]
 
     def next_due_s(self, now_s: float, every_s: float) -> float | None:
         """Return when something has to be carried forward, from `now_s` on; None for never."""
