@@ -57,11 +57,11 @@ class Snapshot:
         self.handle = handle
         self.revision: int = handle["revision"]
         self.settings = settings or _settings_from(handle["settings"])
-        self._layers = {
+        self._layers: dict[str, LayerSettings] = {
             name: LayerSettings(unknown, outlines, decay_s)
             for name, unknown, outlines, decay_s in handle["layers"]
         }
-        self._names = list(self._layers)
+        self._names: list[str] = list(self._layers)
         #: What others derive from this snapshot and want to find again; dies with it.
         self.kept: dict[Hashable, object] = {}
         self._views: dict[str, Array] = {}
@@ -105,6 +105,21 @@ class Snapshot:
         """Return (layer, id) of the polygon or disc in a row of `Solids`."""
         layer = int(self.table(f"{kind}_layers")[row])
         return self._names[layer], bytes(self.table(f"{kind}_names")[row]).decode()
+
+    def layer_of_cell(self, number: int) -> str:
+        """Return a layer in which a cell is blocked: its row times all columns, plus its column."""
+        side = self.settings.tile_cells
+        row, column = divmod(number, self.settings.tiles[1] * side)
+        tile = (row // side) * self.settings.tiles[1] + column // side
+        for layer, of_tile, offset in self.table("layer_cells").tolist():
+            if layer < 0 or of_tile != tile:
+                continue
+            cell = int(self._buffer[offset + row % side * side + column % side])
+            name: str = self._names[layer]
+            if cell == 1 or (cell and self._layers[name].unknown_blocks):
+                return name
+        # Ground that nobody has looked at has no cells at all.
+        return next((n for n, layer in self._layers.items() if layer.unknown_blocks), "")
 
     def _shape(self, kind: str, row: int) -> Shape:
         return shape_from(

@@ -138,7 +138,7 @@ def verify(
         distance_m, kind, index). A table that does not hang together is not driven.
     """
     faults = Faults()
-    rows = _rows_of(route.table)
+    rows = rows_of(route.table)
     if rows is None or path.ndim != 2 or path.shape[1] != 5 or not np.isfinite(path).all():
         faults.append(Fault("malformed", "table and path must be finite and not empty", 0.0))
         return faults
@@ -165,7 +165,8 @@ def verify(
     return faults
 
 
-def _rows_of(table: npt.NDArray[Any]) -> Floats | None:
+def rows_of(table: npt.NDArray[Any]) -> Floats | None:
+    """Return a table as floats (n, 7); None if a column is missing or a number not finite."""
     names = ("t_s", "x_m", "y_m", "heading_rad", "curvature_per_m", "speed_mps", "gear")
     if table.ndim != 1 or len(table) == 0 or not set(names) <= set(table.dtype.names or ()):
         return None
@@ -211,15 +212,15 @@ def _check_motion(
     start_overlap_m: float,
 ) -> None:
     need_m = max(clearance_m, NEED_M_MIN)
-    hull = _drawn_in(body, TOLERANCE_M) or _whole(body)
+    hull = drawn_in(body, TOLERANCE_M) or whole(body)
     depth_m = start_overlap_m
-    while (drawn_in := _drawn_in(body, depth_m + TOLERANCE_M)) is None:
+    while (inner := drawn_in(body, depth_m + TOLERANCE_M)) is None:
         # stricter, where an arm of the outline is too thin for what is allowed
         depth_m = 0.5 * depth_m if depth_m > TOLERANCE_M else -TOLERANCE_M
     told_m = max(CLEARANCE_TOLD_M + 2.0 * TOLERANCE_M, need_m)
-    notes = _notes_for(solids, hull)
+    notes = notes_for(solids, hull)
     found = np.array([told_m, *[0.0] * 7])
-    code = drive(solids, notes, hull, drawn_in, depth_m, rows, arcs, need_m, found)
+    code = drive(solids, notes, hull, inner, depth_m, rows, arcs, need_m, found)
     if found[5] < 0.0 and code != FREE:  # an overlap is only told as such: how deep is it?
         found[5] = _clearance(solids, body, *found[2:5].tolist()).distance_m
         found[0] = min(max(found[0], -body.inner_radius_m), found[5])
@@ -268,7 +269,7 @@ def clearance_m(solids: Solids, vehicle: Checkable, pose: Pose) -> Nearest:
 def _clearance(solids: Solids, body: Body, x: float, y: float, heading: float) -> Nearest:
     care_m = 1.0
     while True:
-        nearest = _nearest(solids, _whole(body), x, y, heading, care_m)
+        nearest = _nearest(solids, whole(body), x, y, heading, care_m)
         if nearest.kind != "nothing":
             break
         if care_m > NOWHERE_M:
@@ -279,7 +280,7 @@ def _clearance(solids: Solids, body: Body, x: float, y: float, heading: float) -
     free_m, stuck_m = body.inner_radius_m, 0.0
     while free_m - stuck_m > DEPTH_M:
         half_m = 0.5 * (free_m + stuck_m)
-        inner = _drawn_in(body, half_m)
+        inner = drawn_in(body, half_m)
         found = None if inner is None else _nearest(solids, inner, x, y, heading, DEPTH_M)
         if found is None or found.distance_m > 0.0:
             free_m = half_m
@@ -291,18 +292,19 @@ def _clearance(solids: Solids, body: Body, x: float, y: float, heading: float) -
 def _nearest(
     solids: Solids, hull: Hull, x: float, y: float, heading: float, care_m: float
 ) -> Nearest:
-    notes = _notes_for(solids, hull)
+    notes = notes_for(solids, hull)
     found = np.array([care_m, *[0.0] * 7])
     rows = np.array([[0.0, x, y, heading, 0.0, 0.0, 0.0]])
     drive(solids, notes, hull, hull, 0.0, rows, np.zeros(1), -np.inf, found)
     return Nearest(float(found[5]), KINDS[int(found[6])], int(found[7]))
 
 
-def _whole(body: Body) -> Hull:
+def whole(body: Body) -> Hull:
+    """Return the body as it is."""
     return _hull(body.outline_m.tobytes(), body.skin_m)
 
 
-def _drawn_in(body: Body, depth_m: float) -> Hull | None:
+def drawn_in(body: Body, depth_m: float) -> Hull | None:
     """The body with its skin, and then its edges, moved inwards; None where one turns round."""
     from_skin_m = min(depth_m, body.skin_m)
     moved = _mitred(body.outline_m.tobytes(), depth_m - from_skin_m)
@@ -335,7 +337,8 @@ def _mitred(outline: bytes, depth_m: float) -> bytes | None:
     return moved.tobytes() if kept.min() > 0.0 else None
 
 
-def _notes_for(solids: Solids, hull: Hull) -> Notes:
+def notes_for(solids: Solids, hull: Hull) -> Notes:
+    """Return room for the work of the kernels."""
     columns = solids.cells_of.shape[1] * solids.tile_cells + 2  # one beside each border
     return Notes(
         np.empty((len(hull.outline_m), 4)),

@@ -102,7 +102,7 @@ def _report(found: Floats, s_m: float, pose: Any, distance: float, kind: int, in
 
 
 @kernel()
-def _near_rows(solids: Solids, notes: Notes, rows: Floats, arcs: Floats, i: int, m: float) -> Any:
+def near_rows(solids: Solids, notes: Notes, rows: Floats, arcs: Floats, i: int, m: float) -> Any:
     """Note what is nearer than m to the rows from i on for PART_M. Returns them, and their end."""
     end, box = _part_box(rows, arcs, i, m)
     return note_near(solids, notes, box), end
@@ -124,7 +124,7 @@ def _creep_out(
     need_m, depth = need
     care = need_m + depth + CREEP_M
     margin = body.reach_m + body.skin_m + care + BULGE_M
-    near, part_end = _near_rows(solids, notes, rows, arcs, 0, margin)
+    near, part_end = near_rows(solids, notes, rows, arcs, 0, margin)
     pose = (rows[0, 1], rows[0, 2], rows[0, 3])
     distance, kind, index = stretch_clearance(solids, notes, near, drawn_in, pose, (0.0, 0.0), care)
     top = distance - depth
@@ -136,7 +136,7 @@ def _creep_out(
     s_m = 0.0
     for i in range(rows.shape[0] - 1):
         if i >= part_end:
-            near, part_end = _near_rows(solids, notes, rows, arcs, i, margin)
+            near, part_end = near_rows(solids, notes, rows, arcs, i, margin)
         curvature = rows[i, 4]
         steps = max(math.ceil(abs(arcs[i]) / CREEP_M), 1)
         step = arcs[i] / steps
@@ -160,7 +160,7 @@ def _creep_out(
 
 
 @kernel()
-def _keep_clear(
+def keep_clear(
     solids: Solids,
     notes: Notes,
     hull: Hull,
@@ -177,7 +177,7 @@ def _keep_clear(
     while i < n - 1:
         if i >= part_end:
             margin = hull.reach_m + hull.skin_m + max(found[0], need) + BULGE_M
-            near, part_end = _near_rows(solids, notes, rows, arcs, i, margin)
+            near, part_end = near_rows(solids, notes, rows, arcs, i, margin)
         j, length = _stretch_at(rows, arcs, i, part_end)
         curvature = rows[i, 4]
         if s_m + abs(length) > from_m:
@@ -230,7 +230,7 @@ def drive(
     where and by what (see `_report`).
     """
     care = max(found[0], need)
-    near, _ = _near_rows(solids, notes, rows, arcs, 0, body.reach_m + body.skin_m + care)
+    near, _ = near_rows(solids, notes, rows, arcs, 0, body.reach_m + body.skin_m + care)
     pose = (rows[0, 1], rows[0, 2], rows[0, 3])
     distance, kind, index = stretch_clearance(solids, notes, near, body, pose, (0.0, 0.0), care)
     found[0] = distance
@@ -242,4 +242,4 @@ def drive(
         code, from_m = _creep_out(solids, notes, (body, drawn_in), rows, arcs, (need, depth), found)
         if code == BLOCKED:
             return BLOCKED
-    return _keep_clear(solids, notes, body, rows, arcs, need, from_m, found)
+    return keep_clear(solids, notes, body, rows, arcs, need, from_m, found)
