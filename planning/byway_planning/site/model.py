@@ -22,7 +22,7 @@ from byway_planning.site.places import overlaps_limits, tiles_in, tiles_of, touc
 from byway_planning.site.publishing import Publisher
 from byway_planning.site.raster import changed_span_kernel
 from byway_planning.site.records import Records
-from byway_planning.site.scans import Seen, apply_marks_kernel, checked_scan
+from byway_planning.site.scans import Seen, apply_marks_kernel, checked_scan, inside
 from byway_planning.site.settings import LayerSettings, SiteSettings
 from byway_planning.site.shapes import ID_BYTES_MAX, Limits, Shape, SiteError
 from byway_planning.site.snapshot import Handle, Snapshot, handle_for
@@ -198,7 +198,7 @@ class SiteModel:
                 outside_limits (when the sensor stands outside).
         """
         owner = self._with_cells(layer)
-        beams = checked_scan(origin, bearings_rad, ranges_m, range_m_max, range_m_min)
+        directions, lengths = checked_scan(origin, bearings_rad, ranges_m, range_m_max, range_m_min)
         x, y, _ = origin
         if not touches_limits(self.settings, (x, y, x, y)):
             raise SiteError(
@@ -206,7 +206,9 @@ class SiteModel:
                 f"the sensor at {x, y} stands outside of the site, {self.settings.limits_m}",
             )
         s = self.settings
-        seen = Seen(x, y, *beams, s.limits_m[:2], s.cell_m, s.tile_cells, s.tiles)
+        lengths = inside(x, y, directions, lengths, s.limits_m, s.cell_m)
+        corner_m = s.limits_m[:2]
+        seen = Seen(x, y, directions, lengths, corner_m, s.cell_m, s.tile_cells, s.tiles)
         for tile, marks in zip(seen.tiles, seen.marks, strict=True):
             new = owner.cells_of(tile).copy()
             apply_marks_kernel(marks, new, owner.stamps_for(tile, at_s), at_s)

@@ -13,7 +13,7 @@ import numpy as np
 import numpy.typing as npt
 
 from byway_planning.kernel import kernel
-from byway_planning.site.shapes import COORDINATE_M_MAX, SiteError
+from byway_planning.site.shapes import COORDINATE_M_MAX, Limits, SiteError
 
 Floats = npt.NDArray[np.float64]
 Marks = npt.NDArray[np.uint8]
@@ -25,6 +25,8 @@ SEEN_OCCUPIED: Final = 2
 
 BEAMS_MAX: Final = 65_536
 RANGE_M_MAX: Final = 1000.0
+#: What the beams of one scan may be long together, in cells; that many take half a second.
+LENGTH_CELLS_MAX: Final = 1e8
 
 
 def checked_scan(
@@ -71,6 +73,41 @@ def checked_scan(
     kept = ranges >= range_m_min
     lengths = np.where(ranges < range_m_max, ranges, -range_m_max)[kept]
     return origin[2] + bearings[kept], lengths
+
+
+def inside(
+    x_m: float, y_m: float, directions: Floats, lengths: Floats, limits_m: Limits, cell_m: float
+) -> Floats:
+    """
+    Cut beams off where they leave the site, a little beyond its border.
+
+    Args:
+        x_m, y_m: Where they begin, inside the limits. directions, lengths: see `checked_scan`.
+
+    Returns:
+        Their lengths, negative for those that met nothing inside.
+
+    Raises:
+        SiteError: too_large, if they are too long all together.
+    """
+    ways = []
+    for place, low, high, along in (
+        (x_m, limits_m[0], limits_m[2], np.cos(directions)),
+        (y_m, limits_m[1], limits_m[3], np.sin(directions)),
+    ):
+        border = np.where(along > 0.0, high + 2.0 * cell_m, low - 2.0 * cell_m)
+        with np.errstate(divide="ignore", over="ignore"):
+            ways.append((border - place) / along)
+    way = np.minimum(np.abs(ways[0]), np.abs(ways[1]))
+    cut: Floats = np.where(np.abs(lengths) < way, lengths, -way)
+    total = float(np.abs(cut).sum()) / cell_m
+    if total > LENGTH_CELLS_MAX:
+        raise SiteError(
+            "too_large",
+            f"the beams go through {total:.3g} cells, {LENGTH_CELLS_MAX:.0g} at most; send fewer "
+            f"beams, or a shorter range_m_max",
+        )
+    return cut
 
 
 class Seen:

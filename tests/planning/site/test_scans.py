@@ -125,6 +125,25 @@ def test_only_tiles_that_beams_cross_are_touched() -> None:
     assert len(list(model.publish().cells("lidar"))) == 2
 
 
+def test_what_a_sensor_at_the_border_sees_beyond_it_costs_nothing() -> None:
+    model = site(unknown_blocks=True)
+    bearings = np.linspace(-math.pi, math.pi, 65_536)
+    model.scan("lidar", (20.0, 16.0, 0.0), bearings, np.full(65_536, 900.0), 1000.0)
+    cells = cells_of(model, 2)
+    assert (cells == 0).all()
+    model.scan("lidar", (0.0, 0.0, 0.0), [0.0, math.pi / 2, -math.pi / 2], [5.05, 6.05, 7.0], 9.0)
+    assert set(zip(*np.nonzero(cells_of(model, 2) == 1), strict=True)) == {(0, 50), (60, 0)}
+
+
+def test_scans_that_would_take_long_are_refused() -> None:
+    model = SiteModel(SiteSettings((0.0, 0.0, 1000.0, 1000.0)), Memory.private())
+    model.declare("lidar", LayerSettings())
+    bearings = np.linspace(-math.pi, math.pi, 65_536)
+    with pytest.raises(SiteError, match="fewer") as refused:
+        model.scan("lidar", (500.0, 500.0, 0.0), bearings, np.full(65_536, np.inf), 1000.0)
+    assert refused.value.code == "too_large"
+
+
 @pytest.mark.parametrize(
     ("more", "code"),
     [
