@@ -9,9 +9,19 @@ What travels is described in protocol/SPEC.md. Byway is not a safety function: a
 proposal to a vehicle controller.
 """
 
-from byway.answer import ROUTE_TABLE, Answer, Better, Blockage, Leg, Route
+from byway.answer import (
+    ROUTE_TABLE,
+    Answer,
+    Better,
+    Blockage,
+    Leg,
+    Movable,
+    Remedy,
+    Rerouted,
+    Route,
+)
 from byway.ask import Ask
-from byway.client import Client, Event, Vehicle
+from byway.client import Client, Vehicle
 from byway.errors import (
     BadGeometry,
     BadMessage,
@@ -44,10 +54,24 @@ from byway.errors import (
     Warming,
     Withdrawn,
 )
-from byway.site_view import Cells, LayerView, SiteView
+from byway.event import Event
+from byway.layer_source import LayerSource
+from byway.messages import (
+    Alert,
+    BlockedIs,
+    Cleared,
+    GuardIs,
+    GuardLost,
+    HealthIs,
+    LayerState,
+    RerouteFailed,
+)
+from byway.site_view import Cells, GuardedView, LayerView, SiteView, TrackView
+from byway.tracks import Track
 
 __all__ = [
     "ROUTE_TABLE",
+    "Alert",
     "Answer",
     "Ask",
     "BadGeometry",
@@ -56,23 +80,35 @@ __all__ = [
     "BadValue",
     "Better",
     "Blockage",
+    "BlockedIs",
     "BywayError",
     "Cancelled",
     "Cells",
+    "Cleared",
     "Client",
     "Conflict",
     "DaemonFault",
     "DaemonLost",
     "Event",
     "Forbidden",
+    "GuardIs",
+    "GuardLost",
+    "GuardedView",
+    "HealthIs",
     "Internal",
+    "LayerSource",
+    "LayerState",
     "LayerView",
     "Leg",
     "LinkFault",
+    "Movable",
     "NewEpoch",
     "NotOwner",
     "OutsideLimits",
     "Overloaded",
+    "Remedy",
+    "RerouteFailed",
+    "Rerouted",
     "Route",
     "SenderFault",
     "SiteView",
@@ -81,6 +117,8 @@ __all__ = [
     "Superseded",
     "TimedOut",
     "TooLarge",
+    "Track",
+    "TrackView",
     "Unavailable",
     "UnknownKind",
     "UnknownLayer",

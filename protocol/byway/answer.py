@@ -70,6 +70,34 @@ class Blockage:
     depth_m: float
 
 
+@dataclass(frozen=True, slots=True)
+class Movable:
+    """An obstacle that would have to move: its id, or "cells", and a place of it."""
+
+    layer: str
+    obstacle: str
+    x_m: float
+    y_m: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Remedy:
+    """
+    What would have to move for a disc to get through.
+
+    Attributes:
+        movables: A small set, not proved to be the smallest.
+        way_m: (n, 2): the way of the disc.
+        disc_radius_m: Its radius; the whole vehicle may need more room.
+        proved: Whether there is no route without moving anything.
+    """
+
+    movables: tuple[Movable, ...]
+    way_m: npt.NDArray[np.float64]
+    disc_radius_m: float
+    proved: bool
+
+
 @dataclass(frozen=True, slots=True, eq=False, kw_only=True)
 class Found:
     """
@@ -82,6 +110,7 @@ class Found:
         bound: No route costs less; inf if there is none.
         gap: (cost - bound) / cost, 1 without a route.
         blocked_by: For start_blocked and goal_blocked.
+        remedy: What would have to move, for no_route and not_found, if there was time to look.
         seed: With which it can be computed again.
         left_out: Layers that were not counted.
         statistics: Numbers and texts by name, as the search tells them.
@@ -89,6 +118,7 @@ class Found:
         epoch: Of the daemon.
         unit: Whose route it is.
         replan: Id of the request.
+        vehicle, clearance_m: As asked; empty and None where it was somebody else who asked.
     """
 
     kind: str
@@ -105,6 +135,9 @@ class Found:
     epoch: str
     unit: str
     replan: str
+    remedy: Remedy | None = None
+    vehicle: str = ""
+    clearance_m: float | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False, kw_only=True)
@@ -117,12 +150,14 @@ class Answer(Found):
         waited_s: Until a worker took it.
         total_s: Until the answer left.
         attempts: Workers that it took; more than one if one was lost.
+        guard: The guard that stands on the route, if one was asked for.
     """
 
     first_s: float | None
     waited_s: float
     total_s: float
     attempts: int
+    guard: str | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False, kw_only=True)
@@ -139,37 +174,80 @@ class Better(Found):
     number: int
 
 
-def answer_of(received: frames.Received) -> Answer:
-    """Return what an `answer` says. Raises BadReply."""
+@dataclass(frozen=True, slots=True, eq=False, kw_only=True)
+class Rerouted(Found):
+    """
+    A new route for a unit whose guarded one is blocked; it is guarded already.
+
+    Attributes:
+        guard: Of the new route.
+        was: The guard of the old one.
+        from_m: Where on the old route the new one begins; negative before its start.
+        in_s: When the unit is there, by the timing of the old route.
+    """
+
+    guard: str
+    was: str
+    from_m: float
+    in_s: float
+
+
+def answer_of(received: frames.Received, asked: messages.Replan | None = None) -> Answer:
+    """Return what an `answer` to a replan says. Raises BadReply."""
     message = received.message
     if not isinstance(message, messages.AnswerMessage):
         raise BadReply(f"a {received.header.kind} where an answer was due")
     return Answer(
-        **_found(received.header, message.unit, message.revision, message.outcome, received.packed),
+        **_found(received.header, message, received.packed),
+        **_asked(asked),
         first_s=message.first_s,
         waited_s=message.waited_s,
         total_s=message.total_s,
         attempts=message.attempts,
+        guard=message.guard,
     )
 
 
-def better_of(received: frames.Received) -> Better:
+def _asked(asked: messages.Replan | None) -> dict[str, Any]:
+    if asked is None:
+        return {}
+    return {"vehicle": asked.vehicle, "clearance_m": asked.clearance_m}
+
+
+def better_of(received: frames.Received, asked: messages.Replan | None = None) -> Better:
     """Return what a `better` says. Raises BadReply."""
     message = received.message
     if not isinstance(message, messages.BetterMessage):
         raise BadReply(f"a {received.header.kind} where a better was due")
     return Better(
-        **_found(received.header, message.unit, message.revision, message.outcome, received.packed),
+        **_found(received.header, message, received.packed),
+        **_asked(asked),
         elapsed_s=message.elapsed_s,
         number=received.header.number,
     )
 
 
+def rerouted_of(received: frames.Received) -> Rerouted:
+    """Return what a `rerouted` says. Raises BadReply."""
+    message = received.message
+    if not isinstance(message, messages.Rerouted):
+        raise BadReply(f"a {received.header.kind} where a rerouted was due")
+    return Rerouted(
+        **_found(received.header, message, received.packed),
+        guard=message.guard,
+        was=message.was,
+        from_m=message.from_m,
+        in_s=message.in_s,
+    )
+
+
 def _found(
-    header: frames.Header, unit: str, revision: int, outcome: bytes, packed: Bytes
+    header: frames.Header,
+    message: messages.AnswerMessage | messages.BetterMessage | messages.Rerouted,
+    packed: Bytes,
 ) -> dict[str, Any]:
     try:
-        told = frames.decode_outcome(outcome, packed)
+        told = frames.decode_outcome(message.outcome, packed)
         route = _route(told, packed) if told.kind == "route" else None
     except SenderFault as fault:
         raise BadReply(f"the outcome cannot be read: {fault.text}", fault.facts) from fault
@@ -186,11 +264,21 @@ def _found(
         "seed": told.seed,
         "left_out": tuple(told.left_out),
         "statistics": told.statistics,
-        "revision": revision,
+        "remedy": None if told.remedy is None else _remedy(told.remedy),
+        "revision": message.revision,
         "epoch": header.epoch,
-        "unit": unit,
+        "unit": message.unit,
         "replan": header.id,
     }
+
+
+def _remedy(told: messages.RemedyIs) -> Remedy:
+    return Remedy(
+        tuple(Movable(each.layer, each.id, each.x_m, each.y_m) for each in told.movables),
+        np.array(told.way_m, np.float64).reshape(-1, 2),
+        told.disc_radius_m,
+        told.proved,
+    )
 
 
 def _route(told: messages.OutcomeIs, packed: Bytes) -> Route:

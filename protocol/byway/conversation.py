@@ -2,20 +2,24 @@
 The two conversations with a daemon: questions on the requests socket, changes on the updates one.
 
 Both go on over lost connections: what is open is sent again on a fresh socket, with the same id or
-number, so that the daemon does it once. Neither waits by itself: a turn sends what is to be sent,
-waits until something happens or a given time, and takes in what came.
+number, so that the daemon does it once. Neither waits by itself: `work` takes in what came, or
+sends what is to be sent; `waits_for` says what to wait for before the next time.
 """
 
+import math
 from abc import ABC, abstractmethod
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Final
 
 from byway import frames, messages
 from byway.errors import BadReply, DaemonLost, SenderFault, from_code
-from byway.link import Link, wait
+from byway.link import Link
 from byway.packed import Bytes
 from byway.source import Source
+
+#: How long a source that was sent away waits before it tries again by itself.
+_HOLD_S: Final = 0.1
 
 #: What a client reads from its clock: seconds, from anywhere.
 Clock = Callable[[], float]
@@ -39,70 +43,114 @@ class Patience:
     listen_s: float = 0.25
 
 
-class _Line(ABC):
+class Line(ABC):
     """What both conversations have in common: a link, and since when it has been down."""
 
     def __init__(self, link: Link, patience: Patience, clock: Clock) -> None:
-        self._link = link
+        self.link: Final = link
         self._patience: Final = patience
         self._clock: Final = clock
+        #: Since when something could not be sent.
         self._down_since_s: float | None = None
+        #: How many messages have come.
+        self.came = 0
 
     @property
     def is_connected(self) -> bool:
         """Whether there is a connection, as far as is known."""
-        return self._link.is_connected
+        return self.link.is_connected
 
     def close(self) -> None:
         """End the conversation."""
-        self._link.close()
+        self.link.close()
 
-    def _look(self, now_s: float) -> bool:
-        """Take note of the connection; tell whether a fresh one was begun."""
-        self._link.look()
-        if not self._link.is_lost:
-            return False
-        self._link.reopen()
-        self._down_since_s = now_s
-        return True
-
-    def _note_sent(self, now_s: float, *, is_sent: bool) -> None:
+    def work(self) -> bool:
         """
-        Take note that something could be sent, or could not.
+        Take in what has come; if nothing has, send what is to be sent.
+
+        Returns:
+            Whether something had come.
 
         Raises:
-            DaemonLost: If there has been no connection for too long.
+            BadReply; and what the daemon says to a source as a whole.
         """
-        if is_sent:
-            self._down_since_s = None
-            return
-        if self._down_since_s is None:
-            self._down_since_s = now_s
-        if now_s - self._down_since_s >= self._patience.reconnect_s:
-            self._down_since_s = None
+        # What came since the last time counts, however long ago that was.
+        if self.take_in():
+            return True
+        now_s = self._clock()
+        self._renew(now_s)
+        self._send(now_s)
+        return False
+
+    def check(self, since_s: float) -> None:
+        """Raise DaemonLost if somebody has waited for a connection since then, for too long."""
+        if self._clock() >= self._given_up_at_s(since_s):
             raise DaemonLost(
-                f"no connection to {self._link.endpoint} within {self._patience.reconnect_s:g} s",
-                {"endpoint": self._link.endpoint},
+                f"no connection to {self.link.endpoint} within {self._patience.reconnect_s:g} s",
+                {"endpoint": self.link.endpoint},
             )
 
-    def _wake_s(self, until_s: float, repeat_at_s: Sequence[float]) -> float:
-        if self._down_since_s is not None:
-            until_s = min(until_s, self._down_since_s + self._patience.reconnect_s)
-        return min([until_s, *repeat_at_s])
+    def _given_up_at_s(self, since_s: float) -> float:
+        if self._down_since_s is None:
+            return math.inf
+        return max(self._down_since_s, since_s) + self._patience.reconnect_s
 
-    def _take_in_all(self) -> bool:
+    def waits_for(self, since_s: float = math.inf) -> tuple[tuple[Link, bool], float]:
+        """
+        Return what to wait for, and when to work again at the latest.
+
+        Args:
+            since_s: Since when somebody waits, see `check`.
+        """
+        at_s = min(self._wake_s(), self._given_up_at_s(since_s))
+        return (self.link, self._wants_to_send()), at_s
+
+    def take_in(self) -> bool:
         """Take in all messages that have come; tell whether there were any. Raises BadReply."""
         any_came = False
-        while (parts := self._link.receive()) is not None:
+        while (parts := self.link.receive()) is not None:
+            self.came += 1
             try:
                 received = frames.decode(parts, frames.REPLIES)
             except SenderFault as fault:
                 raise BadReply(
-                    f"{self._link.endpoint} sent what cannot be read: {fault.text}", fault.facts
+                    f"{self.link.endpoint} sent what cannot be read: {fault.text}", fault.facts
                 ) from fault
             self._take_in(received)
             any_came = True
         return any_came
+
+    def _look(self) -> bool:
+        """Take note of the connection; tell whether a fresh one was begun."""
+        self.link.look()
+        if self.link.is_lost:
+            self.link.reopen()
+            return True
+        return False
+
+    def _note_sent(self, now_s: float, *, is_sent: bool) -> bool:
+        """Take note that something could be sent, or could not."""
+        if is_sent:
+            self._down_since_s = None
+        elif self._down_since_s is None:
+            self._down_since_s = now_s
+        return is_sent
+
+    @abstractmethod
+    def _renew(self, now_s: float) -> None:
+        """Look after the connection and after what is overdue."""
+
+    @abstractmethod
+    def _send(self, now_s: float) -> None:
+        """Send what is to be sent, as far as that can be."""
+
+    @abstractmethod
+    def _wants_to_send(self) -> bool:
+        """Whether something waits for a connection."""
+
+    @abstractmethod
+    def _wake_s(self) -> float:
+        """Return when something is due."""
 
     @abstractmethod
     def _take_in(self, received: frames.Received) -> None:
@@ -116,6 +164,7 @@ class Question:
 
     Attributes:
         work_s: How long the daemon may take after it has said `accepted`.
+        asked_s: When it was made.
         deadline_s: When nobody waits for it any more.
         reply: The one that ends it, once it is there.
     """
@@ -123,6 +172,7 @@ class Question:
     id: str
     parts: list[Bytes]
     work_s: float
+    asked_s: float
     deadline_s: float
     repeat_s: float
     reply: frames.Received | None = None
@@ -130,7 +180,7 @@ class Question:
     repeat_at_s: float = 0.0
 
 
-class Requests(_Line):
+class Requests(Line):
     """The conversation on the requests socket. Any number of questions may be open."""
 
     def __init__(self, link: Link, patience: Patience, clock: Clock) -> None:
@@ -144,12 +194,14 @@ class Requests(_Line):
         message: messages.Request,
         deadline_s: float,
         *,
+        packed: Bytes = b"",
         epoch: str = "",
         work_s: float = 0.0,
     ) -> Question:
-        """Open a question; the next turn sends it."""
-        parts = frames.encode(frames.Header(message.kind, id, epoch=epoch), message)
-        question = Question(id, parts, work_s, deadline_s, self._patience.repeat_s)
+        """Open a question; it is sent when there is work next."""
+        parts = frames.encode(frames.Header(message.kind, id, epoch=epoch), message, packed)
+        repeat_s = self._patience.repeat_s
+        question = Question(id, parts, work_s, self._clock(), deadline_s, repeat_s)
         self._open[id] = question
         return question
 
@@ -157,32 +209,12 @@ class Requests(_Line):
         """Be no longer interested in the replies to a question."""
         self._open.pop(question.id, None)
 
-    def turn(self, until_s: float, others: Sequence[Link] = ()) -> None:
-        """
-        Send, wait, take in.
-
-        Args:
-            until_s: When to return at the latest, by the clock.
-            others: Links whose messages end the waiting as well.
-
-        Raises:
-            DaemonLost, BadReply.
-        """
-        # What came since the last turn counts, however long ago that was.
-        if self._take_in_all():
-            return
-        now_s = self._clock()
+    def _renew(self, now_s: float) -> None:
         for question in [each for each in self._open.values() if now_s >= each.deadline_s]:
             self.end(question)
-        if self._look(now_s) or self._is_silent(now_s):
+        if self._look() or self._is_silent(now_s):
             for question in self._open.values():
                 question.is_sent = False
-        self._send(now_s)
-        unsent = any(not question.is_sent for question in self._open.values())
-        repeats_s = [each.repeat_at_s for each in self._open.values() if each.is_sent]
-        wake_s = self._wake_s(until_s, repeats_s)
-        wait([(self._link, unsent), *((other, False) for other in others)], wake_s, self._clock)
-        self._take_in_all()
 
     def _is_silent(self, now_s: float) -> bool:
         """Tell whether a reply is overdue, and begin a fresh connection if so."""
@@ -192,18 +224,25 @@ class Requests(_Line):
         for question in overdue:
             question.repeat_s *= 2.0
         if overdue:
-            self._link.reopen()
+            self.link.reopen()
         return bool(overdue)
 
     def _send(self, now_s: float) -> None:
         for question in self._open.values():
             if question.is_sent:
                 continue
-            question.is_sent = self._link.send(question.parts)
-            self._note_sent(now_s, is_sent=question.is_sent)
+            question.is_sent = self._note_sent(now_s, is_sent=self.link.send(question.parts))
             if not question.is_sent:
                 return
             question.repeat_at_s = now_s + question.repeat_s
+
+    def _wants_to_send(self) -> bool:
+        return any(not question.is_sent for question in self._open.values())
+
+    def _wake_s(self) -> float:
+        return min(
+            (each.repeat_at_s for each in self._open.values() if each.is_sent), default=math.inf
+        )
 
     def _take_in(self, received: frames.Received) -> None:
         question = self._open.get(received.header.id)
@@ -216,7 +255,7 @@ class Requests(_Line):
         self.end(question)
 
 
-class Updates(_Line):
+class Updates(Line):
     """The conversation on the updates socket: brings the line of a source to the daemon."""
 
     def __init__(self, link: Link, patience: Patience, clock: Clock, source: Source) -> None:
@@ -225,43 +264,42 @@ class Updates(_Line):
         self._repeat_s = patience.repeat_s
         self._repeat_at_s = 0.0
         self._hold_until_s = 0.0
+        #: The connection is a fresh one: perhaps to another life of the daemon.
+        self._wonders = False
 
-    def turn(self, until_s: float) -> None:
-        """
-        Send, wait, take in.
-
-        Raises:
-            DaemonLost, BadReply; and what the daemon says to the source as a whole, such as
-            Stopping: the changes stay in the line.
-        """
-        # What came since the last turn counts, however long ago that was.
-        if self._take_in_all():
-            return
-        source, now_s = self._source, self._clock()
-        if self._look(now_s):
+    def _renew(self, now_s: float) -> None:
+        source = self._source
+        if self._look():
+            self._wonders, self._hold_until_s = True, 0.0
             source.send_again()
         elif source.line and not source.has_unsent and now_s >= self._repeat_at_s:
             self._repeat_s *= 2.0
-            self._link.reopen()
+            self.link.reopen()
             source.send_again()
-        self._send(now_s)
-        wakes_s = [self._repeat_at_s] if source.line and not source.has_unsent else []
-        holds = now_s < self._hold_until_s
-        if holds:
-            wakes_s = [self._hold_until_s]
-        wake_s = self._wake_s(until_s, wakes_s)
-        wait([(self._link, source.has_unsent and not holds)], wake_s, self._clock)
-        self._take_in_all()
+        if self._wonders and self.is_connected:
+            self._wonders = False
+            source.keep(now_s, asks_who_is_there=True)
+        elif now_s >= source.keep_at_s():
+            source.keep(now_s)
 
     def _send(self, now_s: float) -> None:
         if now_s < self._hold_until_s:
             return
-        for parts in self._source.unsent():
-            is_sent = self._link.send(parts)
-            self._note_sent(now_s, is_sent=is_sent)
-            if not is_sent:
+        for parts in self._source.unsent(now_s):
+            if not self._note_sent(now_s, is_sent=self.link.send(parts)):
                 return
             self._repeat_at_s = now_s + self._repeat_s
+
+    def _wants_to_send(self) -> bool:
+        return self._source.has_unsent and self._clock() >= self._hold_until_s
+
+    def _wake_s(self) -> float:
+        source = self._source
+        if self._clock() < self._hold_until_s:
+            return self._hold_until_s
+        if source.line and not source.has_unsent:
+            return self._repeat_at_s
+        return source.keep_at_s()
 
     def _take_in(self, received: frames.Received) -> None:
         source, now_s, epoch = self._source, self._clock(), received.header.epoch
@@ -277,6 +315,7 @@ class Updates(_Line):
                 source.refused(message)
             case messages.ErrorMessage() as message:
                 source.send_again()
+                self._hold_until_s = now_s + (message.retry_after_s or _HOLD_S)
                 raise from_code(message.code, message.text, message.facts, message.retry_after_s)
 
     def _is_ours(self, source: str, epoch: str) -> bool:

@@ -35,6 +35,8 @@ class Ear:
         self.link: Final = link
         #: Topics of which the daemon has said that the subscription reached it.
         self.confirmed: set[str] = set()
+        #: How many messages have come.
+        self.came = 0
         self._last: OrderedDict[str, tuple[str, int]] = OrderedDict()
 
     def look(self) -> None:
@@ -47,6 +49,7 @@ class Ear:
     def next(self) -> Heard | None:
         """Return the next event that was not heard before, if one has come."""
         while (parts := self.link.receive()) is not None:
+            self.came += 1
             topic = parts[0].decode("ascii", "replace")
             try:
                 received = frames.decode(parts[1:], frames.EVENTS)

@@ -3,30 +3,45 @@ What a source remembers of one of its layers, to give it to a daemon that was st
 
 Obstacles are remembered one by one, with the time at which they expire. Of cells the patches are
 remembered as they were sent: a newer one that covers an older one takes its place, and when they
-are too many or too large the oldest is forgotten and the layer counts as incomplete.
+are too many or too large the oldest is forgotten and the layer counts as incomplete. What moves,
+and the last scans, are remembered for as long as they say something about now.
 """
 
-from collections import deque
 from collections.abc import Iterable, Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any, Final, TypeAlias
 
 import numpy as np
-import numpy.typing as npt
 
-from byway import limits, messages, obstacles
+from byway import limits, messages, obstacles, tracks
 from byway.packed import Bytes
+from byway.strokes import Strokes
 
-#: Patches of one layer. A range sensor that sends whole patches of the same place keeps one; 256
-#: are the tiles of a site of 400 x 400 m, sent in pieces of 25 m.
-patches_max: Final = 256
-#: Bytes of their cells: what four patches of the largest size have.
-patch_bytes_max: Final = 4 * limits.packed_bytes_max
+#: Seconds for which a track that tells no expiry is worth repeating.
+track_fresh_s: Final = 2.0
 
 #: A change to be sent, its packed frame, and when it counts from.
 Restoring: TypeAlias = tuple[messages.AnyChange, Bytes, float]
-_Polygon: TypeAlias = npt.NDArray[np.float64]
-_Disc: TypeAlias = tuple[float, float, float]
+
+#: What a layer is, and how it is looked after: the fields that `claim` and `replace_layer` share.
+_SETTINGS: Final = (
+    *("lease_s", "unknown_blocks", "outlines_only", "durable"),
+    *("expected_period_s", "when_stale", "decay_s"),
+)
+
+
+@dataclass(frozen=True, slots=True)
+class _Moving:
+    """A track, when it was seen, and when it is gone; None: when the daemon says so."""
+
+    track: tracks.Track
+    seen_at_s: float
+    gone_at_s: float | None
+
+    def is_fresh(self, now_s: float) -> bool:
+        """Whether it says something about now."""
+        gone_at_s = self.seen_at_s + track_fresh_s if self.gone_at_s is None else self.gone_at_s
+        return now_s < min(gone_at_s, self.seen_at_s + limits.age_s_max)
 
 
 @dataclass(slots=True)
@@ -35,19 +50,22 @@ class HeldLayer:
 
     #: It began with a `replace_layer`: nobody else has put anything there.
     is_whole: bool = False
-    #: Older patches were forgotten.
-    is_incomplete: bool = False
-    lease_s: float | None = None
-    unknown_blocks: bool | None = None
-    outlines_only: bool | None = None
-    #: Every id is in one of the two at most.
-    polygons: dict[str, _Polygon] = field(default_factory=dict)
-    discs: dict[str, _Disc] = field(default_factory=dict)
+    #: By name, those that were told.
+    settings: dict[str, Any] = field(default_factory=lambda: {"lease_s": None})
+    #: Every id is in one of polygons, discs, boxes and tracks at most.
+    shapes: obstacles.Shapes = field(default_factory=lambda: obstacles.Shapes({}, {}))
     #: When an obstacle is gone, for those that expire.
     expires_at_s: dict[str, float] = field(default_factory=dict)
-    patches: deque[tuple[messages.Patch, Bytes]] = field(default_factory=deque)
-    _patch_bytes: int = 0
+    tracks: dict[str, _Moving] = field(default_factory=dict)
+    #: Patches and scans.
+    strokes: Strokes = field(default_factory=Strokes)
     _look_at_expiries: int = 64
+
+    @property
+    def lease_s(self) -> float | None:
+        """How long its owner may be silent; None: as long as it likes."""
+        lease_s: float | None = self.settings.get("lease_s")
+        return lease_s
 
     # -- what has become visible ------------------------------------------------------------------
 
@@ -60,9 +78,11 @@ class HeldLayer:
                 for obstacle_id in message.ids:
                     self._forget(obstacle_id)
             case messages.Patch():
-                self._take_patch(message, packed)
-            case messages.Scan() | messages.Track():
-                pass  # of the moment: a daemon that was started again is told the next one
+                self.strokes.patch(message, packed)
+            case messages.Scan():
+                self.strokes.scan(message, packed, made_s - message.age_s)
+            case messages.Track():
+                self._take_tracks(message, packed, made_s)
             case messages.ReplaceLayer():
                 self._take_settings(message)
                 self._clear()
@@ -72,54 +92,60 @@ class HeldLayer:
         self._forget_expired(now_s)
 
     def _take_settings(self, message: messages.Claim | messages.ReplaceLayer) -> None:
-        self.lease_s = message.lease_s
-        if message.unknown_blocks is not None:
-            self.unknown_blocks = message.unknown_blocks
-        if message.outlines_only is not None:
-            self.outlines_only = message.outlines_only
+        told = {name: getattr(message, name) for name in _SETTINGS}
+        self.settings.update({name: value for name, value in told.items() if value is not None})
+        # The one setting that is not as it was if it is not told.
+        self.settings["lease_s"] = message.lease_s
 
     def _clear(self) -> None:
-        self.is_whole, self.is_incomplete = True, False
-        self.polygons.clear()
-        self.discs.clear()
+        self.is_whole = True
+        self.shapes = obstacles.Shapes({}, {})
         self.expires_at_s.clear()
-        self.patches.clear()
-        self._patch_bytes = 0
+        self.tracks.clear()
+        self.strokes = Strokes()
 
     def _take_obstacles(
         self, message: messages.Put | messages.ReplaceLayer, packed: Bytes, made_s: float
     ) -> None:
-        found = obstacles.unpack_shapes(message, packed)
-        for obstacle_id in (*found.polygons, *found.discs):
+        found, mine = obstacles.unpack_shapes(message, packed), self.shapes
+        for obstacle_id in (*found.polygons, *found.discs, *found.boxes):
             self._forget(obstacle_id)
             if message.expires_in_s is not None:
                 self.expires_at_s[obstacle_id] = made_s + message.expires_in_s
         # Copies: a view would keep alive all that came in the same frame.
-        self.polygons.update({each: ring.copy() for each, ring in found.polygons.items()})
-        self.discs.update(found.discs)
+        mine.polygons.update({each: ring.copy() for each, ring in found.polygons.items()})
+        mine.holes.update(
+            {each: tuple(hole.copy() for hole in holes) for each, holes in found.holes.items()}
+        )
+        mine.discs.update(found.discs)
+        mine.boxes.update(found.boxes)
+
+    def _take_tracks(self, message: messages.Track, packed: Bytes, made_s: float) -> None:
+        seen_at_s = made_s - message.age_s
+        expires_in_s = message.expires_in_s
+        gone_at_s = None if expires_in_s is None else made_s + expires_in_s
+        for track_id, track in tracks.unpack_tracks(message, packed).items():
+            self._forget(track_id)
+            if track.outline_m is not None:
+                track = replace(track, outline_m=np.array(track.outline_m))
+            self.tracks[track_id] = _Moving(track, seen_at_s, gone_at_s)
 
     def _forget(self, obstacle_id: str) -> None:
-        self.polygons.pop(obstacle_id, None)
-        self.discs.pop(obstacle_id, None)
+        mine = self.shapes
+        for kind in (mine.polygons, mine.holes, mine.discs, mine.boxes):
+            kind.pop(obstacle_id, None)
         self.expires_at_s.pop(obstacle_id, None)
+        self.tracks.pop(obstacle_id, None)
 
     def _forget_expired(self, now_s: float) -> None:
         # Looked at when they have doubled, so that it costs a constant time for each.
-        if len(self.expires_at_s) < self._look_at_expiries:
+        if len(self.expires_at_s) + len(self.tracks) < self._look_at_expiries:
             return
-        for obstacle_id in [each for each, at_s in self.expires_at_s.items() if at_s <= now_s]:
+        gone = [each for each, at_s in self.expires_at_s.items() if at_s <= now_s]
+        gone += [each for each, moving in self.tracks.items() if not moving.is_fresh(now_s)]
+        for obstacle_id in gone:
             self._forget(obstacle_id)
-        self._look_at_expiries = max(64, 2 * len(self.expires_at_s))
-
-    def _take_patch(self, message: messages.Patch, packed: Bytes) -> None:
-        box_m = _box_m(message)
-        kept = [each for each in self.patches if not _covers(box_m, _box_m(each[0]))]
-        self.patches = deque([*kept, (message, packed)])
-        self._patch_bytes = sum(len(cells) for _, cells in self.patches)
-        while len(self.patches) > patches_max or self._patch_bytes > patch_bytes_max:
-            _, cells = self.patches.popleft()
-            self._patch_bytes -= len(cells)
-            self.is_incomplete = True
+        self._look_at_expiries = max(64, 2 * (len(self.expires_at_s) + len(self.tracks)))
 
     # -- what is to be sent to a daemon that has nothing ----------------------------------------
 
@@ -129,16 +155,11 @@ class HeldLayer:
         self._forget_expired(now_s)
         lasting = [each for each in self._ids() if each not in self.expires_at_s]
         chunks = list(self._chunks(lasting))
-        settings: dict[str, Any] = {
-            "lease_s": self.lease_s,
-            "unknown_blocks": self.unknown_blocks,
-            "outlines_only": self.outlines_only,
-        }
         if self.is_whole:
             fields, packed = self._packed(chunks.pop(0) if chunks else [])
-            yield messages.ReplaceLayer(layer=name, **settings, **fields), packed, now_s
+            yield messages.ReplaceLayer(layer=name, **self.settings, **fields), packed, now_s
         else:
-            yield messages.Claim(layer=name, **settings), b"", now_s
+            yield messages.Claim(layer=name, **self.settings), b"", now_s
         for chunk in chunks:
             fields, packed = self._packed(chunk)
             yield messages.Put(layer=name, **fields), packed, now_s
@@ -147,12 +168,30 @@ class HeldLayer:
                 fields, packed = self._packed(chunk)
                 left_s = at_s - now_s
                 yield messages.Put(layer=name, expires_in_s=left_s, **fields), packed, now_s
-        for patch, cells in self.patches:
-            yield patch, cells, now_s
+        yield from self.strokes.restoring(now_s, self.settings.get("decay_s"))
+        yield from self._restoring_tracks(name, now_s)
+
+    def _restoring_tracks(self, name: str, now_s: float) -> Iterator[Restoring]:
+        together: dict[tuple[float, float | None], dict[str, tracks.Track]] = {}
+        for track_id, moving in self.tracks.items():
+            key = (moving.seen_at_s, moving.gone_at_s)
+            together.setdefault(key, {})[track_id] = moving.track
+        # Those of one moment came in few messages, and fit into as many again.
+        for (seen_at_s, gone_at_s), found in sorted(together.items(), key=lambda each: each[0][0]):
+            ids = list(found)
+            for first in range(0, len(ids), limits.tracks_max):
+                some = {each: found[each] for each in ids[first : first + limits.tracks_max]}
+                fields, packed = tracks.pack_tracks(some)
+                left_s = None if gone_at_s is None else gone_at_s - now_s
+                message = messages.Track(
+                    layer=name, age_s=now_s - seen_at_s, expires_in_s=left_s, **fields
+                )
+                yield message, packed, now_s
 
     def _ids(self) -> Iterator[str]:
-        yield from self.polygons
-        yield from self.discs
+        yield from self.shapes.polygons
+        yield from self.shapes.discs
+        yield from self.shapes.boxes
 
     def _expires(self, obstacle_id: str, at_s: float) -> bool:
         return self.expires_at_s.get(obstacle_id) == at_s
@@ -160,11 +199,10 @@ class HeldLayer:
     def _chunks(self, ids: Iterable[str]) -> Iterator[list[str]]:
         """Give the ids in as many pieces as there must be messages."""
         chunk: list[str] = []
-        # Columns are rounded up to 8 bytes, and `starts` has one more than there are polygons.
-        size_bytes = room_bytes = 64
+        # Columns are rounded up to 8 bytes, and `starts` and `rings` have one more than they count.
+        size_bytes = room_bytes = 80
         for obstacle_id in ids:
-            ring = self.polygons.get(obstacle_id)
-            own_bytes = len(obstacle_id) + 1 + (24 if ring is None else 8 + ring.nbytes)
+            own_bytes = self._size_bytes(obstacle_id)
             if chunk and (
                 len(chunk) == limits.obstacles_max
                 or size_bytes + own_bytes > limits.packed_bytes_max
@@ -176,31 +214,22 @@ class HeldLayer:
         if chunk:
             yield chunk
 
+    def _size_bytes(self, obstacle_id: str) -> int:
+        mine = self.shapes
+        size_bytes = len(obstacle_id) + 1
+        outline = mine.polygons.get(obstacle_id)
+        if outline is None:
+            return size_bytes + (40 if obstacle_id in mine.boxes else 24)
+        rings = (outline, *mine.holes.get(obstacle_id, ()))
+        return size_bytes + 8 + sum(8 + ring.nbytes for ring in rings)
+
     def _packed(self, ids: Iterable[str]) -> tuple[obstacles.Fields, bytes]:
-        chosen = list(ids)
+        chosen, mine = list(ids), self.shapes
         return obstacles.pack_shapes(
             obstacles.Shapes(
-                {each: self.polygons[each] for each in chosen if each in self.polygons},
-                {each: self.discs[each] for each in chosen if each in self.discs},
+                {each: mine.polygons[each] for each in chosen if each in mine.polygons},
+                {each: mine.discs[each] for each in chosen if each in mine.discs},
+                {each: mine.holes[each] for each in chosen if each in mine.holes},
+                {each: mine.boxes[each] for each in chosen if each in mine.boxes},
             )
         )
-
-
-_Box: TypeAlias = tuple[float, float, float, float]
-
-
-def _box_m(patch: messages.Patch) -> _Box:
-    rows, columns = patch.columns["cells"].shape
-    x_m, y_m = patch.corner_m
-    return x_m, y_m, x_m + columns * patch.cell_m, y_m + rows * patch.cell_m
-
-
-def _covers(outer_m: _Box, inner_m: _Box) -> bool:
-    # A hair of tolerance: the same patch sent again must cover itself after rounding.
-    hair_m = 1e-9
-    return (
-        outer_m[0] <= inner_m[0] + hair_m
-        and outer_m[1] <= inner_m[1] + hair_m
-        and outer_m[2] >= inner_m[2] - hair_m
-        and outer_m[3] >= inner_m[3] - hair_m
-    )

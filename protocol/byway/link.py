@@ -10,8 +10,9 @@ ends; heartbeats find a host that has fallen silent within four seconds.
 
 import math
 import struct
-from collections.abc import Callable, Mapping, Sequence
-from typing import Any, Final, TypeAlias
+from collections.abc import Callable, Generator, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any, Final, Protocol, TypeAlias, TypeVar
 
 import zmq
 
@@ -40,6 +41,8 @@ SUB_OPTIONS: Final[Mapping[zmq.SocketOption, int]] = {zmq.SNDHWM: 0}
 
 _EVENT: Final = struct.Struct("=HI")
 
+Result = TypeVar("Result")
+
 
 class Link:
     """
@@ -63,6 +66,8 @@ class Link:
         self.is_connected = False
         #: The connection that this socket had is gone. Only a fresh socket helps.
         self.is_lost = False
+        #: Called before the socket is closed: whoever watches its descriptors must let go of them.
+        self.before_close: Callable[[], object] = _nothing
         self._open()
 
     def _open(self) -> None:
@@ -93,6 +98,7 @@ class Link:
 
     def close(self) -> None:
         """Close the socket; what it still had to send is forgotten."""
+        self.before_close()
         self._socket.disable_monitor()
         self._monitor.close(0)
         self._socket.close(0)
@@ -117,6 +123,20 @@ class Link:
             return self._socket.recv_multipart(zmq.DONTWAIT)
         return None
 
+    @property
+    def descriptors(self) -> tuple[int, int]:
+        """What becomes readable when something may have happened; see `is_ready`."""
+        return self._socket.fileno(), self._monitor.fileno()
+
+    def is_ready(self, *, wants_to_send: bool) -> bool:
+        """
+        Whether something has come, or can be sent, or there is news of the connection.
+
+        The descriptors tell of changes only: ask before waiting for them.
+        """
+        mask = zmq.POLLIN | (zmq.POLLOUT if wants_to_send else 0)
+        return bool(_ready(self._socket) & mask) or _can_read(self._monitor)
+
     def look(self) -> None:
         """Take note of what has become of the connection."""
         while _can_read(self._monitor):
@@ -128,10 +148,57 @@ class Link:
                 self.is_connected, self.is_lost = False, True
 
 
-def _can_read(sock: Socket) -> bool:
+def _nothing() -> None:
+    pass
+
+
+def _ready(sock: Socket) -> int:
     # To ask costs a third of the exception that says that there is nothing.
     ready: int = sock.get(zmq.EVENTS)  # type: ignore[assignment]
-    return bool(ready & zmq.POLLIN)
+    return ready
+
+
+def _can_read(sock: Socket) -> bool:
+    return bool(_ready(sock) & zmq.POLLIN)
+
+
+@dataclass(frozen=True, slots=True)
+class Waiting:
+    """
+    What somebody waits for.
+
+    Attributes:
+        links: Each with whether there is something to send that waits for a connection.
+        until_s: A reading of the clock.
+    """
+
+    links: Sequence[tuple[Link, bool]]
+    until_s: float
+
+
+#: What takes a while: a generator that gives what to wait for, and returns what came of it.
+#: Whoever drives it waits, be it by blocking or by an event loop, and takes the next step.
+Steps: TypeAlias = Generator[Waiting, None, Result]
+
+
+class Drive(Protocol):
+    """Takes all steps and returns what comes of it, as `run` does."""
+
+    def __call__(self, steps: Steps[Result], /) -> Result:
+        """Take them."""
+
+
+def run(steps: Steps[Result], clock: Callable[[], float]) -> Result:
+    """Take all steps, blocking, and return what comes of it."""
+    try:
+        while True:
+            waiting = next(steps)
+            wait(waiting.links, waiting.until_s, clock)
+    except StopIteration as stop:
+        result: Result = stop.value
+        return result
+    finally:
+        steps.close()
 
 
 def wait(links: Sequence[tuple[Link, bool]], until_s: float, clock: Callable[[], float]) -> None:
@@ -149,4 +216,4 @@ def wait(links: Sequence[tuple[Link, bool]], until_s: float, clock: Callable[[],
         poller.register(link._monitor, zmq.POLLIN)
     left_s = until_s - clock()
     # Rounded up: to wake a little early would mean to poll again and again.
-    poller.poll(max(0, math.ceil(1000.0 * left_s)))
+    poller.poll(None if math.isinf(left_s) else max(0, math.ceil(1000.0 * left_s)))

@@ -161,7 +161,7 @@ def _expected(message: messages.SiteIs) -> Expected:
             has_holes="rings" in message.columns,
         ),
         **{each.column: ("u1", (None, None)) for layer in message.layers for each in layer.cells},
-        **{name: ("<f8", (None, 2)) for name in outlines},
+        **dict.fromkeys(outlines, ("<f8", (None, 2))),
         **{guard.column: ("<f8", (None, 3)) for guard in message.guards},
     }
 

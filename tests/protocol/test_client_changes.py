@@ -151,14 +151,17 @@ def test_a_restoration_that_timed_out_goes_on_with_the_next_call(
 
 
 def test_a_daemon_that_warms_up_gets_the_layers_before_the_next_replan(
-    client: byway.Client, daemon: FakeDaemon
+    new_client: NewClient, daemon: FakeDaemon
 ) -> None:
+    """It acknowledges nothing soon, and is not waited for by who asks how it is."""
+    client = new_client(repeat_s=0.05)
     client.replace_layer("fixed", polygons={"kiln": KILN})
     daemon.restart()
     daemon.state = "warming"
+    daemon.mute["acknowledged"] = 1000
     assert client.health().state == "warming"
     assert client.hello().state == "warming"
-    assert daemon.layers == {}
+    daemon.mute.clear()
     daemon.state = "ready"
     assert client.replan("tug", (0, 0, 0), (5, 0, 0), 0.05).epoch == daemon.epoch
     assert set(daemon.layers["fixed"]["obstacles"]) == {"kiln"}
@@ -183,7 +186,7 @@ def test_a_replan_after_a_restoration_that_timed_out_waits_for_it(
 def test_patches_that_were_too_many_to_keep_are_told(
     client: byway.Client, daemon: FakeDaemon, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    monkeypatch.setattr("byway.held.patches_max", 1)
+    monkeypatch.setattr("byway.strokes.patches_max", 1)
     client.patch("lidar", (0.0, 0.0), 0.1, CELLS)
     client.patch("lidar", (9.0, 0.0), 0.1, CELLS)
     daemon.restart()
@@ -233,7 +236,7 @@ def test_without_a_daemon_changes_are_kept_and_bounded(
     for number in range(limits.unacknowledged_max + 3):
         with pytest.raises(byway.DaemonLost):
             client.put("stacks", discs={f"pile-{number}": (1, 1, 1)})
-    assert len(client._contact._source.line) == limits.unacknowledged_max
+    assert len(client._contact.source.line) == limits.unacknowledged_max
     daemon.start()
     set_patience(client, reconnect_s=5.0)
     client.drop("stacks", ["none"])
@@ -254,7 +257,7 @@ def test_a_stopping_daemon_is_told_and_the_change_kept(
 
 def test_a_full_daemon_is_given_time(client: byway.Client, daemon: FakeDaemon) -> None:
     client.claim("stacks")
-    source = client._contact._source.name
+    source = client._contact.source.name
     header = Header("resend", epoch=daemon.epoch)
     resend = messages.Resend(source=source, reason="full", have=1, retry_after_s=0.02)
     daemon.instead["put"] = frames.encode(header, resend)
@@ -268,7 +271,7 @@ def test_what_is_said_to_others_or_by_an_earlier_life_is_passed_over(
 ) -> None:
     client = new_client(repeat_s=0.03)
     client.claim("stacks")
-    source = client._contact._source.name
+    source = client._contact.source.name
     strays = [
         (daemon.epoch, messages.Acknowledged(source="other", number=9, revision=9)),
         ("epoch-0", messages.Acknowledged(source=source, number=9, revision=9)),
@@ -286,7 +289,7 @@ def test_what_came_while_nobody_called_is_taken_in_first(
     client: byway.Client, daemon: FakeDaemon
 ) -> None:
     client.claim("stacks")
-    link = client._contact._updates._link  # type: ignore[union-attr]
+    link = client._contact._updates.link  # type: ignore[union-attr]
     told = messages.Acknowledged(source="other", number=1, revision=1)
     parts = frames.encode(Header("acknowledged", epoch=daemon.epoch), told)
     daemon.do(lambda: daemon._sockets["updates"].send_multipart([daemon.identity, *parts]))

@@ -146,8 +146,8 @@ def test_better_routes_are_not_given_to_another_replan(
     daemon.wait_for_replans(2)
     daemon.better(9.0)
     # The answer waits until the event has come; events and answers travel apart.
-    while not asks["ab"]._contact._better[asks["ab"].id]:
-        asks["a"]._contact.turn(asks["a"]._question)
+    while not client._contact._better[asks["ab"].id]:
+        client._run(client._contact.turn(asks["a"]._asked._question))
     daemon.release()
     for ask in asks.values():
         ask.wait()
@@ -158,7 +158,7 @@ def test_listening_late_hears_what_follows(client: byway.Client, daemon: FakeDae
     daemon.holds = True
     heard: list[float] = []
     ask = client.start_replan("tug", START, GOAL, 1.0)
-    ask._contact.listen_to(ask.unit)
+    client._run(client._contact.listen_to(ask.unit))
     daemon.better(9.0)
 
     def hear(better: byway.Better) -> None:
@@ -248,7 +248,7 @@ def test_a_broken_connection_is_made_good(new_client: NewClient, daemon: FakeDae
     epoch, open_replans = daemon.epoch, dict(daemon.open)
     daemon.restart()
     daemon.epoch, daemon.open = epoch, open_replans
-    assert not ask._question.reply
+    assert not ask._asked._question.reply
     client.health()
     daemon.release()
     assert ask.wait().cost == 5.0

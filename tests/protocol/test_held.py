@@ -7,7 +7,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from byway import held, limits, messages, obstacles
+from byway import limits, messages, obstacles, strokes
 from byway.held import HeldLayer
 from byway.packed import pack
 
@@ -30,6 +30,10 @@ def patch(x_m: float = 0.0, rows: int = 2, columns: int = 2, cell_m: float = 0.5
     return message, packed
 
 
+def _patches(layer: HeldLayer) -> list[messages.Patch]:
+    return [each.message for each in layer.strokes.patches]  # type: ignore[misc]
+
+
 def restored(layer: HeldLayer, now_s: float) -> HeldLayer:
     """The layer of a daemon that has taken in all that it was sent."""
     copy = HeldLayer()
@@ -41,12 +45,12 @@ def restored(layer: HeldLayer, now_s: float) -> HeldLayer:
 def contents(layer: HeldLayer, now_s: float) -> dict[str, Any]:
     """What a replan would see of it."""
     gone = {each for each, at_s in layer.expires_at_s.items() if at_s <= now_s}
-    shapes = {**{n: r.tolist() for n, r in layer.polygons.items()}, **layer.discs}
+    shapes = {**{n: r.tolist() for n, r in layer.shapes.polygons.items()}, **layer.shapes.discs}
     return {
         "shapes": {name: shape for name, shape in shapes.items() if name not in gone},
         "expires": {n: at_s for n, at_s in layer.expires_at_s.items() if n not in gone},
-        "patches": [message.corner_m for message, _ in layer.patches],
-        "settings": (layer.lease_s, layer.unknown_blocks, layer.outlines_only),
+        "patches": [message.corner_m for message in _patches(layer)],
+        "settings": layer.settings,
     }
 
 
@@ -103,7 +107,7 @@ def test_settings_stay_unless_they_are_told() -> None:
         messages.Claim(layer="a", lease_s=5.0, unknown_blocks=True, outlines_only=True), b"", 0, 0
     )
     layer.take(messages.Claim(layer="a"), b"", 0.0, 0.0)
-    assert (layer.lease_s, layer.unknown_blocks, layer.outlines_only) == (None, True, True)
+    assert layer.settings == {"lease_s": None, "unknown_blocks": True, "outlines_only": True}
 
 
 def test_expired_obstacles_do_not_pile_up() -> None:
@@ -111,7 +115,7 @@ def test_expired_obstacles_do_not_pile_up() -> None:
     for number in range(1000):
         message, packed = obstacles_of(messages.Put, {f"p{number}": TRIANGLE}, expires_in_s=1.5)
         layer.take(message, packed, float(number), float(number))
-    assert len(layer.polygons) <= 64
+    assert len(layer.shapes.polygons) <= 64
 
 
 def test_obstacles_that_last_longer_than_others_stay() -> None:
@@ -119,34 +123,34 @@ def test_obstacles_that_last_longer_than_others_stay() -> None:
     names = [f"p{number}" for number in range(200)]
     message, packed = obstacles_of(messages.Put, dict.fromkeys(names, TRIANGLE), expires_in_s=100.0)
     layer.take(message, packed, 0.0, 50.0)
-    assert len(layer.polygons) == 200
-    assert restored(layer, 99.0).polygons.keys() == set(names)
-    assert not restored(layer, 100.0).polygons
+    assert len(layer.shapes.polygons) == 200
+    assert restored(layer, 99.0).shapes.polygons.keys() == set(names)
+    assert not restored(layer, 100.0).shapes.polygons
 
 
 def test_a_patch_takes_the_place_of_what_it_covers() -> None:
     layer = HeldLayer()
     for each in (patch(0.0), patch(1.0), patch(0.0), patch(0.0, rows=1), patch(0.0, 8, 8)):
         layer.take(*each, 0.0, 0.0)
-    assert [message.columns["cells"].shape for message, _ in layer.patches] == [(8, 8)]
-    assert not layer.is_incomplete
+    assert [message.columns["cells"].shape for message in _patches(layer)] == [(8, 8)]
+    assert not layer.strokes.is_incomplete
 
 
 def test_too_many_or_too_large_patches_make_it_incomplete(monkeypatch: pytest.MonkeyPatch) -> None:
     layer = HeldLayer()
-    for number in range(held.patches_max):
+    for number in range(strokes.patches_max):
         layer.take(*patch(10.0 * number), 0.0, 0.0)
-    assert not layer.is_incomplete
+    assert not layer.strokes.is_incomplete
     layer.take(*patch(-10.0), 0.0, 0.0)
-    assert layer.is_incomplete
-    assert len(layer.patches) == held.patches_max
+    assert layer.strokes.is_incomplete
+    assert len(layer.strokes.patches) == strokes.patches_max
     layer.take(*obstacles_of(messages.ReplaceLayer), 0.0, 0.0)
-    assert not layer.is_incomplete
-    monkeypatch.setattr(held, "patch_bytes_max", 100)
+    assert not layer.strokes.is_incomplete
+    monkeypatch.setattr(strokes, "patch_bytes_max", 100)
     layer.take(*patch(0.0, 8, 8), 0.0, 0.0)
     layer.take(*patch(100.0, 8, 8), 0.0, 0.0)
-    assert layer.is_incomplete
-    assert [message.corner_m for message, _ in layer.patches] == [(100.0, 0.0)]
+    assert layer.strokes.is_incomplete
+    assert [message.corner_m for message in _patches(layer)] == [(100.0, 0.0)]
 
 
 @pytest.mark.parametrize(("limit", "value"), [("obstacles_max", 3), ("packed_bytes_max", 400)])

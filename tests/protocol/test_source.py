@@ -21,7 +21,7 @@ def add(source: Source, layer: str, *ids: str, now_s: float = 0.0) -> Sent:
 
 
 def sent_by(source: Source) -> list[Received]:
-    return [frames.decode(parts, frames.UPDATES) for parts in source.unsent()]
+    return [frames.decode(parts, frames.UPDATES) for parts in source.unsent(0.0)]
 
 
 def numbers(source: Source) -> list[int]:
@@ -58,11 +58,11 @@ def test_numbers_rise_and_are_sent_once(source: Source) -> None:
 
 def test_one_acknowledgement_decides_all_before_it(source: Source) -> None:
     made = [add(source, "a", name) for name in "xyz"]
-    list(source.unsent())
+    list(source.unsent(0.0))
     acknowledge(source, 2, revision=7)
     assert [sent.is_decided for sent in made] == [True, True, False]
     assert made[1].revision == 7
-    assert set(source.layers["a"].discs) == {"x", "y"}
+    assert set(source.layers["a"].shapes.discs) == {"x", "y"}
     assert numbers(source) == []
     source.send_again()
     assert numbers(source) == [3]
@@ -118,7 +118,7 @@ def test_the_window_bounds_what_is_sent(source: Source) -> None:
 def test_a_gap_is_filled_from_where_it_is(source: Source) -> None:
     for name in "xyz":
         add(source, "a", name)
-    list(source.unsent())
+    list(source.unsent(0.0))
     resend(source, have=1)
     assert numbers(source) == [2, 3]
     resend(source, have=3)
@@ -137,7 +137,7 @@ def test_a_daemon_that_has_forgotten_the_source_gets_its_layers(source: Source) 
     add(source, "a", "x")
     acknowledge(source, 1)
     waiting = add(source, "a", "y")
-    list(source.unsent())
+    list(source.unsent(0.0))
     resend(source, have=0)
     came = sent_by(source)
     assert [each.header.kind for each in came] == ["claim", "put", "put"]
@@ -159,7 +159,7 @@ def test_a_new_epoch_gets_layers_first_then_what_waits(source: Source) -> None:
     assert {each.header.epoch for each in came} == {"e2"}
     acknowledge(source, 2)
     assert waiting.is_decided
-    assert set(source.layers["a"].discs) == {"x", "y"}
+    assert set(source.layers["a"].shapes.discs) == {"x", "y"}
 
 
 def test_two_new_epochs_in_a_row_lose_nothing(source: Source) -> None:
@@ -176,7 +176,7 @@ def test_two_new_epochs_in_a_row_lose_nothing(source: Source) -> None:
     assert kinds == [("replace_layer", "e3"), ("put", "e3")]
     assert source.line[1].message.expires_in_s == 80.0  # type: ignore[attr-defined]
     acknowledge(source, 2)
-    assert set(source.layers["a"].discs) == {"x", "y"}
+    assert set(source.layers["a"].shapes.discs) == {"x", "y"}
 
 
 def test_a_refused_restoration_is_a_loss(source: Source) -> None:
@@ -184,7 +184,7 @@ def test_a_refused_restoration_is_a_loss(source: Source) -> None:
     acknowledge(source, 1)
     source.begin_again("e2", 0, 0.0)
     source.refused(messages.Refused(source="s", number=1, code="not_owner", text="taken"))
-    assert [loss.code for loss in source.losses] == ["not_owner"]
+    assert [loss.code for _, loss in source.losses] == ["not_owner"]
     assert source.layers == {}
 
 
@@ -198,14 +198,14 @@ def test_the_first_epoch_restores_nothing() -> None:
 def test_incomplete_patches_are_a_loss_once(
     source: Source, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    monkeypatch.setattr("byway.held.patches_max", 1)
+    monkeypatch.setattr("byway.strokes.patches_max", 1)
     columns, packed = pack({"cells": np.zeros((2, 2), np.uint8)})
     for x_m in (0.0, 5.0):
         patch = messages.Patch(layer="a", corner_m=(x_m, 0.0), cell_m=0.1, columns=columns)
         source.add(patch, packed, 0.0)
     acknowledge(source, 2)
     source.begin_again("e2", 0, 0.0)
-    assert [loss.code for loss in source.losses] == ["new_epoch"]
+    assert [loss.code for _, loss in source.losses] == ["new_epoch"]
     assert [came.header.kind for came in sent_by(source)] == ["claim", "patch"]
     source.losses.clear()
     source.begin_again("e3", 0, 0.0)
