@@ -66,6 +66,7 @@ class Link:
         self.is_connected = False
         #: The connection that this socket had is gone. Only a fresh socket helps.
         self.is_lost = False
+        self.is_closed = False
         #: Called before the socket is closed: whoever watches its descriptors must let go of them.
         self.before_close: Callable[[], object] = _nothing
         self._open()
@@ -95,10 +96,12 @@ class Link:
         """Go on with a fresh socket."""
         self.close()
         self._open()
+        self.is_closed = False
 
     def close(self) -> None:
         """Close the socket; what it still had to send is forgotten."""
         self.before_close()
+        self.is_closed = True
         self._socket.disable_monitor()
         self._monitor.close(0)
         self._socket.close(0)

@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 import zmq
 
-from byway import frames, limits, messages, obstacles
+from byway import frames, limits, messages, obstacles, tracks
 from byway.answer import ROUTE_TABLE
 from byway.client import Client
 from byway.errors import SenderFault
@@ -120,6 +120,7 @@ class FakeDaemon:
         self.refused: dict[tuple[str, int], messages.Refused] = {}
         self.answered: dict[str, tuple[bytes, list[Parts]]] = {}
         self.open: dict[str, tuple[bytes, Received]] = {}
+        self.guards: dict[str, messages.GuardIs] = {}
         self._numbers: Counter[str] = Counter()
         self._topics.clear()
         self._orders: queue.SimpleQueue[Callable[[], None] | None] = queue.SimpleQueue()
@@ -244,10 +245,34 @@ class FakeDaemon:
                 told = messages.VehiclesAre(vehicles=[known])
             case messages.Health():
                 told = self.health()
+            case messages.Guard() | messages.Progress() | messages.Release():
+                told = self._guard(message)
             case _:
                 self._reply(sock, identity, id, *self._site())
                 return
         self._reply(sock, identity, id, told)
+
+    def _guard(
+        self, message: messages.Guard | messages.Progress | messages.Release
+    ) -> messages.Message:
+        if isinstance(message, messages.Guard):
+            told = messages.GuardIs(
+                unit=message.unit,
+                guard=f"g-{len(self.log)}",
+                state="clear",
+                revision=self.revision,
+                progress_m=message.progress_m,
+            )
+        elif message.unit not in self.guards:
+            return messages.ErrorMessage(code="unknown_request", text="no guard stands")
+        else:
+            changes: dict[str, Any] = {"state": "released"}
+            if isinstance(message, messages.Progress):
+                changes = {"progress_m": message.progress_m}
+            told = self.guards.pop(message.unit).model_copy(update=changes)
+        if told.state != "released":
+            self.guards[message.unit] = told
+        return told
 
     def _welcome(self) -> messages.Welcome:
         return messages.Welcome(
@@ -443,7 +468,9 @@ class FakeDaemon:
         if no is not None:
             return no
         if layer is None or (claims and layer["owner"] != source):
-            layer = self.layers.setdefault(message.layer, {"obstacles": {}, "patches": []})
+            layer = self.layers.setdefault(
+                message.layer, {"obstacles": {}, "patches": [], "scans": []}
+            )
             layer["owner"] = source
         if layer["owner"] != source:
             return "not_owner", "it belongs to another source"
@@ -454,11 +481,17 @@ class FakeDaemon:
                     layer["obstacles"].clear()
                     layer["patches"].clear()
                 found = obstacles.unpack_shapes(message, came.packed)
-                for obstacle_id, shape in (*found.polygons.items(), *found.discs.items()):
-                    layer["obstacles"][obstacle_id] = np.asarray(shape).tolist()
+                for kind in (found.polygons, found.discs, found.boxes):
+                    for obstacle_id, shape in kind.items():
+                        layer["obstacles"][obstacle_id] = np.asarray(shape).tolist()
             case messages.Drop():
                 for obstacle_id in message.ids:
                     layer["obstacles"].pop(obstacle_id, None)
             case messages.Patch():
                 layer["patches"].append(message.corner_m)
+            case messages.Scan():
+                layer["scans"].append((message.origin, message.age_s))
+            case messages.Track():
+                for track_id in tracks.unpack_tracks(message, came.packed):
+                    layer["obstacles"][track_id] = message.age_s
         return None
