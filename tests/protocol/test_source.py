@@ -1,11 +1,12 @@
 """A source without sockets: numbers, repeats, gaps, and new lives of the daemon."""
 
+import math
 from typing import Any
 
 import numpy as np
 import pytest
 
-from byway import frames, limits, messages, obstacles
+from byway import frames, limits, messages, obstacles, scans, tracks
 from byway.frames import Received
 from byway.packed import pack
 from byway.source import Sent, Source
@@ -210,3 +211,140 @@ def test_incomplete_patches_are_a_loss_once(
     source.losses.clear()
     source.begin_again("e3", 0, 0.0)
     assert source.losses == []
+
+
+# -- what has waited ------------------------------------------------------------------------------
+
+
+def scan_change(age_s: float) -> tuple[messages.Scan, bytes]:
+    columns, packed = scans.pack_scan([0.0], [1.0])
+    fields = {"origin": (0.0, 0.0, 0.0), "range_m_max": 5.0, "age_s": age_s}
+    return messages.Scan(layer="a", columns=columns, **fields), packed
+
+
+def track_change(age_s: float, **fields: Any) -> tuple[messages.Track, bytes]:
+    found = {"fork": tracks.Track(pose=(0, 0, 0), radius_m=1.0)}
+    made, packed = tracks.pack_tracks(found)
+    return messages.Track(layer="a", age_s=age_s, **made, **fields), packed
+
+
+def told_after(source: Source, waited_s: float) -> Any:
+    (parts,) = source.unsent(waited_s)
+    return frames.decode(parts, frames.UPDATES).message
+
+
+def test_what_was_seen_is_older_when_it_has_waited(source: Source) -> None:
+    """Ages count from the sending, and a change may wait for a daemon that is away."""
+    source.add(*scan_change(0.5), 0.0)
+    assert told_after(source, 3.0).age_s == 3.5
+    source.add(*track_change(0.5, expires_in_s=10.0), 0.0)
+    told = told_after(source, 3.0)
+    assert (told.age_s, told.expires_in_s) == (3.5, 7.0)
+    source.add(*track_change(0.5), 0.0)
+    told = told_after(source, 3.0)
+    assert (told.age_s, told.expires_in_s) == (3.5, None)
+
+
+def test_what_is_sent_at_once_is_sent_as_it_was_made(source: Source) -> None:
+    source.add(*track_change(0.5, expires_in_s=10.0), 0.0)
+    told = told_after(source, 0.001)
+    assert (told.age_s, told.expires_in_s) == (0.5, 10.0)
+
+
+def test_obstacles_have_less_time_left_when_they_have_waited(source: Source) -> None:
+    source.add(*put("a", {"x": (0, 0, 1)}, expires_in_s=10.0), 0.0)
+    assert told_after(source, 4.0).expires_in_s == 6.0
+    source.add(*put("a", {"x": (0, 0, 1)}), 0.0)
+    assert told_after(source, 4.0).expires_in_s is None
+
+
+def test_what_has_expired_on_the_way_still_takes_the_place_of_what_is_there(
+    source: Source,
+) -> None:
+    source.add(*put("a", {"x": (0, 0, 1)}, expires_in_s=1.0), 0.0)
+    assert told_after(source, 4.0).expires_in_s == 0.001
+    source.add(*track_change(0.5, expires_in_s=1.0), 0.0)
+    assert told_after(source, 4.0).expires_in_s == 0.001
+    source.add(*track_change(30.0), 0.0)
+    told = told_after(source, 40.0)
+    assert (told.age_s, told.expires_in_s) == (limits.age_s_max, 0.001)
+
+
+def test_a_scan_that_is_too_old_leaves_its_number_only(source: Source) -> None:
+    source.add(*scan_change(30.0), 0.0)
+    told = told_after(source, 40.0)
+    assert told == messages.Drop(layer="a", ids=[])
+    acknowledge(source, 1)
+    assert not source.line
+
+
+# -- layers that are kept -------------------------------------------------------------------------
+
+
+def claimed(source: Source, layer: str, now_s: float = 0.0, **settings: Any) -> None:
+    source.add(messages.Claim(layer=layer, **settings), b"", now_s)
+    list(source.unsent(now_s))
+    acknowledge(source, source.line[-1].number, now_s=now_s)
+
+
+def kept(source: Source, now_s: float, **how: Any) -> list[messages.Message]:
+    source.keep(now_s, **how)
+    return [frames.decode(parts, frames.UPDATES).message for parts in source.unsent(now_s)]
+
+
+def test_a_lease_is_renewed_in_time(source: Source) -> None:
+    claimed(source, "a", lease_s=3.0)
+    assert source.keep_at_s() == math.inf  # nobody keeps it
+    source.kept.add("a")
+    source.kept.add("unknown")
+    assert source.keep_at_s() == 1.0
+    assert source.looks_every_s() == 0.5
+    assert kept(source, 1.0) == [messages.Claim(layer="a", lease_s=3.0)]
+    assert source.keep_at_s() == math.inf  # it is under way
+    assert kept(source, 2.0) == []
+    acknowledge(source, 2)
+    assert source.keep_at_s() == 2.0
+
+
+def test_a_lease_that_may_have_ended_is_asked_for_and_not_taken(source: Source) -> None:
+    """A claim would take the layer from whoever has it by now without a lease."""
+    claimed(source, "a", lease_s=3.0)
+    source.kept.add("a")
+    assert kept(source, 5.0) == [messages.Drop(layer="a", ids=[])]
+
+
+def test_layers_without_a_lease_are_asked_about_only_when_the_daemon_may_be_another(
+    source: Source,
+) -> None:
+    claimed(source, "a")
+    source.kept.add("a")
+    assert source.keep_at_s() == math.inf
+    assert kept(source, 5.0) == []
+    assert kept(source, 5.0, asks_who_is_there=True) == [messages.Drop(layer="a", ids=[])]
+
+
+def test_a_kept_layer_that_was_lost_is_a_loss(source: Source) -> None:
+    claimed(source, "a", lease_s=3.0)
+    source.kept.add("a")
+    kept(source, 1.0)
+    source.refused(messages.Refused(source="s", number=2, code="not_owner", text="taken"))
+    acknowledge(source, 2)
+    assert [(layer, loss.code) for layer, loss in source.losses] == [("a", "not_owner")]
+    assert source.keep_at_s() == math.inf
+    assert kept(source, 9.0, asks_who_is_there=True) == []
+
+
+def test_signs_of_life_are_not_repeated_to_a_new_epoch(source: Source) -> None:
+    """What restores the layer says more."""
+    claimed(source, "a", lease_s=3.0)
+    source.kept.add("a")
+    kept(source, 1.0)
+    source.begin_again("e2", 0, 1.5)
+    assert [each.purpose for each in source.line] == ["restore"]
+
+
+def test_a_refusal_that_nobody_waits_for_is_a_loss(source: Source) -> None:
+    message, packed = put("a", {"x": (0, 0, 1)})
+    source.add(message, packed, 0.0, is_awaited=False)
+    source.refused(messages.Refused(source="s", number=1, code="bad_geometry", text="no"))
+    assert [(layer, loss.code) for layer, loss in source.losses] == [("a", "bad_geometry")]
