@@ -18,10 +18,14 @@ from bywayd.core.events import Outcome
 from bywayd.core.expiries import Expiries
 from bywayd.core.guards import Guard, Guards
 from bywayd.core.instants import Instant
+from bywayd.core.keeping import Keeping
+from bywayd.core.keepline import KeepLine
+from bywayd.core.kept import Keepsake
 from bywayd.core.ledger import Entry, Ledger
 from bywayd.core.outbox import Outbox
 from bywayd.core.rerouting import Rerouting
 from bywayd.core.snapshots import Snapshot, Snapshots
+from bywayd.core.sources import Source
 from bywayd.core.surveying import Surveying
 
 true_append = Ledger._append
@@ -32,6 +36,8 @@ true_forsake = Surveying._forsake
 true_guards_publish = Guards.publish
 true_move = Guards.move
 true_change_over = Rerouting._change_over
+true_clerk_forsake = Keeping._forsake
+true_keep = KeepLine.append
 true_pop_due = Expiries.pop_due
 
 
@@ -43,6 +49,10 @@ class Canary:
     method: str
     broken: Callable[..., Any]
     caught: str
+    #: It can do harm where there are durable layers only, ...
+    is_durable: bool = False
+    #: ... and to a daemon that was started again.
+    needs_restarts: bool = False
 
 
 def acknowledge_at_once(ledger: Ledger, entry: Entry) -> None:
@@ -109,7 +119,9 @@ def publish_first(rerouting: Rerouting, *args: Any) -> None:
     effects[first:] = reversed(effects[first:])
 
 
-def take_gaps(ledger: Ledger, peer: Any, header: Any, size: int, now: Instant) -> Any:
+def take_gaps(
+    ledger: Ledger, peer: Any, header: Any, size: int, now: Instant, layer: str = ""
+) -> Any:
     source = ledger.sources.heard(header.source, peer, now)
     return source if source is not None and header.number > source.have else None
 
@@ -122,6 +134,22 @@ def lose_the_batch(surveying: Surveying, number: int) -> None:
 def forget_what_expired(expiries: Expiries, now: Instant) -> dict[str, list[str]]:
     true_pop_due(expiries, now)
     return {}
+
+
+def settle_without_the_disk(source: Source, number: int, position: int, kept_to: int) -> bool:
+    source.decided = number
+    return True
+
+
+def lose_with_the_clerk(keeping: Keeping, number: int) -> None:
+    if keeping._line.out:
+        keeping._line.kept(keeping._line.stock)
+        keeping._ledger.kept()
+    true_clerk_forsake(keeping, number)
+
+
+def keep_for_sources_only(line: KeepLine, keepsake: Keepsake) -> int:
+    return line._end if keepsake.arrived is None else true_keep(line, keepsake)
 
 
 CANARIES = {
@@ -192,6 +220,31 @@ CANARIES = {
     "routes are watched after they are published": Canary(
         *(Rerouting, "_change_over", publish_first),
         "a new route is watched first|only guards that stand are spoken of",
+    ),
+    "nobody waits for the disk": Canary(
+        *(Source, "settle", settle_without_the_disk),
+        "durable layer is on the disk",
+        is_durable=True,
+    ),
+    "a batch is lost with its clerk": Canary(
+        *(Keeping, "_forsake", lose_with_the_clerk),
+        "durable layer is on the disk|site and disk agree",
+        is_durable=True,
+    ),
+    "expired obstacles are left on the disk": Canary(
+        *(KeepLine, "append", keep_for_sources_only), "site and disk agree", is_durable=True
+    ),
+    "replans do not wait for what is kept": Canary(
+        *(Ledger, "is_complete", property(lambda self: True)),
+        "no replan before what is kept is there",
+        is_durable=True,
+        needs_restarts=True,
+    ),
+    "sources do not wait for what is kept": Canary(
+        *(Ledger, "_has_room", lambda self, source, size, layer: source.undecided < 16),
+        "before sources change it",
+        is_durable=True,
+        needs_restarts=True,
     ),
     "events are not numbered": Canary(Outbox, "publish", number_nothing, "streams are numbered"),
 }

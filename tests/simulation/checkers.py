@@ -62,10 +62,17 @@ class Checkers:
     """One life of the daemon: a new epoch gets new checkers."""
 
     def __init__(
-        self, epoch: str, sees: Callable[[str, int, int], bool], settings: FrontSettings
+        self,
+        epoch: str,
+        sees: Callable[[str, int, int], bool],
+        settings: FrontSettings,
+        is_safe: Callable[[str, str, int], bool],
+        recall_is_visible: Callable[[], bool],
     ) -> None:
         self.epoch = epoch
         self.sees = sees
+        self.is_safe = is_safe
+        self.recall_is_visible = recall_is_visible
         self.requests: dict[str, Request] = {}
         self.sources: dict[str, Numbers] = defaultdict(Numbers)
         self.revision = 0
@@ -144,6 +151,11 @@ class Checkers:
                 "what is acknowledged is visible, or was refused",
                 *(message.source, number, message.revision),
             )
+            promise(
+                number in numbers.refused or self.is_safe(self.epoch, message.source, number),
+                "what is acknowledged of a durable layer is on the disk",
+                *(message.source, number),
+            )
             numbers.traceless.discard(number)
             numbers.refused.discard(number)
         numbers.acknowledged = message.number
@@ -155,6 +167,7 @@ class Checkers:
         if isinstance(message, messages.Accepted):
             promise(request.accepted_ns is None, "a request is taken in once", request.id)
             promise(request.final is None, "nothing is taken in after its end", request.id)
+            promise(self.recall_is_visible(), "no replan before what is kept is there", request.id)
             request.accepted_ns = now_ns
             request.accepted_revision = message.revision
             promise(
@@ -322,8 +335,8 @@ def describes(event: events.Event) -> str:
     if isinstance(event, events.Received):
         header, peer = event.came.header, event.peer.identity.decode()
         return f"{name} {peer} {header.kind} {header.id}{header.source} {header.number or ''}"
-    named = ("worker", "surveyor", "job", "batch", "ticket", "revision", "good", "why")
-    told = [f"{key}={getattr(event, key)}" for key in named if hasattr(event, key)]
+    named = ("worker", "surveyor", "clerk", "job", "batch", "ticket", "task", "revision", "good")
+    told = [f"{key}={getattr(event, key)}" for key in (*named, "why") if hasattr(event, key)]
     outcome = getattr(event, "outcome", None)
     if outcome is not None:
         told.append(f"{outcome.kind} {outcome.cost:.2f}")

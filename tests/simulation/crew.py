@@ -7,10 +7,11 @@ from typing import TYPE_CHECKING
 
 from tests.simulation import routes
 from tests.simulation.checkers import promise
+from tests.simulation.clerk import Clerk
 from tests.simulation.surveyor import Surveyor
 from tests.simulation.times import MS
 
-from bywayd.core import effects, events
+from bywayd.core import effects, events, kept
 
 if TYPE_CHECKING:
     from tests.simulation.world import World
@@ -37,6 +38,7 @@ class Crew:
         #: Which life of the daemon this is; what was said in an earlier one is not heard.
         self.life = 0
         self.surveyor = Surveyor(world, self)
+        self.clerk = Clerk(world, self)
 
     # -- all of them ----------------------------------------------------------------------------
 
@@ -45,6 +47,7 @@ class Crew:
         self.life += 1
         self.workers.clear()
         self.surveyor.all_gone()
+        self.clerk.all_gone()
 
     def say(self, delay_ns: float, event: events.Event) -> None:
         """Say something to the front, unless dead or another life by then."""
@@ -59,6 +62,13 @@ class Crew:
         surveyor = getattr(event, "surveyor", None)
         if surveyor is not None and surveyor != self.surveyor.number:
             return
+        clerk = getattr(event, "clerk", None)
+        if clerk is not None and clerk != self.clerk.number:
+            return
+        if isinstance(event, kept.ClerkLost):
+            self.clerk.number = None
+        if isinstance(event, kept.Recalled):
+            self.clerk.heard_recall(event)
         if isinstance(event, events.WorkerLost):
             del self.workers[event.worker]
         if isinstance(event, events.SurveyorLost):
@@ -81,6 +91,14 @@ class Crew:
                 self._steer(effect)
             case effects.Recheck():
                 self._recheck(effect)
+            case (
+                kept.SpawnClerk()
+                | kept.KillClerk()
+                | kept.PingClerk()
+                | kept.RecallChanges()
+                | kept.KeepChanges()
+            ):
+                self.clerk.carry_out(effect)
             case _:
                 self.surveyor.carry_out(effect)
 

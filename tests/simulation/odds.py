@@ -35,6 +35,11 @@ FAULTS = {
     "surveyor_dies": 0.1,  # (a batch) before it is applied, or between publishing and telling
     "surveyor_hangs": 0.03,
     "surveyor_raves": 0.02,
+    "clerk_dies": 0.2,  # (a batch or recall) before it is done, or before anybody knows of it
+    "clerk_hangs": 0.1,
+    "clerk_raves": 0.1,
+    "clerk_stillborn": 0.3,
+    "disk_full": 0.05,  # (a batch) nothing can be written for up to three seconds
     "refuse": 0.2,  # (a change) the surveyor does not take it
     "trespass": 0.1,  # (a change) it is for a layer of somebody else
     "driver_silent": 0.05,  # (a turn of a driver) it says nothing for longer than it may
@@ -63,6 +68,8 @@ class Odds:
     sources: int = 3
     units: int = 6
     guards_max: int = 256
+    #: Sources whose layers are durable.
+    durable: int = 0
 
     @classmethod
     def draw(cls, rng: random.Random) -> Odds:
@@ -81,6 +88,7 @@ class Odds:
             units=units,
             # On some days there is not room for the guards of all.
             guards_max=rng.choice([max(1, units - 1), 256]),
+            durable=rng.choice([0, 1, 2]),
         )
 
     def calm(self) -> None:

@@ -59,6 +59,8 @@ class Sources:
             self.sources[name] = Source(name, name.encode(), layer=f"layer{i}")
         #: (epoch, source, number) of each token.
         self.tokens: dict[int, tuple[str, str, int]] = {}
+        #: Token and layer of each of them.
+        self.made: dict[tuple[str, str, int], tuple[int, str]] = {}
         self.serial = 0
 
     def begin(self) -> None:
@@ -89,7 +91,7 @@ class Sources:
             layer = f"layer{rng.randrange(len(self.sources) + 1)}"
         self.serial += 1
         token = self.serial
-        self.tokens[token] = (source.epoch, source.name, source.next)
+        self._name(token, source, layer)
         ids = rng.sample([f"o{i}" for i in range(POOL)], rng.randint(1, 2))
         expires = rng.choice([None, None, 0.02, 0.1, 0.5])
         packed = b""
@@ -112,9 +114,23 @@ class Sources:
                 )
             case _:
                 flag = rng.choice([None, None, False, True])
-                message = messages.Claim(layer=layer, lease_s=1.0, unknown_blocks=flag)
-                del self.tokens[token]
+                # Where nothing is kept it will be refused.
+                durable = (not world.durable or layer in world.durable) and token % 8 == 0
+                message = messages.Claim(
+                    layer=layer, lease_s=1.0, unknown_blocks=flag, durable=durable or None
+                )
+                del self.made[self.tokens.pop(token)]
         self._send_new(source, message, packed)
+
+    def _name(self, token: int, source: Source, layer: str) -> None:
+        key = (source.epoch, source.name, source.next)
+        self.tokens[token] = key
+        self.made[key] = (token, layer)
+
+    def is_safe(self, epoch: str, source: str, number: int) -> bool:
+        """Whether a change need not be on the disk, or has been put there."""
+        token, layer = self.made.get((epoch, source, number), (0, ""))
+        return layer not in self.world.durable or self.world.crew.clerk.has(token)
 
     def _send_new(self, source: Source, message: messages.Change, packed: bytes) -> None:
         entry = (source.next, message, packed)
@@ -193,7 +209,7 @@ class Sources:
         source.next = 1
         source.unacked.clear()
         self.serial += 1
-        self.tokens[self.serial] = (epoch, source.name, 1)
+        self._name(self.serial, source, source.layer)
         fields, packed = obstacles(self.serial, ["o0", "o1"])
         self._send_new(source, messages.ReplaceLayer(layer=source.layer, **fields), packed)
 

@@ -66,6 +66,8 @@ class Surveyor:
         self.may_come_again: set[int] = set()
         #: When each change of a source first and last reached the front.
         self.arrived: dict[tuple[str, str, int], tuple[int, int]] = {}
+        #: What has been recalled and applied, by layer and id; patches with "".
+        self.recalled: set[tuple[str, str]] = set()
         self.lookout = Lookout(self)
 
     def carry_out(self, effect: effects.Effect) -> None:
@@ -98,7 +100,7 @@ class Surveyor:
         self.lookout = Lookout(self)
         self.busy_until_ns = world.now_ns
         if effect.revision is None:
-            self.model = Model(layers={"fixed": {}, "outlines": {}})
+            self.model = Model(layers={name: {} for name in world.settings.layers})
             self.snapshots[self.model.revision] = self.model.copy()
         else:
             world.checkers.successor(effect)
@@ -143,11 +145,13 @@ class Surveyor:
         before = self.model.copy()
         refusals = []
         for index, change in enumerate(effect.changes):
-            if self._token(change) is not None and world.chance("refuse"):
+            token = self.token_of(change)
+            is_new = token is not None and not self._is_recalled(change, token)
+            if is_new and world.chance("refuse"):
                 refusals.append(events.Refusal(index, "bad_geometry", "crosses itself", {}))
             else:
                 self._apply_one(change)
-        self.last_batch = {token for change in effect.changes if (token := self._token(change))}
+        self.last_batch = {token for change in effect.changes if (token := self.token_of(change))}
         self.may_come_again = set()
         if (self.model.layers, self.model.patches) != (before.layers, before.patches):
             self.model.revision += 1
@@ -169,9 +173,14 @@ class Surveyor:
     def _apply_one(self, change: effects.Change) -> None:
         world = self.world
         layer = self.model.layers.setdefault(change.layer, {})
-        token = self._token(change)
+        token = self.token_of(change)
         expires_at = None
-        if token is not None:
+        recalled = token is not None and self._is_recalled(change, token)
+        if token is not None and recalled:
+            for id in self._ids_of(change) or [""]:
+                self.recalled.add((change.layer, id))
+        elif token is not None:
+            promise(self.recall_is_visible(), "what is kept is there before sources change it")
             epoch, source, number = world.sources.tokens[token]
             last = self.model.applied.get(source, 0)
             promise(epoch == world.epoch, "no change of an earlier life is applied", token)
@@ -194,9 +203,10 @@ class Surveyor:
                 assert token is not None
                 if change.what == "replace":
                     layer.clear()
-                message = change.message
-                assert isinstance(message, messages.Put | messages.ReplaceLayer)
-                for id in obstacles.ids_of(message.columns, change.packed, message.discs):
+                    self.model.patches.pop(change.layer, None)
+                for id in self._ids_of(change):
+                    if recalled:
+                        expires_at = world.crew.clerk.expiry(change.layer, id, token)
                     layer[id] = (token, expires_at)
             case "patch":
                 assert token is not None
@@ -212,8 +222,28 @@ class Surveyor:
                         )
                     layer.pop(id, None)
 
+    def _is_recalled(self, change: effects.Change, token: int) -> bool:
+        """Whether it is a change of an earlier life, which this one was told by the clerk."""
+        if self.world.sources.tokens[token][0] == self.world.epoch:
+            return False
+        told = self.world.crew.clerk.recalled
+        return all(told.get((change.layer, id)) == token for id in self._ids_of(change) or [""])
+
+    def recall_is_visible(self) -> bool:
+        """Whether the site has had all that is kept."""
+        clerk = self.world.crew.clerk
+        return clerk.recall_is_over and clerk.recalled.keys() <= self.recalled
+
     @staticmethod
-    def _token(change: effects.Change) -> int | None:
+    def _ids_of(change: effects.Change) -> list[str]:
+        """Return the ids of obstacles that are put."""
+        message = change.message
+        if not isinstance(message, messages.Put | messages.ReplaceLayer):
+            return []
+        return obstacles.ids_of(message.columns, change.packed, message.discs)
+
+    @staticmethod
+    def token_of(change: effects.Change) -> int | None:
         """Which change of a source this is; None for claims, and for what has expired."""
         if isinstance(change.message, messages.Put | messages.ReplaceLayer):
             column = change.message.columns["discs_m"]
@@ -266,7 +296,8 @@ class Surveyor:
             for id, (token, expires_at) in layer.items():
                 if expires_at is None:
                     continue
-                first, last = self.arrived[tokens[token]]
+                # Nothing that was recalled has arrived in this life.
+                first, last = self.arrived.get(tokens[token], (0, 0))
                 if expires_at + (last - first) + 20 * MS < self.world.now_ns:
                     found.append(f"{name}/{id}")
         return found
@@ -292,6 +323,9 @@ class Surveyor:
                 "everything is acknowledged in the end",
                 source.name,
             )
-        for layer in self.model.layers.values():
+        for name, layer in self.model.layers.items():
             for token, _ in layer.values():
-                promise(tokens[token][0] == self.world.epoch, "nothing is left of earlier lives")
+                promise(
+                    tokens[token][0] == self.world.epoch or name in self.world.durable,
+                    "nothing is left of earlier lives in live layers",
+                )

@@ -31,20 +31,26 @@ def test_no_promise_is_broken_whatever_goes_wrong(day: int) -> None:
 
 
 def test_on_a_quiet_day_nobody_is_killed_and_nobody_waits_in_vain() -> None:
-    odds = Odds(dict.fromkeys(FAULTS, 0.0), {name: low for name, (low, _) in RATES.items()})
+    rates = {name: low for name, (low, _) in RATES.items()}
+    odds = Odds(dict.fromkeys(FAULTS, 0.0), rates, durable=1)
     world = World(3, odds)
     world.run(5_000)
     counts = world.front.health.counts()
     assert counts["answers_route_total"] > 100
-    for name in ("workers_lost_total", "surveyors_lost_total", "answers_late_total"):
+    assert counts["changes_kept_total"] > 10
+    for name in (
+        *("workers_lost_total", "surveyors_lost_total", "clerks_lost_total"),
+        "answers_late_total",
+    ):
         assert counts.get(name, 0) == 0
     assert counts.get("refused_overloaded_total", 0) == 0
 
 
 def test_on_the_worst_day_everything_happens_and_nothing_breaks() -> None:
-    odds = Odds(dict(FAULTS), {name: high / 2 for name, (_, high) in RATES.items()}, workers=3)
+    rates = {name: high / 2 for name, (_, high) in RATES.items()}
+    odds = Odds(dict(FAULTS), rates, workers=3, durable=2)
     world = World(4, odds)
-    world.run(10_000)
+    world.run(12_000)
     assert {name for name in FAULTS if name not in world.counts} <= {"restart"}
 
 
@@ -64,8 +70,11 @@ def test_a_core_that_is_broken_on_purpose_is_caught(
 ) -> None:
     canary = CANARIES[name]
     monkeypatch.setattr(canary.owner, canary.method, canary.broken)
-    odds = Odds(dict(FAULTS), {name: high / 2 for name, (_, high) in RATES.items()}, workers=3)
-    odds.faults["restart"] = 0.0
-    world = World(6, odds)
+    rates = {name: high / 2 for name, (_, high) in RATES.items()}
+    odds = Odds(dict(FAULTS), rates, workers=3, durable=int(canary.is_durable))
+    if canary.is_durable:
+        rates |= {"replans": 20.0, "drives": 5.0, "changes": 300.0}
+    odds.faults["restart"] = 0.002 if canary.needs_restarts else 0.0
+    world = World(9 if canary.is_durable else 6, odds)
     with pytest.raises((BrokenPromise, Defect), match=canary.caught):
-        world.run(5_000)
+        world.run(20_000 if canary.is_durable else 5_000)

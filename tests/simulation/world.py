@@ -39,9 +39,12 @@ MakeFront = Callable[[FrontSettings, str, int], Front]
 
 def settings_for(odds: Odds) -> FrontSettings:
     """Return settings that let everything happen within seconds of simulated time."""
+    durable = {name: LayerFlags(durable=True) for name in durable_layers(odds)}
     return FrontSettings(
         vehicles={"tug": KnownVehicle("car", {"model": "car", "name": "tug"})},
-        layers={"fixed": LayerFlags(), "outlines": LayerFlags(outlines_only=True)},
+        layers={"fixed": LayerFlags(), "outlines": LayerFlags(outlines_only=True), **durable},
+        keeps=bool(durable),
+        clerk_silence_s=1.0,
         workers=odds.workers,
         start_time_max_s=2.0,
         surveyor_silence_s=1.0,
@@ -54,6 +57,11 @@ def settings_for(odds: Odds) -> FrontSettings:
     )
 
 
+def durable_layers(odds: Odds) -> frozenset[str]:
+    """Return the layers whose acknowledged changes survive every crash."""
+    return frozenset(f"layer{i}" for i in range(min(odds.durable, odds.sources)))
+
+
 class World:
     """Everything that there is, on one day."""
 
@@ -63,6 +71,7 @@ class World:
         self.odds = odds or Odds.draw(self.rng)
         self.make_front = make_front
         self.settings = settings_for(self.odds)
+        self.durable = durable_layers(self.odds)
         self.now_ns = 10_000 * SECOND
         self._heap: list[tuple[int, int, Callable[..., None], tuple[Any, ...]]] = []
         self._serial = 0
@@ -114,7 +123,11 @@ class World:
         """The daemon is killed with all its processes, and another takes its place."""
         self.lives += 1
         self.epoch = f"epoch{self.lives}"
-        self.checkers = Checkers(self.epoch, self.crew.surveyor.sees, self.settings)
+        surveyor = self.crew.surveyor
+        self.checkers = Checkers(
+            *(self.epoch, surveyor.sees, self.settings),
+            *(self.sources.is_safe, surveyor.recall_is_visible),
+        )
         self.crew.all_gone()
         self.front = self.make_front(self.settings, self.epoch, self.seed + self.lives)
         self._wake_serial = 0
@@ -215,6 +228,8 @@ class World:
         promise(len(front.answering.open) <= open_max, "open replans are bounded")
         promise(len(front.snapshots.pins()) <= 2 * settings.workers + 1, "pins are bounded")
         ledger = front.ledger.statistics()
+        keep_max = settings.source_window * self.odds.sources + settings.expiries_max
+        promise(front.keeping.pending <= keep_max, "what waits for the disk is bounded")
         promise(ledger.pending_bytes <= settings.pending_bytes_max, "what is pending is bounded")
         promise(front.outbox.stream_count <= settings.units_max + 1, "streams are bounded")
 
@@ -249,6 +264,7 @@ class World:
             self.step()
         self.front.check()
         self.crew.surveyor.check_site()
+        self.crew.clerk.check_disk()
 
     def _unsettled(self) -> list[str]:
         workers = self.front.workers.statistics()
@@ -261,6 +277,7 @@ class World:
             "guards are asked for": self.checkers.guards.waiting(self.now_ns),
             "alerts are due": self.crew.surveyor.unheard(),
             "no surveyor": not self.front.surveying.is_ready,
+            "changes are not on the disk": self.front.keeping.pending,
             "obstacles that have expired are there": self.crew.surveyor.overdue(),
         }
         return [f"{what} {who}" for what, who in found.items() if who]
