@@ -55,11 +55,16 @@ class Stream:
         contact.enter()
         self._refuse_if_closed()
         wanted: LayerSettings = {**self.settings, **settings}
-        claims = claim(self.layer, wanted)
+        claims, is_new = claim(self.layer, wanted), self.layer not in contact.source.kept
         contact.source.kept.add(self.layer)
         # What was lost before is what this call makes good.
         contact.source.losses = [each for each in contact.source.losses if each[0] != self.layer]
-        self.revision = yield from contact.change(claims)
+        try:
+            self.revision = yield from contact.change(claims)
+        except BaseException:
+            if is_new:
+                contact.source.kept.discard(self.layer)
+            raise
         self.settings = wanted
         return self.revision
 

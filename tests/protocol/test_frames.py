@@ -12,7 +12,9 @@ from hypothesis import strategies as st
 from tests.protocol.golden import GOLDEN, SPELLED_OUT
 
 from byway import errors, frames, limits, messages, obstacles
+from byway.answer import ROUTE_TABLE
 from byway.frames import Door, Header, Received
+from byway.packed import pack
 
 DOORS = {
     **{model.kind: frames.REQUESTS for model in messages.REQUESTS},
@@ -389,3 +391,81 @@ def test_an_outcome_is_read_with_its_columns() -> None:
 def test_all_validators_can_be_built_ahead() -> None:
     messages.build_all()
     assert all(model.__pydantic_complete__ for model in messages.every_message())
+
+
+# -- what came with guards, scans and tracks ------------------------------------------------------
+
+
+def guard_frames(rows: int, **changes: Any) -> list[Any]:
+    """A request to guard a route of so many rows, but for the changes."""
+    table = np.zeros(rows, ROUTE_TABLE)
+    columns = {name: table[name] for name in ROUTE_TABLE.names or ()}
+    described, packed = pack({**columns, **changes})
+    message = messages.Guard(vehicle="tug", unit="u", columns=described)
+    return frames.encode(Header("guard", "a-1"), message, packed)
+
+
+def test_a_route_comes_through_the_door() -> None:
+    came = frames.decode(guard_frames(limits.guard_rows_max), frames.REQUESTS)
+    assert isinstance(came.message, messages.Guard)
+    assert len(came.packed) == limits.guard_packed_bytes_max
+
+
+@pytest.mark.parametrize(
+    ("rows", "changes", "error"),
+    [
+        (0, {}, errors.BadMessage),
+        (3, {"x_m": np.zeros(2)}, errors.BadMessage),
+        (3, {"gear": np.zeros(3)}, errors.BadMessage),
+        (3, {"other": np.zeros(3)}, errors.BadMessage),
+    ],
+)
+def test_a_route_of_other_columns_is_refused(
+    rows: int, changes: dict[str, Any], error: type[errors.SenderFault]
+) -> None:
+    with pytest.raises(error):
+        frames.decode(guard_frames(rows, **changes), frames.REQUESTS)
+
+
+def test_a_route_without_times_or_too_long_is_refused() -> None:
+    header, _, packed = guard_frames(1)
+    body = {"vehicle": "tug", "unit": "u", "columns": {}}
+    with pytest.raises(errors.BadMessage, match="columns must be"):
+        frames.decode([header, msgpack.packb(body), packed], frames.REQUESTS)
+    rows = limits.guard_rows_max + 1
+    body["columns"] = {"t_s": {"dtype": "<f8", "shape": [rows], "offset": 0}}
+    with pytest.raises(errors.TooLarge, match="rows"):
+        frames.decode([header, msgpack.packb(body), packed], frames.REQUESTS)
+
+
+def test_scans_and_tracks_are_checked_at_the_door() -> None:
+    body = {"layer": "a", "columns": {}}
+    for kind, rest in (
+        ("scan", {"origin": [0.0, 0.0, 0.0], "range_m_max": 5.0}),
+        ("track", {}),
+    ):
+        header = frames.encode_header(Header(kind, source="s", number=1))
+        with pytest.raises(errors.BadMessage, match="columns must be"):
+            frames.decode([header, msgpack.packb({**body, **rest})], frames.UPDATES)
+
+
+@pytest.mark.parametrize(
+    ("kind", "rest"),
+    [
+        ("scan", {"origin": [0.0, 0.0, 0.0], "range_m_max": 5.0, "age_s": -0.1}),
+        ("scan", {"origin": [0.0, 0.0, 0.0], "range_m_max": 5.0, "age_s": 61.0}),
+        ("scan", {"origin": [0.0, float("nan"), 0.0], "range_m_max": 5.0}),
+        ("scan", {"origin": [0.0, 0.0, 0.0], "range_m_max": 0.0}),
+        ("scan", {"origin": [0.0, 0.0, 0.0], "range_m_max": 1001.0}),
+        ("track", {"age_s": -0.1}),
+        ("track", {"expires_in_s": 0.0}),
+        ("patch", {"corner_m": [0.0, 0.0], "cell_m": 0.1, "heading_rad": float("inf")}),
+        ("claim", {"expected_period_s": -1.0}),
+        ("claim", {"decay_s": 0.0}),
+    ],
+)
+def test_values_that_cannot_be_meant_are_refused(kind: str, rest: dict[str, Any]) -> None:
+    header = frames.encode_header(Header(kind, source="s", number=1))
+    columns = {} if kind == "claim" else {"columns": {}}
+    with pytest.raises(errors.BadValue):
+        frames.decode([header, msgpack.packb({"layer": "a", **columns, **rest})], frames.UPDATES)
