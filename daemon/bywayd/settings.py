@@ -50,6 +50,11 @@ class SiteSection(Section):
     cell_m: Annotated[float, Field(ge=0.02, le=1.0)] = 0.1
     limits_m: tuple[Metres, Metres, Metres, Metres] | None = None
     origin_m: tuple[Metres, Metres] = (0.0, 0.0)
+    #: How far ahead the sweep of a track is blocked, how often tracks are carried forward, and
+    #: when those expire whose sources do not say.
+    sweep_s: Annotated[float, Field(ge=0.0, le=60.0)] = 3.0
+    carry_every_s: Annotated[float, Field(ge=0.02, le=10.0)] = 0.1
+    track_expires_s: Annotated[float, Field(gt=0.0, le=3600.0)] = 2.0
 
     @field_validator("limits_m")
     @classmethod
@@ -67,6 +72,11 @@ class LayerSection(Section):
     unknown_blocks: bool = False
     outlines_only: bool = False
     durable: bool = False
+    #: How often a change is expected, and what is done when none comes.
+    expected_period_s: Annotated[float, Field(gt=0.0, le=limits.expiry_s_max)] | None = None
+    when_stale: Literal["ignore", "report", "refuse"] = "report"
+    #: For how long what a scan says holds; for ever if left out.
+    decay_s: Annotated[float, Field(gt=0.0, le=limits.expiry_s_max)] | None = None
 
 
 class KeepSection(Section):

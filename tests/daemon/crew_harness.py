@@ -100,7 +100,11 @@ class Crew:
 
     def send_batch(self, surveyor: int, batch: int, *layers: str) -> None:
         changes = [{"what": "put", "layer": layer, "body": None} for layer in layers]
-        self.staff.put("surveyor", surveyor, {"do": "apply", "batch": batch, "changes": changes})
+        self.staff.put(
+            "surveyor",
+            surveyor,
+            {"do": "apply", "batch": batch, "changes": changes, "at_s": time.monotonic()},
+        )
 
     def plan(
         self, worker: int, job: int, published: Mapping[str, Any], method: str, budget_s: float

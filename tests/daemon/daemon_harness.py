@@ -158,10 +158,11 @@ class Peer:
 
     # -- requests
 
-    def send(self, message: messages.Request, id: str = "") -> str:
+    def send(self, message: messages.Request, id: str = "", packed: bytes = b"") -> str:
         self._serial += 1
         id = id or f"r-{self._serial}"
-        self._socket("requests").send_multipart(frames.encode(Header(message.kind, id), message))
+        parts = frames.encode(Header(message.kind, id), message, packed)
+        self._socket("requests").send_multipart(parts)
         return id
 
     def hear(self, within_s: float = 10.0, name: str = "requests") -> Received:
@@ -172,9 +173,11 @@ class Peer:
             return frames.decode(parts[1:], frames.EVENTS)
         return frames.decode(parts, frames.REPLIES)
 
-    def ask(self, message: messages.Request, within_s: float = 10.0) -> messages.Message:
+    def ask(
+        self, message: messages.Request, within_s: float = 10.0, packed: bytes = b""
+    ) -> messages.Message:
         """Send a request and return its first reply."""
-        id = self.send(message)
+        id = self.send(message, packed=packed)
         while (came := self.hear(within_s)).header.id != id:
             pass
         return came.message

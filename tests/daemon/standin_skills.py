@@ -30,6 +30,11 @@ def warm(progress: Progress) -> None:
         raise RuntimeError("the compiler is out of order")
 
 
+BLOCK: dict[str, Any] = {
+    "at_m": 10.0, "t_s": 5.0, "x_m": 1.0, "y_m": 2.0, "heading_rad": 0.0, "kind": "polygon",
+    "layer": "way", "id": "0", "depth_m": 0.3,
+}  # fmt: skip
+
 # -- the site ---------------------------------------------------------------------------------
 
 
@@ -39,6 +44,7 @@ class Site:
         self._layers: dict[str, list[str]] = {}
         self._revision, self._top = 0, 0
         self._published: Published | None = None
+        self._watched: dict[int, float] = {}
         if handle is not None:
             self._layers = _read(memory, handle)
             self._revision, self._top = handle["revision"], handle["at"] + handle["bytes"]
@@ -87,7 +93,34 @@ class Site:
     def obstacles(self) -> dict[str, int]:
         return {layer: len(held) for layer, held in self._layers.items()}
 
-    def describe(self, question: Mapping[str, Any]) -> tuple[dict[str, Any], bytes]:
+    def tracks(self) -> dict[str, int]:
+        return {layer: len(held) for layer, held in self._layers.items() if layer == "moving"}
+
+    def carry(self, at_s: float) -> None:
+        self.carried_s = at_s
+
+    def next_carry_s(self, at_s: float) -> float | None:
+        return at_s + 0.05 if "moving" in self._layers else None
+
+    def watch(self, order: Mapping[str, Any]) -> None:
+        if order["unit"] == "hopeless":
+            raise Refused("bad_value", "no route at all")
+        self._watched[order["guard"]] = order["progress_m"]
+
+    def move(self, guard: int, progress_m: float) -> None:
+        if guard in self._watched:
+            self._watched[guard] = progress_m
+
+    def unwatch(self, guard: int) -> None:
+        self._watched.pop(guard, None)
+
+    def look(self) -> Iterator[tuple[int, dict[str, Any] | None]]:
+        """Blocked at 10 m by whatever the layer "way" holds."""
+        for guard, progress_m in self._watched.items():
+            blocked = self._layers.get("way") and progress_m < 10.0
+            yield guard, dict(BLOCK) if blocked else None
+
+    def describe(self, question: Mapping[str, Any], at_s: float) -> tuple[dict[str, Any], bytes]:
         layers = [{"layer": n, "polygons": len(h), "discs": 0} for n, h in self._layers.items()]
         return {"revision": self._revision, "layers": layers, "columns": {}}, b""
 

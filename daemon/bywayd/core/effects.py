@@ -150,6 +150,8 @@ class LayerFlags:
     outlines_only: bool = False
     #: What is acknowledged survives the daemon: the clerk's business, not the surveyor's.
     durable: bool = False
+    #: For how long what a scan says holds; None: for ever.
+    decay_s: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -164,20 +166,24 @@ class Change:
     * "put"       the obstacles in `message` and `packed` are where they say
     * "replace"   the layer holds these and nothing else, no cells either
     * "patch"     the cells in `message` and `packed` overwrite what the layer had there
-    * "drop"      the obstacles `ids` are gone; no error for those that never were
+    * "scan"      the beams in `message` and `packed` free and fill cells, seen at `as_of`
+    * "track"     the obstacles in `message` and `packed` move, from where they were at `as_of`
+    * "drop"      the obstacles `ids`, moving or not, are gone; no error for those that never were
 
     All of them can be applied a second time without harm: a successor of a surveyor that died
     gets the batch again whose answer never came.
     """
 
-    what: Literal["claim", "put", "replace", "patch", "drop"]
+    what: Literal["claim", "put", "replace", "patch", "scan", "track", "drop"]
     layer: str
     settings: LayerFlags
-    #: For put, replace and patch: as it came, its numbers not yet looked at.
+    #: For put, replace, patch, scan and track: as it came, its numbers not yet looked at.
     message: Message | None = None
     packed: Bytes = b""
     #: For drop.
     ids: tuple[str, ...] = ()
+    #: For scan and track: when it was seen, its age taken off.
+    as_of: Instant | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -216,12 +222,15 @@ class ApplyChanges:
     """
     Apply these in order, then publish. Answered by one `SnapshotReady` with the same number.
 
-    One batch is out at a time; what comes in meanwhile makes the next one.
+    One batch is out at a time; what comes in meanwhile makes the next one. A batch without
+    changes carries tracks forward and lets scans be forgotten, as every batch does.
     """
 
     surveyor: int
     batch: int
     changes: tuple[Change, ...]
+    #: For which moment tracks are carried forward: now.
+    at: Instant
 
 
 @dataclass(frozen=True, slots=True)

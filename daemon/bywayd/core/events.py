@@ -230,6 +230,8 @@ class SurveyorReady:
     #: Opaque: how workers attach to the snapshot.
     handle: object
     memory_bytes: int = 0
+    #: As in `SnapshotReady`.
+    next_in_s: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -257,8 +259,11 @@ class SnapshotReady:
     handle: object
     refusals: tuple[Refusal, ...] = ()
     memory_bytes: int = 0
-    #: How many obstacles each layer has, for the health record.
+    #: How many obstacles each layer has, for the health record; and how many of them move.
     obstacles: Mapping[str, int] = field(default_factory=dict)
+    tracks: Mapping[str, int] = field(default_factory=dict)
+    #: After what time the surveyor wants a batch, if only an empty one; None: no need.
+    next_in_s: float | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -391,6 +391,7 @@ class Front:
             self.surveyors.next_alarm(),
             self.clerks.next_alarm(),
             self.ledger.next_alarm(),
+            self.surveying.next_alarm(),
             self.dispatch.next_alarm(),
             self.guards.next_alarm(),
             self.guarding.next_alarm(),

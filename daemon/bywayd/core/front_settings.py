@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 from byway import limits
+from byway.messages import WhenStale
 from bywayd.core.effects import LayerFlags
 from bywayd.core.invariant import invariant
 
@@ -33,6 +34,8 @@ class FrontSettings:
     vehicles: Mapping[str, KnownVehicle] = field(default_factory=dict)
     #: Layers that exist from the start.
     layers: Mapping[str, LayerFlags] = field(default_factory=dict)
+    #: Of some of these: how often a change is expected, in seconds, and what if none comes.
+    expected: Mapping[str, tuple[float, WhenStale]] = field(default_factory=dict)
     #: Where the other sockets are, for `welcome`.
     updates_endpoints: tuple[str, ...] = ()
     events_endpoints: tuple[str, ...] = ()
@@ -97,6 +100,9 @@ class FrontSettings:
     batch_bytes_max: int = 16 * 1024 * 1024
     #: A source that left a gap is told so once in this time, whatever it sends beyond the gap.
     resend_every_s: float = 0.05
+    #: Tracks whose source does not say when they expire go after this time: a sensor that sees
+    #: something tells of it several times a second.
+    track_expires_s: float = 2.0
     #: Obstacles that may have an expiry at a time.
     expiries_max: int = 100_000
 

@@ -86,7 +86,7 @@ class Intake:
         if self._is_repeat(peer, came, now):
             return
         self._health.count("replans_total")
-        refused = self._why_not(header, ask)
+        refused = self._why_not(header, ask, now)
         if refused is not None:
             self._answering.refuse(peer, header, came.body, refused, now)
             return
@@ -134,12 +134,21 @@ class Intake:
             self._outbox.reply(peer, came.header, answered.message, answered.packed)
         return True
 
-    def _why_not(self, header: frames.Header, ask: messages.Replan) -> ErrorMessage | None:
+    def _why_not(
+        self, header: frames.Header, ask: messages.Replan, now: Instant
+    ) -> ErrorMessage | None:
         """Return why a replan cannot be taken in, the reasons that stay before those that pass."""
         settings = self._settings
         refused = self._why_not_at_all(header, ask)
         if refused is not None:
             return refused
+        stale = self._ledger.freshness.refusing(ask.leave_out)
+        if stale is not None:
+            text = f"layer {stale.name} has not changed for longer than is expected of it"
+            age_s = None if stale.changed_at is None else now.since(stale.changed_at).s
+            retry_after_s = None if stale.expected_period is None else stale.expected_period.s
+            facts = {"layer": stale.name, "age_s": age_s}
+            return error_of("stale_layer", text, facts, retry_after_s)
         if ask.guard and not self._guards.has_room(ask.unit):
             text = f"{len(self._guards)} guards stand already"
             return error_of("overloaded", text, {"guards": len(self._guards)})

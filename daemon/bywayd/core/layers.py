@@ -11,6 +11,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 
+from byway.messages import Claim, ReplaceLayer, WhenStale
 from bywayd.core.alarms import Alarms
 from bywayd.core.effects import LayerFlags
 from bywayd.core.instants import Duration, Instant
@@ -31,6 +32,10 @@ class Layer:
     changed_at: Instant | None = None
     #: Whether the site has it: from the first change that became visible.
     is_visible: bool = False
+    #: How often a change is expected, what is done when none comes, and whether that is so.
+    expected_period: Duration | None = None
+    when_stale: WhenStale = "ignore"
+    is_stale: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -55,6 +60,7 @@ class Layers:
     def __init__(
         self,
         declared: Mapping[str, LayerFlags],
+        expected: Mapping[str, tuple[float, WhenStale]],
         count_max: int,
         heard_at: Callable[[str], Instant | None],
     ) -> None:
@@ -65,6 +71,9 @@ class Layers:
         self._layers = {
             name: Layer(name, flags, is_visible=True) for name, flags in declared.items()
         }
+        for name, (period_s, when_stale) in expected.items():
+            self._layers[name].expected_period = Duration.of_s(period_s)
+            self._layers[name].when_stale = when_stale
         #: By name, when the lease of a layer may have ended.
         self._alarms: Alarms[str] = Alarms()
 
@@ -79,14 +88,7 @@ class Layers:
         return self._layers.get(name)
 
     def claim(
-        self,
-        source: str,
-        name: str,
-        unknown_blocks: bool | None,
-        outlines_only: bool | None,
-        lease_s: float | None,
-        now: Instant,
-        durable: bool | None = None,
+        self, source: str, name: str, wanted: Claim | ReplaceLayer, now: Instant
     ) -> Layer | No:
         """
         Give a layer to a source, making it if there is none of that name.
@@ -99,22 +101,27 @@ class Layers:
             if len(self._layers) >= self._count_max:
                 text = f"the site has {len(self._layers)} layers, the most is {self._count_max}"
                 return No("too_large", text, {"layers_max": self._count_max})
-            flags = LayerFlags(bool(unknown_blocks), bool(outlines_only), bool(durable))
+            flags = LayerFlags(
+                bool(wanted.unknown_blocks),
+                bool(wanted.outlines_only),
+                bool(wanted.durable),
+                wanted.decay_s,
+            )
             layer = Layer(name, flags)
             self._layers[name] = layer
         elif layer.owner not in (None, source) and layer.lease is not None:
             return self._not_owner(layer)
-        for flag, told in (
-            ("unknown_blocks", unknown_blocks),
-            ("outlines_only", outlines_only),
-            ("durable", durable),
-        ):
-            is_so = getattr(layer.flags, flag)
+        for flag in ("unknown_blocks", "outlines_only", "durable", "decay_s"):
+            told, is_so = getattr(wanted, flag), getattr(layer.flags, flag)
             if told is not None and told != is_so:
                 text = f"layer {name} has {flag} {is_so}, and that cannot be changed"
                 return No("conflict", text, {"layer": name, "field": flag, "value": is_so})
         layer.owner = source
-        layer.lease = None if lease_s is None else Duration.of_s(lease_s)
+        layer.lease = None if wanted.lease_s is None else Duration.of_s(wanted.lease_s)
+        if wanted.expected_period_s is not None:
+            layer.expected_period = Duration.of_s(wanted.expected_period_s)
+        if wanted.when_stale is not None:
+            layer.when_stale = wanted.when_stale
         if layer.lease is None:
             self._alarms.clear(name)
         else:
@@ -141,7 +148,7 @@ class Layers:
             return layer
         if layer is not None and layer.owner is not None:
             return self._not_owner(layer)
-        return self.claim(source, name, None, None, None, now)
+        return self.claim(source, name, Claim(layer=name), now)
 
     def _not_owner(self, layer: Layer) -> No:
         text = f"layer {layer.name} belongs to {layer.owner}"

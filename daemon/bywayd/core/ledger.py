@@ -17,20 +17,21 @@ from collections import deque
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from byway import frames, limits, messages, obstacles
+from byway import frames, limits, messages
 from byway.errors import SenderFault
 from byway.messages import Acknowledged, Refused, Resend
-from byway.packed import Bytes
+from bywayd.core.changes import Changes
 from bywayd.core.effects import Change
 from bywayd.core.entries import Batch, Entry
 from bywayd.core.events import Peer, Refusal
 from bywayd.core.expiries import Expiries
+from bywayd.core.freshness import Freshness
 from bywayd.core.front_settings import FrontSettings
 from bywayd.core.health import Health
 from bywayd.core.instants import Duration, Instant
 from bywayd.core.invariant import invariant, known
 from bywayd.core.keepline import KeepLine
-from bywayd.core.keepsakes import keepsake_of, recalled_entry, why_never_kept, why_not_kept
+from bywayd.core.keepsakes import keepsake_of, recalled_entry
 from bywayd.core.kept import Keepsake, Recollection
 from bywayd.core.layers import Layer, Layers, No
 from bywayd.core.outbox import Outbox
@@ -63,10 +64,16 @@ class Ledger:
         self._health = health
         # -- state -----------------------------------------------------------------------------
         self.sources = Sources(settings.sources_max, limits.refusals_kept)
-        self.layers = Layers(settings.layers, settings.layers_max, self._heard_at)
+        self.layers = Layers(
+            settings.layers, settings.expected, settings.layers_max, self._heard_at
+        )
+        self.freshness = Freshness(self.layers, outbox, health)
         self._expiries = Expiries(settings.expiries_max)
         #: Visible, and not on the disk yet.
         self.keepline = KeepLine(settings.keep_pending_bytes_max)
+        self._changes = Changes(
+            settings, self.layers, self.freshness, self._expiries, self.keepline
+        )
         #: Whether sources are listened to: not before all that is kept has been recalled.
         self.is_open = not settings.keeps
         #: Recalled, and not visible yet.
@@ -91,7 +98,7 @@ class Ledger:
         if source is None:
             return
         source.have = came.header.number
-        made = self._entry(source, message, came.packed, size, now)
+        made = self._changes.entry(source, message, came.packed, size, now)
         if isinstance(made, No):
             made = Entry(now, source.name, source.have, None, made)
         self._append(made)
@@ -180,99 +187,6 @@ class Ledger:
             self._reply(source, refused)
         self._acknowledge(source, self._revision)
 
-    # -- from a message to a change ------------------------------------------------------------
-
-    def _entry(
-        self, source: Source, message: messages.Change, packed: Bytes, size: int, now: Instant
-    ) -> Entry | No:
-        no = why_never_kept(message, self._settings)
-        if no is not None:
-            return no
-        match message:
-            case messages.Claim() | messages.ReplaceLayer():
-                layer = self.layers.claim(
-                    source.name,
-                    message.layer,
-                    message.unknown_blocks,
-                    message.outlines_only,
-                    message.lease_s,
-                    now,
-                    message.durable,
-                )
-            case _:
-                layer = self.layers.to_change(source.name, message.layer, now)
-        if isinstance(layer, No):
-            return layer
-        if layer.flags.durable:
-            no = why_not_kept(message, self.keepline, self._settings)
-            if no is not None:
-                return no
-        return self._entry_for(layer, source, message, packed, size, now)
-
-    def _entry_for(
-        self,
-        layer: Layer,
-        source: Source,
-        message: messages.Change,
-        packed: Bytes,
-        size: int,
-        now: Instant,
-    ) -> Entry | No:
-        name, flags, number = layer.name, layer.flags, source.have
-        match message:
-            case messages.Put() | messages.ReplaceLayer():
-                ids = self._ids(message, packed)
-                if isinstance(ids, No):
-                    return ids
-                replaces = isinstance(message, messages.ReplaceLayer)
-                change = Change("replace" if replaces else "put", name, flags, message, packed)
-                after_s = message.expires_in_s
-                expires_at = None if after_s is None else now + Duration.of_s(after_s)
-                expires = expires_at is not None
-                self._expiries.coming(name, ids, replaces=replaces, expires=expires)
-                return Entry(
-                    now,
-                    source.name,
-                    number,
-                    change,
-                    ids=ids,
-                    expires_at=expires_at,
-                    size_bytes=size,
-                )
-            case messages.Drop():
-                change = Change("drop", name, flags, ids=tuple(message.ids))
-            case messages.Patch():
-                if flags.outlines_only:
-                    text = f"layer {name} holds outlines only, and no cells"
-                    return No("conflict", text, {"layer": name, "field": "outlines_only"})
-                change = Change("patch", name, flags, message, packed)
-            case _:
-                change = Change("claim", name, flags)
-        return Entry(now, source.name, number, change, size_bytes=size)
-
-    def _ids(
-        self, message: messages.Put | messages.ReplaceLayer, packed: Bytes
-    ) -> tuple[str, ...] | No:
-        """Return the ids of obstacles that are put, if they matter here."""
-        layer, count = message.layer, message.polygons + message.discs
-        if message.expires_in_s is None:
-            if not self._expiries.is_timed(layer):
-                return ()
-        elif count > self._expiries.room_left:
-            most = self._settings.expiries_max
-            return No(
-                "too_large",
-                f"{count} more obstacles with an expiry would be too many, the most is {most}",
-                {"obstacles": count, "expiries_max": most},
-            )
-        try:
-            ids = tuple(obstacles.ids_of(message.columns, packed, count))
-        except SenderFault as fault:
-            return No(fault.code, fault.text, fault.facts)
-        if message.expires_in_s is not None:
-            self._expiries.begin(layer)
-        return ids
-
     # -- to the surveyor and back --------------------------------------------------------------
 
     def next_batch(self) -> Batch | None:
@@ -337,7 +251,7 @@ class Ledger:
                 self._outbox.log(
                     "error", "keep.recall_refused", layer=name, code=no.code, text=no.text
                 )
-        if change.what in ("put", "replace"):
+        if change.what in ("put", "replace", "track"):
             self._expiries.decided(
                 name,
                 entry.ids,
@@ -350,7 +264,10 @@ class Ledger:
         if no is None:
             layer = self._layer(name)
             layer.is_visible = True
-            layer.changed_at = now
+            if change.what != "claim" and entry.source is not None:
+                self.freshness.changed(layer, now)
+            else:
+                layer.changed_at = now
 
     def kept(self) -> None:
         """More of the keep line is on the disk: some sources have waited for that."""
@@ -412,6 +329,8 @@ class Ledger:
         while (layer := self.layers.pop_forfeited(now)) is not None:
             self._health.count("leases_ended_total")
             self._outbox.log("warning", "layer.forfeited", layer=layer.name)
+            self.freshness.tell(layer, "forfeited", now)
+        self.freshness.settle(now)
 
     def _expire(self, now: Instant) -> None:
         for name, ids in self._expiries.pop_due(now).items():
@@ -422,8 +341,11 @@ class Ledger:
                 self._append(Entry(now, None, 0, Change("drop", name, layer.flags, ids=some)))
 
     def next_alarm(self) -> Instant | None:
-        """Return when something expires, or a lease may end."""
-        found = (self._expiries.next_alarm(), self.layers.next_alarm())
+        """Return when something expires, a lease may end, or a layer become stale."""
+        found = (
+            *(self._expiries.next_alarm(), self.layers.next_alarm()),
+            self.freshness.next_alarm(),
+        )
         return min((at for at in found if at is not None), default=None)
 
     # -- within --------------------------------------------------------------------------------
@@ -461,6 +383,7 @@ class Ledger:
         """Stop with a `Defect` if a change could be lost, or memory is not bounded."""
         self.sources.check()
         self.layers.check()
+        self.freshness.check()
         self._expiries.check()
         self.keepline.check()
         entries = [*(() if self._out is None else self._out.entries), *self._line]

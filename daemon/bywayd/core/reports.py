@@ -123,7 +123,12 @@ def health(front: Reported, now: Instant) -> HealthIs:
                 age_s=None if layer.changed_at is None else now.since(layer.changed_at).s,
                 lease_left_s=front.ledger.layers.lease_left_s(layer, now),
                 obstacles=front.surveying.obstacles.get(layer.name, 0),
+                tracks=front.surveying.tracks.get(layer.name, 0),
                 durable=layer.flags.durable,
+                expected_period_s=(
+                    None if layer.expected_period is None else layer.expected_period.s
+                ),
+                stale=layer.is_stale,
             )
             for layer in front.ledger.layers
         },

@@ -14,6 +14,7 @@ from byway.frames import Header
 from byway.messages import Site
 from bywayd.core.effects import (
     ApplyChanges,
+    Change,
     DescribeSite,
     KillSurveyor,
     PingSurveyor,
@@ -25,7 +26,7 @@ from bywayd.core.front_settings import FrontSettings
 from bywayd.core.guarding import Guarding
 from bywayd.core.guards import Guards
 from bywayd.core.health import Health
-from bywayd.core.instants import Instant
+from bywayd.core.instants import Duration, Instant
 from bywayd.core.invariant import invariant
 from bywayd.core.ledger import Ledger
 from bywayd.core.outbox import Outbox
@@ -84,6 +85,9 @@ class Surveying:
         #: The newest revision that a batch has made, and when it became visible.
         self._visible: tuple[int, Instant] | None = None
         self.obstacles: dict[str, int] = {}
+        self.tracks: dict[str, int] = {}
+        #: When the surveyor wants a batch, if only an empty one.
+        self._carry_at: Instant | None = None
 
     # -- what clients want ---------------------------------------------------------------------
 
@@ -123,6 +127,7 @@ class Surveying:
             self._nonsense(number, f"took up revision {event.revision}")
         else:
             self._ready = number
+            self._carry_in(event.next_in_s, now)
             self._guards.surveyor_ready(number)
             self.memory_bytes = event.memory_bytes
             self._outbox.log("info", "surveyor.ready", surveyor=number, revision=event.revision)
@@ -142,8 +147,10 @@ class Surveying:
             if self._visible is None or event.revision > self._visible[0]:
                 self._visible = (event.revision, now)
             self.memory_bytes = event.memory_bytes
-            self.obstacles = dict(event.obstacles)
-            self._ledger.decide(event.refusals, event.revision, now)
+            self.obstacles, self.tracks = dict(event.obstacles), dict(event.tracks)
+            self._carry_in(event.next_in_s, now)
+            if self._ledger.out is not None:
+                self._ledger.decide(event.refusals, event.revision, now)
 
     def saw(self, event: GuardSeen, now: Instant) -> None:
         """A guarded route has been looked at."""
@@ -206,13 +213,26 @@ class Surveying:
             if not batch.changes:
                 self._ledger.decide((), self._snapshots.revision, now)
                 continue
-            self._task_serial += 1
-            self._batch = self._task_serial
-            self._roster.give(number, self._batch, None, now)
-            self._outbox.add(ApplyChanges(number, self._batch, batch.changes))
+            self._hand_out(number, batch.changes, now)
+        if self._batch is None and self._carry_at is not None and now >= self._carry_at:
+            self._hand_out(number, (), now)
         revision = self._snapshots.maybe_release()
         if revision is not None:
             self._outbox.add(ReleaseBefore(number, revision))
+
+    def _hand_out(self, number: int, changes: tuple[Change, ...], now: Instant) -> None:
+        self._task_serial += 1
+        self._batch = self._task_serial
+        self._carry_at = None  # every batch carries forward what moves
+        self._roster.give(number, self._batch, None, now)
+        self._outbox.add(ApplyChanges(number, self._batch, changes, now))
+
+    def _carry_in(self, next_in_s: float | None, now: Instant) -> None:
+        self._carry_at = None if next_in_s is None else now + Duration.of_s(next_in_s)
+
+    def next_alarm(self) -> Instant | None:
+        """Return when something is to be carried forward, unless a batch is out."""
+        return self._carry_at if self._ready is not None and self._batch is None else None
 
     @property
     def is_ready(self) -> bool:
@@ -231,6 +251,7 @@ class Surveying:
         if self._ready == number:
             self._ready = None
             self._batch = None
+            self._carry_at = None
             self._guards.surveyor_gone()
         for task, ticket in list(self._tickets.items()):
             if ticket.surveyor == number:
@@ -243,9 +264,6 @@ class Surveying:
     def check(self) -> None:
         """Stop with a `Defect` if something could be forgotten."""
         invariant(len(self._tickets) <= self._settings.descriptions_max, "questions are bounded")
-        invariant(
-            self._batch is None or self._ledger.out is not None, "a batch that is out is remembered"
-        )
         invariant(self._batch is None or self._ready is not None, "a batch is out with somebody")
         for ticket in self._tickets.values():
             invariant(ticket.surveyor in (None, self._ready), "questions are with who is ready")

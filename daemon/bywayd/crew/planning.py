@@ -10,7 +10,7 @@ import math
 from collections.abc import Callable, Mapping
 from mmap import mmap
 from types import SimpleNamespace
-from typing import Any, cast
+from typing import Any, Final, cast
 
 import msgpack
 import numpy as np
@@ -27,6 +27,8 @@ from byway_planning import (
     verify,
 )
 from byway_planning import plan as plan_route
+from byway_planning.remedy import Remedy
+from byway_planning.site import base_id
 from bywayd.crew.skills import Found, Refused
 
 
@@ -86,6 +88,10 @@ def plan(
     return found_of(outcome, job)
 
 
+#: Corners of the way that would be open: a body must stay below the largest frame.
+_WAY_CORNERS_MAX: Final = 1000
+
+
 def found_of(outcome: Outcome, job: Mapping[str, Any]) -> Found:
     """Return an outcome ready to travel."""
     body: dict[str, Any] = {
@@ -95,7 +101,7 @@ def found_of(outcome: Outcome, job: Mapping[str, Any]) -> Found:
         "seed": job["seed"],
         "left_out": list(job["left_out"]),
         "blocked_by": [
-            {"layer": each.layer, "id": each.obstacle, "depth_m": each.depth_m}
+            {"layer": each.layer, "id": base_id(each.obstacle), "depth_m": each.depth_m}
             for each in outcome.blocked_by
         ],
         "statistics": {name: _plain(value) for name, value in outcome.statistics.items()},
@@ -103,6 +109,8 @@ def found_of(outcome: Outcome, job: Mapping[str, Any]) -> Found:
     for name in ("cost", "bound"):
         if math.isfinite(getattr(outcome, name)):
             body[name] = float(getattr(outcome, name))
+    if outcome.remedy is not None:
+        body["remedy"] = _told_remedy(outcome.remedy, proved=outcome.kind == "no_route")
     packed, path = b"", None
     if outcome.route is not None:
         told, packed = _told_route(outcome.route)
@@ -114,6 +122,18 @@ def found_of(outcome: Outcome, job: Mapping[str, Any]) -> Found:
         "body": msgpack.packb(body),
         "packed": packed,
         "path": path,
+    }
+
+
+def _told_remedy(remedy: Remedy, *, proved: bool) -> dict[str, Any]:
+    return {
+        "movables": [
+            {"layer": each.layer, "id": base_id(each.obstacle), "x_m": each.x_m, "y_m": each.y_m}
+            for each in remedy.movables
+        ],
+        "way_m": remedy.way_m.tolist()[:_WAY_CORNERS_MAX],
+        "disc_radius_m": float(remedy.disc_radius_m),
+        "proved": proved,
     }
 
 

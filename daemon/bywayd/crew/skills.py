@@ -55,6 +55,17 @@ class SiteKeeping(Protocol):
             MemoryError: If there is no room for it.
         """
 
+    def carry(self, at_s: float) -> None:
+        """
+        Carry forward what moves, and forget what was seen too long ago.
+
+        Args:
+            at_s: Now, a reading of CLOCK_MONOTONIC.
+        """
+
+    def next_carry_s(self, at_s: float) -> float | None:
+        """Return when, after now, there will be something to carry; None for never."""
+
     def publish(self) -> Published:
         """
         Make what has changed visible; the same revision again when nothing has.
@@ -69,7 +80,33 @@ class SiteKeeping(Protocol):
     def obstacles(self) -> dict[str, int]:
         """Return how many obstacles each layer has."""
 
-    def describe(self, question: Mapping[str, Any]) -> tuple[dict[str, Any], bytes]:
+    def tracks(self) -> dict[str, int]:
+        """Return how many of them move."""
+
+    def watch(self, order: Mapping[str, Any]) -> None:
+        """
+        Look after a route from now on: the fields of `WatchRoute`.
+
+        Raises:
+            Refused: If it is no route, with the reason.
+        """
+
+    def move(self, guard: int, progress_m: float) -> None:
+        """A vehicle is somewhere else on its route."""
+
+    def unwatch(self, guard: int) -> None:
+        """Look after a route no more."""
+
+    def look(self) -> Iterator[tuple[int, dict[str, Any] | None]]:
+        """
+        Look at all watched routes on the snapshot that was published last.
+
+        Yields:
+            The number of a guard and where its route is blocked, if it is; after each route, so
+            that who waits for a sign of life gets one.
+        """
+
+    def describe(self, question: Mapping[str, Any], at_s: float) -> tuple[dict[str, Any], bytes]:
         """Return the site as the fields and the packed columns of the protocol's message."""
 
 

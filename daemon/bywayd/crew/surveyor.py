@@ -36,16 +36,29 @@ class Surveyor:
         #: The current snapshot, and the handles of all that somebody may still be reading.
         self._published = Published(0, {})
         self._in_use: dict[int, dict[str, Any]] = {}
+        #: Guarded routes as they were ordered, and what was said of each last.
+        self._orders: dict[int, dict[str, Any]] = {}
+        self._seen: dict[int, dict[str, Any] | None] = {}
 
     def run(self) -> None:
         """Take up the site, say ready, then do what comes until the channel is closed."""
         site = self._begin(self._next())
-        self._say("ready")
+        self._say("ready", next_in_s=self._next_in_s(site))
         while True:
             message = self._next()
             what = message["do"]
             if what == "apply":
                 site = self._apply(site, message)
+                self._look(site)
+            elif what == "watch":
+                self._watch(site, message)
+            elif what == "move":
+                site.move(message["guard"], message["progress_m"])
+                self._look(site)
+            elif what == "unwatch":
+                site.unwatch(message["guard"])
+                self._seen.pop(message["guard"], None)
+                self._orders.pop(message["guard"], None)
             elif what == "release":
                 self._release(site, message["revision"])
             elif what == "describe":
@@ -101,16 +114,68 @@ class Surveyor:
             index, refused = breaking
             refusals[index] = refused
             site = self._take_up_again()
+            self._watch_all(site)
         try:
             self._box.note(len(changes))
+            site.carry(message["at_s"])
             self._publish(site)
         except MemoryError as fault:
             refusals |= {i: _no_room(fault) for i in range(len(changes)) if i not in refusals}
             site = self._take_up_again()
+            self._watch_all(site)
         self._box.batch_done()
         told = [_refusal(index, refused) for index, refused in sorted(refusals.items())]
-        self._say("snapshot", batch=message["batch"], refusals=told, obstacles=site.obstacles())
+        self._say(
+            "snapshot",
+            batch=message["batch"],
+            refusals=told,
+            obstacles=site.obstacles(),
+            tracks=site.tracks(),
+            next_in_s=self._next_in_s(site),
+        )
         return site
+
+    @staticmethod
+    def _next_in_s(site: SiteKeeping) -> float | None:
+        now_s = time.monotonic()
+        due_s = site.next_carry_s(now_s)
+        return None if due_s is None else max(0.0, due_s - now_s)
+
+    # -- guarded routes ---------------------------------------------------------------------
+
+    def _watch(self, site: SiteKeeping, order: dict[str, Any]) -> None:
+        guard = order["guard"]
+        try:
+            site.watch(order)
+        except Refused as refused:
+            self._say_seen(guard, None, refused.text)
+            return
+        self._orders[guard] = order
+        self._look(site)
+
+    def _watch_all(self, site: SiteKeeping) -> None:
+        """A site that was taken up again knows of no routes."""
+        for order in self._orders.values():
+            site.watch(order)
+
+    def _look(self, site: SiteKeeping) -> None:
+        """Look at all watched routes, and say what is another than was said last."""
+        for guard, blocked in site.look():
+            if guard not in self._seen or self._seen[guard] != blocked:
+                self._seen[guard] = blocked
+                self._say_seen(guard, blocked)
+            self._sign_of_life()
+
+    def _say_seen(self, guard: int, blocked: dict[str, Any] | None, fault: str = "") -> None:
+        self._channel.wait_put(
+            {
+                "say": "guard",
+                "guard": guard,
+                "revision": self._published.revision,
+                "blocked": blocked,
+                "fault": fault,
+            }
+        )
 
     def _refused_for_deaths(self, count: int) -> dict[int, Refused]:
         """Refuse what has killed our predecessors: one change, or the publishing of them all."""
@@ -146,7 +211,7 @@ class Surveyor:
     def _describe(self, site: SiteKeeping, message: Mapping[str, Any]) -> None:
         told: dict[str, Any]
         try:
-            fields, packed = site.describe(message["question"])
+            fields, packed = site.describe(message["question"], time.monotonic())
             told = {"fields": fields, "packed": packed}
         except Refused as refused:
             told = {"refusal": _refusal(0, refused)}

@@ -41,6 +41,8 @@ def rehearse() -> Found:
                 "cell_m": 0.1,
                 "limits_m": (-20.0, -20.0, 40.0, 20.0),
                 "origin_m": (0.0, 0.0),
+                "sweep_s": 3.0,
+                "carry_every_s": 0.1,
             },
             "layers": {},
         },
@@ -49,10 +51,11 @@ def rehearse() -> Found:
     )
     post = obstacles.shapes({"post": [(9, -1), (10, -1), (10, 1), (9, 1)]}, {"bin": (5, 9, 1)})
     fields, packed = obstacles.pack_shapes(post)
-    change = {
+    change: dict[str, Any] = {
         "what": "replace",
         "layer": "fixed",
-        "settings": {"unknown_blocks": False, "outlines_only": False},
+        "settings": {"unknown_blocks": False, "outlines_only": False, "decay_s": None},
+        "as_of_s": None,
         "message": messages.ReplaceLayer(layer="fixed", **fields).model_dump(),
         "packed": packed,
         "ids": [],
@@ -60,7 +63,7 @@ def rehearse() -> Found:
     for _ in site.apply(change):
         pass
     published = site.publish()
-    site.describe({"layers": None, "box_m": None, "cells": True})
+    site.describe({"layers": None, "box_m": None, "cells": True, "guards": True}, 0.0)
     snapshot, tug = attach(ground, published.handle), vehicle(_tug)
     end_s = time.monotonic() + _rehearsal_s
     found = plan(snapshot, tug, _job, lambda: end_s - time.monotonic(), lambda better: None)

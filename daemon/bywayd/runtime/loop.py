@@ -270,8 +270,12 @@ class Loop:
         self._crew.spawn("surveyor", effect.surveyor, order)
 
     def _apply_changes(self, effect: effects.ApplyChanges) -> None:
-        changes = [change_message(change) for change in effect.changes]
-        self._tell("surveyor", effect.surveyor, "apply", batch=effect.batch, changes=changes)
+        host_ns = self._clock.host_ns
+        changes = [change_message(change, host_ns) for change in effect.changes]
+        at_s = host_ns(effect.at) / SECOND_NS
+        self._tell(
+            "surveyor", effect.surveyor, "apply", batch=effect.batch, changes=changes, at_s=at_s
+        )
 
     def _release_before(self, effect: effects.ReleaseBefore) -> None:
         self._tell("surveyor", effect.surveyor, "release", revision=effect.revision)

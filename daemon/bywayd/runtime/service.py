@@ -157,7 +157,11 @@ def _site_settings(settings: Settings) -> dict[str, Any]:
     return {
         "site": settings.site.model_dump(mode="json"),
         "layers": {
-            name: {"unknown_blocks": layer.unknown_blocks, "outlines_only": layer.outlines_only}
+            name: {
+                "unknown_blocks": layer.unknown_blocks,
+                "outlines_only": layer.outlines_only,
+                "decay_s": layer.decay_s,
+            }
             for name, layer in settings.layers.items()
         },
     }
@@ -172,9 +176,17 @@ def _front_settings(settings: Settings, outside: Outside) -> FrontSettings:
             for name, section in settings.vehicles.items()
         },
         layers={
-            name: LayerFlags(layer.unknown_blocks, layer.outlines_only, durable=layer.durable)
+            name: LayerFlags(
+                layer.unknown_blocks, layer.outlines_only, layer.durable, layer.decay_s
+            )
             for name, layer in settings.layers.items()
         },
+        expected={
+            name: (layer.expected_period_s, layer.when_stale)
+            for name, layer in settings.layers.items()
+            if layer.expected_period_s is not None
+        },
+        track_expires_s=settings.site.track_expires_s,
         updates_endpoints=tuple(outside.endpoints["updates"]),
         events_endpoints=tuple(outside.endpoints["events"]),
         software=f"bywayd {metadata.version('byway')}",

@@ -12,7 +12,7 @@ from typing import Any, Final, TypeAlias, get_args
 from byway import frames, messages
 from byway.errors import BywayError
 from bywayd.core import effects, events
-from bywayd.core.instants import Instant
+from bywayd.core.instants import SECOND_NS, Instant
 from bywayd.runtime.clerking import CLERK_SAYS
 from bywayd.runtime.staff import Role
 
@@ -73,7 +73,18 @@ def _snapshot_ready(number: int, message: Message) -> events.Event:
         ),
         int(message["memory_bytes"]),
         {str(layer): int(count) for layer, count in message["obstacles"].items()},
+        {str(layer): int(count) for layer, count in message["tracks"].items()},
+        _duration_s(message["next_in_s"]),
     )
+
+
+def _duration_s(told: object) -> float | None:
+    if told is None:
+        return None
+    seconds = float(told)  # type: ignore[arg-type]
+    if not 0.0 <= seconds < math.inf:
+        raise ValueError(f"no time to wait: {seconds}")
+    return seconds
 
 
 def _site_described(number: int, message: Message) -> events.Event:
@@ -124,7 +135,11 @@ _WORKER_SAYS: Final[Mapping[str, _Maker]] = {
 
 _SURVEYOR_SAYS: Final[Mapping[str, _Maker]] = {
     "ready": lambda number, m: events.SurveyorReady(
-        number, int(m["revision"]), m["handle"], int(m["memory_bytes"])
+        number,
+        int(m["revision"]),
+        m["handle"],
+        int(m["memory_bytes"]),
+        _duration_s(m["next_in_s"]),
     ),
     "alive": lambda number, _: events.SurveyorAlive(number),
     "snapshot": _snapshot_ready,
@@ -173,7 +188,7 @@ def outcome_message(outcome: events.Outcome) -> Message:
     }
 
 
-def change_message(change: effects.Change) -> Message:
+def change_message(change: effects.Change, host_ns: Callable[[Instant], int]) -> Message:
     """Return a change for the surveyor; its geometry is not looked at."""
     told = change.message
     return {
@@ -182,7 +197,9 @@ def change_message(change: effects.Change) -> Message:
         "settings": {
             "unknown_blocks": change.settings.unknown_blocks,
             "outlines_only": change.settings.outlines_only,
+            "decay_s": change.settings.decay_s,
         },
+        "as_of_s": None if change.as_of is None else host_ns(change.as_of) / SECOND_NS,
         "message": None if told is None else told.model_dump(),
         "packed": bytes(change.packed),
         "ids": change.ids,

@@ -9,7 +9,7 @@ tables; the blocks of the revision before stay until `release_before` says that 
 
 import itertools
 import math
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 
 import numpy as np
 import numpy.typing as npt
@@ -224,19 +224,27 @@ class SiteModel:
             SiteError: unknown_layer, outlines_only, too_large (the id), or outside_limits (when
                 it stays outside for that time).
         """
+        self.track_all(layer, {track_id: track})
+
+    def track_all(self, layer: str, tracks: Mapping[str, Track]) -> None:
+        """Do so for several by their ids: all of them, or none where one is refused."""
         self._with_cells(layer)
-        self._check_id(track_id, "track")
-        pieces = self._sweep(track, track.at_s)
-        if not pieces:
-            raise SiteError(
-                "outside_limits",
-                f"track {track_id!r} at {track.pose} stays outside of the site, "
-                f"{self.settings.limits_m}",
-            )
-        self.drop(layer, track_id)
-        self._movers.take(layer, track_id, track)
-        self._lay(layer, track_id, pieces, track.at_s)
-        self._changed = True
+        sweeps: dict[str, list[Shape]] = {}
+        for track_id, track in tracks.items():
+            self._check_id(track_id, "track")
+            sweeps[track_id] = self._sweep(track, track.at_s)
+            if not sweeps[track_id]:
+                raise SiteError(
+                    "outside_limits",
+                    f"track {track_id!r} at {track.pose} stays outside of the site, "
+                    f"{self.settings.limits_m}",
+                    id=track_id,
+                )
+        for track_id, track in tracks.items():
+            self.drop(layer, track_id)
+            self._movers.take(layer, track_id, track)
+            self._lay(layer, track_id, sweeps[track_id], track.at_s)
+            self._changed = True
 
     def carry(self, now_s: float) -> None:
         """

@@ -96,6 +96,13 @@ class Track:
             b = (1.0 - math.cos(turn)) / self.turn_rate_radps
         return x + a * vx - b * vy, y + b * vx + a * vy, heading + turn
 
+    def velocity_at(self, now_s: float) -> tuple[float, float]:
+        """Return its velocity by now."""
+        turn = self.turn_rate_radps * (now_s - self.at_s)
+        vx, vy = self.velocity_mps
+        c, s = math.cos(turn), math.sin(turn)
+        return c * vx - s * vy, s * vx + c * vy
+
     def uncertainty_at(self, now_s: float) -> float:
         """Return by how much it may be elsewhere by now."""
         return self.uncertainty_m + self.growth_mps * max(0.0, now_s - self.at_s)

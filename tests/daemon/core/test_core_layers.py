@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import pytest
 from tests.daemon.core.frontdesk import START, ms
 
+from byway.messages import Claim
 from bywayd.core.effects import LayerFlags
 from bywayd.core.instants import Instant
 from bywayd.core.layers import Layer, Layers, No
@@ -21,19 +24,17 @@ def heard() -> Heard:
 
 @pytest.fixture
 def layers(heard: Heard) -> Layers:
-    return Layers({"fixed": LayerFlags(unknown_blocks=True)}, 3, heard.get)
+    return Layers({"fixed": LayerFlags(unknown_blocks=True)}, {}, 3, heard.get)
 
 
 def claim(
     layers: Layers,
     source: str,
     name: str = "stacks",
-    unknown_blocks: bool | None = None,
-    outlines_only: bool | None = None,
-    lease_s: float | None = None,
     now: Instant = START,
+    **wanted: Any,
 ) -> Layer | No:
-    found = layers.claim(source, name, unknown_blocks, outlines_only, lease_s, now)
+    found = layers.claim(source, name, Claim(layer=name, **wanted), now)
     layers.check()
     return found
 

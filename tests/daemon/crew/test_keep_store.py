@@ -1,4 +1,4 @@
-"""What was committed is recalled as it was, and nothing else; files that are not ours are refused."""
+"""What was committed is recalled as it was, nothing else; files not our own are refused."""
 
 from __future__ import annotations
 
@@ -417,7 +417,7 @@ def test_a_file_with_broken_pages_is_refused_and_left_alone(file):
     for page in range(2, len(whole) // 4096):
         whole[page * 4096 : page * 4096 + 64] = os.urandom(64)
     file.write_bytes(whole)
-    with pytest.raises(KeepFault, match="damaged|cannot be used"):
+    with pytest.raises(KeepFault, match=r"damaged|cannot be used"):
         KeepStore.open(file, NOW_S)
     assert file.read_bytes() == whole
 

@@ -15,10 +15,16 @@ from bywayd.crew.skills import Refused
 
 ORIGIN_M = (5000.0, 8000.0)
 SETTINGS = {
-    "site": {"cell_m": 0.1, "limits_m": [4960.0, 7960.0, 5040.0, 8040.0], "origin_m": ORIGIN_M},
+    "site": {
+        "cell_m": 0.1,
+        "limits_m": [4960.0, 7960.0, 5040.0, 8040.0],
+        "origin_m": ORIGIN_M,
+        "sweep_s": 3.0,
+        "carry_every_s": 0.1,
+    },
     "layers": {"own": {"unknown_blocks": False, "outlines_only": True}},
 }
-PLAIN = {"unknown_blocks": False, "outlines_only": False}
+PLAIN = {"unknown_blocks": False, "outlines_only": False, "decay_s": None}
 TUG = {
     "model": "car",
     "footprint_m": [[-0.6, -0.7], [2.2, -0.7], [2.2, 0.7], [-0.6, 0.7]],
@@ -85,7 +91,9 @@ def _apply(site, *changes):
 
 
 def _described(site, **question):
-    fields, packed = site.describe({"layers": None, "box_m": None, "cells": True, **question})
+    fields, packed = site.describe(
+        {"layers": None, "box_m": None, "cells": True, "guards": False, **question}, 0.0
+    )
     return frames.build(messages.SiteIs, fields), packed
 
 

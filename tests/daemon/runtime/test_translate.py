@@ -29,7 +29,7 @@ BLOCK = {
     "layer": "stacks",
     "id": "a",
 }
-SNAPSHOT = {"revision": 7, "handle": {"revision": 7}, "memory_bytes": 4096}
+SNAPSHOT = {"revision": 7, "handle": {"revision": 7}, "memory_bytes": 4096, "next_in_s": None}
 
 
 @pytest.mark.parametrize(
@@ -66,7 +66,9 @@ SNAPSHOT = {"revision": 7, "handle": {"revision": 7}, "memory_bytes": 4096}
                 "batch": 4,
                 "refusals": [REFUSAL],
                 "obstacles": {"stacks": 2},
+                "tracks": {"stacks": 1},
                 **SNAPSHOT,
+                "next_in_s": 0.1,
             },
             events.SnapshotReady(
                 3,
@@ -76,6 +78,8 @@ SNAPSHOT = {"revision": 7, "handle": {"revision": 7}, "memory_bytes": 4096}
                 (events.Refusal(2, "bad_geometry", "t", {"id": "a"}),),
                 4096,
                 {"stacks": 2},
+                {"stacks": 1},
+                0.1,
             ),
         ),
         (
@@ -119,7 +123,14 @@ def test_each_thing_the_crew_says_is_an_event(role, message, event):
         ("surveyor", {"say": "site", "ticket": 9, "fields": {"revision": -1}, "packed": b""}),
         (
             "surveyor",
-            {"say": "snapshot", "batch": 4, "refusals": [{}], "obstacles": {}, **SNAPSHOT},
+            {
+                "say": "snapshot",
+                "batch": 4,
+                "refusals": [{}],
+                "obstacles": {},
+                "tracks": {},
+                **SNAPSHOT,
+            },
         ),
         *(
             ("surveyor", {"say": "guard", "guard": 5, "blocked": bad, "fault": "", **SNAPSHOT})
@@ -161,12 +172,14 @@ def test_an_outcome_goes_back_to_a_worker_as_it_came():
 def test_a_change_travels_with_its_message_and_its_columns():
     told = messages.Drop(layer="stacks", ids=["a"])
     change = effects.Change(
-        "drop", "stacks", effects.LayerFlags(outlines_only=True), told, b"", ("a",)
+        *("drop", "stacks", effects.LayerFlags(outlines_only=True), told, b"", ("a",)),
+        as_of=Instant(3_500_000_000),
     )
-    assert change_message(change) == {
+    assert change_message(change, lambda instant: instant.ns - 1_000_000_000) == {
         "what": "drop",
         "layer": "stacks",
-        "settings": {"unknown_blocks": False, "outlines_only": True},
+        "settings": {"unknown_blocks": False, "outlines_only": True, "decay_s": None},
+        "as_of_s": 2.5,
         "message": {"layer": "stacks", "ids": ["a"]},
         "packed": b"",
         "ids": ("a",),
