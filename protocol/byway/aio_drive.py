@@ -15,7 +15,7 @@ from byway.link import Result, Steps, Waiting
 
 
 class LoopDrive:
-    """Takes steps in the tasks of one event loop, that of the first call."""
+    """Takes steps in the tasks of an event loop."""
 
     def __init__(self, contact: Contact) -> None:
         self._contact: Final = contact
@@ -23,13 +23,11 @@ class LoopDrive:
         self._sleepers: dict[asyncio.Future[None], Waiting] = {}
         #: Descriptors that the loop watches now.
         self._watched: set[int] = set()
-        self._loop: asyncio.AbstractEventLoop | None = None
         # Sockets may be closed by any step, and the loop must let go of them before.
         contact.before_close = self._unwatch
 
     async def run(self, steps: Steps[Result]) -> Result:
         """Take all steps and return what comes of it; when cancelled, end them."""
-        self._loop = asyncio.get_running_loop()
         came = self._contact.came
         try:
             while True:
@@ -74,7 +72,7 @@ class LoopDrive:
 
     def _watch(self) -> None:
         """Watch what anybody waits for, and nothing else."""
-        loop = self._loop
+        loop = asyncio.get_running_loop()
         wanted = {
             descriptor
             for waiting in self._sleepers.values()
@@ -82,8 +80,6 @@ class LoopDrive:
             if not link.is_closed
             for descriptor in link.descriptors
         }
-        if loop is None or loop.is_closed():
-            return
         for descriptor in self._watched - wanted:
             loop.remove_reader(descriptor)
         for descriptor in wanted - self._watched:
@@ -91,9 +87,8 @@ class LoopDrive:
         self._watched = wanted
 
     def _unwatch(self) -> None:
-        if self._loop is not None and not self._loop.is_closed():
-            for descriptor in self._watched:
-                self._loop.remove_reader(descriptor)
+        for descriptor in self._watched:
+            asyncio.get_running_loop().remove_reader(descriptor)
         self._watched = set()
         # They see by themselves what has become of their sockets.
         self._wake()

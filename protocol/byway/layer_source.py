@@ -188,7 +188,7 @@ class Tender:
             self._thread = None
 
     def _tend(self) -> None:
-        every_s = _LOOKS_EVERY_S
+        every_s = _BUSY_S
         while not self._ends.wait(every_s):
             # A call that is under way looks after everything itself.
             if self._working.acquire(blocking=False):

@@ -10,6 +10,7 @@ ends; heartbeats find a host that has fallen silent within four seconds.
 
 import math
 import struct
+import time
 from collections.abc import Callable, Generator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, Final, Protocol, TypeAlias, TypeVar
@@ -218,5 +219,8 @@ def wait(links: Sequence[tuple[Link, bool]], until_s: float, clock: Callable[[],
         poller.register(link._socket, zmq.POLLIN | (zmq.POLLOUT if wants_to_send else 0))
         poller.register(link._monitor, zmq.POLLIN)
     left_s = until_s - clock()
+    if not links:
+        time.sleep(max(0.0, left_s))  # a poller of nothing does not wait
+        return
     # Rounded up: to wake a little early would mean to poll again and again.
     poller.poll(None if math.isinf(left_s) else max(0, math.ceil(1000.0 * left_s)))

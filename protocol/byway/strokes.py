@@ -52,13 +52,12 @@ class Strokes:
         """Take note of a patch that is visible now."""
         kept = [each for each in self._line if not _covers(message, each.message)]
         self._line = deque([*kept, _Stroke(message, packed)])
-        patches = self.patches
-        count, size_bytes = len(patches), sum(len(each.packed) for each in patches)
-        for oldest in patches:
-            if count <= patches_max and size_bytes <= patch_bytes_max:
-                break
+        patches = deque(self.patches)
+        size_bytes = sum(len(each.packed) for each in patches)
+        while len(patches) > patches_max or size_bytes > patch_bytes_max:
+            oldest = patches.popleft()
             self._line.remove(oldest)
-            count, size_bytes = count - 1, size_bytes - len(oldest.packed)
+            size_bytes -= len(oldest.packed)
             self.is_incomplete = True
 
     def scan(self, message: messages.Scan, packed: Bytes, seen_at_s: float) -> None:

@@ -9,7 +9,9 @@ from tests.protocol.fake_daemon import outcome, route_table
 
 import byway
 from byway import frames, messages
-from byway.answer import answer_of, better_of
+from byway.answer import answer_of, better_of, rerouted_of
+from byway.ear import Heard
+from byway.event import event_of
 from byway.frames import Header, Received
 from byway.packed import pack
 
@@ -96,3 +98,7 @@ def test_one_is_not_taken_for_the_other() -> None:
         answer_of(received(*outcome(2.0), kind="better"))
     with pytest.raises(byway.BadReply):
         better_of(received(*outcome(2.0)))
+    with pytest.raises(byway.BadReply):
+        rerouted_of(received(*outcome(2.0)))
+    with pytest.raises(byway.BadReply, match="is no event"):
+        event_of(Heard("better.u", received(*outcome(2.0)), 0))

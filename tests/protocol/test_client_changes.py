@@ -35,6 +35,22 @@ def test_a_change_returns_the_revision_that_has_it(
     assert bytes(daemon.log[-1].packed)[:4] == bytes([0, 1, 2, 0])
 
 
+def test_boxes_scans_and_tracks(client: byway.Client, daemon: FakeDaemon) -> None:
+    assert client.put("movers", boxes={"crate": (1, 2, 0.5, 4, 2)}) == 2
+    assert client.scan("movers", (1, 2, 0.5), [0.0, 0.1], [3.0, 9.0], 5.0, 0.2, 0.1) == 3
+    scan = daemon.log[-1].message
+    assert (scan.origin, scan.range_m_max, scan.range_m_min, scan.age_s) == (
+        (1.0, 2.0, 0.5),
+        *(5.0, 0.2, 0.1),
+    )
+    fork = byway.Track(pose=(1, 2, 0), outline_m=KILN, velocity_mps=(1, 0), growth_mps=0.2)
+    assert client.track("movers", {"fork": fork}, age_s=0.3, expires_in_s=4.0) == 4
+    track = daemon.log[-1].message
+    assert (track.polygons, track.discs, track.age_s, track.expires_in_s) == (1, 0, 0.3, 4.0)
+    assert client.patch("movers", (0.0, 0.0), 0.1, CELLS, heading_rad=0.5) == 5
+    assert daemon.log[-1].message.heading_rad == 0.5
+
+
 def test_a_layer_is_claimed_before_its_first_change(
     client: byway.Client, daemon: FakeDaemon
 ) -> None:
@@ -343,6 +359,20 @@ def test_many_ids_are_dropped_in_several_changes(client: byway.Client, daemon: F
             byway.TooLarge,
         ),
         (lambda c: c.claim("stacks", lease_s=0.0), byway.BadValue),
+        (lambda c: c.claim("stacks", misspelt=1.0), byway.BadMessage),
+        (lambda c: c.put("stacks", boxes={"a": (0, 0, 0, 1)}), byway.BadGeometry),
+        (lambda c: c.put("stacks", polygons={"a": {"holes": []}}), byway.BadGeometry),
+        (lambda c: c.patch("a", (0, 0), 0.1, CELLS, float("nan")), byway.BadValue),
+        (lambda c: c.scan("a", (0, 0, 0), [0.0], [float("nan")], 5.0), byway.BadGeometry),
+        (lambda c: c.scan("a", (0, 0), [0.0], [1.0], 5.0), byway.BadMessage),
+        (lambda c: c.scan("a", (0, 0, 0), [0.0], [1.0], 0.0), byway.BadValue),
+        (lambda c: c.scan("a", (0, 0, 0), [0.0], [1.0], 5.0, 6.0), byway.BadValue),
+        (lambda c: c.scan("a", (0, 0, 0), [0.0], [1.0], 5.0, age_s=-1.0), byway.BadValue),
+        (lambda c: c.track("a", {"f": byway.Track(pose=(0, 0, 0))}), byway.BadGeometry),
+        (
+            lambda c: c.track("a", {"f": byway.Track(pose=(0, 0, 0), radius_m=1)}, age_s=-1.0),
+            byway.BadValue,
+        ),
     ],
 )
 def test_what_cannot_be_meant_is_refused_before_it_is_sent(
