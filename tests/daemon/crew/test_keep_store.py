@@ -1,4 +1,4 @@
-"""What was committed is recalled as it was, nothing else; files not our own are refused."""
+"""What was committed is recalled as it was; files that are not ours are refused."""
 
 from __future__ import annotations
 
