@@ -24,7 +24,7 @@ class ReplanOptions(TypedDict, total=False):
         leave_out: Layers of outlines that do not count, such as that of the unit itself.
         clearance_m: Instead of the vehicle's own.
         start_speed_mps, start_curvature_per_m: How the vehicle moves at the start; signed.
-        gap_wanted: 0 to 1; a route with this gap is answered at once.
+        gap_wanted: 0 to below 1; a route with this gap is answered at once.
         guard: The route of the answer is guarded as soon as it leaves; see `Client.guard` for
             this and the next two.
         replan_on_alert: Look for a new route at an alert.

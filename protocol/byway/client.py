@@ -88,8 +88,10 @@ class Client(ClientChanges):
 
     def close(self) -> None:
         """Close all sockets. What the daemon has not acknowledged is forgotten here."""
-        self._tender.end()
-        self._contact.close()
+        if not self._contact.is_closed:
+            self._contact.enter()
+            self._tender.end()
+            self._contact.close()
 
     def _run(self, steps: Steps[Result]) -> Result:
         with self._working:

@@ -48,7 +48,7 @@ class Contact:
         self.client_id: Final = self._token if client_id is None else client_id
         # -- owned by the one thread that uses the client ------------------------------------------
         self._owner: tuple[int, int] | None = None
-        self._is_closed = False
+        self.is_closed = False
         self._context: Context | None = None
         self._requests: Requests | None = None
         self._updates: Updates | None = None
@@ -70,7 +70,7 @@ class Contact:
 
     def enter(self) -> None:
         """Refuse with RuntimeError whoever must not use it: every call begins here."""
-        if self._is_closed:
+        if self.is_closed:
             raise RuntimeError("the client is closed")
         me = (os.getpid(), threading.get_ident())
         if self._owner is None:
@@ -83,10 +83,10 @@ class Contact:
 
     def close(self) -> None:
         """Close all sockets."""
-        if self._is_closed:
+        if self.is_closed:
             return
         self.enter()
-        self._is_closed = True
+        self.is_closed = True
         for conversation in (self._requests, self._updates):
             if conversation is not None:
                 conversation.close()
@@ -355,7 +355,7 @@ class Contact:
 
     def close_ear(self, ear: Ear) -> None:
         """Listen no more; nothing to do if the client was closed before."""
-        if not self._is_closed:
+        if not self.is_closed:
             self._ears.remove(ear)
             ear.link.close()
 

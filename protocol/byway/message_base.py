@@ -38,7 +38,7 @@ Age: TypeAlias = Annotated[
 Range: TypeAlias = Annotated[
     float, Field(strict=True, allow_inf_nan=False, gt=0.0, le=limits.range_m_max)
 ]
-Ratio: TypeAlias = Annotated[float, Field(strict=True, allow_inf_nan=False, ge=0.0, le=1.0)]
+Ratio: TypeAlias = Annotated[float, Field(strict=True, allow_inf_nan=False, ge=0.0, lt=1.0)]
 Point: TypeAlias = tuple[Metres, Metres]
 Pose: TypeAlias = tuple[Metres, Metres, Heading]
 Box: TypeAlias = tuple[Metres, Metres, Metres, Metres]

@@ -77,7 +77,7 @@ def test_the_request_says_what_the_caller_said(client: byway.Client, daemon: Fak
         ({"start": (0.0, math.inf, 0.0)}, byway.BadValue, "start.1"),
         ({"goal": None}, byway.BadValue, "goal"),
         ({"vehicle": "no such name"}, byway.BadValue, "vehicle"),
-        ({"gap_wanted": 2.0}, byway.BadValue, "gap_wanted"),
+        ({"gap_wanted": 1.0}, byway.BadValue, "gap_wanted"),
     ],
 )
 def test_what_cannot_be_meant_is_refused_before_it_is_sent(

@@ -279,7 +279,7 @@ def decode_replan(**changes: Any) -> messages.Message:
         ({"vehicle": ""}, "vehicle", "string_pattern_mismatch"),
         ({"seed": 2**63}, "seed", "less_than_equal"),
         ({"seed": -1}, "seed", "greater_than_equal"),
-        ({"gap_wanted": 1.5}, "gap_wanted", "less_than_equal"),
+        ({"gap_wanted": 1.0}, "gap_wanted", "less_than"),
         ({"clearance_m": -0.1}, "clearance_m", "greater_than_equal"),
         ({"leave_out": ["a"] * 33}, "leave_out", "too_long"),
         ({"start": [0.0, 0.0, 0.0, 0.0]}, "start", "too_long"),

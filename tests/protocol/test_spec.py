@@ -6,6 +6,7 @@ from pathlib import Path
 
 import msgpack
 import pytest
+from pydantic import BaseModel
 from tests.protocol.fake_daemon import outcome
 
 from byway import errors, frames, limits, messages
@@ -75,14 +76,26 @@ def test_outcomes_in_examples_can_be_read() -> None:
         frames.decode_outcome(ast.literal_eval(example)["outcome"], b"")
 
 
-@pytest.mark.parametrize("part", ["cells", "layers"])
-def test_parts_of_messages_are_told(part: str) -> None:
-    names = {
-        "cells": messages.CellsIs.model_fields,
-        "layers": messages.LayerIs.model_fields,
-    }[part]
-    (example,) = blocks(SECTIONS["site_is"], "text")
-    assert all(f'"{name}"' in example for name in names)
+@pytest.mark.parametrize(
+    ("kind", "part"),
+    [
+        ("site_is", messages.CellsIs),
+        ("site_is", messages.LayerIs),
+        ("site_is", messages.TrackIs),
+        ("site_is", messages.GuardedIs),
+        ("guard_is", messages.BlockedIs),
+        ("alert", messages.BlockedIs),
+    ],
+)
+def test_parts_of_messages_are_told(kind: str, part: type[BaseModel]) -> None:
+    (example,) = blocks(SECTIONS[kind], "text")
+    assert all(f'"{name}"' in example for name in part.model_fields)
+
+
+def test_parts_of_the_outcome_are_told() -> None:
+    (example,) = blocks(SPEC, "text outcome")
+    for part in (messages.BlockageIs, messages.LegIs, messages.RemedyIs, messages.MovableIs):
+        assert all(f'"{name}"' in example for name in part.model_fields)
 
 
 def test_parts_of_the_health_record_are_told() -> None:
