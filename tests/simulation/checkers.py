@@ -78,6 +78,8 @@ class Checkers:
         self.revision = 0
         #: Highest revision in an acknowledgement that has reached its source.
         self.known_revision = 0
+        #: What was said of each layer last: "stale" or "fresh".
+        self.freshness: dict[str, str] = {}
         self.streams: dict[str, int] = defaultdict(int)
         #: (outcome body, revision): routes that a worker found or checked.
         self.verified: set[tuple[bytes, int]] = set()
@@ -243,6 +245,9 @@ class Checkers:
         message = effect.message
         if self.guards.publish(effect, now_ns):
             return
+        if isinstance(message, messages.LayerState):
+            self._layer_state(effect.topic, message)
+            return
         if isinstance(message, messages.HealthIs):
             self._rises(message.revision)
             return
@@ -266,6 +271,13 @@ class Checkers:
                 *(request.id, best, cost),
             )
         request.best = (message.revision, cost)
+
+    def _layer_state(self, topic: str, message: messages.LayerState) -> None:
+        promise(topic == f"layers.{message.layer}", "what becomes of a layer goes to its topic")
+        if message.state != "forfeited":
+            last = self.freshness.get(message.layer, "fresh")
+            promise(message.state != last, "a layer becomes stale or fresh once", message)
+            self.freshness[message.layer] = message.state
 
     # -- snapshots ----------------------------------------------------------------------------
 
