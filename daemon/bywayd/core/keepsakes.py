@@ -15,10 +15,15 @@ from bywayd.core.kept import Keepsake, Recollection
 from bywayd.core.layers import Layer, No
 
 
-def keepsake_of(entry: Entry, change: Change) -> Keepsake:
+def keepsake_of(entry: Entry, change: Change, layer: Layer) -> Keepsake:
     """Return what is to be kept of an entry that has become visible."""
     arrived = None if entry.source is None else entry.arrived
-    return Keepsake(change, entry.expires_at, {}, arrived, entry.size_bytes)
+    period = layer.expected_period
+    terms = {
+        "expected_period_s": None if period is None else period.s,
+        "when_stale": layer.when_stale,
+    }
+    return Keepsake(change, entry.expires_at, terms, arrived, entry.size_bytes)
 
 
 def recalled_entry(

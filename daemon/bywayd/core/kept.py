@@ -9,7 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING, TypeAlias
+from typing import TYPE_CHECKING, Any, TypeAlias
 
 from bywayd.core.instants import Duration, Instant
 
@@ -31,7 +31,7 @@ class Keepsake:
     change: Change
     #: When its obstacles expire.
     expires_at: Instant | None = None
-    #: What else is known of the layer. Comes back when it is recalled.
+    #: What is expected of the layer: comes back when it is recalled.
     terms: Mapping[str, object] = field(default_factory=dict)
     #: When the change arrived, for the record of how long it took.
     arrived: Instant | None = None
@@ -47,7 +47,8 @@ class Recollection:
     """
 
     change: Change
-    terms: Mapping[str, object] = field(default_factory=dict)
+    #: As they were kept, by name: `expected_period_s` and `when_stale`.
+    terms: Mapping[str, Any] = field(default_factory=dict)
     #: Of the one obstacle.
     ids: tuple[str, ...] = ()
     expires_in: Duration | None = None

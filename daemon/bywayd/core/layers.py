@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
+from typing import Any
 
 from byway.messages import Claim, ReplaceLayer, WhenStale
 from bywayd.core.alarms import Alarms
@@ -128,7 +129,7 @@ class Layers:
             self._alarms.set(name, now + layer.lease)
         return layer
 
-    def recall(self, name: str, flags: LayerFlags) -> Layer:
+    def recall(self, name: str, flags: LayerFlags, terms: Mapping[str, Any]) -> Layer:
         """
         Return the layer that the clerk remembers, as the settings have it if they name it.
 
@@ -138,6 +139,9 @@ class Layers:
         layer = self._layers.get(name)
         if layer is None:
             layer = self._layers[name] = Layer(name, flags)
+            period_s = terms.get("expected_period_s")
+            layer.expected_period = None if period_s is None else Duration.of_s(period_s)
+            layer.when_stale = terms.get("when_stale", layer.when_stale)
             self._count_max = max(self._count_max, len(self._layers))
         return layer
 

@@ -229,7 +229,9 @@ class Ledger:
                 self._settle_change(entry, entry.change, no, now)
                 index += 1
                 if no is None and entry.change.settings.durable and not entry.is_recalled:
-                    position = self.keepline.append(keepsake_of(entry, entry.change))
+                    position = self.keepline.append(
+                        keepsake_of(entry, entry.change, self._layer(entry.change.layer))
+                    )
                     if entry.source is not None:
                         positions[entry.source] = position
             if entry.source is not None:
@@ -266,7 +268,7 @@ class Ledger:
             layer.is_visible = True
             if change.what != "claim" and entry.source is not None:
                 self.freshness.changed(layer, now)
-            else:
+            elif not entry.is_recalled:
                 layer.changed_at = now
 
     def kept(self) -> None:
@@ -308,7 +310,10 @@ class Ledger:
         """Take in what the clerk has kept since the last life of the daemon."""
         for recollection in found:
             change = recollection.change
-            layer = self.layers.recall(change.layer, change.settings)
+            layer = self.layers.recall(change.layer, change.settings, recollection.terms)
+            if change.what == "claim":
+                # As always: if its source does not come back in time, that is to be known.
+                self.freshness.claimed(layer, now)
             if layer.flags.durable:
                 self._append(recalled_entry(recollection, layer, self._expiries, now))
                 self._recalled += 1

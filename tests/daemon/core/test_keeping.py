@@ -452,6 +452,25 @@ def test_nothing_is_taken_in_before_the_recall_and_no_replan_before_it_is_visibl
     assert (layer.owner, layer.flags) == (None, DURABLE)
 
 
+def test_what_is_expected_of_a_layer_outlasts_the_daemon() -> None:
+    desk = durable()
+    desk.change(messages.Claim(layer="stacks", expected_period_s=0.1, when_stale="refuse"))
+    desk.publish(batch_of(desk))
+    (keepsake,) = desk.one(kept.KeepChanges).keepsakes
+    claim = Recollection(keepsake.change, keepsake.terms)
+    successor = opened(claim, recollection("a"))
+    successor.ask("a")
+    assert successor.one(effects.StartJob)
+    successor.tick(101)
+    successor.ask("b")
+    assert successor.error("b") == "stale_layer"
+    successor.say(messages.Health())
+    record = successor.answer("q")
+    assert isinstance(record, messages.HealthIs)
+    layer = record.layers["stacks"]
+    assert (layer.stale, layer.expected_period_s, layer.age_s) == (True, 0.1, None)
+
+
 def test_a_large_site_is_recalled_no_faster_than_the_surveyor_takes_it() -> None:
     desk = started(batch_changes_max=2)
     desk.hand_in(kept.ClerkReady(1, Stock()))
