@@ -31,6 +31,7 @@ from byway.client import Vehicle, vehicles_of
 from byway.contact import Contact
 from byway.conversation import Clock, Patience
 from byway.event import TOPICS, Event, event_of
+from byway.keys import KeysFrom
 from byway.site_view import SiteView, site_view
 from byway.stream import Stream
 
@@ -204,10 +205,11 @@ class AsyncClient:
         reconnect_s: float = 1.0,
         repeat_s: float = 1.0,
         client_id: str | None = None,
+        keys: KeysFrom | None = None,
         clock: Clock = time.monotonic,
     ) -> None:
         patience = Patience(timeout_s, reconnect_s, repeat_s)
-        self._contact: Final = Contact(endpoint, patience, client_id, clock)
+        self._contact: Final = Contact(endpoint, patience, client_id, clock, keys)
         self._drive: Final = LoopDrive(self._contact)
         self._tender: asyncio.Task[None] | None = None
 

@@ -18,6 +18,7 @@ from byway.client_changes import ClientChanges
 from byway.contact import Contact
 from byway.conversation import Clock, Patience
 from byway.event import TOPICS, Event, event_of
+from byway.keys import KeysFrom
 from byway.layer_source import LayerSource, Tender
 from byway.link import Result, Steps, run
 from byway.site_view import SiteView, site_view
@@ -56,7 +57,12 @@ class Client(ClientChanges):
         reconnect_s: How long a call waits for a connection before it raises DaemonLost.
         repeat_s: After what silence a message is sent again; doubles each time.
         client_id: A name for logs, and the unit of replans that name none; drawn if left out.
+        keys: The file that `byway keys` made for this client, for a daemon that uses keys. Then
+            nobody else is taken for that daemon, and nobody in between can read or change a word.
         clock: Seconds, for tests.
+
+    Raises:
+        BadValue: The key file is none, or others can read it.
     """
 
     def __init__(
@@ -67,10 +73,11 @@ class Client(ClientChanges):
         reconnect_s: float = 1.0,
         repeat_s: float = 1.0,
         client_id: str | None = None,
+        keys: KeysFrom | None = None,
         clock: Clock = time.monotonic,
     ) -> None:
         patience = Patience(timeout_s, reconnect_s, repeat_s)
-        self._contact = Contact(endpoint, patience, client_id, clock)
+        self._contact = Contact(endpoint, patience, client_id, clock, keys)
         #: Held by whoever lets the sockets work: a call, or the tender between calls.
         self._working: Final = threading.RLock()
         self._tender: Final = Tender(self._contact, self._working)

@@ -22,10 +22,19 @@ import zmq
 
 from byway import frames, limits, messages, obstacles
 from byway.changing import Made
-from byway.conversation import Clock, Line, Patience, Question, Requests, Updates
+from byway.conversation import (
+    Clock,
+    Line,
+    Patience,
+    Question,
+    Requests,
+    Updates,
+    turned_away,
+)
 from byway.ear import Ear, Heard
 from byway.endpoints import sibling
 from byway.errors import BadReply, BadValue, BywayError, DaemonLost, NewEpoch, TimedOut, from_code
+from byway.keys import KeysFrom, client_keys
 from byway.link import Context, Link, Steps, Waiting
 from byway.packed import Bytes
 from byway.source import Sent, Source
@@ -37,12 +46,18 @@ class Contact:
     """The contact of one client with one daemon."""
 
     def __init__(
-        self, endpoint: str, patience: Patience, client_id: str | None, clock: Clock
+        self,
+        endpoint: str,
+        patience: Patience,
+        client_id: str | None,
+        clock: Clock,
+        keys: KeysFrom | None = None,
     ) -> None:
         # -- fixed ---------------------------------------------------------------------------------
         self.endpoint: Final = endpoint
         self.patience: Final = patience
         self.clock: Final = clock
+        self._keys: Final = None if keys is None else client_keys(keys)
         #: In every request id: ids of two clients must never be the same.
         self._token: Final = secrets.token_hex(8)
         self.client_id: Final = self._token if client_id is None else client_id
@@ -380,8 +395,10 @@ class Contact:
             else:
                 down_since_s = now_s if down_since_s is None else down_since_s
                 wake_s = down_since_s + self.patience.reconnect_s
+                if ear.link.is_refused:
+                    raise turned_away(ear.link)
                 if now_s >= wake_s:
-                    raise self._late("events", is_connected=False)
+                    raise self._late("events", is_connected=False, trouble=ear.link.trouble)
             yield Waiting([(ear.link, False)], min(until_s, wake_s))
 
     def listen_to(self, unit: str) -> Steps[None]:
@@ -391,6 +408,8 @@ class Contact:
         if self._ear is None:
             self._ear = yield from self.new_ear([])
         ear = self._ear
+        if ear.link.is_refused:
+            ear.link.reopen()  # perhaps the key is known by now
         ear.link.subscribe(topic)
         until_s = self.clock() + self.patience.listen_s
         while topic not in ear.confirmed and self.clock() < until_s:
@@ -422,7 +441,7 @@ class Contact:
     def _link(self, endpoint: str, topics: Sequence[str] | None = None) -> Link:
         if self._context is None:
             self._context = zmq.Context()
-        link = Link(self._context, endpoint, topics)
+        link = Link(self._context, endpoint, topics, self._keys)
         link.before_close = lambda: self.before_close()
         return link
 
@@ -431,11 +450,12 @@ class Contact:
         offered = welcome.updates_endpoints if socket == "updates" else welcome.events_endpoints
         return sibling(self.endpoint, socket, offered)
 
-    def _late(self, what: str, *, is_connected: bool) -> BywayError:
+    def _late(self, what: str, *, is_connected: bool, trouble: str = "") -> BywayError:
         facts = {"endpoint": self.endpoint}
         if is_connected:
             return TimedOut(f"{self.endpoint} has not replied to {what} in time", facts)
-        return DaemonLost(f"no connection to {self.endpoint} for {what}", facts)
+        why = f": it {trouble}" if trouble else ""
+        return DaemonLost(f"no connection to {self.endpoint} for {what}{why}", facts)
 
 
 @functools.cache

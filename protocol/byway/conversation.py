@@ -13,13 +13,15 @@ from dataclasses import dataclass
 from typing import Final
 
 from byway import frames, messages
-from byway.errors import BadReply, DaemonLost, SenderFault, from_code
+from byway.errors import BadReply, BywayError, DaemonLost, Forbidden, SenderFault, from_code
 from byway.link import Link
 from byway.packed import Bytes
 from byway.source import Source
 
 #: How long a source that was sent away waits before it tries again by itself.
 _HOLD_S: Final = 0.1
+#: How long a client that was not let in waits before it knocks again.
+_KNOCK_AGAIN_S: Final = 0.5
 
 #: What a client reads from its clock: seconds, from anywhere.
 Clock = Callable[[], float]
@@ -52,6 +54,8 @@ class Line(ABC):
         self._clock: Final = clock
         #: Since when something could not be sent.
         self._down_since_s: float | None = None
+        #: Since when the daemon does not let us in.
+        self._refused_at_s: float | None = None
         #: How many messages have come.
         self.came = 0
 
@@ -83,10 +87,14 @@ class Line(ABC):
         return False
 
     def check(self, since_s: float) -> None:
-        """Raise DaemonLost if somebody has waited for a connection since then, for too long."""
+        """Raise DaemonLost or Forbidden if somebody has waited for a connection since then."""
+        if self._refused_at_s is not None and self._refused_at_s >= since_s:
+            raise turned_away(self.link)
         if self._clock() >= self._given_up_at_s(since_s):
+            why = f": it {self.link.trouble}" if self.link.trouble else ""
             raise DaemonLost(
-                f"no connection to {self.link.endpoint} within {self._patience.reconnect_s:g} s",
+                f"no connection to {self.link.endpoint} within "
+                f"{self._patience.reconnect_s:g} s{why}",
                 {"endpoint": self.link.endpoint},
             )
 
@@ -103,6 +111,8 @@ class Line(ABC):
             since_s: Since when somebody waits, see `check`.
         """
         at_s = min(self._wake_s(), self._given_up_at_s(since_s))
+        if self._refused_at_s is not None:
+            at_s = min(at_s, self._refused_at_s + _KNOCK_AGAIN_S)
         return (self.link, self._wants_to_send()), at_s
 
     def take_in(self) -> bool:
@@ -123,10 +133,17 @@ class Line(ABC):
     def _look(self) -> bool:
         """Take note of the connection; tell whether a fresh one was begun."""
         self.link.look()
-        if self.link.is_lost:
-            self.link.reopen()
-            return True
-        return False
+        if self.link.is_refused:
+            now_s = self._clock()
+            if self._refused_at_s is None:
+                self._refused_at_s = now_s
+            if now_s < self._refused_at_s + _KNOCK_AGAIN_S:
+                return False
+        elif not self.link.is_lost:
+            return False
+        self._refused_at_s = None
+        self.link.reopen()
+        return True
 
     def _note_sent(self, now_s: float, *, is_sent: bool) -> bool:
         """Take note that something could be sent, or could not."""
@@ -155,6 +172,12 @@ class Line(ABC):
     @abstractmethod
     def _take_in(self, received: frames.Received) -> None:
         """Take in one message."""
+
+
+def turned_away(link: Link) -> BywayError:
+    """Return the error for a link that the daemon has turned away."""
+    text = f"the daemon at {link.endpoint} {link.trouble}"
+    return Forbidden(text, {"endpoint": link.endpoint})
 
 
 @dataclass(slots=True, eq=False)
@@ -313,6 +336,11 @@ class Updates(Line):
                 source.acknowledged(message, now_s)
             case messages.Refused() as message if self._is_ours(message.source, epoch):
                 source.refused(message)
+            case messages.ErrorMessage(code=Forbidden.default_code) as message:
+                # Of no number that the daemon counts: it does not know this source at all.
+                error = from_code(message.code, message.text, message.facts)
+                if not source.turned_away(received.header.id, error):
+                    raise error
             case messages.ErrorMessage() as message:
                 source.send_again()
                 self._hold_until_s = now_s + (message.retry_after_s or _HOLD_S)

@@ -19,6 +19,7 @@ import zmq
 
 from byway import limits
 from byway.errors import BadValue
+from byway.keys import Keys
 from byway.packed import Bytes
 
 Context: TypeAlias = "zmq.Context[zmq.Socket[bytes]]"
@@ -41,6 +42,13 @@ DEALER_OPTIONS: Final[Mapping[zmq.SocketOption, int]] = {zmq.IMMEDIATE: 1}
 SUB_OPTIONS: Final[Mapping[zmq.SocketOption, int]] = {zmq.SNDHWM: 0}
 
 _EVENT: Final = struct.Struct("=HI")
+_WATCHED: Final = (
+    zmq.EVENT_HANDSHAKE_SUCCEEDED
+    | zmq.EVENT_HANDSHAKE_FAILED_NO_DETAIL
+    | zmq.EVENT_HANDSHAKE_FAILED_PROTOCOL
+    | zmq.EVENT_HANDSHAKE_FAILED_AUTH
+    | zmq.EVENT_DISCONNECTED
+)
 
 Result = TypeVar("Result")
 
@@ -53,20 +61,30 @@ class Link:
         context: Of the client.
         endpoint: As ZeroMQ writes it.
         topics: Prefixes to subscribe to; None for a DEALER.
+        keys: Of the client, with that of the daemon.
 
     Raises:
         BadValue: The endpoint is none.
     """
 
     def __init__(
-        self, context: Context, endpoint: str, topics: Sequence[str] | None = None
+        self,
+        context: Context,
+        endpoint: str,
+        topics: Sequence[str] | None = None,
+        keys: Keys | None = None,
     ) -> None:
         self._context = context
+        self._keys = keys
         self.endpoint: Final = endpoint
         self._topics = None if topics is None else list(topics)
         self.is_connected = False
         #: The connection that this socket had is gone. Only a fresh socket helps.
         self.is_lost = False
+        #: The daemon has turned this socket away. It does not try again; a fresh one may be let in.
+        self.is_refused = False
+        #: Why there is no connection, if that is known: a sentence without its subject.
+        self.trouble = ""
         self.is_closed = False
         #: Called before the socket is closed: whoever watches its descriptors must let go of them.
         self.before_close: Callable[[], object] = _nothing
@@ -78,12 +96,14 @@ class Link:
         options = {**OPTIONS_OF_ALL, **(SUB_OPTIONS if is_sub else DEALER_OPTIONS)}
         for option, value in options.items():
             self._socket.setsockopt(option, value)
+        if self._keys is not None:
+            self._socket.curve_publickey = self._keys.public.encode()
+            self._socket.curve_secretkey = self._keys.secret.encode()
+            self._socket.curve_serverkey = self._keys.daemon.encode()
         for topic in self._topics or ():
             self._socket.subscribe(topic)
-        self._monitor: Socket = self._socket.get_monitor_socket(
-            zmq.EVENT_HANDSHAKE_SUCCEEDED | zmq.EVENT_DISCONNECTED
-        )
-        self.is_connected = self.is_lost = False
+        self._monitor: Socket = self._socket.get_monitor_socket(_WATCHED)
+        self.is_connected = self.is_lost = self.is_refused = False
         try:
             self._socket.connect(self.endpoint)
         except zmq.ZMQError as fault:
@@ -147,9 +167,22 @@ class Link:
             # Frames: event and value, then the endpoint. (pyzmq's own reader loads asyncio.)
             event, _ = _EVENT.unpack(self._monitor.recv_multipart(zmq.DONTWAIT)[0])
             if event == zmq.EVENT_HANDSHAKE_SUCCEEDED:
-                self.is_connected = True
+                self.is_connected, self.trouble = True, ""
+            elif event != zmq.EVENT_DISCONNECTED:
+                self._note_trouble(event)
             elif self.is_connected:
                 self.is_connected, self.is_lost = False, True
+
+    def _note_trouble(self, event: int) -> None:
+        has_keys = self._keys is not None
+        # After these two ZeroMQ does not connect again (measured with libzmq 4.3.5).
+        self.is_refused = self.is_refused or event != zmq.EVENT_HANDSHAKE_FAILED_NO_DETAIL
+        if event == zmq.EVENT_HANDSHAKE_FAILED_AUTH:
+            self.trouble = "does not let this key in"
+        elif event == zmq.EVENT_HANDSHAKE_FAILED_PROTOCOL:
+            self.trouble = "uses no keys" if has_keys else "lets nobody in without keys"
+        elif has_keys and not self.is_refused:
+            self.trouble = "breaks the handshake off; is its key the one in the key file?"
 
 
 def _nothing() -> None:

@@ -204,6 +204,30 @@ class Source:
                 if not sent.is_awaited:
                     self.losses.append((sent.message.layer, sent.error))
 
+    def turned_away(self, id: str, error: BywayError) -> bool:
+        """
+        Take in that a change was not even counted, because of who sends it.
+
+        Args:
+            id: That of its header.
+
+        Returns:
+            Whether it was one that is undecided.
+        """
+        for sent in self.line:
+            if str(sent.number) == id and not sent.is_decided:
+                sent.is_decided = True
+                sent.error = error
+                if not sent.is_awaited:
+                    self.losses.append((sent.message.layer, error))
+                break
+        else:
+            return False
+        while self.line and self.line[0].is_decided and self.line[0].error is not None:
+            self.line.popleft()
+            self._sent_count = max(0, self._sent_count - 1)
+        return True
+
     def resend(self, message: messages.Resend, epoch: str, now_s: float) -> None:
         """Take in from which number on the daemon wants to hear everything."""
         if epoch != self.epoch:
