@@ -9,17 +9,29 @@ used without its global state and loads only when a drawing is made.
 import itertools
 from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
-from typing import Any, Final
+from typing import Any, Final, Protocol
 
 import numpy as np
 import numpy.typing as npt
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
-from matplotlib.patches import Circle, Polygon
+from matplotlib.patches import Circle, PathPatch, Polygon
+from matplotlib.path import Path as Outline
 
 from bywayd.outlines import Points, placed
 
 Box = tuple[float, float, float, float]
+
+
+class Block(Protocol):
+    """Where a guarded route is blocked."""
+
+    @property
+    def x_m(self) -> float: ...
+
+    @property
+    def y_m(self) -> float: ...
+
 
 PAPER: Final = "#f6f1e4"
 INK: Final = "#2b2a28"
@@ -31,9 +43,13 @@ PRINTS: Final[dict[str, tuple[str, str, str]]] = {
     "stack": ("#e3cd97", "#6b5a2c", "xx"),
     "pack": ("#c9d3b4", "#4d5a2c", "++"),
     "other": ("#cdbfa8", INK, "\\\\\\\\"),
+    "outline": ("none", INK, ""),
 }
 #: Inks for routes and units, told apart in print and by most colour-blind readers.
 INKS: Final = ("#8c2f39", "#1f5673", "#5b7b3a", "#7a4b8f", "#a8642a")
+
+#: What is in the way, and what moves.
+ALARM: Final = "#d2691e"
 
 _PIXELS_PER_INCH: Final = 110
 _WIDTH_INCHES: Final = 11.0
@@ -109,17 +125,22 @@ class Plan:
         self._axes.axis(limits)  # imshow would zoom in on the cells
 
     def polygons(
-        self, polygons: Mapping[str, npt.ArrayLike], kind: str = "other", *, named: bool = False
+        self,
+        polygons: Mapping[str, npt.ArrayLike],
+        kind: str = "other",
+        *,
+        named: bool = False,
+        holes: Mapping[str, Sequence[npt.ArrayLike]] | None = None,
     ) -> None:
         """Draw masses of one of the kinds in `PRINTS`, with their ids when `named`."""
         face, edge, hatch = PRINTS[kind]
         for name, corners_m in polygons.items():
             ring = np.asarray(corners_m, np.float64)
-            self._axes.add_patch(
-                Polygon(ring, facecolor=face, edgecolor=edge, hatch=hatch, linewidth=0.9, zorder=3)
-            )
+            style = {"facecolor": face, "edgecolor": edge, "hatch": hatch, "linewidth": 0.9}
+            path = _path_of([ring, *(holes or {}).get(name, ())])
+            self._axes.add_patch(PathPatch(path, zorder=3, **style))
             if named:
-                self._label(name, _inside(ring))
+                self._label(name, _inside(path, ring))
 
     def discs(
         self,
@@ -135,6 +156,75 @@ class Plan:
             self._axes.add_patch(Circle((x_m, y_m), radius_m, zorder=3, **style))
             if named:
                 self._label(name, (x_m, y_m))
+
+    def sweep(self, ring_m: npt.ArrayLike) -> None:
+        """Draw ground that something may cover in the next seconds."""
+        ring = np.asarray(ring_m, np.float64)
+        self._axes.add_patch(Polygon(ring, facecolor=ALARM, alpha=0.13, linewidth=0.0, zorder=4))
+        self._axes.add_patch(
+            Polygon(ring, fill=False, edgecolor=ALARM, linewidth=0.8, linestyle=":", zorder=4)
+        )
+
+    def mover(
+        self,
+        name: str,
+        outline_m: npt.ArrayLike,
+        pose: Sequence[float],
+        velocity_mps: Sequence[float],
+    ) -> None:
+        """Draw something that moves, with an arrow to where it is in a second."""
+        ring = placed(outline_m, pose)
+        self._axes.add_patch(
+            Polygon(ring, facecolor=ALARM, edgecolor=INK, linewidth=1.0, alpha=0.9, zorder=7)
+        )
+        x_m, y_m = float(pose[0]), float(pose[1])
+        vx, vy = (float(value) for value in velocity_mps[:2])
+        tip = (x_m + vx, y_m + vy)
+        if np.hypot(vx, vy) > 0.05:
+            style = {"arrowstyle": "-|>", "color": INK, "mutation_scale": 9}
+            self._axes.annotate("", xy=tip, xytext=(x_m, y_m), arrowprops=style, zorder=8)
+        top = float(ring[:, 1].max())
+        self._label(name, (x_m, top + 0.02 * float(np.ptp(self._axes.get_ylim()))))
+
+    def guarded(
+        self,
+        unit: str,
+        poses: npt.ArrayLike,
+        progress_m: float,
+        blocked: "Block | None",
+        ink: str,
+    ) -> None:
+        """Draw a guarded route: what is driven thin, what is ahead strong, where it is blocked."""
+        points = np.asarray(poses, np.float64)[:, :2]
+        along = np.concatenate([[0.0], np.hypot(*np.diff(points, axis=0).T).cumsum()])
+        ahead = int(np.searchsorted(along, progress_m))
+        self.path(points[: ahead + 1], ink, width=0.7)
+        self.path(points[max(ahead - 1, 0) :], ink, f"guarded route of {unit}", width=2.0)
+        self._arrows(points[max(ahead - 1, 0) :], ink)
+        at = points[min(ahead, len(points) - 1)]
+        self._axes.plot(*at, marker="o", markersize=6, color=ink, zorder=9)
+        if blocked is not None:
+            self._axes.plot(
+                blocked.x_m, blocked.y_m, marker="X", markersize=13, color=ALARM,
+                markeredgecolor=INK, zorder=10,
+            )  # fmt: skip
+            self._legend["blocked"] = {"color": ALARM, "marker": "X", "linestyle": "none"}
+
+    def way(self, points_m: npt.ArrayLike, label: str) -> None:
+        """Draw a way that would be open if something moved."""
+        points = np.asarray(points_m, np.float64)
+        style: dict[str, Any] = {"color": ALARM, "linewidth": 1.8, "linestyle": (0, (1, 1.5))}
+        self._axes.plot(points[:, 0], points[:, 1], zorder=8, **style)
+        self._legend[label] = style
+
+    def mark(self, place_m: Sequence[float], text: str) -> None:
+        """Point at something that would have to move."""
+        self._axes.plot(
+            place_m[0], place_m[1], marker="X", markersize=12, color=ALARM, markeredgecolor=INK,
+            zorder=10,
+        )  # fmt: skip
+        offset = 0.03 * float(np.ptp(self._axes.get_ylim()))
+        self._label(text, (place_m[0], place_m[1] - offset))
 
     def path(
         self, points_m: npt.ArrayLike, ink: str, label: str = "", *, width: float = 1.1
@@ -252,20 +342,38 @@ class Plan:
             )  # fmt: skip
 
 
-def _inside(ring: Points) -> tuple[float, float]:
-    """Return a place well inside a polygon, for its label: the best of a grid of 15 x 15."""
+def _path_of(rings: Sequence[npt.ArrayLike]) -> Outline:
+    """Return rings as one outline; those inside others are holes, whichever way they turn."""
+    parts = [np.asarray(ring, np.float64) for ring in rings]
+    # Holes turn the other way round from the outline, or they would be filled.
+    turned = [ring if _is_left(ring) == (i == 0) else ring[::-1] for i, ring in enumerate(parts)]
+    closed = [Outline(np.vstack([ring, ring[:1]]), closed=True) for ring in turned]
+    return Outline.make_compound_path(*closed)
+
+
+def _is_left(ring: Points) -> bool:
+    x, y = ring.T
+    return bool((x * np.roll(y, -1) - y * np.roll(x, -1)).sum() > 0.0)
+
+
+def _inside(path: Outline, ring: Points) -> tuple[float, float]:
+    """Return a place well inside a mass, for its label: the best of a grid of 15 x 15."""
     low, high = ring.min(axis=0), ring.max(axis=0)
     shares = (np.arange(15) + 0.5) / 15
     grid = np.stack(np.meshgrid(*(low + (high - low) * shares[:, None]).T), axis=-1).reshape(-1, 2)
-    inside = grid[Polygon(ring).get_path().contains_points(grid)]
-    if len(inside) == 0:
-        inside = ring.mean(axis=0)[None]
-    ends = np.roll(ring, -1, axis=0)
-    along = ends - ring
-    to_place = inside[:, None] - ring
-    share = np.clip((to_place * along).sum(-1) / np.maximum((along**2).sum(-1), 1e-12), 0, 1)
-    off_m = np.hypot(*np.moveaxis(to_place - share[..., None] * along, -1, 0)).min(axis=1)
-    # Long shapes have many such places; the one nearest to the middle reads best.
-    best = inside[off_m >= 0.98 * off_m.max()]
-    x_m, y_m = best[np.hypot(*(best - ring.mean(axis=0)).T).argmin()].tolist()
-    return x_m, y_m
+    edges = np.vstack([p.vertices for p in [path]])
+    inside = grid[_contains(path, grid)]
+    if not len(inside):  # too thin for the grid
+        middle = ring.mean(axis=0)
+        return float(middle[0]), float(middle[1])
+    apart = np.hypot(inside[:, None, 0] - edges[:, 0], inside[:, None, 1] - edges[:, 1])
+    best = inside[apart.min(axis=1).argmax()]
+    return float(best[0]), float(best[1])
+
+
+def _contains(path: Outline, points: Points) -> npt.NDArray[np.bool_]:
+    """Which points lie in an outline and in none of its holes."""
+    rings = path.to_polygons(closed_only=True)
+    inside = [Outline(ring).contains_points(points) for ring in rings]
+    held: npt.NDArray[np.bool_] = np.logical_xor.reduce(inside)
+    return held

@@ -47,7 +47,7 @@ class Movable:
 
     layer: str
     obstacle: str
-    x_m: float  # somewhere in it
+    x_m: float  # where the way leads through it
     y_m: float
 
 
@@ -128,7 +128,9 @@ def remedy(
     rows, columns = np.divmod(way, shape[1])
     middles = np.column_stack([corner[0] + (columns + 0.5) * side, corner[1] + (rows + 0.5) * side])
     corners = np.vstack([start, _corners(middles), goal])
-    named = tuple(_named(snapshot, solids, one, heaps, corner, side, shape) for one in gone)
+    named = tuple(
+        _named(snapshot, solids, one, _crossing(way, middles, firsts, pairs, one)) for one in gone
+    )
     return Remedy(named, corners, radius_m)
 
 
@@ -383,42 +385,34 @@ def _corners(middles: Floats) -> Floats:
     return kept
 
 
-def _named(
-    snapshot: Snapshot,
-    solids: Solids,
-    one: int,
-    heaps: Wholes,
-    corner: Point,
-    side: float,
-    shape: tuple[int, int],
-) -> Movable:
+def _crossing(way: Wholes, middles: Floats, firsts: Wholes, pairs: Wholes, one: int) -> Point:
+    """Half way along the stretch on which the way leads through an obstacle."""
+    on_it = [i for i, at in enumerate(way) if one in pairs[firsts[at] : firsts[at + 1]]]
+    x, y = middles[on_it[len(on_it) // 2]]
+    return float(x), float(y)
+
+
+def _named(snapshot: Snapshot, solids: Solids, one: int, place: Point) -> Movable:
     polygons, discs = len(solids.boxes_m), len(solids.discs_m)
     if one < polygons:
-        x0, y0, x1, y1 = (float(value) for value in solids.boxes_m[one])
-        return Movable(*snapshot.name_of("polygon", one), 0.5 * (x0 + x1), 0.5 * (y0 + y1))
+        return Movable(*snapshot.name_of("polygon", one), *place)
     if one < polygons + discs:
-        x, y, _ = (float(value) for value in solids.discs_m[one - polygons])
-        return Movable(*snapshot.name_of("disc", one - polygons), x, y)
-    squares = np.flatnonzero(heaps == one - polygons - discs)
-    rows, columns = np.divmod(squares, shape[1])
-    low = (corner[0] + columns.min() * side, corner[1] + rows.min() * side)
-    high = (corner[0] + (columns.max() + 1) * side, corner[1] + (rows.max() + 1) * side)
-    layer, x, y = _cell_of_heap(snapshot, (*low, *high))
-    return Movable(layer, CELLS, x, y)
+        return Movable(*snapshot.name_of("disc", one - polygons), *place)
+    return Movable(_layer_at(snapshot, place), CELLS, *place)
 
 
-def _cell_of_heap(
-    snapshot: Snapshot, box: tuple[float, float, float, float]
-) -> tuple[str, float, float]:
-    """Return the layer and the place of a blocked cell in a box."""
+def _layer_at(snapshot: Snapshot, place: Point) -> str:
+    """The layer with the blocked cell that is nearest to a place."""
     cell_m = snapshot.settings.cell_m
+    best, name = math.inf, ""
     for layer, settings in snapshot.layers().items():
         for (x, y), cells in snapshot.cells(layer):
             blocked = cells != 0 if settings.unknown_blocks else cells == 1
             rows, columns = np.nonzero(blocked)
-            xs, ys = x + (columns + 0.5) * cell_m, y + (rows + 0.5) * cell_m
-            within = (xs >= box[0]) & (xs <= box[2]) & (ys >= box[1]) & (ys <= box[3])
-            if within.any():
-                k = int(np.argmax(within))
-                return layer, float(xs[k]), float(ys[k])
-    return "", 0.5 * (box[0] + box[2]), 0.5 * (box[1] + box[3])
+            if len(rows):
+                dx = x + (columns + 0.5) * cell_m - place[0]
+                dy = y + (rows + 0.5) * cell_m - place[1]
+                apart = float((dx * dx + dy * dy).min())
+                if apart < best:
+                    best, name = apart, layer
+    return name

@@ -15,8 +15,10 @@ from bywayd.commands.check import check
 from bywayd.commands.demo import demo
 from bywayd.commands.health import health
 from bywayd.commands.listen import listen
+from bywayd.commands.put import put
 from bywayd.commands.serve import serve
 from bywayd.commands.shared import Status
+from bywayd.commands.site import site
 from bywayd.commands.warm import warm
 
 app = typer.Typer(
@@ -27,7 +29,7 @@ app = typer.Typer(
     add_completion=False,
     pretty_exceptions_enable=False,
 )
-for _command in (serve, demo, ask, listen, health, check, bench, warm):
+for _command in (serve, demo, ask, put, site, listen, health, check, bench, warm):
     app.command()(_command)
 
 

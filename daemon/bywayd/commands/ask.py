@@ -98,6 +98,16 @@ def _as_dict(answer: "byway.Answer", better: "list[byway.Better]") -> dict[str, 
         {"layer": one.layer, "obstacle": one.obstacle, "depth_m": one.depth_m}
         for one in answer.blocked_by
     ]
+    if answer.remedy is not None:
+        told["remedy"] = {
+            "movables": [
+                {"layer": one.layer, "obstacle": one.obstacle, "x_m": one.x_m, "y_m": one.y_m}
+                for one in answer.remedy.movables
+            ],
+            "way_m": answer.remedy.way_m.tolist(),
+            "disc_radius_m": answer.remedy.disc_radius_m,
+            "proved": answer.remedy.proved,
+        }
     told["better"] = [{"elapsed_s": one.elapsed_s, "cost": one.cost} for one in better]
     if answer.route is not None:
         table = answer.route.table
@@ -125,6 +135,8 @@ def _print(
         out.print(f"[bold]{answer.kind}[/bold]: {_MEANING.get(answer.kind, '')}")
         for one in answer.blocked_by:
             out.print(f"  {one.obstacle} of layer {one.layer}, {one.depth_m:.3f} m deep")
+        if answer.remedy is not None:
+            out.print(_remedy(answer.remedy))
     else:
         route = answer.route
         out.print(
@@ -150,6 +162,18 @@ def _print(
             out.print("  ".join(f"{value:15.4f}" for value in row))
 
 
+def _remedy(remedy: "byway.Remedy") -> str:
+    """What would have to move, in a sentence that claims no more than is known."""
+    if not remedy.movables:
+        return "  A disc of that size gets through; it is the vehicle that finds no way."
+    names = ", ".join(f"{one.obstacle} of layer {one.layer}" for one in remedy.movables)
+    sure = "" if remedy.proved else " probably"
+    return (
+        f"  Without {names} a disc of {remedy.disc_radius_m:.2f} m would{sure} get through (there "
+        "may be less to move, and the whole vehicle may need more room)."
+    )
+
+
 def _draw(
     client: "byway.Client",
     vehicle: str,
@@ -166,7 +190,9 @@ def _draw(
     outline_m = outline_of(known.settings)
     layers = {n: layer for n, layer in site.layers.items() if n not in answer.left_out}
     table = None if answer.route is None else answer.route.table
-    shown = [start[:2], goal[:2]]
+    shown: list[tuple[float, float]] = [start[:2], goal[:2]]
+    if answer.remedy is not None:
+        shown += [(float(x), float(y)) for x, y in answer.remedy.way_m]
     if table is not None:
         shown += list(zip(table["x_m"].tolist(), table["y_m"].tolist(), strict=True))
     # A large site would leave the route a dot in it.
@@ -181,13 +207,17 @@ def _draw(
     for layer in layers.values():
         for patch in layer.cells:
             plan.cells(patch.corner_m, patch.cell_m, patch.cells)
-        plan.polygons(layer.polygons, "building", named=True)
+        plan.polygons(layer.polygons, "building", named=True, holes=layer.holes)
         plan.discs(layer.discs, "building", named=True)
     if site.limits_m is not None:
         plan.limits(site.limits_m)
     if table is not None:
         plan.swath(outline_m, table)
         plan.route(table, INKS[0])
+    if answer.remedy is not None:
+        plan.way(answer.remedy.way_m, "way that would be open")
+        for one in answer.remedy.movables:
+            plan.mark((one.x_m, one.y_m), f"would have to move: {one.obstacle}")
     plan.vehicle(outline_m, start)
     plan.goal(outline_m, goal)
     plan.save(file)
