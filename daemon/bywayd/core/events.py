@@ -31,6 +31,7 @@ from byway.errors import SenderFault
 from byway.messages import ErrorMessage, SiteIs
 from byway.packed import Bytes
 from bywayd.core.kept import ClerkEvent
+from bywayd.core.rights import Rights
 
 #: What planning came to. Names as in the protocol; an outcome is never an error.
 OutcomeKind: TypeAlias = Literal[
@@ -50,6 +51,8 @@ class Peer:
 
     channel: Literal["requests", "updates"]
     identity: bytes
+    #: What the owner of its key may do; None: no keys are in use, and everybody may do everything.
+    rights: Rights | None = field(default=None, compare=False)
 
 
 @dataclass(frozen=True, slots=True)

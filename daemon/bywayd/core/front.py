@@ -17,6 +17,7 @@ from collections.abc import Callable
 from typing import Any, Final
 
 from byway import frames, messages
+from byway.errors import Forbidden, SenderFault
 from bywayd.core import events, kept, reports
 from bywayd.core.alarms import Alarms
 from bywayd.core.answering import Answering
@@ -34,6 +35,7 @@ from bywayd.core.keeping import Keeping
 from bywayd.core.ledger import Ledger
 from bywayd.core.outbox import Outbox
 from bywayd.core.rerouting import Rerouting
+from bywayd.core.rights import refusal
 from bywayd.core.roster import Manners, Order, Roster
 from bywayd.core.snapshots import Snapshots
 from bywayd.core.surveying import Surveying
@@ -176,10 +178,26 @@ class Front:
     # -- from clients and sources -------------------------------------------------------------
 
     def _received(self, event: events.Received, now: Instant) -> None:
-        if event.peer.channel == "updates":
-            self._change(event.peer, event.came, now)
+        peer, came = event.peer, event.came
+        forbidden = refusal(peer.rights, came.message) or self._impostor(peer, came.header)
+        if forbidden is not None:
+            self.health.count("forbidden_total")
+            forbidden.header = came.header
+            self._refuse(peer, forbidden, now)
+        elif peer.channel == "updates":
+            self._change(peer, came, now)
         else:
-            self._request(event.peer, event.came, now)
+            self._request(peer, came, now)
+
+    def _impostor(self, peer: Peer, header: frames.Header | None) -> Forbidden | None:
+        """Return why a peer cannot speak for a source: it would use up numbers of another key."""
+        source = None if header is None else self.ledger.sources.get(header.source)
+        if source is None or peer.rights is None or source.peer.rights is None:
+            return None
+        if source.peer.rights.name == peer.rights.name:
+            return None
+        text = f"source {source.name} belongs to another key than {peer.rights.name}"
+        return Forbidden(text, {"source": source.name, "role": peer.rights.role or ""})
 
     def _change(self, peer: Peer, came: frames.Received, now: Instant) -> None:
         if self._stop_why:
@@ -218,12 +236,13 @@ class Front:
 
     def _unreadable(self, event: events.Unreadable, now: Instant) -> None:
         self.health.count("unreadable_total")
-        peer, fault = event.peer, event.fault
-        if (
-            peer.channel == "updates"
-            and not self._stop_why
-            and self.ledger.take_fault(peer, fault, now)
-        ):
+        self._refuse(event.peer, event.fault, now)
+
+    def _refuse(self, peer: Peer, fault: SenderFault, now: Instant) -> None:
+        # Only whoever may change something is counted as a source, and only under its own name.
+        is_source = peer.channel == "updates" and (peer.rights is None or peer.rights.may_change)
+        is_itself = is_source and self._impostor(peer, fault.header) is None
+        if is_itself and not self._stop_why and self.ledger.take_fault(peer, fault, now):
             return
         self.outbox.reply(peer, fault.header, frames.error_message(fault))
 
