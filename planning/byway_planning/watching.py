@@ -38,7 +38,9 @@ Kind = Literal["polygon", "disc", "cell", "limits", "track"]
 #: A part of a route is about so long: what a small change makes be looked at again.
 PART_M: Final = 8.0
 #: Behind the place of contact the depth is looked for at these distances.
-DEPTHS_M: Final = (0.1, 0.3, 0.7, 1.5, 3.0)
+DEPTHS_M: Final = (0.2, 0.7, 2.0)
+#: How closely the depth is told; who brakes for it does not mind a centimetre.
+DEPTH_M: Final = 0.01
 #: A clearance that is missed by less than this is rounding: `verify` let it pass.
 GRACE_M: Final = 1e-6
 _NOTHING: Final = np.empty((0, 4))
@@ -238,7 +240,7 @@ class WatchedRoute:
         deepest = 0.0
         for behind_m in DEPTHS_M:
             place = min(at_m + behind_m, self.length_m)
-            nearest = clearance_m(solids, self._vehicle, self._pose_at(place))
+            nearest = clearance_m(solids, self._vehicle, self._pose_at(place), within_m=DEPTH_M)
             deepest = max(deepest, self._need_m + GRACE_M - nearest.distance_m)
         return deepest
 

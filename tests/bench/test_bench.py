@@ -3,18 +3,21 @@
 import json
 import math
 from dataclasses import replace
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pytest
+from matplotlib.image import imread
 from rich.console import Console
 from typer.testing import CliRunner
 
 import bywayd.bench as bench
-from byway_planning import Outcome, warm
+from byway_planning import METHODS, Outcome, warm
 from bywayd.bench import planning
 from bywayd.bench.families_tight import FAMILIES, draw
 from bywayd.bench.figures import Figures, Findings, quantile, ratio, spread
+from bywayd.bench.plots import plot_growth, plot_methods
 from bywayd.commands import app
 
 #: Kernels may have to be compiled first.
@@ -46,19 +49,51 @@ def test_a_small_run_measures_everything_and_finds_nothing_wrong(small: Figures)
     assert 0.1 < small["micro"]["poses_free"] < 0.9
     assert 0.1 < small["micro"]["motions_free"] < 0.9
     assert small["site"]["patch_to_transform"] > 0.0
+    site = small["site"]
+    assert site["updates_per_s"] > 1.0
+    assert site["alerts_missed"] == 0
+    assert site["alert_ms"]["p50"] is not None
+    assert [row["guards"] for row in site["growth"]["guards"]] == [2, 4]
     serving = small["serving"]
     assert serving["replans_per_s"] > 1.0
-    assert serving["updates_per_s"] > 1.0
     assert serving["hello_to_echo_ipc"] > 1.0
     assert 100 < serving["replan_rows"] < 400
     assert serving["load"][0]["asked"] > 0
     assert serving["kills"] == 1
 
 
+def test_growth_is_drawn(small: Figures, tmp_path: Path) -> None:
+    plot_growth(small["site"]["growth"], tmp_path / "growth.png")
+    assert imread(tmp_path / "growth.png").shape[1] > 1000
+
+
+def test_methods_side_by_side(tmp_path: Path) -> None:
+    """Every method on one case of two families; the best of them costs 1 by what is meant."""
+    found = bench.measure(small=True, parts=["methods"], families=["open", "sealed"])["methods"]
+    assert found["families"] == ["open"]  # nobody finds a way to a sealed goal
+    assert set(found["methods"]) == set(METHODS)
+    last = [told["cost_to_best"][-1] for told in found["methods"].values()]
+    assert min(cost for cost in last if cost is not None) == 1.0
+    plot_methods(found, tmp_path / "methods.png")
+    assert imread(tmp_path / "methods.png").shape[1] > 500
+    assert "rrt_star" in printed({"methods": found, "machine": _MACHINE} | _EMPTY)
+
+
+_MACHINE: Figures = {"cpu": "none", "cores": 1, "load": 0.0}
+_EMPTY: Figures = {"salt": 1, "mode": "small", "took_s": 1.0, "anomalies": [], "faults": []}
+
+
 def test_figures_are_json_and_tables_show_them(small: Figures) -> None:
     assert json.loads(json.dumps(small, allow_nan=False))["salt"] == 1
     text = printed(small)
-    for word in (*FAMILIES, "First route", "Reeds-Shepp", "hello over ipc", small["digest"]):
+    for word in (
+        *FAMILIES,
+        "First route",
+        "Reeds-Shepp",
+        "hello over ipc",
+        "guarded routes",
+        small["digest"],
+    ):
         assert word in text
 
 
@@ -71,7 +106,7 @@ def test_the_digest_depends_on_the_salt_and_not_on_what_ran_before() -> None:
 
 
 def test_parts_and_families_can_be_chosen_and_digests_stay_the_same(small: Figures) -> None:
-    found = bench.measure(small=True, only=["planning"], families=["u_turn", "bay"], seeds=1)
+    found = bench.measure(small=True, parts=["planning"], families=["u_turn", "bay"], seeds=1)
     assert list(found["planning"]) == ["bay", "u_turn"]
     assert {"micro", "site", "serving"}.isdisjoint(found)
     for name, told in found["planning"].items():
@@ -81,7 +116,11 @@ def test_parts_and_families_can_be_chosen_and_digests_stay_the_same(small: Figur
 
 @pytest.mark.parametrize(
     ("wrong", "named"),
-    [({"only": ["plannning"]}, "plannning"), ({"families": ["moon"]}, "moon"), ({"seeds": 0}, "0")],
+    [
+        ({"parts": ["plannning"]}, "plannning"),
+        ({"families": ["moon"]}, "moon"),
+        ({"seeds": 0}, "0"),
+    ],
 )
 def test_names_that_there_are_not_are_refused(wrong: dict[str, Any], named: str) -> None:
     with pytest.raises(ValueError, match=named):

@@ -6,6 +6,7 @@ from typing import Any
 from rich.table import Table
 
 from bywayd.bench.figures import Figures
+from bywayd.bench.growth import KINDS
 from bywayd.bench.targets import (
     FAMILY_TARGETS,
     IN_TIME_TARGET,
@@ -35,6 +36,10 @@ def tables(found: Figures) -> list[Table | str]:
     ):
         if part in found:
             shown.append(_figures(title, found[part], targets))
+    if "site" in found:
+        shown += _growth(found["site"]["growth"])
+    if "methods" in found:
+        shown.append(method_table(found["methods"]))
     if found.get("serving", {}).get("load"):
         shown.append(_load(found["serving"]["load"]))
     machine = found["machine"]
@@ -134,6 +139,50 @@ def _figures(title: str, found: Figures, targets: Sequence[Target]) -> Table:
             wanted = f"at least {target.least:g}"
         table.add_row(target.text, _missed(told) if missed else told, wanted)
     return table
+
+
+def _growth(growth: Figures) -> list[Table | str]:
+    """How costs grow; an update should cost what it touches, so these columns should be flat."""
+    shown: list[Table | str] = []
+    for across, title in (
+        ("obstacles", "Changes of a site, CPU ms p50 (p90), as obstacles grow in number"),
+        ("sides", "The same as the site grows, with as many obstacles a hectare"),
+    ):
+        table = _table(title, "stacks", "side, m", *KINDS)
+        for row in growth[across]:
+            table.add_row(
+                str(row["stacks"]), f"{row['side_m']:g}", *(_median(row[f"{k}_ms"]) for k in KINDS)
+            )
+        shown.append(table)
+    table = _table(
+        "Checking guarded routes of 100 m, CPU ms p50 (p90)",
+        *("routes", "after a small change", "everything anew"),
+    )
+    for row in growth["guards"]:
+        table.add_row(str(row["guards"]), _median(row["small_ms"]), _median(row["whole_ms"]))
+    return [*shown, table]
+
+
+def method_table(methods: Figures) -> Table:
+    """Return the methods side by side."""
+    moments = [f"{moment:g} ms" for moment in methods["moments_ms"]]
+    table = _table(
+        f"Methods on {methods['cases']} cases: first route, CPU ms; cost to the best known, median",
+        *("method", "solved", "first p50", "p90", *moments),
+    )
+    for name, told in methods["methods"].items():
+        table.add_row(
+            name,
+            f"{100.0 * told['solved']:.0f} %",
+            _plain(told["first_ms"]["p50"], "{:.1f}"),
+            _plain(told["first_ms"]["p90"], "{:.1f}"),
+            *(_plain(cost, "{:.3f}") for cost in told["cost_to_best"]),
+        )
+    return table
+
+
+def _median(told: Figures) -> str:
+    return f"{_plain(told['p50'], '{:.3g}')} ({_plain(told['p90'], '{:.3g}')})"
 
 
 def _load(stages: Sequence[Figures]) -> Table:

@@ -11,12 +11,14 @@ from pathlib import Path
 from typing import Final, Literal, TypeVar
 
 from byway_planning import warm
-from bywayd.bench import micro, planning, serving, site
+from bywayd.bench import methods, micro, planning, serving, site
 from bywayd.bench.families_tight import FAMILIES
 from bywayd.bench.figures import Figures, Findings, Progress
 
-Part = Literal["planning", "micro", "site", "serving"]
-PARTS: Final[tuple[Part, ...]] = ("planning", "micro", "site", "serving")
+Part = Literal["planning", "micro", "site", "serving", "methods"]
+PARTS: Final[tuple[Part, ...]] = ("planning", "micro", "site", "serving", "methods")
+#: Methods side by side take minutes, and only when they are asked for.
+USUAL: Final[tuple[Part, ...]] = ("planning", "micro", "site", "serving")
 LONG_S: Final = 3.0
 Name = TypeVar("Name", bound=str)
 
@@ -25,7 +27,7 @@ def measure(
     *,
     small: bool = False,
     long: bool = False,
-    only: Sequence[str] = (),
+    parts: Sequence[str] = (),
     families: Sequence[str] = (),
     salt: int = 1,
     seeds: int | None = None,
@@ -38,7 +40,7 @@ def measure(
         small: A few seconds; only to see that everything works.
         long: Also 3 s runs with another seed for a better idea of the best route, and a site of
             a square kilometre.
-        only: Some of PARTS; all if empty.
+        parts: Some of PARTS; all but "methods" if empty.
         families: Some of FAMILIES; all if empty.
         salt: Of all cases and questions; those of another salt are others.
         seeds: Cases of each family for first routes.
@@ -51,7 +53,7 @@ def measure(
     Raises:
         ValueError: For a name that there is not.
     """
-    parts = _known("part", only, PARTS)
+    chosen = _known("part", parts or USUAL, PARTS)
     names = _known("family", families, tuple(FAMILIES))
     if seeds is not None and seeds < 1:
         raise ValueError(f"seeds must be at least 1, got {seeds}")
@@ -66,13 +68,16 @@ def measure(
             salt, micro.MICRO_SMALL if small else micro.MicroSizes(), findings
         ),
         "site": lambda: site.measure_site(
-            salt, site.SITE_SMALL if small else site.SiteSizes(huge=long), findings
+            salt, site.SITE_SMALL if small else site.SiteSizes(huge=long), findings, progress
         ),
         "serving": lambda: serving.measure_serving(
             salt, serving.SERVING_SMALL if small else serving.ServingSizes(), findings, progress
         ),
     }
-    for part in parts:
+    runs["methods"] = lambda: methods.measure_methods(
+        names, salt, methods.METHODS_SMALL if small else methods.METHODS_FULL, progress
+    )
+    for part in chosen:
         before_s = time.perf_counter()
         found[part] = runs[part]()
         progress(f"{part}: {time.perf_counter() - before_s:.1f} s in all")

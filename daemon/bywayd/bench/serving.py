@@ -6,12 +6,10 @@ Times here are of the wall clock, so they are compared within one run: with a ba
 same transport, with planning in this process, with the same thing while the workers are busy.
 """
 
-import contextlib
 import math
 import tempfile
 import time
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 from statistics import median
@@ -21,7 +19,7 @@ import numpy as np
 
 import byway
 from byway_planning import plan
-from bywayd.bench.cases import Ground, Pose, Rng, Yard
+from bywayd.bench.cases import Ground, Pose, Rng
 from bywayd.bench.child import Child, child, memory_mb
 from bywayd.bench.crashes import crashes
 from bywayd.bench.echo import Echo, echo
@@ -37,18 +35,11 @@ from bywayd.bench.figures import (
     wall_s,
 )
 from bywayd.bench.load import capacity, stage
-from bywayd.bench.updates import updates
+from bywayd.bench.served import FROM, TO, VEHICLE, WORKERS, busy, served_yard
 from bywayd.bench.vehicles import VEHICLES
 
-WORKERS: Final = 2
-VEHICLE: Final = "shunter"
-YARD_M: Final = (70.0, 60.0)
 #: A first route is good enough for these.
 GAP_ANY: Final = 0.95
-BUSY_S_MAX: Final = 5.0
-#: A route of some two hundred rows, between these.
-FROM: Final[Pose] = (5.0, 6.0, 0.0)
-TO: Final[Pose] = (44.0, 44.0, 0.5 * math.pi)
 
 
 @dataclass(frozen=True)
@@ -60,8 +51,6 @@ class ServingSizes:
     capacity_s: float = 1.5
     stages: tuple[float, ...] = (0.7, 1.5, 3.0)
     stage_s: float = 2.5
-    updates: int = 100
-    updates_s: float = 1.5
     crashes: int = 5
 
 
@@ -71,8 +60,6 @@ SERVING_SMALL: Final = ServingSizes(
     capacity_s=0.2,
     stages=(0.7,),
     stage_s=0.3,
-    updates=4,
-    updates_s=0.1,
     crashes=1,
 )
 
@@ -82,7 +69,7 @@ def measure_serving(
 ) -> Figures:
     """Return the figures of a daemon with two workers in a yard with stacks."""
     rng = np.random.default_rng([salt, 99])
-    ground = _yard(rng)
+    ground = served_yard(rng)
     told: Figures = {"workers": WORKERS}
     with (
         tempfile.TemporaryDirectory(prefix="byway-bench-") as name,
@@ -94,7 +81,6 @@ def measure_serving(
             client.replace_layer("stacks", polygons=ground.polygons)
             steps: list[tuple[str, Callable[[], Figures]]] = [
                 ("round trips", lambda: _round_trips(daemon, client, ground, Path(name), sizes)),
-                ("updates", lambda: updates(daemon.endpoint, rng, sizes, busy)),
                 ("load", lambda: _load(client, ground, rng, sizes, progress)),
                 ("crashes", lambda: crashes(daemon, client, WORKERS, sizes.crashes, findings)),
                 ("memory", lambda: _memory(daemon)),
@@ -107,40 +93,6 @@ def measure_serving(
             told["deadline_misses"] = counts.get("answers_late_total", 0)
             told["answers"] = sum(n for k, n in counts.items() if k.startswith("answers_"))
     return told
-
-
-@contextmanager
-def busy(client: byway.Client) -> Iterator[None]:
-    """Have all workers at work, on replans that can be bettered for long."""
-    asks = [
-        client.start_replan(VEHICLE, FROM, TO, 30.0, unit=f"busy-{i}", seed=i)
-        for i in range(WORKERS)
-    ]
-    end_s = time.perf_counter() + BUSY_S_MAX
-    while client.health().workers.get("busy", 0) < WORKERS:
-        if time.perf_counter() > end_s:
-            raise RuntimeError("the workers cannot be kept busy")
-        time.sleep(0.005)
-    try:
-        yield
-    finally:
-        for ask in asks:
-            ask.cancel()
-            with contextlib.suppress(byway.BywayError):
-                ask.wait()
-
-
-def _yard(rng: Rng) -> Ground:
-    """Stacks without order, with room around the two poses that are asked for again and again."""
-    width_m, height_m = YARD_M
-    yard = Yard(width_m, height_m)
-    while len(yard.polygons) < 60:
-        x, y = float(rng.uniform(0.0, width_m)), float(rng.uniform(0.0, height_m))
-        if min(math.dist((x, y), FROM[:2]), math.dist((x, y), TO[:2])) < 7.0:
-            continue
-        if all(math.dist(ring.mean(axis=0), (x, y)) > 5.5 for ring in yard.polygons.values()):
-            yard.block(x, y, 2.4, 1.2, float(rng.uniform(0.0, math.pi)))
-    return yard.ground()
 
 
 def _round_trips(

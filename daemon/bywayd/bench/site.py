@@ -7,34 +7,34 @@ same run: what an update would cost if all distances were computed anew.
 
 import math
 import resource
-from collections.abc import Callable
 from dataclasses import dataclass
 from statistics import median
-from typing import Any, Final
+from typing import Final
 
 import numpy as np
 from scipy import ndimage
 
-from byway_planning import (
-    LayerSettings,
-    Memory,
-    PolygonShape,
-    SiteModel,
-    SiteSettings,
-    Snapshot,
-    plan,
+from byway_planning import plan
+from bywayd.bench.cases import CELL_M, Rng
+from bywayd.bench.figures import (
+    MS,
+    CpuBudget,
+    Figures,
+    Findings,
+    Progress,
+    cpu_s,
+    quantile,
+    ratio,
+    spread,
 )
-from bywayd.bench.cases import CELL_M, Cells, Points, Rng
-from bywayd.bench.figures import MS, CpuBudget, Figures, Findings, cpu_s, quantile, ratio, spread
+from bywayd.bench.growth import GROWTH_FULL, GROWTH_SMALL, GrowthSizes, measure_growth
+from bywayd.bench.live import LIVE_FULL, LIVE_SMALL, LiveSizes, measure_live
+from bywayd.bench.live_site import LiveSite, stacks_at_density
 from bywayd.bench.vehicles import VEHICLES
 
 GRID_CELLS: Final = 1000
-PATCH_CELLS: Final = 64
-VERTICES: Final = 30
 #: Of a site ten times as large.
 TENFOLD: Final = math.sqrt(10.0)
-#: Stacks a hectare.
-DENSITY: Final = 200
 HUGE_M: Final = 1000.0
 HUGE_STACKS: Final = 5000
 
@@ -47,21 +47,26 @@ class SiteSizes:
     transforms: int = 5
     tenfold: bool = True
     huge: bool = False
+    growth: GrowthSizes = GROWTH_FULL
+    live: LiveSizes = LIVE_FULL
 
 
-SITE_SMALL: Final = SiteSizes(changes=5, transforms=2, tenfold=False)
+SITE_SMALL: Final = SiteSizes(
+    changes=5, transforms=2, tenfold=False, growth=GROWTH_SMALL, live=LIVE_SMALL
+)
 
 
-def measure_site(salt: int, sizes: SiteSizes, findings: Findings) -> Figures:
+def measure_site(salt: int, sizes: SiteSizes, findings: Findings, progress: Progress) -> Figures:
     """
-    Return milliseconds from a change to the snapshot that has it, and ratios to the transform.
+    Return milliseconds from a change to the snapshot that has it, and ratios to the transform;
+    how these grow; and what a daemon makes of changes and guarded routes.
 
-    A patch is 64 x 64 cells that fit the site's, a third of them changed; a polygon with 30
-    vertices is put, moved, dropped.
+    A patch is 64 x 64 cells that fit the site's, some of them changed; a polygon with 30
+    vertices is put, moved, dropped; a scan has 720 beams of 4 to 25 m; a track walks on.
     """
     rng = np.random.default_rng([salt, 88])
     side_m = GRID_CELLS * CELL_M
-    yard = _Live(rng, side_m, _stacks(side_m))
+    yard = LiveSite(rng, side_m, stacks_at_density(side_m))
     cells = yard.occupied()
     transforms = [
         cpu_s(lambda: ndimage.distance_transform_edt(cells == 0)) for _ in range(sizes.transforms)
@@ -73,88 +78,22 @@ def measure_site(salt: int, sizes: SiteSizes, findings: Findings) -> Figures:
         told[f"{kind}_ms"] = spread(times_s, MS)
         told[f"{kind}_to_transform"] = ratio(quantile(times_s, 0.5), transform_s)
     if sizes.tenfold:
-        large = _Live(rng, side_m * TENFOLD, _stacks(side_m * TENFOLD))
+        large_m = side_m * TENFOLD
+        large = LiveSite(rng, large_m, stacks_at_density(large_m))
         for kind, times_s in large.measure(sizes.changes).items():
             told[f"{kind}_tenfold"] = ratio(quantile(times_s, 0.5), quantile(found[kind], 0.5))
     if sizes.huge:
         told["square_kilometre"] = _square_kilometre(rng, findings)
-    return told
-
-
-def _stacks(side_m: float) -> int:
-    return int(DENSITY * (side_m / 100.0) ** 2)
-
-
-class _Live:
-    """A site with stacks that changes."""
-
-    def __init__(self, rng: Rng, side_m: float, stacks: int) -> None:
-        self._rng, self._side_m = rng, side_m
-        self._model = SiteModel(SiteSettings((0.0, 0.0, side_m, side_m), CELL_M), Memory.private())
-        self._model.declare("stacks", LayerSettings())
-        self._model.declare("lidar", LayerSettings())
-        for i in range(stacks):
-            self._model.put("stacks", f"s{i}", PolygonShape(self._blob(4, 2.0)))
-        self.snapshot: Snapshot = self._model.publish()
-
-    def _blob(self, vertices: int, radius_m: float) -> Points:
-        """A polygon that is nearly round, somewhere."""
-        middle = self._rng.uniform(4.0, self._side_m - 4.0, 2)
-        angles = 2.0 * math.pi * (np.arange(vertices) + self._rng.uniform(0.0, 0.5)) / vertices
-        radii_m = radius_m * self._rng.uniform(0.7, 1.0, vertices)
-        corners: Points = middle + radii_m[:, None] * np.column_stack(
-            [np.cos(angles), np.sin(angles)]
-        )
-        return corners
-
-    def occupied(self) -> Cells:
-        """Cells of the whole site, those below the middles of stacks occupied."""
-        count = round(self._side_m / CELL_M)
-        cells = np.zeros((count, count), np.uint8)
-        for _, _, shape in self.snapshot.obstacles():
-            if isinstance(shape, PolygonShape):
-                x0, y0, x1, y1 = (np.array(shape.box_m) / CELL_M).astype(int)
-                cells[y0 : y1 + 1, x0 : x1 + 1] = 1
-        return cells
-
-    def measure(self, count: int) -> dict[str, list[float]]:
-        """Make changes of each kind, and return their seconds."""
-        times: dict[str, list[float]] = {"patch": [], "put": [], "move": [], "drop": []}
-        self._visible(lambda: self._patch())  # the first change pays for what is set up once
-        for _ in range(count):
-            times["patch"].append(self._visible(self._patch))
-            times["put"].append(self._visible(self._put))
-            times["move"].append(self._visible(self._put))
-            times["drop"].append(self._visible(lambda: self._model.drop("stacks", "moved")))
-        return times
-
-    def _visible(self, change: Callable[[], Any]) -> float:
-        def all_of_it() -> None:
-            change()
-            self.snapshot = self._model.publish()
-            self._model.release_before(self.snapshot.revision)
-
-        return cpu_s(all_of_it)
-
-    def _put(self) -> None:
-        self._model.put("stacks", "moved", PolygonShape(self._blob(VERTICES, 2.5)))
-
-    def _patch(self) -> None:
-        """What a sensor sees of a square: some thin things, otherwise free."""
-        cells = np.zeros((PATCH_CELLS, PATCH_CELLS), np.uint8)
-        for _ in range(6):
-            r, c = self._rng.integers(0, PATCH_CELLS - 8, 2)
-            cells[r : r + self._rng.integers(1, 8), c : c + self._rng.integers(1, 8)] = 1
-        most = int(self._side_m / CELL_M) - PATCH_CELLS
-        column, row = self._rng.integers(0, most, 2)
-        self._model.patch("lidar", (column * CELL_M, row * CELL_M), CELL_M, cells)
+    told["growth"] = measure_growth(salt, sizes.growth, findings)
+    progress("site: growth measured")
+    return told | measure_live(salt, sizes.live, progress)
 
 
 def _square_kilometre(rng: Rng, findings: Findings) -> Figures:
     """Load a square kilometre with 5,000 stacks, and ask for routes across it."""
     before_kb = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
-    made: list[_Live] = []
-    load_s = cpu_s(lambda: made.append(_Live(rng, HUGE_M, HUGE_STACKS)))
+    made: list[LiveSite] = []
+    load_s = cpu_s(lambda: made.append(LiveSite(rng, HUGE_M, HUGE_STACKS)))
     grown_kb = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss - before_kb
     vehicle = VEHICLES["shunter"]
     firsts_s: list[float] = []

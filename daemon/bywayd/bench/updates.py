@@ -2,15 +2,15 @@
 
 import threading
 import time
-from collections.abc import Callable
-from contextlib import AbstractContextManager, nullcontext
-from typing import Final, Protocol
+from contextlib import nullcontext
+from typing import Final
 
 import numpy as np
 
 import byway
 from bywayd.bench.cases import CELL_M, Rng
 from bywayd.bench.figures import MS, Figures, ratio, spread, wall_s
+from bywayd.bench.served import busy
 
 #: Sources that change the site at the same time; each waits for one acknowledgement at a time.
 SOURCES: Final = 8
@@ -18,31 +18,19 @@ PATCH_CELLS: Final = 64
 #: Changes are made between these, x and y, so that they block no start and no goal.
 AWAY_M: Final = (15.0, 30.0)
 
-Busy = Callable[[byway.Client], AbstractContextManager[None]]
 
-
-class UpdateSizes(Protocol):
-    """How much is measured."""
-
-    @property
-    def updates(self) -> int: ...
-
-    @property
-    def updates_s(self) -> float: ...
-
-
-def updates(endpoint: str, rng: Rng, sizes: UpdateSizes, busy: Busy) -> Figures:
+def updates(endpoint: str, rng: Rng, count: int, seconds: float) -> Figures:
     """Return how long small changes and patches take, workers idle and busy, and how many go."""
     told: Figures = {}
     with byway.Client(endpoint) as client, byway.Client(endpoint) as other:
         for state in ("idle", "busy"):
             with busy(other) if state == "busy" else nullcontext():
-                told |= _one_by_one(client, rng, sizes.updates, state)
+                told |= _one_by_one(client, rng, count, state)
         for kind in ("put", "patch"):
             one, two = told[f"{kind}_idle_ms"]["p99"], told[f"{kind}_busy_ms"]["p99"]
             told[f"{kind}_p99_busy_to_idle"] = ratio(two, one)
         with busy(other):
-            told["updates_per_s"] = _many(endpoint, sizes.updates_s)
+            told["updates_per_s"] = _many(endpoint, seconds)
         client.replace_layer("live")
         client.replace_layer("seen")
     return told

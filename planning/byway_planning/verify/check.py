@@ -250,12 +250,17 @@ def _collision(found: Floats, need_m: float) -> Fault:
     return Fault("collides", text, at_m, facts)
 
 
-def clearance_m(solids: Solids, vehicle: Checkable, pose: Pose) -> Nearest:
+def clearance_m(
+    solids: Solids, vehicle: Checkable, pose: Pose, *, within_m: float = DEPTH_M
+) -> Nearest:
     """
     Return the exact distance of a vehicle, standing at a pose, from what is nearest.
 
     An overlap counts negative, by the depth to which the outline has to be drawn in, edge by
     edge, to be free; never deeper than the largest disc inside the vehicle.
+
+    Args:
+        within_m: How closely the depth of an overlap is to be found.
 
     Raises:
         ValueError: If the pose is not finite.
@@ -263,10 +268,17 @@ def clearance_m(solids: Solids, vehicle: Checkable, pose: Pose) -> Nearest:
     x, y, heading = (float(v) for v in pose)
     if not (math.isfinite(x) and math.isfinite(y) and math.isfinite(heading)):
         raise ValueError(f"a pose must be finite, got {tuple(pose)}")
-    return _clearance(solids, vehicle.body(), x, y, heading)
+    return _clearance(solids, vehicle.body(), x, y, heading, within_m)
 
 
-def _clearance(solids: Solids, body: Body, x: float, y: float, heading: float) -> Nearest:
+def _clearance(
+    solids: Solids,
+    body: Body,
+    x: float,
+    y: float,
+    heading: float,
+    within_m: float = DEPTH_M,
+) -> Nearest:
     care_m = 1.0
     while True:
         nearest = _nearest(solids, whole(body), x, y, heading, care_m)
@@ -278,7 +290,7 @@ def _clearance(solids: Solids, body: Body, x: float, y: float, heading: float) -
     if nearest.distance_m > 0.0:
         return nearest
     free_m, stuck_m = body.inner_radius_m, 0.0
-    while free_m - stuck_m > DEPTH_M:
+    while free_m - stuck_m > within_m:
         half_m = 0.5 * (free_m + stuck_m)
         inner = drawn_in(body, half_m)
         found = None if inner is None else _nearest(solids, inner, x, y, heading, DEPTH_M)
