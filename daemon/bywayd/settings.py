@@ -16,9 +16,18 @@ import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Annotated, Any, Final, Literal
+from typing import Annotated, Any, ClassVar, Final, Literal
 
-from pydantic import BaseModel, ConfigDict, Field, ValidationError, ValidationInfo, field_validator
+from pydantic import (
+    BaseModel,
+    ConfigDict,
+    Field,
+    ValidationError,
+    ValidationInfo,
+    ValidatorFunctionWrapHandler,
+    WrapValidator,
+    field_validator,
+)
 from pydantic_settings import (
     BaseSettings,
     PydanticBaseSettingsSource,
@@ -89,34 +98,78 @@ class KeepSection(Section):
     def _file_is_absolute(cls, file: str | None) -> str | None:
         if file is None:
             return None
-        path = Path(file.replace("{state}", str(state_folder()))).expanduser()
-        if not path.is_absolute():
-            # A service is started from wherever, and must find its layers again.
-            raise ValueError(f"{file}: must be an absolute path, or begin with {{state}}")
-        return str(path)
+        return _absolute(file)
+
+
+class KeysSection(Section):
+    #: The daemon's own key, and the list of who is allowed; both as `byway keys` makes them.
+    file: str | None = None
+    allowed: Annotated[str | None, Field(validate_default=True)] = None
+
+    @field_validator("file", "allowed")
+    @classmethod
+    def _path_is_absolute(cls, file: str | None, info: ValidationInfo) -> str | None:
+        if info.field_name == "allowed" and "file" in info.data:
+            if file is None and info.data["file"] is not None:
+                raise ValueError("is missing: with a key, say who is allowed")
+            if file is not None and info.data["file"] is None:
+                raise ValueError("a list of who is allowed means nothing without a key: set file")
+        return None if file is None else _absolute(file)
 
 
 class SocketsSection(Section):
     requests: tuple[str, ...] = Field(min_length=1)
     updates: tuple[str, ...] = Field(min_length=1)
     events: tuple[str, ...] = Field(min_length=1)
+    #: What clients are told instead of where updates and events are bound.
+    tell_updates: tuple[str, ...] = ()
+    tell_events: tuple[str, ...] = ()
+    #: How many peers may be connected at once; as many as there are descriptors for if left out.
+    connections_max: Annotated[int, Field(ge=4, le=10_000)] | None = None
+
+    #: Whether nobody is asked for keys.
+    _on_loopback: ClassVar[bool] = True
 
     # Every check is one of a field: a check of the whole section would stay silent until every
     # field is right, and all mistakes are to be reported at once.
-    @field_validator("*")
+    @field_validator("requests", "updates", "events")
     @classmethod
-    def _only_from_this_host_and_once(
+    def _only_where_allowed_and_once(
         cls, endpoints: tuple[str, ...], info: ValidationInfo
     ) -> tuple[str, ...]:
         resolved = tuple(text.replace("{runtime}", str(runtime_folder())) for text in endpoints)
         taken = [endpoint for others in info.data.values() for endpoint in others]
         for endpoint in resolved:
-            _check_endpoint(endpoint)
+            _check_endpoint(endpoint, on_loopback=cls._on_loopback)
             # Port 0 is whichever is free, and so never the same one twice.
             if endpoint in taken and not endpoint.endswith(":0"):
                 raise ValueError(f"{endpoint} stands for more than one socket")
             taken.append(endpoint)
         return resolved
+
+    @field_validator("tell_updates", "tell_events")
+    @classmethod
+    def _can_be_told(cls, endpoints: tuple[str, ...]) -> tuple[str, ...]:
+        for endpoint in endpoints:
+            _check_endpoint(endpoint, on_loopback=False)
+            if endpoint.startswith("tcp://*:") or endpoint.endswith(":0"):
+                raise ValueError(f"{endpoint}: nobody can connect to that")
+        return endpoints
+
+
+class OpenSocketsSection(SocketsSection):
+    """With keys, other hosts may reach them."""
+
+    _on_loopback: ClassVar[bool] = False
+
+
+def _sockets_for_keys(
+    told: object, _: ValidatorFunctionWrapHandler, info: ValidationInfo
+) -> SocketsSection:
+    keys = info.data.get("keys")
+    has_keys = keys is None or keys.file is not None  # one that is wrong is told of as such
+    section = OpenSocketsSection if has_keys else SocketsSection
+    return section.model_validate(told)
 
 
 def _usable_cores_but_one() -> int:
@@ -160,7 +213,9 @@ class Settings(BaseSettings):
     site: SiteSection = SiteSection()
     keep: KeepSection = KeepSection()
     layers: dict[Name, LayerSection] = Field(default_factory=dict)
-    sockets: SocketsSection
+    keys: KeysSection = KeysSection()
+    # After the keys, for it depends on them.
+    sockets: Annotated[SocketsSection, WrapValidator(_sockets_for_keys)]
     workers: WorkersSection = WorkersSection()
     answers: AnswersSection = AnswersSection()
     guards: GuardsSection = GuardsSection()
@@ -232,7 +287,7 @@ def load(file: Path | None = None) -> Settings:
     except tomllib.TOMLDecodeError as fault:
         raise BadSettings([Mistake(str(file), "", f"not TOML: {fault}")]) from None
     merged = {**embedded, **told}
-    sections = {"site", "sockets", "workers", "answers", "guards", "log", "keep"}
+    sections = {"site", "sockets", "workers", "answers", "guards", "log", "keep", "keys"}
     for section in sections & embedded.keys() & told.keys():
         if isinstance(told[section], dict):
             merged[section] = {**embedded[section], **told[section]}
@@ -264,6 +319,15 @@ def state_folder() -> Path:
     return Path.home() / ".local" / "state" / "byway"
 
 
+def _absolute(file: str) -> str:
+    """Return a path with what stands for folders filled in; a ValueError if it is relative."""
+    path = Path(file.replace("{state}", str(state_folder()))).expanduser()
+    if not path.is_absolute():
+        # A service is started from wherever, and must find its files again.
+        raise ValueError(f"{file}: must be an absolute path, or begin with {{state}}")
+    return str(path)
+
+
 def _read(file: Path | None) -> str:
     if file is None:
         return ""
@@ -274,7 +338,7 @@ def _read(file: Path | None) -> str:
         raise BadSettings([Mistake(str(file), "", f"cannot be read: {reason}")]) from None
 
 
-def _check_endpoint(endpoint: str) -> None:
+def _check_endpoint(endpoint: str, *, on_loopback: bool) -> None:
     transport, _, address = endpoint.partition("://")
     if transport == "ipc":
         if not address or len(address.encode()) > IPC_PATH_BYTES_MAX:
@@ -283,10 +347,13 @@ def _check_endpoint(endpoint: str) -> None:
     host, _, port = address.rpartition(":")
     if transport != "tcp" or not re.fullmatch(r"\d{1,5}", port) or not int(port) < 65536:
         raise ValueError(f"{endpoint}: expected tcp://127.0.0.1:PORT or ipc://PATH")
-    # Anything else would let in whoever reaches the port: there are no keys yet.
-    if not re.fullmatch(r"127(\.\d{1,3}){3}|\[::1\]|localhost", host):
+    if not re.fullmatch(r"\*|[A-Za-z0-9.-]+|\[[0-9A-Fa-f:.]+\]", host):
+        raise ValueError(f"{endpoint}: {host!r} is no host")
+    # Anything else would let in whoever reaches the port.
+    if on_loopback and not re.fullmatch(r"127(\.\d{1,3}){3}|\[::1\]|localhost", host):
         raise ValueError(
-            f"{endpoint}: TCP is served on loopback only, such as tcp://127.0.0.1:{port}"
+            f"{endpoint}: without keys TCP is served on loopback only, such as "
+            f"tcp://127.0.0.1:{port}; byway keys makes some, [keys] names them"
         )
 
 
@@ -379,6 +446,7 @@ def _known_keys(section: Location, merged: Mapping[str, Any]) -> list[str]:
         "site": SiteSection,
         "layers": LayerSection,
         "keep": KeepSection,
+        "keys": KeysSection,
         "sockets": SocketsSection,
         "workers": WorkersSection,
         "answers": AnswersSection,

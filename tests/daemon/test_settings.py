@@ -118,8 +118,8 @@ count = 3
             "with each min below its max"
         ),
         (
-            "site.toml:7: sockets.requests: tcp://0.0.0.0:7461: TCP is served on loopback only, "
-            "such as tcp://127.0.0.1:7461"
+            "site.toml:7: sockets.requests: tcp://0.0.0.0:7461: without keys TCP is served on "
+            "loopback only, such as tcp://127.0.0.1:7461; byway keys makes some, [keys] names them"
         ),
         "site.toml:8: sockets.events: the list should have at least 1 item, not 0",
         (

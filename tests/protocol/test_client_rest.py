@@ -296,11 +296,11 @@ def test_what_is_no_endpoint_is_told(new_client: NewClient, endpoint: str) -> No
 
 
 def test_the_whole_goes_over_tcp_as_well(new_client: NewClient) -> None:
-    """The host that the client came to counts, whatever the daemon calls itself."""
+    """The host that the client came to counts, where the daemon names none in particular."""
     over_tcp = FakeDaemon(None)
     try:
         for name, (endpoint,) in over_tcp.offered.items():
-            over_tcp.offered[name] = [endpoint.replace("127.0.0.1", "192.0.2.1")]
+            over_tcp.offered[name] = [endpoint.replace("127.0.0.1", "0.0.0.0")]
         over_tcp.costs = [5.0]
         client = new_client(endpoint=over_tcp.endpoints["requests"])
         assert client.replace_layer("fixed", discs={"post": (1, 2, 0.5)}) == 1

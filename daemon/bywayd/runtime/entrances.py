@@ -11,6 +11,7 @@ the sessions belong to the listener). So the listener stays, and is only made un
 
 import contextlib
 import ctypes
+import errno
 import os
 import socket
 import struct
@@ -20,10 +21,7 @@ from urllib.parse import urlsplit
 
 import zmq
 
-from bywayd.runtime.sockets import DoorFault, check_private
-
-#: Newcomers that the system lets in before we have looked at them.
-backlog: Final = 100
+from bywayd.runtime.sockets import DoorFault, backlog, check_endpoint
 
 _attach_filter: Final = 26  # SO_ATTACH_FILTER
 _detach_filter: Final = 27  # SO_DETACH_FILTER
@@ -72,18 +70,20 @@ class IpcEntrance:
 
 
 class TcpEntrance:
-    """A port of the loopback interface; port 0 takes any that is free."""
+    """A port of an interface, or of all (host `*`); port 0 takes any that is free."""
 
     def __init__(self, sock: "zmq.Socket[bytes]", endpoint: str) -> None:
         parts = urlsplit(endpoint)
         host, port = str(parts.hostname), parts.port or 0
+        host = "0.0.0.0" if host == "*" else host
         family = socket.AF_INET6 if ":" in host else socket.AF_INET
         try:
             self._listener = socket.create_server((host, port), family=family, backlog=backlog)
         except OSError as fault:
-            raise DoorFault(
-                f"cannot listen on {endpoint}: {fault.strerror} (is another daemon there?)"
-            ) from fault
+            why = "is another daemon there?"
+            if isinstance(fault, socket.gaierror) or fault.errno == errno.EADDRNOTAVAIL:
+                why = "that is no address of this host"
+            raise DoorFault(f"cannot listen on {endpoint}: {fault.strerror} ({why})") from fault
         # An accept that waits would hold up all messages.
         self._listener.setblocking(False)
         shown = f"[{host}]" if ":" in host else host
@@ -113,9 +113,12 @@ def bind(sock: "zmq.Socket[bytes]", endpoint: str) -> Entrance:
     Bind a socket to an endpoint of this host.
 
     Raises:
-        DoorFault: If the address is not of this host alone, or cannot be had.
+        DoorFault: If the address cannot be had; or if others can reach it, and the socket lets
+            in whoever comes.
     """
-    check_private(endpoint)
+    # The socket itself is asked, not whoever calls: this is the last moment to notice.
+    is_guarded = bool(sock.curve_server) and bool(sock.getsockopt(zmq.ZAP_ENFORCE_DOMAIN))
+    check_endpoint(endpoint, has_keys=is_guarded)
     if endpoint.startswith("ipc://"):
         return IpcEntrance(sock, endpoint)
     return TcpEntrance(sock, endpoint)

@@ -148,6 +148,8 @@ class Loop:
             receive = functools.partial(outside.receive, name, self.hand_in)
             self._watch.add(outside.sockets[name], receive)
         self._watch.add(outside.sockets["events"], outside.receive_subscriptions)
+        if outside.admission is not None:
+            self._watch.add(outside.admission.socket, outside.admission.answer)
         for monitor in outside.doorman.monitors:
             self._watch.add(monitor, self._look_at_doors)
         self._watch.add(self._alarm, self._tick_if_due)
@@ -311,6 +313,8 @@ class Loop:
     def _vitals(self) -> None:
         self._vitals_at = Instant(self._clock.now().ns + vitals_every_ns)
         self._crew.kill_silent()
+        if self._outside.admission is not None:
+            self._outside.admission.look()
         if self._said_lines > said_lines_max:
             self._logger.warning("crew.said.more", lines=self._said_lines - said_lines_max)
         self._said_lines = 0
@@ -324,8 +328,10 @@ class Loop:
         self.hand_in(events.Vitals(self._measured(), self._clock.wall_s(), memory))
 
     def _measured(self) -> dict[str, int]:
-        doorman = self._outside.doorman
+        doorman, admission = self._outside.doorman, self._outside.admission
         return {
+            "admitted_total": 0 if admission is None else admission.admitted,
+            "turned_away_total": 0 if admission is None else admission.rejected,
             "peers": doorman.peers,
             "doors_shut_total": doorman.shut_count,
             "accepts_failed_total": doorman.failures,

@@ -7,24 +7,29 @@ the peer is gone, or does not read, and will ask again.
 
 from collections import OrderedDict
 from collections.abc import Callable
-from typing import Final, TypeAlias
+from pathlib import Path
+from typing import Final, Literal, TypeAlias
 
 import zmq
 
 from byway import frames
-from byway.errors import SenderFault
+from byway.errors import BadValue, SenderFault
+from byway.keys import Keys
 from byway.messages import Listening
 from byway.packed import Bytes
 from bywayd.core import effects, events
+from bywayd.core.rights import Rights
 from bywayd.runtime.doorman import Doorman
 from bywayd.runtime.entrances import Entrance, bind, leave_all
 from bywayd.runtime.sockets import (
+    DoorFault,
     SocketName,
     can_read,
     connections_allowed,
     last_words_linger_ms,
     open_socket,
 )
+from bywayd.runtime.zap import Admission, Tell
 
 #: Messages of one socket in one turn. Decoding and handling one takes some 0.1 ms, and a turn
 #: shall not take longer than a millisecond or two.
@@ -37,6 +42,7 @@ replayed_max: Final = 48
 #: A frame from this size on is handed over instead of copied.
 large_bytes: Final = 64 * 1024
 
+Channel: TypeAlias = Literal["requests", "updates"]
 Hand: TypeAlias = Callable[[events.Event], None]
 
 _DOORS: Final = {"requests": frames.REQUESTS, "updates": frames.UPDATES}
@@ -45,12 +51,28 @@ _DOORS: Final = {"requests": frames.REQUESTS, "updates": frames.UPDATES}
 class Outside:
     """Owns context, sockets, entrances and the last events of each topic."""
 
-    def __init__(self, endpoints: dict[SocketName, tuple[str, ...]], epoch: str) -> None:
+    def __init__(
+        self,
+        endpoints: dict[SocketName, tuple[str, ...]],
+        epoch: str,
+        *,
+        list_file: Path | None = None,
+        keys: Keys | None = None,
+        peers_max: int | None = None,
+        tell: Tell = lambda event, **facts: None,
+    ) -> None:
         """
         Open and bind all sockets.
 
+        Args:
+            keys: Of the daemon; without, whoever reaches a socket may do everything.
+            list_file: Who is allowed, with keys.
+            peers_max: How many may be connected at once; None: as many as can be.
+            tell: Called with what the log should have.
+
         Raises:
-            DoorFault: If an endpoint cannot be had; then all are closed again.
+            DoorFault: If an endpoint cannot be had, or the list cannot be used; then all are
+                closed again.
         """
         self._epoch = epoch
         self._context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
@@ -61,17 +83,29 @@ class Outside:
         self._last: OrderedDict[bytes, list[Bytes]] = OrderedDict()
         #: Replies that could not be handed over, and events that no queue had room for.
         self.undelivered = 0
+        #: None: everybody is let in.
+        self.admission: Admission | None = None
         try:
+            if keys is not None and list_file is not None:
+                self.admission = Admission(self._context, keys, list_file, tell)
             for name, wanted in endpoints.items():
                 self.sockets[name] = open_socket(self._context, name)
+                if self.admission is not None:
+                    self.admission.guard(self.sockets[name])
                 bound = [bind(self.sockets[name], endpoint) for endpoint in wanted]
                 self._entrances += bound
                 self.endpoints[name] = [entrance.endpoint for entrance in bound]
+        except BadValue as fault:
+            self._close_sockets(0)
+            raise DoorFault(fault.text) from fault
         except BaseException:
             self._close_sockets(0)
             raise
         self.doorman = Doorman(
-            self._context, list(self.sockets.values()), self._entrances, connections_allowed()
+            self._context,
+            list(self.sockets.values()),
+            self._entrances,
+            connections_allowed(peers_max),
         )
 
     # -- in ---------------------------------------------------------------------------------
@@ -83,14 +117,23 @@ class Outside:
             # To ask first costs a third of the exception that says that there is nothing more.
             if not can_read(sock):
                 return
-            identity, *rest = sock.recv_multipart(zmq.DONTWAIT)
-            peer = events.Peer("requests" if name == "requests" else "updates", identity)
+            identity, rights = self._sender_of(sock)
+            rest = sock.recv_multipart(zmq.DONTWAIT)
+            channel: Channel = "requests" if name == "requests" else "updates"
+            peer = events.Peer(channel, identity, rights)
             try:
                 came = frames.decode(rest, door)
             except SenderFault as fault:
                 hand(events.Unreadable(peer, fault))
             else:
                 hand(events.Received(peer, came))
+
+    def _sender_of(self, sock: "zmq.Socket[bytes]") -> tuple[bytes, Rights | None]:
+        """Take in the first frame of a message: who sent it, and what he may do."""
+        if self.admission is None:
+            return sock.recv(zmq.DONTWAIT), None
+        frame = sock.recv(zmq.DONTWAIT, copy=False)
+        return frame.bytes, self.admission.rights_of(frame)
 
     def receive_subscriptions(self) -> None:
         """Tell new subscribers that they are heard, and what was said last."""
@@ -153,6 +196,8 @@ class Outside:
     def _close_sockets(self, linger_ms: int) -> None:
         for sock in self.sockets.values():
             sock.close(linger=linger_ms)
+        if self.admission is not None:
+            self.admission.close()
         self._context.term()
         leave_all(self._entrances)
 

@@ -18,6 +18,8 @@ from typing import Any, Final
 
 import structlog
 
+from byway.errors import BadValue
+from byway.keys import Keys, load_keys
 from byway.messages import build_all
 from bywayd.core.effects import LayerFlags
 from bywayd.core.front import Front
@@ -31,7 +33,13 @@ from bywayd.runtime.logs import start_logging
 from bywayd.runtime.loop import Loop
 from bywayd.runtime.outside import Outside
 from bywayd.runtime.processes import signals_of_the_front
-from bywayd.runtime.sockets import DoorFault, IpcFolder, SocketName, ipc_folders
+from bywayd.runtime.sockets import (
+    DoorFault,
+    IpcFolder,
+    SocketName,
+    ipc_folders,
+    told_endpoints,
+)
 from bywayd.runtime.staff import Staff, StaffSettings, TemplateFailed
 from bywayd.runtime.watch import Watch
 from bywayd.settings import Settings, state_folder
@@ -113,10 +121,18 @@ def _serve(settings: Settings, skills: str, logs: Any) -> int:
         staff = Staff(staff_settings, memory, watch, loop.reports())
         closing.callback(staff.end)
         staff.start()
-        outside = Outside(endpoints, epoch)
+        outside = Outside(
+            endpoints,
+            epoch,
+            keys=_keys(settings),
+            list_file=Path(settings.keys.allowed or ""),
+            peers_max=settings.sockets.connections_max,
+            tell=log.warning,
+        )
         closing.callback(outside.close)
         core = Front(_front_settings(settings, outside), epoch, secrets.randbits(63))
-        log.info("daemon.listening", epoch=epoch, **outside.endpoints)
+        allowed = None if outside.admission is None else len(outside.admission)
+        log.info("daemon.listening", epoch=epoch, allowed=allowed, **outside.endpoints)
         build_all()  # otherwise the first message of each kind would cost some milliseconds
         # What exists now stays; the collector need not go through it in the middle of a turn.
         gc.collect()
@@ -124,6 +140,15 @@ def _serve(settings: Settings, skills: str, logs: Any) -> int:
         why = loop.run(core, outside, staff, signals)
         log.info("daemon.ended", why=why)
     return cannot_work if loop.has_failed else ended_well
+
+
+def _keys(settings: Settings) -> Keys | None:
+    if settings.keys.file is None:
+        return None
+    try:
+        return load_keys(settings.keys.file)
+    except BadValue as fault:
+        raise DoorFault(fault.text) from fault
 
 
 def _hold(folder: Path) -> IpcFolder:
@@ -187,8 +212,10 @@ def _front_settings(settings: Settings, outside: Outside) -> FrontSettings:
             if layer.expected_period_s is not None
         },
         track_expires_s=settings.site.track_expires_s,
-        updates_endpoints=tuple(outside.endpoints["updates"]),
-        events_endpoints=tuple(outside.endpoints["events"]),
+        updates_endpoints=told_endpoints(
+            settings.sockets.tell_updates, outside.endpoints["updates"]
+        ),
+        events_endpoints=told_endpoints(settings.sockets.tell_events, outside.endpoints["events"]),
         software=f"bywayd {metadata.version('byway')}",
         workers=settings.workers.count,
         margin_s=settings.answers.margin_s,

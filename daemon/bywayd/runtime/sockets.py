@@ -1,9 +1,9 @@
 """
 Every socket to the outside, with every option in this one place.
 
-Three sockets: `requests` and `updates` are ROUTERs, `events` is an XPUB. Each binds one TCP
-endpoint on loopback and one ipc endpoint. Without keys nobody can be told from anybody else,
-so an address that others can reach is refused. What a bound means when it is reached:
+Three sockets: `requests` and `updates` are ROUTERs, `events` is an XPUB. Each binds TCP and ipc
+endpoints. Without keys nobody can be told from anybody else, so an address that others can reach
+is refused. What a bound means when it is reached:
 
 * a peer that does not read its replies loses them, and the front counts it (ROUTER_MANDATORY
   with DONTWAIT: without it they vanish unsaid, or the loop stands still);
@@ -28,6 +28,8 @@ from byway import limits
 
 SocketName = Literal["requests", "updates", "events"]
 
+backlog: Final = 100
+
 #: Heartbeats find a stopped or unplugged peer within 4 s (interval + timeout); a peer that
 #: ends is seen at once. They say that a process is there, not that its loop turns.
 OPTIONS_OF_ALL: Final[Mapping[zmq.SocketOption, int]] = {
@@ -37,6 +39,8 @@ OPTIONS_OF_ALL: Final[Mapping[zmq.SocketOption, int]] = {
     zmq.HEARTBEAT_TTL: 4000,
     zmq.HANDSHAKE_IVL: 5000,
     zmq.TCP_MAXRT: 5000,
+    # Newcomers that the system lets in before we have looked at them.
+    zmq.BACKLOG: backlog,
 }
 
 OPTIONS: Final[Mapping[SocketName, Mapping[zmq.SocketOption, int]]] = {
@@ -91,12 +95,12 @@ def can_read(sock: "zmq.Socket[bytes]") -> bool:
     return bool(ready & zmq.POLLIN)
 
 
-def check_private(endpoint: str) -> None:
+def check_endpoint(endpoint: str, *, has_keys: bool = False) -> None:
     """
-    Refuse an endpoint that other hosts could reach.
+    Refuse an endpoint that cannot be, or that other hosts could reach without keys.
 
     Raises:
-        DoorFault: If it is neither ipc nor TCP on a loopback address.
+        DoorFault: If it is neither ipc nor TCP; without keys, if not on a loopback address.
     """
     parts = urlsplit(endpoint)
     if parts.scheme == "ipc":
@@ -107,16 +111,37 @@ def check_private(endpoint: str) -> None:
             )
         return
     if parts.scheme == "tcp" and parts.hostname is not None:
-        if parts.hostname == "localhost":
+        if has_keys or parts.hostname == "localhost":
             return
         with contextlib.suppress(ValueError):
             if ipaddress.ip_address(parts.hostname).is_loopback:
                 return
         raise DoorFault(
             f"will not listen on {endpoint}: there are no keys, so anybody who reaches that "
-            "address could move the obstacles; use tcp://127.0.0.1:PORT or ipc"
+            "address could move the obstacles; use tcp://127.0.0.1:PORT or ipc, or make keys "
+            "(byway keys) and name them in the settings"
         )
     raise DoorFault(f"cannot listen on {endpoint!r}: write tcp://127.0.0.1:PORT or ipc:///path")
+
+
+def told_endpoints(told: Iterable[str], bound: Iterable[str]) -> tuple[str, ...]:
+    """
+    Return what clients are to be told: what the settings say, or else where a socket is bound.
+
+    A host that is told counts. The one that a socket is bound to says little about how clients
+    reach it, so 0.0.0.0 is told in its place: the host that they came by.
+    """
+    return tuple(told) or tuple(_by_any_host(endpoint) for endpoint in bound)
+
+
+def _by_any_host(endpoint: str) -> str:
+    parts = urlsplit(endpoint)
+    if parts.scheme != "tcp" or parts.hostname is None:
+        return endpoint
+    with contextlib.suppress(ValueError):
+        if ipaddress.ip_address(parts.hostname).is_loopback:
+            return endpoint
+    return f"tcp://0.0.0.0:{parts.port}"
 
 
 def ipc_folders(endpoints: Iterable[str]) -> set[Path]:
@@ -167,9 +192,11 @@ class IpcFolder:
         os.close(self._lock)
 
 
-def connections_allowed(reserve: int = 200) -> int:
+def connections_allowed(wanted: int | None = None, reserve: int = 200) -> int:
     """
     Return how many peers may be connected at once, and raise the limit of descriptors first.
+
+    As many as wanted, or 10,000, where there are descriptors for them.
 
     libzmq ends the whole process when an ipc listener runs out of descriptors, and spins a
     core when a TCP listener does. Half is kept for those that are accepted between two looks,
@@ -182,4 +209,4 @@ def connections_allowed(reserve: int = 200) -> int:
             soft = hard
     if soft == resource.RLIM_INFINITY:
         soft = 1_000_000
-    return max(1, min(10_000, (soft - min(reserve, soft // 2)) // 2))
+    return max(1, min(wanted or 10_000, (soft - min(reserve, soft // 2)) // 2))

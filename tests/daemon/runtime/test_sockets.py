@@ -12,7 +12,7 @@ from bywayd.runtime.entrances import bind, leave_all
 from bywayd.runtime.sockets import (
     DoorFault,
     IpcFolder,
-    check_private,
+    check_endpoint,
     connections_allowed,
     ipc_folders,
     open_socket,
@@ -84,7 +84,7 @@ def test_a_reply_to_an_unknown_peer_is_an_error_and_not_a_loss(opened):
     ],
 )
 def test_addresses_of_this_host_alone_are_good(endpoint):
-    check_private(endpoint)
+    check_endpoint(endpoint)
 
 
 @pytest.mark.parametrize(
@@ -163,7 +163,7 @@ def test_the_folders_are_those_of_the_ipc_endpoints(tmp_path):
 def test_the_limit_of_descriptors_is_raised_and_part_of_it_kept_back():
     told = "import resource as r; r.setrlimit(r.RLIMIT_NOFILE, (500, 1000));"
     told += "from bywayd.runtime.sockets import connections_allowed as c;"
-    told += "print(c(200), r.getrlimit(r.RLIMIT_NOFILE)[0])"
+    told += "print(c(reserve=200), r.getrlimit(r.RLIMIT_NOFILE)[0])"
     printed = subprocess.run([sys.executable, "-c", told], capture_output=True, check=True).stdout
     assert printed.split() == [b"400", b"1000"]
     assert connections_allowed() >= 1
