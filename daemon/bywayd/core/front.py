@@ -67,26 +67,15 @@ class Front:
         self.workers = Roster("worker", settings.workers, _manners(settings))
         self.surveyors = Roster("surveyor", 1, _manners(settings, surveyor=True))
         self.clerks = Roster("clerk", int(settings.keeps), _manners(settings, clerk=True))
-        self.ledger = Ledger(settings, self.outbox, self.health)
-        self.keeping = Keeping(settings, self.outbox, self.health, self.clerks, self.ledger)
-        self.guards = Guards(settings, self.outbox, self.health)
-        self.guarding = Guarding(settings, self.outbox, self.health, self.guards)
-        self.surveying = Surveying(
-            settings,
-            self.outbox,
-            self.health,
-            self.snapshots,
-            self.surveyors,
-            self.ledger,
-            self.guards,
-            self.guarding,
-        )
-        self.answering = Answering(
-            settings, self.outbox, self.health, self.snapshots, self.guarding
-        )
-        self.dispatch = Dispatch(
-            settings, self.outbox, self.health, self.snapshots, self.workers, self.answering
-        )
+        shared = (settings, self.outbox, self.health)
+        self.ledger = Ledger(*shared)
+        self.keeping = Keeping(*shared, self.clerks, self.ledger)
+        self.guards = Guards(*shared)
+        self.guarding = Guarding(*shared, self.guards)
+        guarded = (self.guards, self.guarding)
+        self.surveying = Surveying(*shared, self.snapshots, self.surveyors, self.ledger, *guarded)
+        self.answering = Answering(*shared, self.snapshots, self.guarding)
+        self.dispatch = Dispatch(*shared, self.snapshots, self.workers, self.answering)
         self.intake = Intake(
             settings,
             seed,
@@ -98,18 +87,9 @@ class Front:
             self.dispatch,
             self.ledger,
             self.surveying,
-            self.guards,
-            self.guarding,
+            *guarded,
         )
-        self.rerouting = Rerouting(
-            settings,
-            seed,
-            self.outbox,
-            self.health,
-            self.guards,
-            self.answering,
-            self.dispatch,
-        )
+        self.rerouting = Rerouting(*shared, seed, self.guards, self.answering, self.dispatch)
         # -- what the runtime measured last ---------------------------------------------------
         self.vitals: events.Vitals | None = None
         #: The wall clock and the front's own, read at the same moment; and when it all began.

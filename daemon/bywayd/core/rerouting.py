@@ -72,9 +72,9 @@ class Rerouting:
     def __init__(
         self,
         settings: FrontSettings,
-        seed: int,
         outbox: Outbox,
         health: Health,
+        seed: int,
         guards: Guards,
         answering: Answering,
         dispatch: Dispatch,
