@@ -14,6 +14,7 @@ from bywayd.commands.bench import bench
 from bywayd.commands.check import check
 from bywayd.commands.demo import demo
 from bywayd.commands.health import health
+from bywayd.commands.keys import app as keys
 from bywayd.commands.listen import listen
 from bywayd.commands.put import put
 from bywayd.commands.serve import serve
@@ -31,6 +32,8 @@ app = typer.Typer(
 )
 for _command in (serve, demo, ask, put, site, listen, health, check, bench, warm):
     app.command()(_command)
+
+app.add_typer(keys, name="keys")
 
 
 def main() -> None:

@@ -10,6 +10,7 @@ from bywayd.commands.shared import (
     DEFAULT_ENDPOINT,
     AsJson,
     Endpoint,
+    KeyFile,
     Status,
     console,
     say_json,
@@ -61,6 +62,7 @@ def ask(
     ] = None,
     rows: Annotated[bool, typer.Option("--rows", help="Print the route's table as well.")] = False,
     endpoint: Endpoint = DEFAULT_ENDPOINT,
+    keys: KeyFile = None,
     as_json: AsJson = False,
 ) -> None:
     """Ask the daemon for a route, and show what it answers."""
@@ -68,7 +70,7 @@ def ask(
 
     start_pose, goal_pose = _pose(start), _pose(goal)
     better: list[byway.Better] = []
-    with byway.Client(endpoint) as client:
+    with byway.Client(endpoint, keys=keys) as client:
         answer = client.replan(
             vehicle,
             start=start_pose,

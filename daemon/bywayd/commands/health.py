@@ -8,6 +8,7 @@ from bywayd.commands.shared import (
     DEFAULT_ENDPOINT,
     AsJson,
     Endpoint,
+    KeyFile,
     Status,
     console,
     say_json,
@@ -22,12 +23,13 @@ def health(
         bool, typer.Option("--openmetrics", help="Print OpenMetrics text for a scraper.")
     ] = False,
     endpoint: Endpoint = DEFAULT_ENDPOINT,
+    keys: KeyFile = None,
     as_json: AsJson = False,
 ) -> None:
     """Show how the daemon is; exit status 1 when it does not take replans."""
     import byway
 
-    with byway.Client(endpoint) as client:
+    with byway.Client(endpoint, keys=keys) as client:
         record = client.health()
     if openmetrics:
         from bywayd.commands.openmetrics import openmetrics as text_of

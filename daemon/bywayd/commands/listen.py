@@ -4,7 +4,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from bywayd.commands.shared import DEFAULT_ENDPOINT, AsJson, Endpoint, say_json
+from bywayd.commands.shared import DEFAULT_ENDPOINT, AsJson, Endpoint, KeyFile, say_json
 
 if TYPE_CHECKING:
     import byway
@@ -17,13 +17,14 @@ def listen(
     ] = None,
     seconds: Annotated[float | None, typer.Option(help="End after so long.")] = None,
     endpoint: Endpoint = DEFAULT_ENDPOINT,
+    keys: KeyFile = None,
     as_json: AsJson = False,
 ) -> None:
     """Show better routes and health records as they are published, a line each."""
     import byway
 
     topics = topic or ["better", "health", "guard", "layers"]
-    with byway.Client(endpoint) as client:
+    with byway.Client(endpoint, keys=keys) as client:
         for event in client.listen(topics, timeout_s=seconds):
             if as_json:
                 say_json(_as_dict(event))

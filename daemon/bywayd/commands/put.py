@@ -9,6 +9,7 @@ from bywayd.commands.shared import (
     DEFAULT_ENDPOINT,
     AsJson,
     Endpoint,
+    KeyFile,
     Status,
     console,
     fail,
@@ -38,6 +39,7 @@ def put(
     ] = "id",
     expires: Annotated[float | None, typer.Option(help="Seconds until it is gone.")] = None,
     endpoint: Endpoint = DEFAULT_ENDPOINT,
+    keys: KeyFile = None,
     as_json: AsJson = False,
 ) -> None:
     """
@@ -55,7 +57,7 @@ def put(
         fail(Status.USAGE, f"{file}: {fault.strerror}")
     except GeoJsonFault as fault:
         fail(Status.NO, str(fault))
-    with byway.Client(endpoint) as client:
+    with byway.Client(endpoint, keys=keys) as client:
         revision = _send(
             client, layer, shapes, durable, outlines, replace=replace, expires_in_s=expires
         )

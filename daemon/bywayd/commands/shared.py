@@ -3,6 +3,7 @@
 import json
 import sys
 from enum import IntEnum
+from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any, Final, NoReturn
 
 import typer
@@ -34,6 +35,15 @@ Endpoint = Annotated[
     str,
     typer.Option(
         "--endpoint", "-e", envvar="BYWAY_ENDPOINT", help="Requests socket of the daemon."
+    ),
+]
+KeyFile = Annotated[
+    Path | None,
+    typer.Option(
+        "--keys",
+        envvar="BYWAY_KEY_FILE",
+        help="Key file for a daemon that uses keys (byway keys).",
+        show_default=False,
     ),
 ]
 AsJson = Annotated[bool, typer.Option("--json", help="Print JSON for a program to read.")]

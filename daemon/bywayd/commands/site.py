@@ -5,7 +5,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from bywayd.commands.shared import DEFAULT_ENDPOINT, AsJson, Endpoint, console, say_json
+from bywayd.commands.shared import DEFAULT_ENDPOINT, AsJson, Endpoint, KeyFile, console, say_json
 
 if TYPE_CHECKING:
     import byway
@@ -23,13 +23,14 @@ def site(
         Path | None, typer.Option(help="Draw the site into this file (png, svg, pdf).")
     ] = None,
     endpoint: Endpoint = DEFAULT_ENDPOINT,
+    keys: KeyFile = None,
     as_json: AsJson = False,
 ) -> None:
     """Show layers, what moves, and guarded routes."""
     import byway
 
     box_m = None if box is None else _box(box)
-    with byway.Client(endpoint) as client:
+    with byway.Client(endpoint, keys=keys) as client:
         view = client.site(layers=layer, box_m=box_m, guards=True)
     if picture is not None:
         draw(view, picture, box_m)

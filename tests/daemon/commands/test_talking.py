@@ -60,8 +60,8 @@ class FakeClient:
     answer: byway.Answer | Exception = ANSWER
     asked: dict[str, Any]
 
-    def __init__(self, endpoint: str) -> None:
-        FakeClient.asked = {"endpoint": endpoint}
+    def __init__(self, endpoint: str, keys: Path | None = None) -> None:
+        FakeClient.asked = {"endpoint": endpoint, "keys": keys}
 
     def __enter__(self) -> "FakeClient":
         return self
