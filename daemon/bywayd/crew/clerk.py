@@ -48,7 +48,7 @@ class Clerk:
     def run(self) -> None:
         """Open the file, say ready, then do what comes until the channel is closed."""
         try:
-            store = KeepStore.open(Path(self._next()["file"]), time.time())
+            store = KeepStore.open(Path(self._next()["file"]), _wall_s())
         except KeepFault as fault:
             self._channel.wait_put({"say": "unfit", "text": str(fault)})
             return
@@ -104,7 +104,7 @@ class Clerk:
 
     def _recall(self, store: KeepStore, message: Mapping[str, Any]) -> None:
         table, after = message["place"]
-        found, place = store.recall((table, after), time.time(), recall_count_max, recall_bytes_max)
+        found, place = store.recall((table, after), _wall_s(), recall_count_max, recall_bytes_max)
         self._channel.wait_put(
             {"say": "recalled", "task": message["task"], "changes": found, "place": place}
         )
@@ -120,9 +120,15 @@ class Clerk:
         self._channel.wait_put({"say": what, **told, **more})
 
 
+def _wall_s() -> float:
+    # The one clock that goes on while the machine is off; it may jump, and a later end is better
+    # than none.
+    return time.time_ns() * 1e-9
+
+
 def _with_expiries(changes: Iterable[Mapping[str, Any]]) -> Iterable[Change]:
     """Turn the time that is left, as the front tells it, into one of the wall clock."""
-    wall_s, host_ns = time.time(), time.monotonic_ns()
+    wall_s, host_ns = _wall_s(), time.monotonic_ns()
     for change in changes:
         expires_ns = change["expires_ns"]
         left_s = None if expires_ns is None else (expires_ns - host_ns) * 1e-9
