@@ -213,6 +213,18 @@ def kept_after(daemon: Daemon, file: Path, obstacle_id: str) -> float | None:
     return kept(copy / file.name).get(obstacle_id)
 
 
+def test_the_clerk_dies_with_its_front_and_the_next_one_has_the_file(started, meet):
+    first = started()
+    peer = meet(first)
+    peer.decided(put(peer, "a", 1.0))
+    (clerk,) = (pid for name, pid in first.family().items() if "clerk" in name)
+    first.process.kill()
+    first.process.wait()
+    second = started()  # at once: the file may still be locked
+    assert meet(second).ask(messages.Health()).layers[LAYER].obstacles == 1
+    assert not _lives(clerk)
+
+
 def test_a_clerk_that_stands_still_holds_up_durable_layers_only(started, meet):
     daemon = started()
     durable, live = meet(daemon), meet(daemon)
