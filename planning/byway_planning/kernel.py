@@ -22,6 +22,7 @@ from typing import Any, Final, TypeVar
 
 import numba
 from numba import types
+from numba.core.caching import NullCache
 
 from byway_planning import kernel_cache
 
@@ -42,6 +43,7 @@ _SCALARS: Final[dict[str, Any]] = {
 }
 _NAMED: dict[type, Any] = {}
 _ENTRIES: dict[str, tuple[Any, Any]] = {}
+_DISPATCHERS: list[Any] = []
 _WARM: set[str] = set()
 _REHEARSALS: list[Callable[[], None]] = []
 
@@ -85,6 +87,7 @@ def kernel(*signature: Part, allocates: bool = False) -> Callable[[F], F]:
 
     def decorate(function: F) -> F:
         dispatcher = _dispatcher(function, allocates)
+        _DISPATCHERS.append(dispatcher)
         if signature:
             name = f"{function.__module__}.{function.__qualname__}"
             _ENTRIES[name] = (dispatcher, tuple(numba_type(part) for part in signature))
@@ -137,7 +140,8 @@ def warm(progress: Callable[[int, int, str], None] | None = None) -> None:
     Args:
         progress: Called before each kernel with (done, total, name).
 
-    A cache entry that cannot be read (a full disk, a torn file) is thrown away and built again.
+    A cache entry that cannot be read (a torn file) is thrown away and built again; where none can
+    be written any more (a full disk), kernels are built and not kept.
     """
     for done, (name, (dispatcher, signature)) in enumerate(list(_ENTRIES.items())):
         if name in _WARM:
@@ -149,12 +153,24 @@ def warm(progress: Callable[[int, int, str], None] | None = None) -> None:
         except Exception as fault:  # what a pickle of nonsense raises is anybody's guess
             log.warning("building %s without its cache, which gave %r", name, fault)
             kernel_cache.forget(dispatcher.py_func.__module__)
-            dispatcher.compile(signature)
+            _compile_anyhow(name, dispatcher, signature)
         dispatcher.disable_compile()
         _WARM.add(name)
 
     while _REHEARSALS:
         _REHEARSALS.pop(0)()
+
+
+def _compile_anyhow(name: str, dispatcher: Any, signature: Any) -> None:
+    try:
+        dispatcher.compile(signature)
+    except OSError as fault:
+        # It cannot be kept (a full disk, a folder that has become read-only), which is no reason
+        # to do without it. Those that it calls would meet the same.
+        log.warning("keeping no kernels any more: %s gave %r", name, fault)
+        for each in _DISPATCHERS:
+            each._cache = NullCache()
+        dispatcher.compile(signature)
 
 
 def rehearsal(function: Callable[[], None]) -> Callable[[], None]:

@@ -4,15 +4,22 @@ Where compiled kernels are kept between runs, and when they are out of date.
 numba looks only at the file of the function itself when it decides whether a cached kernel
 still fits; a change in a called function of another file goes unnoticed. Here the stamp of a
 kernel covers its own module and every module of this package that it imports, however far
-away, so an edit rebuilds what it touches and nothing else. Entries are found by module name,
-not by path: a cache that was warmed while an image was built still fits after a copy.
+away, so an edit rebuilds what it touches and nothing else. Entries are found by module name and
+stamp, not by path: a cache that was warmed while an image was built still fits after a copy, and
+two versions do not overwrite each other's.
 
 The folder is the first of these that can be written: `BYWAY_CACHE_DIR`, `CACHE_DIRECTORY`
 (set by service managers), the user's cache folder, a private folder in the temporary folder.
 Cache entries are pickles, so the folder must belong to the user and be closed to others.
+
+`BYWAY_WARM_DIR` may name another one, such as an image brings along on a file system that cannot
+be written: what it has is copied when it is missed. numba has to write beside what it reads (it
+probes for that, and keeps there what it builds for a CPU that the image does not know), so the
+folder that can be written is the one that is used.
 """
 
 import ast
+import contextlib
 import functools
 import hashlib
 import os
@@ -22,11 +29,15 @@ from collections.abc import Callable, Iterator
 from importlib import metadata
 from importlib.util import find_spec, resolve_name
 from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 from numba.core.caching import _CacheLocator
 
 PACKAGE = "byway_planning"
+#: Of each module; a developer goes back and forth between some.
+VERSIONS_KEPT: Final = 4
+
+_NAME: Final = f"kernels-numba{metadata.version('numba')}"
 
 
 def _candidates() -> Iterator[Path]:
@@ -42,7 +53,7 @@ def _candidates() -> Iterator[Path]:
 def cache_root() -> Path | None:
     """Return the first folder that is ours and can be written, or None."""
     for folder in _candidates():
-        root = folder / f"kernels-numba{metadata.version('numba')}"
+        root = folder / _NAME
         try:
             root.mkdir(parents=True, exist_ok=True, mode=0o700)
             if root.stat().st_uid != os.getuid() or root.stat().st_mode & 0o022:
@@ -105,7 +116,63 @@ def forget(module: str) -> None:
     root = cache_root()
     if root is not None:
         for name in closure_of(module):
-            shutil.rmtree(root / name, ignore_errors=True)
+            folder = root / _folder_of(name)
+            shutil.rmtree(folder, ignore_errors=True)
+            # So that it is not copied again: it was the same that has just failed.
+            with contextlib.suppress(OSError):
+                folder.mkdir(mode=0o700, exist_ok=True)
+
+
+def _folder_of(module: str) -> str:
+    return f"{module}-{stamp_of(module)[:16]}"
+
+
+def _warm_root() -> Path | None:
+    """Return the folder that an image has brought along, if nobody else could have changed it."""
+    told = os.environ.get("BYWAY_WARM_DIR")
+    if not told:
+        return None
+    root = Path(told) / _NAME
+    try:
+        facts = root.stat()
+    except OSError:
+        return None
+    is_safe = facts.st_uid in (0, os.getuid()) and not facts.st_mode & 0o022
+    return root if is_safe else None
+
+
+def _prepare(module: str, root: Path) -> Path:
+    """Return the folder for the kernels of a module as it is now, with what is there already."""
+    folder = root / _folder_of(module)
+    if folder.is_dir():
+        return folder
+    warm = _warm_root()
+    made = Path(tempfile.mkdtemp(prefix=".making-", dir=root))
+    try:
+        if warm is not None and (warm / folder.name).is_dir():
+            # Contents alone: what is brought along may be for reading only.
+            for entry in (warm / folder.name).iterdir():
+                shutil.copyfile(entry, made / entry.name)
+        made.rename(folder)
+    except OSError:
+        # Somebody else was quicker, the disk is full, or a file cannot be read: do without.
+        shutil.rmtree(made, ignore_errors=True)
+        folder.mkdir(mode=0o700, exist_ok=True)
+    _prune(module, root)
+    return folder
+
+
+def _prune(module: str, root: Path) -> None:
+    """Throw away what is left of old versions of a module."""
+
+    def age(folder: Path) -> float:
+        try:
+            return -folder.stat().st_mtime
+        except OSError:
+            return 0.0
+
+    for folder in sorted(root.glob(f"{module}-*"), key=age)[VERSIONS_KEPT:]:
+        shutil.rmtree(folder, ignore_errors=True)
 
 
 class ClosureLocator(_CacheLocator):  # type: ignore[misc]
@@ -113,7 +180,7 @@ class ClosureLocator(_CacheLocator):  # type: ignore[misc]
 
     def __init__(self, module: str, line: int, root: Path) -> None:
         self._module, self._line = module, line
-        self._path = str(root / module)
+        self._path = str(_prepare(module, root))
 
     def get_cache_path(self) -> str:
         return self._path
@@ -129,8 +196,8 @@ class ClosureLocator(_CacheLocator):  # type: ignore[misc]
         root = cache_root()
         if root is None:
             return None
-        locator = cls(function.__module__, function.__code__.co_firstlineno, root)
         try:
+            locator = cls(function.__module__, function.__code__.co_firstlineno, root)
             locator.ensure_cache_path()
         except OSError:
             return None

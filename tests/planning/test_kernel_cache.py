@@ -1,5 +1,6 @@
 """Compiled kernels on disk: found again, rebuilt when stale or broken, done without if need be."""
 
+import errno
 import importlib
 import logging
 import os
@@ -11,6 +12,7 @@ from typing import Any
 
 import numba
 import pytest
+from numba.core import caching
 
 from byway_planning import kernel, kernel_cache
 
@@ -121,7 +123,7 @@ def test_a_broken_cache_is_thrown_away_and_built_again(
     module: str, suffix: str, damage: str,
 ) -> None:  # fmt: skip
     start()
-    files = list((tmp_path / "cache" / module).glob(f"*{suffix}"))
+    files = list(tmp_path.glob(f"cache/{module}-*/*{suffix}"))
     assert files
     for file in files:
         file.write_bytes(DAMAGES[damage](file.read_bytes()))
@@ -141,9 +143,9 @@ def test_a_broken_cache_of_a_called_kernel_is_thrown_away_too(
 ) -> None:
     """It is read when the entry itself has to be compiled again."""
     start()
-    for file in (tmp_path / "cache" / "cached_room.outer").iterdir():
+    for file in tmp_path.glob("cache/cached_room.outer-*/*"):
         file.unlink()
-    for file in (tmp_path / "cache" / "cached_room.inner").iterdir():
+    for file in tmp_path.glob("cache/cached_room.inner-*/*"):
         file.write_bytes(DAMAGES[damage](file.read_bytes()))
     assert start()(3.0) == 7.0
     assert hits(start()) == 1
@@ -236,3 +238,87 @@ def test_a_folder_of_somebody_else_is_not_trusted(
     monkeypatch.setattr(os, "getuid", lambda: me + 1)
     elsewhere = find()
     assert elsewhere is None or elsewhere.parent != tmp_path / "first"
+
+
+@pytest.fixture
+def image(start: Start, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
+    """What an image brings along, with a cache folder that is empty as yet."""
+    start()
+    image = tmp_path / "image" / kernel_cache._NAME
+    image.parent.mkdir()
+    (tmp_path / "cache").rename(image)
+    (tmp_path / "cache").mkdir(mode=0o700)
+    monkeypatch.setenv("BYWAY_WARM_DIR", str(image.parent))
+    return image
+
+
+def contents(folder: Path) -> dict[str, bytes]:
+    found = (file for file in folder.rglob("*") if file.is_file())
+    return {str(file.relative_to(folder)): file.read_bytes() for file in found}
+
+
+def test_what_an_image_brings_along_is_used_and_stays_as_it_is(
+    start: Start, image: Path, tmp_path: Path
+) -> None:
+    before = contents(image)
+    assert len(before) == 4  # index and code of two kernels
+    for folder in (*image.iterdir(), image):
+        folder.chmod(0o500)
+    found = start()
+    assert found(3.0) == 7.0
+    assert hits(found) == 1
+    assert contents(image) == before
+    assert contents(tmp_path / "cache") == before
+
+
+def test_what_an_image_does_not_have_is_added_to_the_folder_that_can_be_written(
+    start: Start, image: Path, tmp_path: Path
+) -> None:
+    for file in image.glob("cached_room.outer-*/*"):
+        file.unlink()
+    assert hits(start()) == 0
+    assert hits(start()) == 1
+    assert len(contents(image)) == 2
+    assert len(contents(tmp_path / "cache")) == 4
+
+
+def test_an_image_of_another_version_is_no_use(start: Start, image: Path, tmp_path: Path) -> None:
+    (tmp_path / "cached_room" / "inner.py").write_text(INNER.replace("2.0", "5.00"))
+    assert start()(3.0) == 16.0
+    assert hits(start()) == 1
+
+
+@pytest.mark.parametrize("damage", DAMAGES)
+def test_what_is_broken_in_an_image_is_built_again(start: Start, image: Path, damage: str) -> None:
+    for file in image.rglob("*.nb?"):
+        file.write_bytes(DAMAGES[damage](file.read_bytes()))
+    assert start()(3.0) == 7.0
+    assert hits(start()) == 1
+
+
+def test_what_others_could_have_put_into_an_image_is_not_trusted(start: Start, image: Path) -> None:
+    image.chmod(0o777)
+    assert hits(start()) == 0
+
+
+def test_on_a_full_disk_kernels_are_built_and_not_kept(
+    start: Start, monkeypatch: pytest.MonkeyPatch, caplog: pytest.LogCaptureFixture
+) -> None:
+    def is_full(*_: object) -> None:
+        raise OSError(errno.ENOSPC, "No space left on device")
+
+    monkeypatch.setattr(kernel, "_DISPATCHERS", [])
+    monkeypatch.setattr(caching.IndexDataCacheFile, "_save_index", is_full)
+    with caplog.at_level(logging.WARNING):
+        assert start()(3.0) == 7.0
+    assert "keeping no kernels any more" in caplog.text
+
+
+def test_few_old_versions_are_kept(start: Start, tmp_path: Path) -> None:
+    for version in range(2 * kernel_cache.VERSIONS_KEPT):
+        (tmp_path / "cached_room" / "inner.py").write_text(INNER.replace("2.0", f"{version}.0"))
+        assert start()(3.0) == 3.0 * version + 1.0
+    for module in ("inner", "outer"):
+        kept = list((tmp_path / "cache").glob(f"cached_room.{module}-*"))
+        assert len(kept) == kernel_cache.VERSIONS_KEPT
+    assert hits(start()) == 1
