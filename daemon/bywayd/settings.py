@@ -137,7 +137,11 @@ class SocketsSection(Section):
     def _only_where_allowed_and_once(
         cls, endpoints: tuple[str, ...], info: ValidationInfo
     ) -> tuple[str, ...]:
-        resolved = tuple(text.replace("{runtime}", str(runtime_folder())) for text in endpoints)
+        # Only where it is wanted: in a container there may be no place for such a folder.
+        resolved = tuple(
+            text.replace("{runtime}", str(runtime_folder())) if "{runtime}" in text else text
+            for text in endpoints
+        )
         taken = [endpoint for others in info.data.values() for endpoint in others]
         for endpoint in resolved:
             _check_endpoint(endpoint, on_loopback=cls._on_loopback)

@@ -162,13 +162,14 @@ def read_guarded(path: Path, *, is_secret: bool) -> str:
         descriptor = os.open(path, os.O_RDONLY | os.O_CLOEXEC | os.O_NONBLOCK)
     except OSError as fault:
         raise _bad(path, f"cannot be read: {fault.strerror}") from None
-    with open(descriptor, "rb") as opened:
-        facts = os.fstat(descriptor)
-        _check_guarded(path, facts, is_secret=is_secret)
-        try:
+    try:
+        _check_guarded(path, os.fstat(descriptor), is_secret=is_secret)
+        with open(descriptor, "rb", closefd=False) as opened:
             return opened.read(file_bytes_max).decode()
-        except (OSError, UnicodeDecodeError):
-            raise _bad(path, "cannot be read as text") from None
+    except (OSError, UnicodeDecodeError):
+        raise _bad(path, "cannot be read as text") from None
+    finally:
+        os.close(descriptor)
 
 
 def _check_guarded(path: Path, facts: os.stat_result, *, is_secret: bool) -> None:

@@ -30,22 +30,67 @@ def demo(
     seconds: Annotated[float, typer.Option(min=1.0, help="How long the yard is open.")] = 30.0,
     seed: Annotated[int, typer.Option(help="Another seed is another day.")] = 1,
     picture: Annotated[Path, typer.Option(help="Where the drawing goes.")] = Path("yard.png"),
+    connect: Annotated[
+        str | None,
+        typer.Option(
+            help="Requests socket of a daemon that is there for the demo, and for nothing else.",
+            show_default=False,
+        ),
+    ] = None,
+    keys: Annotated[
+        Path | None,
+        typer.Option(
+            help="With --connect: a key file, or a folder with one for each: yard.key (source) "
+            "and the vehicles' (driver).",
+            show_default=False,
+        ),
+    ] = None,
     as_json: AsJson = False,
 ) -> None:
     """Let three vehicles work in a brick and timber yard, driven by nothing but the daemon."""
+    if keys is not None and connect is None:
+        raise typer.BadParameter("the demo's own daemon has no keys", param_hint="--keys")
     out = console(to_stderr=as_json)
     out.print("[bold]Byway demo:[/bold] a brick and timber yard, three vehicles, one daemon.")
     out.print(f"Caution: {CAUTION}", style="yellow")
-    with tempfile.TemporaryDirectory(prefix="byway-") as folder:
-        endpoint = f"ipc://{folder}/requests"
-        with _daemon(Path(folder)) as process:
-            _wait_until_ready(endpoint, process, Path(folder), out)
-            report = _run_yard(endpoint, seconds, seed, picture, out)
-        if process.returncode != 0:
-            report["went_wrong"].append(f"the daemon ended with status {process.returncode}")
+    if connect is None:
+        report = _with_own_daemon(seconds, seed, picture, out)
+    else:
+        _wait_until_ready(connect, out, keys=keys)
+        _check_purpose(connect, keys)
+        report = _run_yard(connect, seconds, seed, picture, out, keys=keys)
     if as_json:
         say_json(report)
     _conclude(report, picture, out)
+
+
+def _with_own_daemon(seconds: float, seed: int, picture: Path, out: "Console") -> dict[str, Any]:
+    with tempfile.TemporaryDirectory(prefix="byway-") as folder:
+        endpoint = f"ipc://{folder}/requests"
+        with _daemon(Path(folder)) as process:
+            _wait_until_ready(endpoint, out, process, Path(folder) / "daemon.log")
+            report = _run_yard(endpoint, seconds, seed, picture, out)
+        if process.returncode != 0:
+            report["went_wrong"].append(f"the daemon ended with status {process.returncode}")
+    return report
+
+
+def _check_purpose(endpoint: str, keys: Path | None) -> None:
+    """Refuse a daemon with a site of its own: an invented yard has no place in it."""
+    import byway
+    from bywayd.yard.desk import LAYERS, SITE, key_of, layer_of
+    from bywayd.yard.scene import LIMITS_M, ROUNDS
+
+    with byway.Client(endpoint, keys=key_of(keys, SITE)) as client:
+        site = client.site(box_m=(0.0, 0.0, 0.1, 0.1), cells=False)
+        others = set(client.health().layers) - {*LAYERS, *(layer_of(each.unit) for each in ROUNDS)}
+    if site.limits_m is None or tuple(site.limits_m) != LIMITS_M or others:
+        fail(
+            Status.NO,
+            f"the daemon at {endpoint} is not there for the demo, which would replace what stands "
+            f"on its site. One for the demo has [site] limits_m = {list(LIMITS_M)}, and no layers "
+            "but the demo's.",
+        )
 
 
 @contextlib.contextmanager
@@ -88,30 +133,52 @@ def _daemon(folder: Path) -> Iterator[subprocess.Popen[bytes]]:
 
 
 def _wait_until_ready(
-    endpoint: str, process: subprocess.Popen[bytes], folder: Path, out: "Console"
+    endpoint: str,
+    out: "Console",
+    process: subprocess.Popen[bytes] | None = None,
+    log: Path | None = None,
+    keys: Path | None = None,
 ) -> None:
+    """Wait for the daemon of a process of ours, or for one that somebody else has started."""
     import byway
+    from bywayd.yard.desk import SITE, key_of
 
     began_s = time.monotonic()
     told = False
     while time.monotonic() - began_s < READY_S_MAX:
-        if process.poll() is not None:
+        if process is not None and process.poll() is not None:
             break
-        with contextlib.suppress(byway.BywayError), byway.Client(endpoint) as client:
-            if client.hello().state == "ready":
-                return
+        try:
+            with byway.Client(endpoint, keys=key_of(keys, SITE)) as client:
+                if client.hello().state == "ready":
+                    return
+        except byway.SenderFault as fault:  # no key, or none that is any good
+            fail(Status.REFUSED, fault.text)
+        except byway.BywayError:
+            pass
         if not told and time.monotonic() - began_s > 3.0:
             told = True
-            out.print("The daemon compiles its planning kernels; the first time takes a while.")
+            if process is None:
+                out.print(f"Waiting for the daemon at {endpoint}.")
+            else:
+                out.print("The daemon compiles its planning kernels; the first time takes a while.")
         time.sleep(0.1)
-    last = (folder / "daemon.log").read_text(errors="replace").splitlines()[-12:]
+    if log is None:
+        fail(Status.UNREACHABLE, f"no daemon at {endpoint} has got ready")
+    last = log.read_text(errors="replace").splitlines()[-12:]
     fail(Status.NO, "the daemon did not get ready. Its last lines:\n" + "\n".join(last))
 
 
 def _run_yard(
-    endpoint: str, seconds: float, seed: int, picture: Path, out: "Console"
+    endpoint: str,
+    seconds: float,
+    seed: int,
+    picture: Path,
+    out: "Console",
+    *,
+    keys: Path | None = None,
 ) -> dict[str, Any]:
-    arguments = [endpoint, str(seconds), str(seed), str(picture)]
+    arguments = [endpoint, str(seconds), str(seed), str(picture), str(keys or "")]
     yard = subprocess.Popen(
         [sys.executable, "-m", "bywayd.yard.simulate", *arguments], stdout=subprocess.PIPE
     )

@@ -10,6 +10,7 @@ import queue
 import threading
 import time
 from collections.abc import Iterable, Mapping, Sequence
+from pathlib import Path
 from typing import Any, Final
 
 import byway
@@ -28,6 +29,19 @@ BEGIN_S: Final = 10.0
 ENDING_S: Final = 5.0
 
 
+#: Who tells of the site, as its key is called.
+SITE: Final = "yard"
+#: What stands, what is stacked, and what the crane puts down.
+LAYERS: Final = ("fixed", "stacks", "packs")
+
+
+def key_of(keys: Path | None, name: str) -> Path | None:
+    """Return the key file of the site or of a unit: the one for all, or the one in a folder."""
+    if keys is None or not keys.is_dir():
+        return keys
+    return keys / f"{name}.key"
+
+
 def layer_of(unit: str) -> str:
     """Return the layer that holds a unit's own outline; its own replans leave it out."""
     return f"unit.{unit}"
@@ -36,8 +50,9 @@ def layer_of(unit: str) -> str:
 class LiveDesk:
     """A desk (see world.py) with a daemon behind it. Use it as a context manager."""
 
-    def __init__(self, endpoint: str, units: Iterable[str]) -> None:
+    def __init__(self, endpoint: str, units: Iterable[str], keys: Path | None = None) -> None:
         self._endpoint = endpoint
+        self._keys = keys
         self._ending = threading.Event()
         self._begun = threading.Event()
         #: What went wrong outside of a question, a sentence each. Appended by any thread.
@@ -61,8 +76,11 @@ class LiveDesk:
 
     def vehicles(self) -> dict[str, Mapping[str, Any]]:
         """Return the vehicles that the daemon knows, as it tells their settings."""
-        with byway.Client(self._endpoint) as client:
+        with self._client(SITE) as client:
             return {known.name: known.settings for known in client.vehicles()}
+
+    def _client(self, name: str) -> byway.Client:
+        return byway.Client(self._endpoint, keys=key_of(self._keys, name))
 
     def open(self, claims: Mapping[str, Claim]) -> None:
         """
@@ -118,7 +136,7 @@ class LiveDesk:
     # -- a thread a unit ---------------------------------------------------------------------
 
     def _plan_for_ever(self, unit: str) -> None:
-        with byway.Client(self._endpoint) as client:
+        with self._client(unit) as client:
             while (ask := self._asks[unit].get()) is not None:
                 self._replies.put(self._plan(client, ask))
 
@@ -159,8 +177,8 @@ class LiveDesk:
     def _tell_for_ever(self) -> None:
         shown: dict[str, Claim] = {}
         try:
-            with byway.Client(self._endpoint) as client:
-                for layer, masses in (("fixed", BUILDINGS), ("stacks", STACKS), ("packs", ())):
+            with self._client(SITE) as client:
+                for layer, masses in zip(LAYERS, (BUILDINGS, STACKS, ()), strict=True):
                     client.replace_layer(layer, polygons=_polygons(masses), discs=_discs(masses))
                 self._show(client, shown)
                 self._begun.set()

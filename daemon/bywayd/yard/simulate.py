@@ -27,9 +27,11 @@ PROGRESS_EVERY_S: Final = 1.0
 CATCH_UP_S_MAX: Final = 1.0
 
 
-def simulate(endpoint: str, seconds: float, seed: int, picture: Path | None) -> Report:
+def simulate(
+    endpoint: str, seconds: float, seed: int, picture: Path | None, keys: Path | None = None
+) -> Report:
     """Run the yard for so many seconds against a daemon, and report."""
-    desk = LiveDesk(endpoint, [round_.unit for round_ in ROUNDS])
+    desk = LiveDesk(endpoint, [round_.unit for round_ in ROUNDS], keys)
     world = World(desk.vehicles(), desk, seed)
     desk.open(world.claims)
     # What exists now stays; the collector need not go through it in the middle of a step.
@@ -100,9 +102,10 @@ def _say(line: Mapping[str, Any]) -> None:
 
 
 def main(arguments: list[str]) -> None:
-    """Entry of the process: endpoint, seconds, seed, and a picture's path or an empty text."""
-    endpoint, seconds, seed, picture = arguments
-    report = simulate(endpoint, float(seconds), int(seed), Path(picture) if picture else None)
+    """Entry of the process: endpoint, seconds, seed, and paths or empty texts: picture, keys."""
+    endpoint, seconds, seed, *texts = arguments
+    picture, keys = (Path(text) if text else None for text in texts)
+    report = simulate(endpoint, float(seconds), int(seed), picture, keys)
     _say({"report": {**asdict(report), "went_wrong": report.went_wrong()}})
 
 
