@@ -122,6 +122,8 @@ def _settings(folder: Path, workers: int, limits_m: tuple[float, float, float, f
         f'requests = ["{ipc["requests"]}", "tcp://127.0.0.1:0"]',
         f'updates = ["{ipc["updates"]}"]',
         f'events = ["{ipc["events"]}"]',
+        "[keep]",
+        f'file = "{folder}/kept.sqlite"',
         "[workers]",
         f"count = {workers}",
         "[log]",

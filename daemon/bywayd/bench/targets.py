@@ -67,6 +67,7 @@ SITE_TARGETS: Final = (
     Target("put_idle_ms.p50", "small change acknowledged, ms, p50"),
     Target("put_busy_ms.p99", "the same, workers busy, p99", most=5.0),
     Target("patch_busy_ms.p99", "patch, workers busy, ms, p99", most=5.0),
+    Target("durable_busy_ms.p99", "change of a durable layer, workers busy, ms, p99", most=50.0),
     Target("updates_per_s", "small changes a second, workers busy", least=500.0),
     Target("alert_ms.p50", "alert after the acknowledgement, 50 guards, ms, p50"),
     Target("alert_ms.p99", "the same, p99", most=5.0),

@@ -33,6 +33,7 @@ def updates(endpoint: str, rng: Rng, count: int, seconds: float) -> Figures:
             told["updates_per_s"] = _many(endpoint, seconds)
         client.replace_layer("live")
         client.replace_layer("seen")
+        client.replace_layer("kept")
     return told
 
 
@@ -41,16 +42,22 @@ def _one_by_one(client: byway.Client, rng: Rng, count: int, state: str) -> Figur
         x, y = rng.uniform(*AWAY_M, 2)
         client.put("live", polygons={"crate": _crate(float(x), float(y))})
 
+    def durable() -> None:
+        x, y = rng.uniform(*AWAY_M, 2)
+        client.put("kept", polygons={"crate": _crate(float(x), float(y))})
+
     def patch() -> None:
         cells = (rng.uniform(size=(PATCH_CELLS, PATCH_CELLS)) < 0.02).astype(np.uint8)
         x, y = (CELL_M * round(float(v) / CELL_M) for v in rng.uniform(*AWAY_M, 2))
         client.patch("seen", (x, y), CELL_M, cells)
 
+    client.claim("kept", durable=True)
+    durable()
     put()
     patch()
     return {
         f"{kind}_{state}_ms": spread([wall_s(change) for _ in range(count)], MS)
-        for kind, change in (("put", put), ("patch", patch))
+        for kind, change in (("put", put), ("patch", patch), ("durable", durable))
     }
 
 
