@@ -15,10 +15,11 @@ import numpy as np
 import numpy.typing as npt
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
-from matplotlib.patches import Circle, PathPatch, Polygon
+from matplotlib.lines import Line2D
+from matplotlib.patches import Circle, Patch, PathPatch, Polygon
 from matplotlib.path import Path as Outline
 
-from bywayd.outlines import Points, placed
+from bywayd.outlines import Points, disc_outline, placed
 
 Box = tuple[float, float, float, float]
 
@@ -31,6 +32,18 @@ class Block(Protocol):
 
     @property
     def y_m(self) -> float: ...
+
+    @property
+    def distance_m(self) -> float: ...
+
+    @property
+    def kind(self) -> str: ...
+
+    @property
+    def layer(self) -> str: ...
+
+    @property
+    def id(self) -> str: ...
 
 
 PAPER: Final = "#f6f1e4"
@@ -45,16 +58,25 @@ PRINTS: Final[dict[str, tuple[str, str, str]]] = {
     "other": ("#cdbfa8", INK, "\\\\\\\\"),
     "outline": ("none", INK, ""),
 }
-#: Inks for routes and units, told apart in print and by most colour-blind readers.
-INKS: Final = ("#8c2f39", "#1f5673", "#5b7b3a", "#7a4b8f", "#a8642a")
+#: Inks for routes and units. Colour-blind readers tell them apart too, and from `ALARM` and `INK`
+#: (a test looks through their eyes); nothing is told by its colour alone.
+INKS: Final = ("#3d16b0", "#9f1512", "#26816d", "#9a6ae1", "#981486")
 
-#: What is in the way, and what moves.
-ALARM: Final = "#d2691e"
+#: What is in the way, and what moves; the ground that it may cover is a fifth of it on paper.
+ALARM: Final = "#d06c1f"
+SWEEP: Final = "#eed6bd"
 
 _PIXELS_PER_INCH: Final = 110
 _WIDTH_INCHES: Final = 11.0
 #: The margin around the ground that is shown, as a share of its width.
 _EDGE_RATIO: Final = 0.03
+#: The strip below the ground: title and notes, and a line for every four entries of the legend.
+_TITLE_INCHES: Final = 0.62
+_NOTE_INCHES: Final = 0.17
+_LEGEND_ROW_INCHES: Final = 0.21
+_LEGEND_COLUMNS: Final = 5
+#: Of a label, in points.
+_LABEL_SIZE: Final = 7
 
 
 def box_around(
@@ -84,13 +106,12 @@ class Plan:
         edge_m = _EDGE_RATIO * (x_m_max - x_m_min)
         width_m, height_m = x_m_max - x_m_min + 2 * edge_m, y_m_max - y_m_min + 2 * edge_m
         self._title, self._notes = title, list(notes)
-        # The strip below the ground holds the title block; it does not grow with the site.
-        strip_inches = 1.15
-        height_inches = min(3 * _WIDTH_INCHES, _WIDTH_INCHES * height_m / width_m) + strip_inches
-        self._figure = Figure((_WIDTH_INCHES, height_inches), _PIXELS_PER_INCH, facecolor=PAPER)
+        self._ground_inches = min(3 * _WIDTH_INCHES, 0.96 * _WIDTH_INCHES * height_m / width_m)
+        self._figure = Figure(dpi=_PIXELS_PER_INCH, facecolor=PAPER)
         FigureCanvasAgg(self._figure)
-        strip_ratio = strip_inches / height_inches
-        self._axes = self._figure.add_axes((0.045, strip_ratio, 0.94, 0.985 - strip_ratio))
+        self._axes = self._figure.add_axes((0.0, 0.0, 1.0, 1.0))
+        self._legend: dict[str, dict[str, Any]] = {}
+        self._set_size()
         self._axes.set(
             xlim=(x_m_min - edge_m, x_m_max + edge_m),
             ylim=(y_m_min - edge_m, y_m_max + edge_m),
@@ -102,7 +123,18 @@ class Plan:
         self._axes.tick_params(colors=INK, labelsize=7, direction="in")
         for spine in self._axes.spines.values():
             spine.set(color=INK, linewidth=1.2)
-        self._legend: dict[str, dict[str, Any]] = {}
+
+    def _set_size(self) -> None:
+        """Give the strip below the ground the room that it needs; the ground keeps its scale."""
+        rows = -(-len(self._legend) // _LEGEND_COLUMNS)
+        notes_inches = _NOTE_INCHES * len(self._notes)
+        self._strip_inches = _TITLE_INCHES + notes_inches + _LEGEND_ROW_INCHES * rows + 0.12
+        height_inches = 0.12 + self._ground_inches + self._strip_inches
+        self._figure.set_size_inches(_WIDTH_INCHES, height_inches)
+        share = 1.0 / height_inches
+        self._axes.set_position(
+            (0.04, self._strip_inches * share, 0.945, self._ground_inches * share)
+        )
 
     def limits(self, box_m: Box) -> None:
         """Draw the border of the site."""
@@ -121,7 +153,7 @@ class Plan:
         x_m, y_m = corner_m
         extent = (x_m, x_m + columns * cell_m, y_m, y_m + rows * cell_m)
         limits = (*self._axes.get_xlim(), *self._axes.get_ylim())
-        self._axes.imshow(colours, extent=extent, origin="lower", interpolation="nearest", zorder=1)
+        self._axes.imshow(colours, extent=extent, origin="lower", interpolation="nearest", zorder=2)
         self._axes.axis(limits)  # imshow would zoom in on the cells
 
     def polygons(
@@ -140,7 +172,7 @@ class Plan:
             path = _path_of([ring, *(holes or {}).get(name, ())])
             self._axes.add_patch(PathPatch(path, zorder=3, **style))
             if named:
-                self._label(name, _inside(path, ring))
+                self._name(name, path, ring)
 
     def discs(
         self,
@@ -155,15 +187,21 @@ class Plan:
             style = {"facecolor": face, "edgecolor": edge, "hatch": hatch, "linewidth": 0.9}
             self._axes.add_patch(Circle((x_m, y_m), radius_m, zorder=3, **style))
             if named:
-                self._label(name, (x_m, y_m))
+                ring = placed(disc_outline(radius_m, 24), (x_m, y_m, 0.0))
+                self._name(name, _path_of([ring]), ring)
+
+    def key(self, label: str, kind: str) -> None:
+        """Say in the legend what a kind of mass stands for."""
+        self._legend[label] = {"kind": kind}
 
     def sweep(self, ring_m: npt.ArrayLike) -> None:
         """Draw ground that something may cover in the next seconds."""
         ring = np.asarray(ring_m, np.float64)
-        self._axes.add_patch(Polygon(ring, facecolor=ALARM, alpha=0.13, linewidth=0.0, zorder=4))
-        self._axes.add_patch(
-            Polygon(ring, fill=False, edgecolor=ALARM, linewidth=0.8, linestyle=":", zorder=4)
-        )
+        # All edges lie below all faces, so that of pieces that overlap only the outer edge shows.
+        style: dict[str, Any] = {"edgecolor": ALARM, "linewidth": 1.8, "linestyle": (0, (1, 1.2))}
+        self._axes.add_patch(Polygon(ring, fill=False, zorder=1.0, **style))
+        self._axes.add_patch(Polygon(ring, facecolor=SWEEP, linewidth=0.0, zorder=1.1))
+        self._legend["ground that it may cover"] = {"kind": "sweep"}
 
     def mover(
         self,
@@ -183,8 +221,8 @@ class Plan:
         if np.hypot(vx, vy) > 0.05:
             style = {"arrowstyle": "-|>", "color": INK, "mutation_scale": 9}
             self._axes.annotate("", xy=tip, xytext=(x_m, y_m), arrowprops=style, zorder=8)
-        top = float(ring[:, 1].max())
-        self._label(name, (x_m, top + 0.02 * float(np.ptp(self._axes.get_ylim()))))
+        self._label(name, (x_m, float(ring[:, 1].max())), above=True)
+        self._legend["moves, and where to in a second"] = {"kind": "mover"}
 
     def guarded(
         self,
@@ -195,20 +233,27 @@ class Plan:
         ink: str,
     ) -> None:
         """Draw a guarded route: what is driven thin, what is ahead strong, where it is blocked."""
-        points = np.asarray(poses, np.float64)[:, :2]
-        along = np.concatenate([[0.0], np.hypot(*np.diff(points, axis=0).T).cumsum()])
-        ahead = int(np.searchsorted(along, progress_m))
-        self.path(points[: ahead + 1], ink, width=0.7)
-        self.path(points[max(ahead - 1, 0) :], ink, f"guarded route of {unit}", width=2.0)
-        self._arrows(points[max(ahead - 1, 0) :], ink)
-        at = points[min(ahead, len(points) - 1)]
-        self._axes.plot(*at, marker="o", markersize=6, color=ink, zorder=9)
+        rows = np.asarray(poses, np.float64)
+        along_m = np.concatenate([[0.0], np.hypot(*np.diff(rows[:, :2], axis=0).T).cumsum()])
+        here = [float(np.interp(progress_m, along_m, rows[:, k])) for k in range(2)]
+        row = max(0, min(int(np.searchsorted(along_m, progress_m)), len(rows) - 1))
+        ahead = np.vstack([here, rows[row:, :2]])
+        self.path(np.vstack([rows[:row, :2], here]), ink, width=0.8)
+        self.path(ahead, ink, width=2.2)
+        self._arrows(ahead, ink)
+        self._legend["guarded route, ahead"] = {"color": INK, "linewidth": 2.2}
+        self._legend["driven already"] = {"color": INK, "linewidth": 0.8}
+        turned = float(np.degrees(rows[row, 2])) - 90.0
+        self._axes.plot(
+            *here, marker=(3, 0, turned), markersize=11, color=ink, markeredgecolor=PAPER, zorder=9
+        )
+        self._label(unit, here, above=True)
         if blocked is not None:
-            self._axes.plot(
-                blocked.x_m, blocked.y_m, marker="X", markersize=13, color=ALARM,
-                markeredgecolor=INK, zorder=10,
-            )  # fmt: skip
-            self._legend["blocked"] = {"color": ALARM, "marker": "X", "linestyle": "none"}
+            style: dict[str, Any] = {"color": ALARM, "marker": "X", "markeredgecolor": INK}
+            self._axes.plot(blocked.x_m, blocked.y_m, markersize=12, zorder=10, **style)
+            text = f"{blocked.id or blocked.layer or blocked.kind} in {blocked.distance_m:.1f} m"
+            self._label(text, (blocked.x_m, blocked.y_m), below=True)
+            self._legend["where it is blocked"] = {**style, "linestyle": "none", "markersize": 9}
 
     def way(self, points_m: npt.ArrayLike, label: str) -> None:
         """Draw a way that would be open if something moved."""
@@ -223,8 +268,7 @@ class Plan:
             place_m[0], place_m[1], marker="X", markersize=12, color=ALARM, markeredgecolor=INK,
             zorder=10,
         )  # fmt: skip
-        offset = 0.03 * float(np.ptp(self._axes.get_ylim()))
-        self._label(text, (place_m[0], place_m[1] - offset))
+        self._label(text, place_m, below=True)
 
     def path(
         self, points_m: npt.ArrayLike, ink: str, label: str = "", *, width: float = 1.1
@@ -232,7 +276,7 @@ class Plan:
         """Draw where something went."""
         points = np.asarray(points_m, np.float64)
         self._axes.plot(
-            points[:, 0], points[:, 1], color=ink, linewidth=width, alpha=0.85, zorder=5,
+            points[:, 0], points[:, 1], color=ink, linewidth=width, zorder=5,
             solid_capstyle="round",
         )  # fmt: skip
         if label:
@@ -298,14 +342,37 @@ class Plan:
 
     def save(self, file: Path) -> None:
         """Write the drawing; the suffix says the format (png, svg, pdf)."""
+        self._set_size()
         self._title_block()
         self._figure.savefig(file, facecolor=PAPER)
 
-    def _label(self, text: str, place_m: Sequence[float]) -> None:
+    def _name(self, name: str, path: Outline, ring: Points) -> None:
+        """Print the name of a mass where it has room for it, otherwise above it."""
+        place, room_m = _roomiest(path, ring)
+        (x_px, _), (reach_px, _) = self._axes.transData.transform([(0.0, 0.0), (room_m, 0.0)])
+        # Letters are about 0.6 of their height wide.
+        half_px = 0.3 * len(name) * _LABEL_SIZE * _PIXELS_PER_INCH / 72
+        if reach_px - x_px > 0.55 * half_px:
+            self._label(name, place, zorder=4)
+        else:
+            top = (0.5 * (ring[:, 0].min() + ring[:, 0].max()), ring[:, 1].max())
+            self._label(name, top, above=True, zorder=4)
+
+    def _label(
+        self,
+        text: str,
+        place_m: Sequence[float],
+        *,
+        above: bool = False,
+        below: bool = False,
+        zorder: float = 11,
+    ) -> None:
         box = {"boxstyle": "round,pad=0.15", "facecolor": PAPER, "edgecolor": "none", "alpha": 0.85}
-        self._axes.text(
-            place_m[0], place_m[1], text, fontsize=7, color=INK, ha="center", va="center",
-            zorder=9, bbox=box, clip_on=True,
+        self._axes.annotate(
+            text, (place_m[0], place_m[1]), (0, 7 * above - 9 * below), fontsize=_LABEL_SIZE,
+            textcoords="offset points", color=INK, ha="center",
+            va="bottom" if above else "top" if below else "center",
+            zorder=zorder, bbox=box, annotation_clip=True,
         )  # fmt: skip
 
     def _arrows(self, points: Points, ink: str) -> None:
@@ -320,26 +387,39 @@ class Plan:
                 self._axes.annotate("", xy=(x1, y1), xytext=(x0, y0), arrowprops=style, zorder=8)
 
     def _title_block(self) -> None:
-        figure = self._figure
-        inches = figure.get_figheight()
-        top = 0.78 / inches
-        figure.text(0.045, top, self._title, fontsize=13, color=INK, weight="bold", va="top")
-        for row, note in enumerate(self._notes[:3]):
-            at = top - (0.26 + 0.17 * row) / inches
-            figure.text(0.045, at, note, fontsize=8, color=INK, va="top")
+        figure, share = self._figure, 1.0 / self._figure.get_figheight()
+        top_inches = self._strip_inches - 0.3
+        figure.text(0.04, top_inches * share, self._title, fontsize=13, color=INK, weight="bold",
+                    va="top")  # fmt: skip
         figure.text(
-            0.985, 0.12 / inches, "metres from the origin of the site", fontsize=7, color=INK,
-            ha="right",
+            0.985, (top_inches - 0.04) * share, "metres from the origin of the site", fontsize=7,
+            color=INK, ha="right", va="top",
         )  # fmt: skip
+        for row, note in enumerate(self._notes):
+            at = (top_inches - 0.27 - _NOTE_INCHES * row) * share
+            figure.text(0.04, at, note, fontsize=8, color=INK, va="top")
         if self._legend:
-            lines = [
-                self._axes.plot([], [], label=label, **style)[0]
-                for label, style in self._legend.items()
-            ]
+            below_inches = top_inches - 0.27 - _NOTE_INCHES * len(self._notes)
             figure.legend(
-                handles=lines, loc="upper right", bbox_to_anchor=(0.985, top + 0.06 / inches),
-                ncols=min(4, len(lines)), fontsize=8, frameon=False, labelcolor=INK,
+                handles=[_swatch(label, style) for label, style in self._legend.items()],
+                loc="upper left", bbox_to_anchor=(0.034, below_inches * share),
+                ncols=_LEGEND_COLUMNS, fontsize=8, frameon=False, labelcolor=INK,
+                borderpad=0.2, labelspacing=0.45, columnspacing=1.6,
             )  # fmt: skip
+
+
+def _swatch(label: str, style: Mapping[str, Any]) -> Patch | Line2D:
+    """What stands beside a label in the legend."""
+    if "kind" not in style:
+        return Line2D([], [], label=label, **style)
+    if style["kind"] == "sweep":
+        return Patch(facecolor=SWEEP, edgecolor=ALARM, linestyle=":", label=label)
+    if style["kind"] == "mover":
+        return Patch(facecolor=ALARM, edgecolor=INK, label=label)
+    if style["kind"] == "cells":
+        return Patch(facecolor=INK, edgecolor=INK, label=label)
+    face, edge, hatch = PRINTS[style["kind"]]
+    return Patch(facecolor=face, edgecolor=edge, hatch=hatch, label=label)
 
 
 def _path_of(rings: Sequence[npt.ArrayLike]) -> Outline:
@@ -356,19 +436,30 @@ def _is_left(ring: Points) -> bool:
     return bool((x * np.roll(y, -1) - y * np.roll(x, -1)).sum() > 0.0)
 
 
-def _inside(path: Outline, ring: Points) -> tuple[float, float]:
-    """Return a place well inside a mass, for its label: the best of a grid of 15 x 15."""
+def _roomiest(path: Outline, ring: Points) -> tuple[tuple[float, float], float]:
+    """Return a place well inside a mass, the best of a grid of 15 x 15, and its way to the edge."""
     low, high = ring.min(axis=0), ring.max(axis=0)
     shares = (np.arange(15) + 0.5) / 15
     grid = np.stack(np.meshgrid(*(low + (high - low) * shares[:, None]).T), axis=-1).reshape(-1, 2)
-    edges = np.vstack([p.vertices for p in [path]])
     inside = grid[_contains(path, grid)]
     if not len(inside):  # too thin for the grid
         middle = ring.mean(axis=0)
-        return float(middle[0]), float(middle[1])
-    apart = np.hypot(inside[:, None, 0] - edges[:, 0], inside[:, None, 1] - edges[:, 1])
-    best = inside[apart.min(axis=1).argmax()]
-    return float(best[0]), float(best[1])
+        return (float(middle[0]), float(middle[1])), 0.0
+    away = np.min([_to_edges_m(inside, np.asarray(r)) for r in path.to_polygons()], axis=0)
+    # Of places that are as good, the one in the middle.
+    off = np.hypot(*(inside - 0.5 * (low + high)).T)
+    best = int(np.where(away > 0.93 * away.max(), off, np.inf).argmin())
+    return (float(inside[best, 0]), float(inside[best, 1])), float(away[best])
+
+
+def _to_edges_m(points: Points, ring: Points) -> Points:
+    """Return how far points are from a closed ring."""
+    starts, along = ring[:-1], np.diff(ring, axis=0)
+    length2 = np.maximum((along * along).sum(axis=1), 1e-12)
+    to_point = points[:, None] - starts
+    share = np.clip((to_point * along).sum(axis=-1) / length2, 0.0, 1.0)
+    away: Points = np.hypot(*np.moveaxis(to_point - share[..., None] * along, -1, 0)).min(axis=1)
+    return away
 
 
 def _contains(path: Outline, points: Points) -> npt.NDArray[np.bool_]:

@@ -1,5 +1,6 @@
 """`byway site`: what the daemon knows of the site, as a table or a drawing."""
 
+import itertools
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
@@ -129,33 +130,47 @@ def draw(
     """
     from bywayd.picture import INKS, Plan, box_around
 
-    notes = [
-        (
-            f"revision {view.revision}: {len(view.layers)} layers, {len(view.tracks)} moving, "
-            f"{len(view.guards)} guarded routes"
-        ),
-        "tracks with what they sweep, dotted; guarded routes with what is driven, thin",
-    ]
+    notes = [_summary(view)]
     plan = Plan("The site", box_m or box_around(_places(view), 5.0, view.limits_m), notes)
     count = sum(len(told.polygons) + len(told.discs) for told in view.layers.values())
-    prints = ("building", "stack", "pack", "other")
-    for i, told in enumerate(view.layers.values()):
+    named = count <= NAMED_MAX
+    prints = itertools.cycle(("building", "stack", "pack", "other"))
+    for name, told in view.layers.items():
         for patch in told.cells:
             plan.cells(patch.corner_m, patch.cell_m, patch.cells)
-        kind = "outline" if told.outlines_only else prints[i % len(prints)]
-        named = count <= NAMED_MAX
-        plan.polygons(told.polygons, kind, named=named, holes=told.holes)
-        plan.discs(told.discs, kind, named=named)
+        if any((patch.cells == 1).any() for patch in told.cells):
+            plan.key(f"{name}, occupied cells", "cells")
+        if not told.polygons and not told.discs:
+            continue
+        kind = "outline" if told.outlines_only else next(prints)
+        # Outlines of units would be named by their pieces, and there is one such layer a unit.
+        label = "outlines that may be left out" if told.outlines_only else name
+        plan.key(label, kind)
+        plan.polygons(told.polygons, kind, named=named and kind != "outline", holes=told.holes)
+        plan.discs(told.discs, kind, named=named and kind != "outline")
     for track in view.tracks:
         for ring in track.sweep_m:
             plan.sweep(ring)
     for track in view.tracks:
         plan.mover(track.id, track.outline_m, track.pose, track.velocity_mps)
-    for i, guard in enumerate(view.guards):
-        plan.guarded(guard.unit, guard.poses, guard.progress_m, guard.blocked, INKS[i % len(INKS)])
+    for guard, ink in zip(view.guards, itertools.cycle(INKS), strict=False):
+        plan.guarded(guard.unit, guard.poses, guard.progress_m, guard.blocked, ink)
     if view.limits_m is not None:
         plan.limits(view.limits_m)
     plan.save(file)
+
+
+def _summary(view: "byway.SiteView") -> str:
+    blocked = sum(guard.blocked is not None for guard in view.guards)
+    routes = f"{_count(len(view.guards), 'guarded route')}, {blocked} of them blocked"
+    return (
+        f"Revision {view.revision}: {_count(len(view.layers), 'layer')}, "
+        f"{_count(len(view.tracks), 'track')}, {routes if view.guards else 'no guarded routes'}"
+    )
+
+
+def _count(number: int, what: str) -> str:
+    return f"{number} {what}{'' if number == 1 else 's'}"
 
 
 def _places(view: "byway.SiteView") -> list[tuple[float, float]]:
