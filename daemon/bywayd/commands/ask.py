@@ -1,5 +1,6 @@
 """`byway ask`: one replan from the shell."""
 
+import dataclasses
 import math
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any, Final
@@ -63,13 +64,42 @@ def ask(
     rows: Annotated[bool, typer.Option("--rows", help="Print the route's table as well.")] = False,
     endpoint: Endpoint = DEFAULT_ENDPOINT,
     keys: KeyFile = None,
+    site: Annotated[
+        Path | None,
+        typer.Option(help="Plan here, without a daemon, on what this GeoJSON file shows."),
+    ] = None,
+    settings: Annotated[
+        Path | None, typer.Option(help="With --site: the vehicles (TOML); else those built in.")
+    ] = None,
     as_json: AsJson = False,
 ) -> None:
-    """Ask the daemon for a route, and show what it answers."""
+    """
+    Ask for a route, and show what is answered.
+
+    With --site no daemon is needed: does the vehicle fit there, can it turn here? The tightest
+    place of the route is told, and marked on the picture.
+    """
     import byway
 
     start_pose, goal_pose = _pose(start), _pose(goal)
     better: list[byway.Better] = []
+    if site is not None:
+        from bywayd.commands.fitting import fit
+
+        answer, tightest = fit(
+            site, settings, vehicle, start_pose, goal_pose, budget, method, seed, clearance, picture
+        )
+        if as_json:
+            told = None if tightest is None else dataclasses.asdict(tightest)
+            say_json(_as_dict(answer, better) | {"tightest": told})
+        else:
+            _print(console(), answer, better, rows=rows)
+            if tightest is not None:
+                console().print(
+                    f"  tightest place {tightest.at_m:.1f} m along: "
+                    f"{tightest.clearance_m:.3f} m from {tightest.what}"
+                )
+        raise typer.Exit(int(Status.WELL if answer.kind == "route" else Status.NO))
     with byway.Client(endpoint, keys=keys) as client:
         answer = client.replan(
             vehicle,
@@ -84,7 +114,13 @@ def ask(
             on_better=better.append,
         )
         if picture is not None:
-            _draw(client, vehicle, start_pose, goal_pose, answer, picture)
+            from bywayd.commands.answer_picture import draw_answer
+            from bywayd.outlines import outline_of
+
+            known = next(one for one in client.vehicles() if one.name == vehicle)
+            outline_m = outline_of(known.settings)
+            view = client.site()
+            draw_answer(view, vehicle, outline_m, start_pose, goal_pose, answer, picture)
     if as_json:
         say_json(_as_dict(answer, better))
     else:
@@ -174,52 +210,3 @@ def _remedy(remedy: "byway.Remedy") -> str:
         f"  Without {names} a disc of {remedy.disc_radius_m:.2f} m would{sure} get through (there "
         "may be less to move, and the whole vehicle may need more room)."
     )
-
-
-def _draw(
-    client: "byway.Client",
-    vehicle: str,
-    start: Pose,
-    goal: Pose,
-    answer: "byway.Answer",
-    file: Path,
-) -> None:
-    from bywayd.outlines import outline_of
-    from bywayd.picture import INKS, Plan, box_around
-
-    site = client.site()
-    known = next(one for one in client.vehicles() if one.name == vehicle)
-    outline_m = outline_of(known.settings)
-    layers = {n: layer for n, layer in site.layers.items() if n not in answer.left_out}
-    table = None if answer.route is None else answer.route.table
-    shown: list[tuple[float, float]] = [start[:2], goal[:2]]
-    if answer.remedy is not None:
-        shown += [(float(x), float(y)) for x, y in answer.remedy.way_m]
-    if table is not None:
-        shown += list(zip(table["x_m"].tolist(), table["y_m"].tolist(), strict=True))
-    # A large site would leave the route a dot in it.
-    box_m = box_around(shown, margin_m=15.0, within_m=site.limits_m)
-    notes = [f"{answer.kind}, revision {answer.revision}, seed {answer.seed}"]
-    if answer.route is not None:
-        notes.append(
-            f"{answer.route.length_m:.2f} m in {answer.route.duration_s:.1f} s, cost "
-            f"{answer.cost:.2f} {answer.cost_unit}, gap {100 * answer.gap:.1f} %"
-        )
-    plan = Plan(f"One replan for {vehicle}", box_m, notes)
-    for layer in layers.values():
-        for patch in layer.cells:
-            plan.cells(patch.corner_m, patch.cell_m, patch.cells)
-        plan.polygons(layer.polygons, "building", named=True, holes=layer.holes)
-        plan.discs(layer.discs, "building", named=True)
-    if site.limits_m is not None:
-        plan.limits(site.limits_m)
-    if table is not None:
-        plan.swath(outline_m, table)
-        plan.route(table, INKS[0])
-    if answer.remedy is not None:
-        plan.way(answer.remedy.way_m, "way that would be open")
-        for one in answer.remedy.movables:
-            plan.mark((one.x_m, one.y_m), f"would have to move: {one.obstacle}")
-    plan.vehicle(outline_m, start)
-    plan.goal(outline_m, goal)
-    plan.save(file)
