@@ -22,6 +22,11 @@ Position = tuple[float, float]
 Ring = list[Position]
 
 _NOT_A_NAME: Final = re.compile(r"[^A-Za-z0-9_.:/#-]+")
+_KINDS: Final = ("polygons", "discs", "boxes")
+#: Positions in one change, 16 bytes each; what else is in it takes less than the other half.
+POSITIONS_MAX: Final = limits.packed_bytes_max // 32
+#: What programs write that mean degrees after all.
+_DEGREES: Final = re.compile(r"CRS:?84|EPSG:+4326", re.IGNORECASE)
 _GEOMETRIES: Final = (
     "Polygon, MultiPolygon, Point (with a property radius_m), LineString (with a property "
     "width_m), GeometryCollection"
@@ -46,6 +51,21 @@ class Shapes:
     def __len__(self) -> int:
         return len(self.polygons) + len(self.discs) + len(self.boxes)
 
+    def pieces(
+        self, count_max: int = limits.obstacles_max, positions_max: int = POSITIONS_MAX
+    ) -> Iterator["Shapes"]:
+        """Give all shapes in parts that fit into one change each; at least one part."""
+        piece, positions = Shapes(), 0
+        for name, kind in [(n, k) for k in _KINDS for n in getattr(self, k)]:
+            shape = getattr(self, kind)[name]
+            has = len(shape[0]) + sum(map(len, shape[1])) if kind == "polygons" else 1
+            if len(piece) and (len(piece) == count_max or positions + has > positions_max):
+                yield piece
+                piece, positions = Shapes(), 0
+            getattr(piece, kind)[name] = shape
+            positions += has
+        yield piece
+
 
 def read_shapes(file: Path, id_property: str = "id") -> Shapes:
     """
@@ -67,8 +87,11 @@ def read_shapes(file: Path, id_property: str = "id") -> Shapes:
         raise GeoJsonFault(
             f"{file}:{fault.lineno}:{fault.colno}: is no JSON: {fault.msg}"
         ) from None
+    except RecursionError:
+        raise GeoJsonFault(f"{file}: is nested too deep to be a drawing") from None
     reader = _Reader(id_property)
     try:
+        _check_metres(told)
         reader.take(told, "")
     except GeoJsonFault as fault:
         raise GeoJsonFault(f"{file}: {fault}") from None
@@ -153,6 +176,13 @@ class _Reader:
         if any(name in each for each in taken):
             raise GeoJsonFault(f"{place}: the id {name} is there twice")
         into[name] = shape
+
+
+def _check_metres(told: Any) -> None:
+    """Some programs say what their positions are, as an older form of the standard had it."""
+    said = json.dumps(told.get("crs")) if isinstance(told, Mapping) else ""
+    if _DEGREES.search(said):
+        raise GeoJsonFault("crs: the positions are degrees; metres of the site are needed")
 
 
 def _member(told: Any, name: str, place: str) -> Any:

@@ -54,7 +54,7 @@ def test_a_collection_of_all_that_is_taken(tmp_path: Path) -> None:
     assert shapes.discs == {"f2": (3.0, 4.0, 1.5)}
     assert set(shapes.boxes) == {"fence.0", "fence.1"}
     x, y, heading, length, width = shapes.boxes["fence.0"]
-    assert (x, y, length, width) == (1.5, 2.0, pytest.approx(5.2), 0.2)
+    assert (x, y, length, width) == pytest.approx((1.5, 2.0, 5.2, 0.2))
     assert heading == pytest.approx(math.atan2(4, 3))
     assert len(shapes) == 8
 
@@ -63,6 +63,24 @@ def test_a_bare_geometry_and_another_property_for_names(tmp_path: Path) -> None:
     assert set(read(tmp_path, {"type": "Polygon", "coordinates": [SQUARE]}).polygons) == {"g0"}
     one = feature({"type": "Polygon", "coordinates": [SQUARE]}, properties={"name": "Kiln 2"})
     assert set(read(tmp_path, one, id_property="name").polygons) == {"Kiln-2"}
+
+
+def test_a_frame_of_the_site_itself_is_metres(tmp_path: Path) -> None:
+    told = {"type": "Polygon", "coordinates": [SQUARE], "crs": {"properties": {"name": "yard"}}}
+    assert len(read(tmp_path, told)) == 1
+
+
+def test_many_shapes_come_in_parts_that_fit_into_one_change_each() -> None:
+    triangle = [(0.0, 0.0), (1.0, 0.0), (0.0, 1.0)]
+    shapes = Shapes({f"p{k}": (triangle, [triangle]) for k in range(5)}, {"d": (0.0, 0.0, 1.0)})
+    parts = list(shapes.pieces(count_max=2))
+    assert [len(part) for part in parts] == [2, 2, 2]
+    assert {n for part in parts for n in part.polygons} == set(shapes.polygons)
+    assert parts[2].discs == shapes.discs
+    assert [len(part) for part in shapes.pieces(positions_max=12)] == [2, 2, 2]
+    # One that is too large for any change is for the client to refuse.
+    assert [len(part) for part in shapes.pieces(positions_max=3)] == [1] * 6
+    assert [len(part) for part in Shapes().pieces()] == [0]
 
 
 def test_corners_that_are_there_twice_are_left_out(tmp_path: Path) -> None:
@@ -75,7 +93,13 @@ def test_corners_that_are_there_twice_are_left_out(tmp_path: Path) -> None:
     ("told", "said"),
     [
         ("{", r"yard.geojson:1:2: is no JSON"),
+        ("[" * 100_000, "nested too deep"),
         ({}, "the file: has no member 'type'"),
+        ([], "the file: has no member 'type'"),
+        (
+            {"type": "Polygon", "crs": {"properties": {"name": "urn:ogc:def:crs:OGC:1.3:CRS84"}}},
+            "crs: the positions are degrees",
+        ),
         ({"type": "FeatureCollection"}, "has no member 'features'"),
         ({"type": "FeatureCollection", "features": {}}, "features must be an array"),
         ({"type": "FeatureCollection", "features": [{"type": "Polygon"}]}, r"features\[0\]: is a"),

@@ -1,7 +1,7 @@
 """`byway put`: what stands on a site, from a drawing."""
 
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
@@ -88,17 +88,24 @@ def _send(
     expires_in_s: float | None,
 ) -> int:
     """Send everything, in as many changes as it needs; return the last revision."""
+    first, *rest = shapes.pieces()
+    if replace:
+        revision = client.replace_layer(
+            layer, *_told(first), boxes=first.boxes, expires_in_s=expires_in_s,
+            durable=durable, outlines_only=outlines_only,
+        )  # fmt: skip
+    else:
+        client.claim(layer, durable=durable, outlines_only=outlines_only)
+        rest = [first, *rest]
+    for piece in rest:
+        revision = client.put(layer, *_told(piece), expires_in_s, boxes=piece.boxes)
+    return revision
+
+
+def _told(shapes: "Shapes") -> tuple[dict[str, Any], dict[str, tuple[float, float, float]]]:
+    """Return polygons and discs as the client takes them."""
     polygons = {
         name: {"outline": outline, "holes": holes} if holes else outline
         for name, (outline, holes) in shapes.polygons.items()
     }
-    if replace:
-        return client.replace_layer(
-            layer, polygons=polygons, discs=shapes.discs, boxes=shapes.boxes,
-            expires_in_s=expires_in_s, durable=durable,
-            outlines_only=outlines_only,
-        )  # fmt: skip
-    client.claim(layer, durable=durable, outlines_only=outlines_only)
-    return client.put(
-        layer, polygons=polygons, discs=shapes.discs, boxes=shapes.boxes, expires_in_s=expires_in_s
-    )
+    return polygons, shapes.discs

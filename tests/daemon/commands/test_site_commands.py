@@ -74,12 +74,16 @@ class FakeClient:
         FakeClient.told.append(("claim", {"layer": layer, **more}))
         return 3
 
-    def put(self, layer: str, **more: Any) -> int:
-        FakeClient.told.append(("put", {"layer": layer, **more}))
+    def put(
+        self, layer: str, polygons: Any, discs: Any, expires_in_s: float | None, **more: Any
+    ) -> int:
+        shapes = {"polygons": polygons, "discs": discs, "expires_in_s": expires_in_s}
+        FakeClient.told.append(("put", {"layer": layer, **shapes, **more}))
         return 4
 
-    def replace_layer(self, layer: str, **more: Any) -> int:
-        FakeClient.told.append(("replace_layer", {"layer": layer, **more}))
+    def replace_layer(self, layer: str, polygons: Any, discs: Any, **more: Any) -> int:
+        told = {"layer": layer, "polygons": polygons, "discs": discs, **more}
+        FakeClient.told.append(("replace_layer", told))
         return 5
 
 
@@ -176,6 +180,18 @@ def test_put_replaces_a_layer_and_speaks_json(file: Path) -> None:
     ((what, told),) = FakeClient.told
     assert what == "replace_layer"
     assert told["durable"] is False
+
+
+def test_a_large_drawing_goes_in_several_changes(
+    file: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("bywayd.geojson.Shapes.pieces.__defaults__", (1, 100))
+    found = run("put", str(file), "--replace")
+    assert found.exit_code == 0, found.output
+    (first, told), (second, more) = FakeClient.told
+    assert (first, second) == ("replace_layer", "put")
+    assert (len(told["polygons"]), told["discs"]) == (1, {})
+    assert (more["polygons"], more["discs"]) == ({}, {"silo": (1.0, 2.0, 2.0)})
 
 
 def test_what_cannot_be_read_is_said_and_nothing_is_sent(tmp_path: Path) -> None:

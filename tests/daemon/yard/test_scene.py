@@ -2,12 +2,15 @@
 
 import itertools
 import math
+from pathlib import Path
 
 import pytest
 import shapely
 
+from bywayd.geojson import read_shapes
 from bywayd.outlines import outline_of, placed
 from bywayd.settings import load
+from bywayd.yard import scene
 from bywayd.yard.scene import ASIDE, BUILDINGS, LIMITS_M, ROUNDS, STACKS, Station
 from bywayd.yard.shapes import Mass, distance_m
 
@@ -59,3 +62,16 @@ def test_three_vehicles_of_different_size() -> None:
     assert len(areas) == 3
     assert all(a > 1.5 * b for a, b in itertools.pairwise(sorted(areas, reverse=True)))
     assert all(math.isfinite(area) for area in areas)
+
+
+def test_the_drawing_of_the_yard_is_the_yard() -> None:
+    """The example for `byway put` has what the demo has, and a hole and a wall besides."""
+    drawn = read_shapes(Path(scene.__file__).with_name("yard.geojson"))
+    for mass in (*scene.BUILDINGS, *scene.STACKS):
+        ring = [tuple(corner) for corner in mass.ring_m.tolist()]
+        if len(ring) == 1:
+            assert drawn.discs[mass.name] == (*ring[0], mass.radius_m)
+        else:
+            assert drawn.polygons[mass.name] == (ring, [])
+    assert len(drawn.polygons["drying-court"][1]) == 1
+    assert len([name for name in drawn.boxes if name.startswith("fence.")]) == 3
