@@ -18,7 +18,7 @@ def begin(contact: Contact, asked: messages.Replan, on_better: OnBetter | None) 
     contact.enter()
     if on_better is not None:
         yield from contact.listen_to(asked.unit)
-    question = yield from contact.begin(asked)
+    question = yield from contact.begin(asked, wants_better=on_better is not None)
     return Asked(contact, question, asked, on_better)
 
 
@@ -49,8 +49,6 @@ class Asked:
         #: Once it is there.
         self._answer: Answer | None = None
         self.message: Final = message
-        if on_better is not None:
-            contact.want_better(question.id)
 
     @property
     def id(self) -> str:

@@ -151,7 +151,7 @@ class Contact:
             # The caller hears of it, so it must not be sent by some later call.
             self._talk().end(question)
 
-    def begin(self, message: messages.Replan) -> Steps[Question]:
+    def begin(self, message: messages.Replan, *, wants_better: bool = False) -> Steps[Question]:
         """Send a replan, once the daemon has all that it had before."""
         yield from self.meet()
         yield from self._restore()
@@ -162,11 +162,13 @@ class Contact:
             epoch=self.epoch,
             work_s=message.budget_s,
         )
+        if wants_better:
+            self.want_better(question.id)  # the first may come together with `accepted`
         try:
             while not question.is_sent:
                 yield from self.turn(question)
         except BaseException:
-            self._talk().end(question)
+            self.end(question)
             raise
         return question
 

@@ -131,7 +131,7 @@ class FakeDaemon:
         self._poke.connect("inproc://poke")
         self._sockets = {}
         for name, kind in (("requests", zmq.ROUTER), ("updates", zmq.ROUTER), ("events", zmq.XPUB)):
-            sock = self._context.socket(kind)
+            sock = self._socket(kind)
             sock.setsockopt(zmq.LINGER, 0)
             if kind == zmq.XPUB:
                 sock.setsockopt(zmq.XPUB_VERBOSE, 1)
@@ -141,6 +141,9 @@ class FakeDaemon:
             self._sockets[name] = sock
         self._thread = threading.Thread(target=self._live, name="fake-daemon")
         self._thread.start()
+
+    def _socket(self, kind: int) -> Any:
+        return self._context.socket(kind)
 
     def stop(self) -> None:
         """End as a killed process does: all connections gone, what was queued as well."""

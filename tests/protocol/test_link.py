@@ -31,6 +31,11 @@ def context() -> Iterator[zmq.Context]:
         ("tcp://127.0.0.1:7461", ["ipc:///run/b", "tcp://127.0.0.1:9"], "tcp://127.0.0.1:9"),
         ("tcp://yard:7461", ["tcp://127.0.0.1:7462"], "tcp://yard:7462"),
         ("tcp://[::1]:7461", ["tcp://0.0.0.0:7462"], "tcp://[::1]:7462"),
+        ("tcp://yard:7461", ["tcp://[::]:7462"], "tcp://yard:7462"),
+        ("tcp://yard:7461", ["tcp://localhost:7462"], "tcp://yard:7462"),
+        # What the daemon was told to tell holds.
+        ("tcp://yard:7461", ["tcp://192.0.2.1:7462"], "tcp://192.0.2.1:7462"),
+        ("tcp://yard:7461", ["tcp://events.yard:17462"], "tcp://events.yard:17462"),
     ],
 )
 def test_other_sockets_are_where_the_first_was(
