@@ -3,7 +3,7 @@
 import dataclasses
 import math
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any, Final
+from typing import TYPE_CHECKING, Annotated, Any, Final, NoReturn
 
 import typer
 
@@ -84,22 +84,8 @@ def ask(
     start_pose, goal_pose = _pose(start), _pose(goal)
     better: list[byway.Better] = []
     if site is not None:
-        from bywayd.commands.fitting import fit
-
-        answer, tightest = fit(
-            site, settings, vehicle, start_pose, goal_pose, budget, method, seed, clearance, picture
-        )
-        if as_json:
-            told = None if tightest is None else dataclasses.asdict(tightest)
-            say_json(_as_dict(answer, better) | {"tightest": told})
-        else:
-            _print(console(), answer, better, rows=rows)
-            if tightest is not None:
-                console().print(
-                    f"  tightest place {tightest.at_m:.1f} m along: "
-                    f"{tightest.clearance_m:.3f} m from {tightest.what}"
-                )
-        raise typer.Exit(int(Status.WELL if answer.kind == "route" else Status.NO))
+        wishes = (budget, method, seed, clearance, picture)
+        _fit(site, settings, vehicle, start_pose, goal_pose, wishes, rows=rows, as_json=as_json)
     with byway.Client(endpoint, keys=keys) as client:
         answer = client.replan(
             vehicle,
@@ -125,6 +111,34 @@ def ask(
         say_json(_as_dict(answer, better))
     else:
         _print(console(), answer, better, rows=rows)
+    raise typer.Exit(int(Status.WELL if answer.kind == "route" else Status.NO))
+
+
+def _fit(
+    site: Path,
+    settings: Path | None,
+    vehicle: str,
+    start: Pose,
+    goal: Pose,
+    wishes: tuple[float, str, int | None, float | None, Path | None],
+    *,
+    rows: bool,
+    as_json: bool,
+) -> NoReturn:
+    """Plan without a daemon, and end the command."""
+    from bywayd.commands.fitting import fit
+
+    answer, tightest = fit(site, settings, vehicle, start, goal, *wishes)
+    if as_json:
+        told = None if tightest is None else dataclasses.asdict(tightest)
+        say_json(_as_dict(answer, []) | {"tightest": told})
+    else:
+        _print(console(), answer, [], rows=rows)
+        if tightest is not None:
+            console().print(
+                f"  tightest place {tightest.at_m:.1f} m along: {tightest.clearance_m:.3f} m from "
+                f"{tightest.what}"
+            )
     raise typer.Exit(int(Status.WELL if answer.kind == "route" else Status.NO))
 
 
