@@ -89,7 +89,7 @@ def checked_layers(role: str, layers: Iterable[object]) -> tuple[str, ...]:
             raise BadValue(text, {"field": "layers"})
     if checked and role not in ("source", "driver"):
         # An operator with layers would look narrower than it is.
-        raise BadValue(f"layers mean nothing for a {role}", {"field": "layers"})
+        raise BadValue(f"layers mean nothing for the role {role}", {"field": "layers"})
     if len(checked) > patterns_max:
         raise BadValue(f"{len(checked)} layers, the most are {patterns_max}", {"field": "layers"})
     return tuple(str(pattern) for pattern in checked)
