@@ -145,12 +145,17 @@ def test_the_settings_in_the_containers_are_good_and_those_of_the_demo(
 
 def test_everybody_in_the_yard_gets_a_key_that_allows_what_he_does_and_no_more() -> None:
     (script,) = SERVICES["keys"]["command"]
-    assert re.search(rf"add /etc/byway/keys {SITE} --role source", script)
-    layers = re.findall(r"--layer '?([^\s']+)", script)
-    assert layers == [*LAYERS, "unit.*"]
-    assert all(layer_of(each.unit).startswith("unit.") for each in ROUNDS)
+    joined = script.replace("\\\n", " ")
     (units,) = re.findall(r"for unit in ([^;]+);", script)
-    assert sorted(units.split()) == sorted(each.unit for each in ROUNDS)
-    assert "$$unit --role driver" in script
-    assert "look --role watcher" in script
-    assert "operator" not in script
+    added = {
+        name: (role, set(re.findall(r"--layer '?([^\s']+)", rest)))
+        for names, role, rest in re.findall(r"keys add \S+ (\S+) --role (\w+)(.*)", joined)
+        for name in (units.split() if names == "$$unit" else [names])
+    }
+    roles = {name: role for name, (role, _) in added.items()}
+    drivers = dict.fromkeys((each.unit for each in ROUNDS), "driver")
+    assert roles == {SITE: "source", "look": "watcher", **drivers}
+    layers = [layer for _, allowed in added.values() for layer in allowed]
+    assert sorted(layers) == sorted([*LAYERS, "unit.*"])  # each by one of them alone
+    assert "unit.*" in added[SITE][1]
+    assert all(layer_of(each.unit).startswith("unit.") for each in ROUNDS)
