@@ -68,7 +68,7 @@ def add(
         Path | None, typer.Option(help="The folder for the new key file; FOLDER if left out.")
     ] = None,
 ) -> None:
-    """Allow somebody: make a key file for him and put him on the list."""
+    """Allow somebody: make a key file, and put its owner on the list."""
     from byway.keys import check_key, load_keys, make_private_folder, new_keys, save_keys
     from bywayd.allowed import allowed_max, checked_layers, save_allowed
     from bywayd.core.rights import ROLES, Rights
@@ -103,7 +103,7 @@ def add(
 
 @app.command()
 def remove(folder: Folder, name: Name) -> None:
-    """Take somebody off the list, and delete his key file in the folder if it is still there."""
+    """Take somebody off the list, and delete the key file if it is still in the folder."""
     from bywayd.allowed import save_allowed
 
     with _told():
