@@ -64,6 +64,10 @@ def test_layers_are_allowed_by_name_or_beginning(role, pattern, layer, is_allowe
     assert refusal(rights, messages.Drop(layer="radar", ids=[])) is None
 
 
+def test_a_request_that_nobody_has_thought_of_is_for_operators() -> None:
+    assert [role for role in ROLES if Rights(role, "a").may_ask("new")] == ["operator"]
+
+
 def test_without_keys_everybody_may_do_everything() -> None:
     for model in (*messages.REQUESTS, *messages.CHANGES):
         assert refusal(None, model.model_construct(layer="fixed")) is None

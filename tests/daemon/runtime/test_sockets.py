@@ -42,6 +42,7 @@ OF_ALL = {
     zmq.HEARTBEAT_TTL: 4000,
     zmq.HANDSHAKE_IVL: 5000,
     zmq.TCP_MAXRT: 5000,
+    zmq.BACKLOG: 100,
 }
 
 

@@ -227,6 +227,21 @@ def test_with_keys_other_hosts_may_come(tmp_path: Path) -> None:
         Outside(everywhere, "e1")
 
 
+def test_no_more_are_let_in_than_the_settings_say(tmp_path: Path) -> None:
+    small = Door(tmp_path, peers_max=4)
+    try:
+        inside = [small.arrive(EYE) for _ in range(4)]
+        small.serve(0.3)
+        assert small.outside.doorman.peers == 4
+        outside = small.arrive(EYE)
+        outside.send_multipart(HELLO)
+        assert small.serve(0.2) == []
+        inside[0].close()
+        assert len(small.serve(5.0)) == 1
+    finally:
+        small.close()
+
+
 def test_the_sockets_enforce_what_is_decided(door: Door) -> None:
     for sock in door.outside.sockets.values():
         assert sock.curve_server
