@@ -89,7 +89,10 @@ class Front:
             self.surveying,
             *guarded,
         )
-        self.rerouting = Rerouting(*shared, seed, self.guards, self.answering, self.dispatch)
+        self.rerouting = Rerouting(
+            *(*shared, seed, self.guards, self.answering, self.dispatch),
+            self.ledger.freshness,
+        )
         # -- what the runtime measured last ---------------------------------------------------
         self.vitals: events.Vitals | None = None
         #: The wall clock and the front's own, read at the same moment; and when it all began.

@@ -142,13 +142,9 @@ class Intake:
         refused = self._why_not_at_all(header, ask)
         if refused is not None:
             return refused
-        stale = self._ledger.freshness.refusing(ask.leave_out)
+        stale = self._ledger.freshness.why_not(ask.leave_out, now)
         if stale is not None:
-            text = f"layer {stale.name} has not changed for longer than is expected of it"
-            age_s = None if stale.changed_at is None else now.since(stale.changed_at).s
-            retry_after_s = None if stale.expected_period is None else stale.expected_period.s
-            facts = {"layer": stale.name, "age_s": age_s}
-            return error_of("stale_layer", text, facts, retry_after_s)
+            return stale
         if ask.guard and not self._guards.has_room(ask.unit):
             text = f"{len(self._guards)} guards stand already"
             return error_of("overloaded", text, {"guards": len(self._guards)})

@@ -28,15 +28,20 @@ class Layer:
     flags: LayerFlags
     # -- changed by `Layers` and the ledger only -----------------------------------------------
     owner: str | None = None
+    #: Who owns it, or did last.
+    last_owner: str | None = None
     lease: Duration | None = None
-    #: When a change of it last became visible.
+    #: When a change of it that a source sent last became visible. A claim is none.
     changed_at: Instant | None = None
     #: Whether the site has it: from the first change that became visible.
     is_visible: bool = False
-    #: How often a change is expected, what is done when none comes, and whether that is so.
+    #: How often a change is expected, since when, and what is done when none comes.
     expected_period: Duration | None = None
+    expected_since: Instant | None = None
     when_stale: WhenStale = "ignore"
+    #: Whether none has come, and whether that has been told.
     is_stale: bool = False
+    is_told_stale: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -117,7 +122,7 @@ class Layers:
             if told is not None and told != is_so:
                 text = f"layer {name} has {flag} {is_so}, and that cannot be changed"
                 return No("conflict", text, {"layer": name, "field": flag, "value": is_so})
-        layer.owner = source
+        layer.owner = layer.last_owner = source
         layer.lease = None if wanted.lease_s is None else Duration.of_s(wanted.lease_s)
         if wanted.expected_period_s is not None:
             layer.expected_period = Duration.of_s(wanted.expected_period_s)

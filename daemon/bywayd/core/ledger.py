@@ -268,8 +268,6 @@ class Ledger:
             layer.is_visible = True
             if change.what != "claim" and entry.source is not None:
                 self.freshness.changed(layer, now)
-            elif not entry.is_recalled:
-                layer.changed_at = now
 
     def kept(self) -> None:
         """More of the keep line is on the disk: some sources have waited for that."""
@@ -333,7 +331,9 @@ class Ledger:
         self._expire(now)
         while (layer := self.layers.pop_forfeited(now)) is not None:
             self._health.count("leases_ended_total")
-            self._outbox.log("warning", "layer.forfeited", layer=layer.name)
+            self._outbox.log(
+                "warning", "layer.forfeited", layer=layer.name, source=layer.last_owner
+            )
             self.freshness.tell(layer, "forfeited", now)
         self.freshness.settle(now)
 

@@ -23,6 +23,7 @@ from bywayd.core.course import STANDING_MPS
 from bywayd.core.dispatch import Dispatch
 from bywayd.core.docket import Docket, Held, times_of
 from bywayd.core.events import OutcomeKind
+from bywayd.core.freshness import Freshness
 from bywayd.core.front_settings import FrontSettings
 from bywayd.core.guarding import course_of
 from bywayd.core.guards import Guard, Guards, Lead
@@ -78,6 +79,7 @@ class Rerouting:
         guards: Guards,
         answering: Answering,
         dispatch: Dispatch,
+        freshness: Freshness,
     ) -> None:
         # -- fixed -----------------------------------------------------------------------------
         self._settings = settings
@@ -88,6 +90,7 @@ class Rerouting:
         self._guards = guards
         self._answering = answering
         self._dispatch = dispatch
+        self._freshness = freshness
         # -- state -----------------------------------------------------------------------------
         #: By the number of the guard.
         self._under_way: dict[int, Reroute] = {}
@@ -110,8 +113,11 @@ class Rerouting:
                 continue  # looked at again when that has ended
             del self._guards.wanting[number]
             guard = known(self._guards.get(number), "who wants a new route stands")
+            stale = self._freshness.why_not(guard.terms.left_out, now)
             if self.stopping:
                 self._failed(guard, "stopping", "the daemon is on its way out")
+            elif stale is not None:
+                self._failed(guard, stale.code, stale.text)
             else:
                 self._begin(guard, now)
                 begun = True

@@ -438,6 +438,8 @@ def test_the_health_record_is_published_every_second_and_told_on_request(desk: D
     desk.done(route(4.0))
     desk.change(messages.Claim(layer="fixed", lease_s=10.0))
     desk.publish(1)
+    desk.change(messages.Drop(layer="fixed", ids=["pile"]))
+    desk.publish(2)
     desk.hand_in(events.Vitals({"peers": 3}, 2e9, {"front": 4711}))
     desk.hand_in(events.Undeliverable(desk.peer))
     desk.ask("b", budget_s=5.0)
@@ -445,7 +447,7 @@ def test_the_health_record_is_published_every_second_and_told_on_request(desk: D
     desk.say(messages.Health(), "h")
     found = desk.answer("h")
     assert isinstance(found, messages.HealthIs)
-    assert (found.state, found.revision, found.waiting, found.planning) == ("ready", 2, 1, 1)
+    assert (found.state, found.revision, found.waiting, found.planning) == ("ready", 3, 1, 1)
     assert found.workers == {"starting": 0, "idle": 0, "busy": 1, "killed": 0, "vacant": 0}
     fixed = found.layers["fixed"]
     assert (fixed.source, fixed.obstacles, fixed.age_s) == ("s", 3, 0.0)
