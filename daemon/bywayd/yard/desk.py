@@ -1,38 +1,52 @@
 """
 The world's only way to the daemon: threads that speak through the public client.
 
-One thread a unit asks for routes, as a vehicle's own controller would; one thread tells of packs
-and of the ground that vehicles claim, as the yard's cameras would. A client belongs to one thread,
-and the world's loop never waits for any of them.
+One thread a unit asks for routes and has them guarded, as a vehicle's own controller would; others
+tell of the site (telling.py) and listen (hearing.py). A client belongs to one thread, and the
+world's loop never waits for any of them.
 """
 
+import contextlib
 import queue
 import threading
 import time
 from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Final
+from typing import Any, Final, TypeVar
 
 import byway
-from bywayd.yard.claims import Claim, told_outlines
-from bywayd.yard.report import Asked
-from bywayd.yard.scene import BUILDINGS, STACKS
+from bywayd.yard.claims import Claim
+from bywayd.yard.fork_truck import Moving
+from bywayd.yard.hearing import Alerted, Ear, block_of, reactions_s
+from bywayd.yard.report import Asked, Heard
+from bywayd.yard.scene import SENSOR_ON
+from bywayd.yard.sensor import Scan
 from bywayd.yard.shapes import Mass
+from bywayd.yard.telling import LAYERS, SITE, Cameras, SensorFeed, layer_of
 from bywayd.yard.tracking import Line
-from bywayd.yard.unit import Ask, Reply
+from bywayd.yard.unit import Ask, News, Reply, Watch
 
-SHOW_EVERY_S: Final = 0.2
+__all__ = ["LAYERS", "SITE", "LiveDesk", "key_of", "layer_of"]
+
 #: A route this near to the best possible is good enough to drive; the worker is free for others.
 GAP_WANTED: Final = 0.02
 BEGIN_S: Final = 10.0
 #: How long a thread may take to end: the longest budget, and the client's own patience.
 ENDING_S: Final = 5.0
+#: A vehicle says where it is several times a second; after this long a silence nobody drives.
+SILENCE_S: Final = 3.0
+
+Item = TypeVar("Item")
 
 
-#: Who tells of the site, as its key is called.
-SITE: Final = "yard"
-#: What stands, what is stacked, and what the crane puts down.
-LAYERS: Final = ("fixed", "stacks", "packs")
+@dataclass(frozen=True)
+class Progress:
+    """Where a unit is on its guarded route. `guard` "" says that it drives no more."""
+
+    guard: str
+    at_m: float
+    speed_mps: float
 
 
 def key_of(keys: Path | None, name: str) -> Path | None:
@@ -42,36 +56,35 @@ def key_of(keys: Path | None, name: str) -> Path | None:
     return keys / f"{name}.key"
 
 
-def layer_of(unit: str) -> str:
-    """Return the layer that holds a unit's own outline; its own replans leave it out."""
-    return f"unit.{unit}"
-
-
 class LiveDesk:
-    """A desk (see world.py) with a daemon behind it. Use it as a context manager."""
+    """A desk (see world.py) with a daemon behind it."""
 
     def __init__(self, endpoint: str, units: Iterable[str], keys: Path | None = None) -> None:
         self._endpoint = endpoint
         self._keys = keys
         self._ending = threading.Event()
-        self._begun = threading.Event()
         #: What went wrong outside of a question, a sentence each. Appended by any thread.
         self.faults: list[str] = []
         #: Every question and what it took. Appended by any thread.
         self.asked: list[Asked] = []
         #: The newest revision that an answer knew of.
         self.revision = 0
-        self._asks: dict[str, queue.SimpleQueue[Ask | None]] = {
+        self._asks: dict[str, queue.SimpleQueue[Ask | Watch | Progress | None]] = {
             unit: queue.SimpleQueue() for unit in units
         }
         self._replies: queue.SimpleQueue[Reply] = queue.SimpleQueue()
-        self._orders: queue.SimpleQueue[Mass | str] = queue.SimpleQueue()
-        self._told: queue.SimpleQueue[str] = queue.SimpleQueue()
-        self._claims: Mapping[str, Claim] = {}
-        self._threads = [threading.Thread(target=self._tell_for_ever, name="site")]
-        self._threads += [
-            threading.Thread(target=self._plan_for_ever, args=(unit,), name=unit)
-            for unit in self._asks
+        listener = next(iter(self._asks))
+        self._cameras = Cameras(self._client, self._ending, self.faults)
+        self._sensor = SensorFeed(self._client, SENSOR_ON, self._ending, self.faults)
+        self._ear = Ear(self._client, listener, self._ending, self.faults)
+        threads: list[tuple[str, Any, tuple[str, ...]]] = [
+            ("site", self._cameras.tell_for_ever, ()),
+            ("sensor", self._sensor.tell_for_ever, ()),
+            ("ear", self._ear.listen_for_ever, ()),
+            *((unit, self._plan_for_ever, (unit,)) for unit in self._asks),
+        ]
+        self._threads = [
+            threading.Thread(target=work, args=args, name=name) for name, work, args in threads
         ]
 
     def vehicles(self) -> dict[str, Mapping[str, Any]]:
@@ -90,11 +103,11 @@ class LiveDesk:
             RuntimeError: If the daemon could not be told.
         """
         self.show(claims)
-        site, *units = self._threads
+        site, *others = self._threads
         site.start()
-        if not self._begun.wait(BEGIN_S) or self.faults:
+        if not self._cameras.begun.wait(BEGIN_S) or self.faults:
             raise RuntimeError("; ".join(self.faults) or "the daemon could not be told of the yard")
-        for thread in units:
+        for thread in others:
             thread.start()
 
     def close(self) -> None:
@@ -106,6 +119,18 @@ class LiveDesk:
             thread.join(ENDING_S)
             if thread.is_alive():
                 self.faults.append(f"the thread of {thread.name} did not end")
+
+    @property
+    def heard(self) -> Heard:
+        """What was published about guarded routes, and how soon."""
+        alerts: list[Alerted] = list(self._ear.alerts)
+        return Heard(
+            [(alert.block.layer, alert.block.kind) for alert in alerts],
+            reactions_s(self._cameras.changes, alerts),
+            reactions_s(self._sensor.changes, alerts),
+            self._sensor.sent,
+            self._ear.missed,
+        )
 
     # -- what the world calls; nothing here waits --------------------------------------------
 
@@ -119,26 +144,51 @@ class LiveDesk:
 
     def put(self, mass: Mass) -> None:
         """Tell the daemon of a pack."""
-        self._orders.put(mass)
+        self._cameras.orders.put((mass, time.monotonic()))
 
     def drop(self, name: str) -> None:
         """Tell the daemon that a pack is gone."""
-        self._orders.put(name)
-
-    def told(self) -> Sequence[str]:
-        """Return the packs of which the daemon has learned since the last call."""
-        return list(_drained(self._told))
+        self._cameras.orders.put((name, time.monotonic()))
 
     def show(self, claims: Mapping[str, Claim]) -> None:
         """Tell the daemon, when there is time, what ground the vehicles claim now."""
-        self._claims = dict(claims)
+        self._cameras.claims = dict(claims)
+
+    def scan(self, scan: Scan, news: Sequence[Mass]) -> None:
+        """Pass a sweep of the range sensor on."""
+        self._sensor.take(scan, news, time.monotonic())
+
+    def track(self, moving: Moving) -> None:
+        """Tell the daemon how something moves."""
+        self._cameras.orders.put((moving, time.monotonic()))
+
+    def watch(self, watch: Watch) -> None:
+        """Have a line guarded."""
+        self._asks[watch.unit].put(watch)
+
+    def progress(self, unit: str, guard: str, at_m: float, speed_mps: float) -> None:
+        """Tell where on its guarded route a unit is."""
+        self._asks[unit].put(Progress(guard, at_m, speed_mps))
+
+    def release(self, unit: str) -> None:
+        """Tell that a unit drives no more."""
+        self._asks[unit].put(Progress("", 0.0, 0.0))
+
+    def news(self) -> Sequence[News]:
+        """Return what was heard of guards since the last call."""
+        return list(_drained(self._ear.news))
 
     # -- a thread a unit ---------------------------------------------------------------------
 
     def _plan_for_ever(self, unit: str) -> None:
         with self._client(unit) as client:
-            while (ask := self._asks[unit].get()) is not None:
-                self._replies.put(self._plan(client, ask))
+            while (order := self._asks[unit].get()) is not None:
+                if isinstance(order, Ask):
+                    self._replies.put(self._plan(client, order))
+                elif isinstance(order, Watch):
+                    self._watch(client, order)
+                else:
+                    self._tell_progress(client, unit, order)
 
     def _plan(self, client: byway.Client, ask: Ask) -> Reply:
         began_s = time.monotonic()
@@ -159,6 +209,10 @@ class LiveDesk:
                 start_speed_mps=ask.start_speed_mps,
                 start_curvature_per_m=ask.start_curvature_per_m,
                 gap_wanted=GAP_WANTED,
+                # A vehicle that stands takes what it gets; on the move it may stay on its route.
+                guard=ask.goes_on_at_m is None,
+                replan_on_alert=True,
+                silence_s=SILENCE_S,
                 on_better=count,
             )
         except byway.BywayError as fault:
@@ -169,57 +223,45 @@ class LiveDesk:
         first_s = float("nan") if answer.first_s is None else answer.first_s
         self.asked.append(Asked(answer.kind, ask.budget_s, took_s, first_s, answer.total_s, better))
         self.revision = max(self.revision, answer.revision)
-        line = None if answer.route is None else Line(answer.route.table)
-        return Reply(ask, answer.kind, line, answer.cost)
+        line = None if answer.route is None else Line(answer.route.table, answer)
+        return Reply(ask, answer.kind, line, answer.cost, answer.guard or "")
 
-    # -- the thread that tells of the site ------------------------------------------------------
-
-    def _tell_for_ever(self) -> None:
-        shown: dict[str, Claim] = {}
+    def _watch(self, client: byway.Client, watch: Watch) -> None:
         try:
-            with self._client(SITE) as client:
-                for layer, masses in zip(LAYERS, (BUILDINGS, STACKS, ()), strict=True):
-                    client.replace_layer(layer, polygons=_polygons(masses), discs=_discs(masses))
-                self._show(client, shown)
-                self._begun.set()
-                while not self._ending.wait(SHOW_EVERY_S):
-                    self._carry_out_orders(client)
-                    self._show(client, shown)
+            told = client.guard(
+                watch.line.found,
+                unit=watch.unit,
+                vehicle=watch.vehicle,
+                leave_out=[layer_of(watch.unit)],
+                progress_m=watch.at_m,
+                silence_s=SILENCE_S,
+                replan_on_alert=True,
+            )
+        except byway.Withdrawn:
+            return  # another guard has taken its place
         except byway.BywayError as fault:
-            self.faults.append(f"telling the daemon of the yard: {fault}")
-            self._begun.set()
+            self.faults.append(f"guarding the route of {watch.unit}: {fault}")
+            return
+        block = None if told.blocked is None else block_of(told.blocked)
+        self._ear.news.put(
+            News(watch.unit, "guarded", told.guard, block, line_number=watch.line_number)
+        )
 
-    def _carry_out_orders(self, client: byway.Client) -> None:
-        for order in _drained(self._orders):
-            if isinstance(order, Mass):
-                client.put("packs", polygons={order.name: order.ring_m})
-                self._told.put(order.name)
-            else:
-                client.drop("packs", [order])
-
-    def _show(self, client: byway.Client, shown: dict[str, Claim]) -> None:
-        for unit, claim in self._claims.items():
-            if shown.get(unit) is not claim:
-                outlines = {f"ground-{k}": ring for k, ring in enumerate(told_outlines(claim))}
-                client.replace_layer(layer_of(unit), polygons=outlines, outlines_only=True)
-                shown[unit] = claim
+    def _tell_progress(self, client: byway.Client, unit: str, told: Progress) -> None:
+        # A guard that has ended or was replaced meanwhile is told of by an event.
+        with contextlib.suppress(byway.UnknownRequest):
+            try:
+                if told.guard:
+                    client.progress(told.at_m, told.speed_mps, unit=unit, guard=told.guard)
+                else:
+                    client.release(unit)
+            except byway.Unavailable as fault:
+                self.faults.append(f"telling the progress of {unit}: {fault}")
 
 
-def _drained(found: "queue.SimpleQueue[Any]") -> Iterable[Any]:
+def _drained(found: "queue.SimpleQueue[Item]") -> Iterable[Item]:
     while True:
         try:
             yield found.get_nowait()
         except queue.Empty:
             return
-
-
-def _polygons(masses: Iterable[Mass]) -> dict[str, Any]:
-    return {mass.name: mass.ring_m for mass in masses if len(mass.ring_m) > 1}
-
-
-def _discs(masses: Iterable[Mass]) -> dict[str, tuple[float, float, float]]:
-    return {
-        mass.name: (float(mass.ring_m[0, 0]), float(mass.ring_m[0, 1]), mass.radius_m)
-        for mass in masses
-        if len(mass.ring_m) == 1
-    }

@@ -1,8 +1,9 @@
 """
 The part of a vehicle that moves: it follows a line, claims ground ahead, and stops in time.
 
-It never moves over ground it has not claimed, and never nearer to a pack of timber on its route
-than it may. What it follows comes from the daemon; whether it goes on is its own decision.
+It never moves over ground it has not claimed, and stops for what its own eyes see in its way,
+whatever the daemon knows of it. What it follows comes from the daemon; whether it goes on is its
+own decision.
 """
 
 import math
@@ -17,9 +18,12 @@ from bywayd.yard.tracking import Abilities, Line, next_step, steer
 #: Ground is claimed this much further than needed, so that it is not claimed anew every step.
 CLAIM_SPARE_M: Final = 0.8
 CLAIM_AGAIN_S: Final = 0.1
-#: How near a pack may be to the route before it counts as in the way, and where to stop then.
-PACK_GAP_M: Final = 0.12
+#: How near a pack may be to the route before it counts as in the way, and where to stop then. Less
+#: than the clearance that routes keep from packs they know of.
+PACK_GAP_M: Final = 0.05
 PACK_STOP_M: Final = 0.5
+#: A hand-over is due so little before its place: a vehicle that is to stop there stops just there.
+HANDOVER_EARLY_M: Final = 1e-3
 #: How far the true state may be from the start of a new route at the hand-over.
 HANDOVER_AHEAD_M: Final = 0.5
 HANDOVER_OFFSET_M: Final = 0.08
@@ -64,8 +68,11 @@ class Driver:
         self.off_m_max = 0.0
         #: Since when it has been standing on its line without having arrived.
         self.held_since_s: float | None = None
-        #: Where a pack that the route does not know of is in the way.
-        self.blocked_at_m = math.inf
+        #: Where its own eyes see a pack in the way, and which; and where the daemon says to stop.
+        self.seen_at_m = math.inf
+        self.seen = ""
+        self.told_at_m = math.inf
+        self._packs = Masses(())
         self._next: tuple[Line, float] | None = None
         self._claim_again_s = 0.0
         other = ground.take(name, claim_here(self.outline_m, pose, 0.0))
@@ -81,6 +88,16 @@ class Driver:
     def has_arrived(self) -> bool:
         """Whether it stands at the end of its line."""
         return self.line is not None and self.speed_mps == 0.0 and self.at_m >= self.line.length_m
+
+    @property
+    def blocked_at_m(self) -> float:
+        """How far along its line it may go."""
+        return min(self.seen_at_m, self.told_at_m)
+
+    @property
+    def changes_at_m(self) -> float | None:
+        """Where it takes another route over, if it is going to."""
+        return None if self._next is None else self._next[1]
 
     # -- routes ----------------------------------------------------------------------------
 
@@ -102,21 +119,28 @@ class Driver:
     def _use(self, line: Line, at_m: float) -> None:
         self.line, self.at_m, self._leg_from_m = line, at_m, 0.0
         self.line_number += 1
-        self.blocked_at_m = math.inf
+        self.told_at_m = math.inf
         self.held_since_s = None
         self._next = None
         self._claim_again_s = 0.0
+        self.see(self._packs)
 
     def see(self, packs: Masses) -> None:
-        """Look along the rest of the route for packs that it does not know of."""
-        self.blocked_at_m = math.inf
+        """Look along the rest of the route for packs in the way."""
+        self._packs = packs
+        self.seen_at_m, self.seen = math.inf, ""
         if self.line is None or not packs.masses:
             return
         for place_m in self.line.places(self.at_m, self.line.length_m, 0.25):
             ring_m = placed(self.outline_m, self.line.pose_at(place_m))
-            if packs.nearest(ring_m, PACK_GAP_M)[1]:
-                self.blocked_at_m = max(self.at_m, place_m - PACK_STOP_M)
+            name = packs.nearest(ring_m, PACK_GAP_M)[1]
+            if name:
+                self.seen_at_m, self.seen = max(self.at_m, place_m - PACK_STOP_M), name
                 return
+
+    def stop_for(self, at_m: float) -> None:
+        """Go no further than this along the line; inf: as far as it leads."""
+        self.told_at_m = max(self.at_m, at_m)
 
     def predicted(self, ahead_s: float) -> tuple[float, float] | None:
         """
@@ -148,7 +172,7 @@ class Driver:
         if self.line is None or self.has_arrived:
             return None
         came_of_it = None
-        if self._next is not None and self.at_m >= self._next[1]:
+        if self._next is not None and self.at_m >= self._next[1] - HANDOVER_EARLY_M:
             came_of_it = "taken" if self._hand_over(self._next[0]) else "not fitting"
             self._next = None
         line = self.line

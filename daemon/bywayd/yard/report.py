@@ -9,8 +9,9 @@ from typing import TYPE_CHECKING, Any, Final
 
 import numpy as np
 
+from bywayd.yard.fork_truck import NAME as FORK_TRUCK
 from bywayd.yard.scene import BUILDINGS, LIMITS_M, STACKS
-from bywayd.yard.shapes import Mass
+from bywayd.yard.shapes import discs_of, polygons_of
 from bywayd.yard.world import World
 
 if TYPE_CHECKING:
@@ -41,6 +42,20 @@ class Asked:
 
 
 @dataclass(frozen=True)
+class Heard:
+    """What the daemon published about guarded routes, and how soon. Times in seconds."""
+
+    alerts: Sequence[tuple[str, str]] = ()  # layer and kind of what was in the way
+    told_s: Sequence[float] = ()  # from putting something down to the alert
+    scanned_s: Sequence[float] = ()  # from the scan that saw something to the alert
+    scans: int = 0
+    missed: int = 0  # events that were lost on the way
+
+
+NOTHING_HEARD: Final = Heard()
+
+
+@dataclass(frozen=True)
 class Report:
     """All that can be said of a run, as plain numbers and texts."""
 
@@ -54,6 +69,15 @@ class Report:
     of_budget: tuple[float, float]
     deadline_misses: int
     taken_over: int
+    alerts: dict[str, int]
+    cleared: int
+    rerouted: int
+    rerouted_taken: int
+    not_rerouted: int
+    told_to_alert_ms: tuple[float, float]  # p50, the longest
+    scan_to_alert_ms: tuple[float, float]
+    scans: int
+    pallets: int
     nearest: dict[str, Any]
     nearest_units: dict[str, Any]
     collisions: list[dict[str, Any]]
@@ -86,6 +110,7 @@ def make_report(
     revision: int,
     faults: Iterable[str],
     late_steps_s: float,
+    heard: Heard = NOTHING_HEARD,
 ) -> Report:
     """Gather the numbers of a run."""
     kinds = Counter(one.kind for one in asked)
@@ -101,6 +126,15 @@ def make_report(
         of_budget=_percentiles([one.total_s / one.budget_s for one in asked]),
         deadline_misses=sum(one.is_late for one in asked),
         taken_over=sum(tally.taken_over for tally in tallies.values()),
+        alerts=_by_layer(heard.alerts),
+        cleared=sum(tally.cleared for tally in tallies.values()),
+        rerouted=sum(tally.rerouted for tally in tallies.values()),
+        rerouted_taken=sum(tally.rerouted_taken for tally in tallies.values()),
+        not_rerouted=sum(tally.not_rerouted for tally in tallies.values()),
+        told_to_alert_ms=_half_and_most(heard.told_s),
+        scan_to_alert_ms=_half_and_most(heard.scanned_s),
+        scans=heard.scans,
+        pallets=world.crane.pallets,
         nearest=asdict(world.referee.nearest),
         nearest_units=asdict(world.referee.nearest_units),
         collisions=[asdict(near) for near in world.referee.collisions],
@@ -123,6 +157,18 @@ def _percentiles(values: Sequence[float]) -> tuple[float, float]:
     return float(np.percentile(known, 50)), float(np.percentile(known, 99))
 
 
+def _by_layer(alerts: Iterable[tuple[str, str]]) -> dict[str, int]:
+    """Count alerts by layer; the ground of all vehicles is one."""
+    names = ("vehicles" if layer.startswith("unit.") else layer or kind for layer, kind in alerts)
+    return dict(Counter(names).most_common())
+
+
+def _half_and_most(seconds: Sequence[float]) -> tuple[float, float]:
+    if not seconds:
+        return math.nan, math.nan
+    return 1e3 * float(np.median(seconds)), 1e3 * max(seconds)
+
+
 def table_of(report: Report) -> "Table":
     """Return the closing table."""
     from rich.table import Table
@@ -137,6 +183,16 @@ def table_of(report: Report) -> "Table":
     table.add_row("replans", str(report.replans), answers)
     table.add_row("better routes published", str(report.better_routes), "")
     table.add_row("taken over on the move", str(report.taken_over), "")
+    alerts = ", ".join(f"{layer} {count}" for layer, count in report.alerts.items())
+    table.add_row("alerts for guarded routes", str(sum(report.alerts.values())), alerts)
+    routes = f"{report.rerouted_taken} taken over, {report.not_rerouted} times none was found"
+    table.add_row("new routes after alerts", str(report.rerouted), routes)
+    for name, (half, most) in (
+        ("put down to alert", report.told_to_alert_ms),
+        ("scan to alert", report.scan_to_alert_ms),
+    ):
+        if math.isfinite(half):
+            table.add_row(name, f"p50 {half:.1f} ms", f"at most {most:.1f} ms")
     for name, pair, unit in (
         ("first route", report.first_ms, "ms"),
         ("answer", report.answer_ms, "ms"),
@@ -148,7 +204,8 @@ def table_of(report: Report) -> "Table":
     table.add_row("smallest clearance", _metres(report.nearest), _between(report.nearest))
     apart = report.nearest_units
     table.add_row("between vehicles", _metres(apart), _between(apart))
-    table.add_row("packs put in the way", str(report.packs), "")
+    seen = f"{report.pallets} of them told by nobody, only seen in {report.scans} scans"
+    table.add_row("put in the way", str(report.packs), seen)
     errors = ", ".join(f"{kind.partition(':')[2]} {n}" for kind, n in report.errors.items())
     table.add_row("errors", str(sum(report.errors.values())), errors)
     table.add_row(
@@ -168,7 +225,7 @@ def _between(near: Mapping[str, Any]) -> str:
 
 def draw(world: World, report: Report, file: Path) -> None:
     """Draw the yard, the paths driven, and where everything stands at the end."""
-    from bywayd.picture import INKS, Plan
+    from bywayd.picture import ALARM, INKS, Plan
 
     first = f"{report.seconds:.0f} s, {report.deliveries} deliveries, {report.replans} replans, "
     first += f"first route p50 {report.first_ms[0]:.1f} ms, p99 {report.first_ms[1]:.1f} ms"
@@ -177,24 +234,15 @@ def draw(world: World, report: Report, file: Path) -> None:
     plan = Plan("Brick and timber yard: paths driven", LIMITS_M, [first, second])
     plan.limits(LIMITS_M)
     for masses, kind in ((BUILDINGS, "building"), (STACKS, "stack")):
-        plan.polygons(_polygons(masses), kind, named=True)
-        plan.discs(_discs(masses), kind)
-    plan.polygons(_polygons(pack.mass for pack in world.crane.packs), "pack")
+        plan.polygons(polygons_of(masses), kind, named=True)
+        plan.discs(discs_of(masses), kind)
+    plan.polygons(polygons_of(pack.mass for pack in world.crane.packs), "pack")
+    truck = world.truck.driver
+    plan.path([pose[:2] for pose in world.traces[FORK_TRUCK]], ALARM, f"{FORK_TRUCK}, by hand")
+    plan.vehicle(truck.outline_m, truck.pose, ALARM)
     for ink, (name, unit) in zip(INKS, world.units.items(), strict=False):
         for station in unit.stations:
             plan.goal(unit.driver.outline_m, station.pose, ink)
         plan.path([pose[:2] for pose in world.traces[name]], ink, name)
         plan.vehicle(unit.driver.outline_m, unit.driver.pose, ink)
     plan.save(file)
-
-
-def _polygons(masses: Iterable[Mass]) -> dict[str, Any]:
-    return {mass.name: mass.ring_m for mass in masses if len(mass.ring_m) > 1}
-
-
-def _discs(masses: Iterable[Mass]) -> dict[str, tuple[float, float, float]]:
-    return {
-        mass.name: (float(mass.ring_m[0, 0]), float(mass.ring_m[0, 1]), mass.radius_m)
-        for mass in masses
-        if len(mass.ring_m) == 1
-    }

@@ -44,6 +44,15 @@ STACKS: Final = (
 #: A pack of timber that the crane sets down in the way, and takes away again.
 PACK_LENGTH_M: Final = 2.6
 PACK_WIDTH_M: Final = 1.2
+#: A pallet that somebody leaves standing. Nobody tells the daemon: it has to be seen.
+PALLET_LENGTH_M: Final = 1.2
+PALLET_WIDTH_M: Final = 1.0
+#: The vehicle that has a range sensor on its nose.
+SENSOR_ON: Final = "tug-3"
+
+#: The round of the fork truck that a person drives: around timber-2 and timber-3.
+TRUCK_CORNERS: Final = ((51.5, 29.9), (51.5, 23.4), (77.2, 23.4), (77.2, 29.9))
+TRUCK_CORNER_M: Final = 2.2
 
 NORTH: Final = math.pi / 2
 WEST: Final = math.pi

@@ -186,6 +186,20 @@ class Masses:
         return found
 
 
+def polygons_of(masses: Iterable[Mass]) -> dict[str, Points]:
+    """Return the outlines of those that are polygons, by name."""
+    return {mass.name: mass.ring_m for mass in masses if len(mass.ring_m) > 1}
+
+
+def discs_of(masses: Iterable[Mass]) -> dict[str, tuple[float, float, float]]:
+    """Return x, y and radius of those that are discs, by name."""
+    return {
+        mass.name: (float(mass.ring_m[0, 0]), float(mass.ring_m[0, 1]), mass.radius_m)
+        for mass in masses
+        if len(mass.ring_m) == 1
+    }
+
+
 def rectangle(
     x_m: float, y_m: float, length_m: float, width_m: float, turn_rad: float = 0.0
 ) -> Points:

@@ -42,7 +42,12 @@ def simulate(
     finally:
         desk.close()
     report = make_report(
-        world, desk.asked, revision=desk.revision, faults=desk.faults, late_steps_s=late_steps_s
+        world,
+        desk.asked,
+        revision=desk.revision,
+        faults=desk.faults,
+        late_steps_s=late_steps_s,
+        heard=desk.heard,
     )
     if picture is not None:
         draw(world, report, picture)

@@ -32,12 +32,14 @@ class Line:
 
     Args:
         table: Structured array with x_m, y_m, heading_rad, curvature_per_m, speed_mps, gear.
+        found: What it was found as, for who has to name it to the daemon again.
 
     Between two rows the motion is the arc with the curvature of the first, and the square of the
     speed changes evenly with the distance.
     """
 
-    def __init__(self, table: npt.NDArray[Any]) -> None:
+    def __init__(self, table: npt.NDArray[Any], found: Any = None) -> None:
+        self.found = found
         # Plain lists: single elements of numpy arrays cost ten times as much.
         self._poses: list[Pose] = list(
             zip(*(table[name].tolist() for name in ("x_m", "y_m", "heading_rad")), strict=True)

@@ -9,13 +9,15 @@ from rich.console import Console
 from tests.daemon.yard.planning_desk import run_world
 
 from bywayd.yard.referee import Near
-from bywayd.yard.report import Asked, Report, make_report, table_of
+from bywayd.yard.report import Asked, Heard, Report, make_report, table_of
 
 NEAR = asdict(Near(0.31, "tug-3", "kiln-2", 4.3))
 GOOD = Report(
     seconds=60.0, deliveries=5, replans=80, answers={"route": 78, "not_found": 1},
     better_routes=200, first_ms=(2.0, 9.0), answer_ms=(110.0, 199.0), of_budget=(0.95, 0.99),
-    deadline_misses=0, taken_over=12, nearest=NEAR, nearest_units=asdict(Near()), collisions=[],
+    deadline_misses=0, taken_over=12, alerts={"packs": 3, "vehicles": 2}, cleared=1, rerouted=4,
+    rerouted_taken=3, not_rerouted=1, told_to_alert_ms=(11.0, 14.5), scan_to_alert_ms=(6.0, 9.0),
+    scans=250, pallets=2, nearest=NEAR, nearest_units=asdict(Near()), collisions=[],
     packs=9, revision=400, errors={}, faults=[], late_steps_s=0.01,
     units={"tug-3": {"deliveries": 5}},
 )  # fmt: skip
@@ -53,7 +55,9 @@ def test_the_table_shows_every_figure() -> None:
     console.print(table_of(replace(GOOD, errors={"error:overloaded": 3}, collisions=[NEAR])))
     text = console.export_text()
     for figure in ("tug-3 5", "not_found 1, route 78", "p50 2.0 ms", "p99 9.0 ms", "0.31 m",
-                   "tug-3, kiln-2 at 4.3 s", "none near", "overloaded 3"):  # fmt: skip
+                   "tug-3, kiln-2 at 4.3 s", "none near", "overloaded 3", "packs 3, vehicles 2",
+                   "3 taken over, 1 times none was found", "p50 11.0 ms", "at most 14.5 ms",
+                   "2 of them told by nobody, only seen in 250 scans"):  # fmt: skip
         assert figure in text
 
 
@@ -64,7 +68,16 @@ def test_a_report_is_made_of_a_world_and_what_was_asked() -> None:
         Asked("route", 0.1, 0.11, 0.003, 0.101, better=1),
         Asked("error:overloaded", 0.1, 0.01),
     ]
-    report = make_report(world, asked, revision=7, faults=["x"], late_steps_s=0.5)
+    heard = Heard(
+        [("packs", "polygon"), ("unit.tug-3", "polygon"), ("unit.loader-2", "polygon"),
+         ("", "limits")],
+        [0.012, 0.010, 0.030], [], scans=20,
+    )  # fmt: skip
+    report = make_report(world, asked, revision=7, faults=["x"], late_steps_s=0.5, heard=heard)
+    assert report.alerts == {"vehicles": 2, "packs": 1, "limits": 1}
+    assert report.told_to_alert_ms == pytest.approx((12.0, 30.0))
+    assert math.isnan(report.scan_to_alert_ms[0])
+    assert report.scans == 20
     assert report.replans == 3
     assert report.answers == {"route": 2}
     assert report.errors == {"error:overloaded": 1}

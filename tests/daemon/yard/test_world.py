@@ -7,6 +7,7 @@ import pytest
 from tests.daemon.yard.planning_desk import PlanningDesk, run_world
 
 from bywayd.yard.crane import PACKS_GAP_M, PASSAGE_M
+from bywayd.yard.fork_truck import NAME as FORK_TRUCK
 from bywayd.yard.scene import BUILDINGS, STACKS
 from bywayd.yard.shapes import Masses, distance_m
 from bywayd.yard.world import World
@@ -36,6 +37,24 @@ def test_packs_come_in_the_way_and_routes_are_taken_over(run: tuple[World, Plann
     world, _ = run
     assert world.crane.put_down >= 2
     assert sum(unit.tally.taken_over for unit in world.units.values()) >= 1
+
+
+def test_what_nobody_tells_is_seen_and_every_blocked_route_is_told_of(
+    run: tuple[World, PlanningDesk],
+) -> None:
+    world, desk = run
+    assert world.crane.pallets >= 1
+    assert desk.heard["alert"] >= 2
+    assert desk.heard["rerouted"] >= 1
+    assert sum(unit.tally.rerouted_taken for unit in world.units.values()) >= 1
+    assert sum(unit.tally.alerts for unit in world.units.values()) >= 1
+
+
+def test_the_fork_truck_goes_its_way(run: tuple[World, PlanningDesk]) -> None:
+    world, _ = run
+    assert world.truck.driver.driven_m > 10.0
+    assert world.truck.driver.off_m_max < 0.03
+    assert FORK_TRUCK not in world.claims
 
 
 def test_packs_leave_room_for_the_widest(run: tuple[World, PlanningDesk]) -> None:
