@@ -51,7 +51,7 @@ def demo(
     if keys is not None and connect is None:
         raise typer.BadParameter("the demo's own daemon has no keys", param_hint="--keys")
     out = console(to_stderr=as_json)
-    out.print("[bold]Byway demo:[/bold] a brick and timber yard, three vehicles, one daemon.")
+    out.print("[bold]Byway demo:[/bold] a brick and timber yard: vehicles, people, one daemon.")
     out.print(f"Caution: {CAUTION}", style="yellow")
     if connect is None:
         report = _with_own_daemon(seconds, seed, picture, out)
