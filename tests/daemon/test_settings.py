@@ -1,12 +1,13 @@
 """Settings: what is taken from where, and that every mistake is told with its place."""
 
 import os
+import re
 from pathlib import Path
 
 import pytest
 
 from bywayd import settings
-from bywayd.settings import BadSettings, load
+from bywayd.settings import DEFAULT_FILE, BadSettings, load
 from bywayd.toml_places import lines_of_keys
 
 DISC = '[vehicles.cart]\nmodel = "disc"\nradius_m = 0.5\n'
@@ -40,6 +41,18 @@ def test_no_file_is_needed() -> None:
     assert any(endpoint.startswith("ipc:///") for endpoint in told.sockets.requests)
     assert told.workers.count == max(1, len(os.sched_getaffinity(0)) - 1)
     assert told.site.cell_m == 0.1
+
+
+def test_what_the_example_shows_in_comments_can_be_used(tmp_path: Path) -> None:
+    lines = DEFAULT_FILE.read_text().splitlines()
+    shown = [re.sub(r"^# (?=\[[a-z.]+\]|[a-z_]+ = )", "", line) for line in lines]
+    assert len([line for line, was in zip(shown, lines, strict=True) if line != was]) > 15
+    file = tmp_path / "site.toml"
+    file.write_text("\n".join(shown))
+    settings = load(file)
+    assert settings.layers["lidar"].when_stale == "report"
+    assert settings.layers["lidar"].decay_s == 5.0
+    assert settings.site.limits_m == (0.0, 0.0, 80.0, 60.0)
 
 
 def test_a_file_with_vehicles_has_all_of_them_and_keeps_the_rest(tmp_path: Path) -> None:
@@ -147,6 +160,16 @@ count = 3
         ('[vehicles."no name"]\nmodel = "disc"\nradius_m = 1', ":1: vehicles.no name: a name be"),
         ("vehicles = {}", ":1: vehicles: "),
         ("[layers.lidar]\nunknown_blocks = 7", ":2: layers.lidar.unknown_blocks: must be"),
+        ("[layers.lidar]\ndecay_s = 0", ":2: layers.lidar.decay_s: must be greater than 0, not 0"),
+        ("[layers.lidar]\nexpected_period_s = -1", ":2: layers.lidar.expected_period_s: must be"),
+        ("[layers.lidar]\nwhen_stale = 'stop'", "when_stale: must be 'ignore', 'report' or 'refu"),
+        ("[layers.lidar]\ndecay = 3", "layers.lidar.decay: not a known key; did you mean decay_s"),
+        ("[site]\nsweep_s = 900", ":2: site.sweep_s: must be less than or equal to 60, not 900"),
+        ("[site]\ncarry_every_s = 0.0", ":2: site.carry_every_s: must be greater than or equal"),
+        ("[site]\ntrack_expires_s = 0", ":2: site.track_expires_s: must be greater than 0"),
+        ("[guards]\ncount_max = 0", ":2: guards.count_max: must be greater than or equal to 1"),
+        ("[guards]\nsilence_s = nan", ":2: guards.silence_s: must be"),
+        ("[guards]\nbudget_s = 99", ":2: guards.budget_s: must be less than or equal to 60"),
         ("[sockets]\nevents = ['ipc://']", ":2: sockets.events: ipc://: an ipc path has 1"),
         (f"[sockets]\nevents = ['ipc://{'x' * 108}']", "an ipc path has 1 to 107 bytes"),
         ("[sockets]\nevents = ['udp://127.0.0.1:3']", "expected tcp://127.0.0.1:PORT"),

@@ -79,5 +79,9 @@ def _print_settings(settings: "Settings", vehicles: dict[str, Any]) -> None:
     limits_m = settings.site.limits_m
     ground = "250 m around its origin" if limits_m is None else f"limits {list(limits_m)} m"
     out.print(f"site: cells of {settings.site.cell_m} m, {ground}")
+    for name, layer in settings.layers.items():
+        told = layer.model_dump(exclude_defaults=True)
+        what = ", ".join(f"{key} {str(value).lower()}" for key, value in told.items())
+        out.print(f"layer {name}: {what or 'as layers are'}")
     out.print(f"workers: {settings.workers.count}, sockets: {', '.join(settings.sockets.requests)}")
     out.print("The settings are good.")

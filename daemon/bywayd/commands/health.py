@@ -59,12 +59,21 @@ def _print(record: "HealthIs") -> None:
             half, most = (_below(found.bounds_s, found.counts, share) for share in (0.5, 0.99))
             times.add_row(name, str(total), f"{1e3 * found.sum_s / total:.2f}", half, most)
     out.print(times)
-    layers = Table("layer", "obstacles", "age s", "lease left s", "source", box=None)
+    layers = Table(
+        "layer", "obstacles", "moving", "age s", "lease left s", "source", "is", box=None
+    )
     for name, layer in record.layers.items():
         age, lease = (
             "" if value is None else f"{value:.1f}" for value in (layer.age_s, layer.lease_left_s)
         )
-        layers.add_row(name, str(layer.obstacles), age, lease, layer.source or "")
+        words = [
+            *(["[bold]stale[/bold]"] if layer.stale else []),
+            *(["durable"] if layer.durable else []),
+        ]
+        layers.add_row(
+            *(name, str(layer.obstacles), str(layer.tracks), age, lease),
+            *(layer.source or "", ", ".join(words)),
+        )
     out.print(layers)
     counts = Table("count", "", "", box=None)
     for name, count in sorted(record.counts.items()):

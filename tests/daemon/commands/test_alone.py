@@ -24,6 +24,14 @@ def test_check_says_what_is_good() -> None:
     assert "6.85" in found.stdout  # wheelbase / tan(largest steering angle)
 
 
+def test_check_tells_what_layers_are_declared(tmp_path: Path) -> None:
+    file = tmp_path / "site.toml"
+    file.write_text('[layers.lidar]\ndecay_s = 3\nwhen_stale = "refuse"\n[layers.fixed]\n')
+    found = run("check", str(file))
+    assert "layer lidar: when_stale refuse, decay_s 3.0" in found.stdout
+    assert "layer fixed: as layers are" in found.stdout
+
+
 def test_the_example_is_itself_good(tmp_path: Path) -> None:
     file = tmp_path / "site.toml"
     file.write_text(run("check", "--example").stdout)

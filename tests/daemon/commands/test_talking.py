@@ -48,7 +48,11 @@ BLOCKED = byway.Answer(
 )  # fmt: skip
 HEALTH = HealthIs(
     state="ready", revision=3, uptime_s=60.0, waiting=0, planning=1,
-    workers={"idle": 1}, layers={"fixed": LayerHealth(source="s", age_s=2.0, obstacles=4)},
+    workers={"idle": 1},
+    layers={
+        "fixed": LayerHealth(source="s", age_s=2.0, obstacles=4, durable=True),
+        "movers": LayerHealth(source="m", age_s=9.0, tracks=3, stale=True, expected_period_s=1.0),
+    },
     counts={"replans_total": 9}, memory_bytes={"front": 4_000_000},
     histograms={"answer_s": Histogram(bounds_s=[0.01, 0.1], counts=[1, 2, 1], sum_s=0.5)},
 )  # fmt: skip
@@ -201,6 +205,9 @@ def test_health_for_people_programs_and_scrapers() -> None:
     text = run("health").stdout
     assert "ready, up 60 s, revision 3" in text
     assert "125.00" in text  # the mean of four answers in half a second
+    lines = {line.split()[0]: line.split()[1:] for line in text.splitlines() if line.strip()}
+    assert lines["fixed"] == ["4", "0", "2.0", "s", "durable"]
+    assert lines["movers"] == ["0", "3", "9.0", "m", "stale"]
     assert json.loads(run("health", "--json").stdout)["counts"] == {"replans_total": 9}
     assert "byway_replans_total 9.0" in run("health", "--openmetrics").stdout
 
