@@ -72,7 +72,7 @@ def readme_blocks() -> list[str]:
 
 @pytest.mark.timeout(300)
 def test_the_readme_does_what_it_says(daemon: str) -> None:
-    with_daemon, without = readme_blocks()
+    with_daemon, without, _ = readme_blocks()
     names: dict[str, Any] = {}
     exec(with_daemon.replace("tcp://127.0.0.1:7461", daemon), names)
     answer = names["answer"]
@@ -90,6 +90,65 @@ def test_the_readme_does_what_it_says(daemon: str) -> None:
         assert (last["x_m"], last["y_m"]) == pytest.approx((40.0, 22.0), abs=1e-3)
         assert last["gear"] == 0
         assert np.hypot(np.diff(table["x_m"]), np.diff(table["y_m"])).max() <= 0.3 + 1e-9
+
+
+@pytest.mark.timeout(300)
+def test_the_readme_keeps_a_site_true_and_guards_a_route(daemon: str) -> None:
+    *_, live = readme_blocks()
+    bearings = np.linspace(-1.5, 1.5, 181)
+    names: dict[str, Any] = {"byway": byway, "bearings": bearings, "ranges": np.full(181, np.inf)}
+    # A layer that goes stale must not refuse the replans of other tests.
+    for said, instead in (
+        ("tcp://127.0.0.1:7461", daemon),
+        ('"refuse"', '"report"'),
+        ("timeout_s=60.0", "timeout_s=1.5"),
+    ):
+        assert said in live
+        live = live.replace(said, instead)
+    exec(live, names)
+    assert names["answer"].kind == "route"
+    with byway.Client(daemon) as client:
+        site = client.site(guards=True)
+        assert site.layers["lidar.north"].decay_s == 5.0
+        # The walker may have been in its way, and the daemon have found another route.
+        assert [guard.unit for guard in site.guards] == ["tug-3"]
+        client.release("tug-3")
+
+
+@pytest.mark.timeout(300)
+def test_a_drawing_of_a_yard_is_put_and_drawn(daemon: str, tmp_path: Path) -> None:
+    yard = ROOT / "daemon" / "bywayd" / "yard" / "yard.geojson"
+    # Far from what other tests have there.
+    told = json.loads(yard.read_text())
+    for feature in told["features"]:
+        feature["geometry"]["coordinates"] = moved(feature["geometry"]["coordinates"], 120.0)
+    file = tmp_path / "yard.geojson"
+    file.write_text(json.dumps(told))
+    for _ in range(2):  # again is the same
+        found = byway_command(
+            "put", str(file), "--layer", "drawn", "--replace", "--json", endpoint=daemon
+        )
+        assert found.returncode == 0, found.stderr
+        counts = json.loads(found.stdout)
+        assert (counts["polygons"], counts["discs"], counts["boxes"]) == (16, 5, 3)
+    picture = tmp_path / "site.png"
+    shown = byway_command("site", "--json", "--picture", str(picture), endpoint=daemon)
+    assert shown.returncode == 0, shown.stderr
+    layer = json.loads(shown.stdout)["layers"]["drawn"]
+    assert len(layer["holes"]["drying-court"]) == 1
+    assert layer["polygons"]["kiln-1"][0] == [125.0, 164.0]
+    assert picture.read_bytes().startswith(b"\x89PNG")
+    tie = {"type": "Polygon", "coordinates": [[[0, 0], [4, 4], [4, 0], [0, 4], [0, 0]]]}
+    file.write_text(json.dumps({"type": "Feature", "id": "bow-tie", "geometry": tie}))
+    refused = byway_command("put", str(file), "--layer", "drawn", endpoint=daemon)
+    assert refused.returncode == 4
+    assert "bow-tie" in refused.stderr
+
+
+def moved(coordinates: Any, by_m: float) -> Any:
+    if isinstance(coordinates[0], list):
+        return [moved(each, by_m) for each in coordinates]
+    return [value + by_m for value in coordinates]
 
 
 @pytest.mark.timeout(300)
@@ -129,6 +188,8 @@ def test_the_demo_runs_reports_and_draws(tmp_path: Path) -> None:
     assert found.returncode == 0, (told, found.stderr)
     assert told["collisions"] == []
     assert told["answers"]["route"] >= 3
+    assert told["scans"] > 30
+    assert told["faults"] == []
     assert all(unit["driven_m"] > 1.0 for unit in told["units"].values())
     assert picture.read_bytes().startswith(b"\x89PNG")
     assert "not a safety function" in " ".join(found.stderr.split())
