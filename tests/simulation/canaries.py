@@ -8,19 +8,23 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from types import ModuleType
 from typing import Any
 
 from byway.messages import Acknowledged, Cleared, Message
+from bywayd.core import changes
 from bywayd.core.answers import Answers
 from bywayd.core.dispatch import Dispatch
 from bywayd.core.docket import Docket, Held
 from bywayd.core.events import Outcome
 from bywayd.core.expiries import Expiries
+from bywayd.core.freshness import Freshness
 from bywayd.core.guards import Guard, Guards
 from bywayd.core.instants import Instant
 from bywayd.core.keeping import Keeping
 from bywayd.core.keepline import KeepLine
 from bywayd.core.kept import Keepsake
+from bywayd.core.layers import Layer, Layers
 from bywayd.core.ledger import Entry, Ledger
 from bywayd.core.outbox import Outbox
 from bywayd.core.rerouting import Rerouting
@@ -39,13 +43,14 @@ true_change_over = Rerouting._change_over
 true_clerk_forsake = Keeping._forsake
 true_keep = KeepLine.append
 true_pop_due = Expiries.pop_due
+true_claimed = Freshness.claimed
 
 
 @dataclass(frozen=True)
 class Canary:
-    """One method replaced by a broken one, and what must be said about it."""
+    """One method or function replaced by a broken one, and what must be said about it."""
 
-    owner: type
+    owner: type | ModuleType
     method: str
     broken: Callable[..., Any]
     caught: str
@@ -53,6 +58,8 @@ class Canary:
     is_durable: bool = False
     #: ... and to a daemon that was started again.
     needs_restarts: bool = False
+    #: It is seen in what sources do, on a day on which they do much.
+    is_about_sources: bool = False
 
 
 def acknowledge_at_once(ledger: Ledger, entry: Entry) -> None:
@@ -152,13 +159,87 @@ def keep_for_sources_only(line: KeepLine, keepsake: Keepsake) -> int:
     return line._end if keepsake.arrived is None else true_keep(line, keepsake)
 
 
+def drop_what_is_put_again(expiries: Expiries, now: Instant) -> dict[str, list[str]]:
+    due: dict[str, list[str]] = {}
+    while (key := expiries._alarms.pop_due(now)) is not None:
+        due.setdefault(key[0], []).append(key[1])
+    for layer, ids in due.items():
+        expiries.dropped(layer, ids)
+    return due
+
+
+def begin_anew_with_every_claim(freshness: Freshness, layer: Layer, now: Instant) -> None:
+    layer.expected_since = None
+    true_claimed(freshness, layer, now)
+
+
+def take_layers_from_whoever_has_them(layers: Layers, now: Instant) -> Layer | None:
+    name = layers._alarms.pop_due(now)
+    layer = None if name is None else layers.get(name)
+    if layer is not None:
+        layer.owner = None
+    return layer
+
+
 CANARIES = {
     "a batch is lost with its surveyor": Canary(
         *(Surveying, "_forsake", lose_the_batch),
-        "decided once|what is pending is known|not settled",
+        "decided once|what is pending is known|what is acknowledged is visible|not settled",
     ),
     "obstacles never expire": Canary(
-        Expiries, "pop_due", forget_what_expired, "obstacles that have expired are there"
+        Expiries, "pop_due", forget_what_expired, "nothing outlasts its expiry"
+    ),
+    "an obstacle that is put again is dropped": Canary(
+        Expiries,
+        "pop_due",
+        drop_what_is_put_again,
+        "nothing is dropped before it expires",
+        is_about_sources=True,
+    ),
+    "what was seen is taken for what is": Canary(
+        changes,
+        "_seen",
+        lambda message, now: now,
+        "what was seen keeps its moment",
+        is_about_sources=True,
+    ),
+    "what moves stays where it was seen": Canary(
+        Surveying,
+        "_carry_in",
+        lambda self, next_in_s, now: None,
+        "is carried forward in time",
+        is_about_sources=True,
+    ),
+    "layers of outlines take scans and tracks": Canary(
+        changes,
+        "_NOT_AMONG_OUTLINES",
+        (),
+        "what is seen goes to layers that take it",
+        is_about_sources=True,
+    ),
+    "every claim keeps its layer fresh": Canary(
+        Freshness,
+        "claimed",
+        begin_anew_with_every_claim,
+        "is stale is told|no replan is taken in",
+        is_about_sources=True,
+    ),
+    "nobody hears of stale layers": Canary(
+        Freshness,
+        "tell",
+        lambda self, layer, state, now: None,
+        "a layer that is stale is told",
+        is_about_sources=True,
+    ),
+    "stale layers refuse nothing": Canary(
+        *(Freshness, "why_not", lambda self, left_out, now: None),
+        "no replan is taken in while a layer is stale",
+        is_about_sources=True,
+    ),
+    "layers are taken from owners that speak": Canary(
+        *(Layers, "pop_forfeited", take_layers_from_whoever_has_them),
+        "a layer is taken from who was silent",
+        is_about_sources=True,
     ),
     "changes are acknowledged before they are visible": Canary(
         Ledger, "_append", acknowledge_at_once, "what is acknowledged is visible"
@@ -181,7 +262,7 @@ CANARIES = {
         Snapshots,
         "publish",
         publish_anything,
-        "revisions never go back|not older|not given back|acknowledged before",
+        "revisions never go back|not older|not given back|acknowledged",
     ),
     "deadlines are not kept": Canary(
         *(Dispatch, "settle", never_look_at_the_clock),
@@ -199,7 +280,8 @@ CANARIES = {
         "was verified at the revision that its answer names",
     ),
     "routes are forgotten with the surveyor that watched them": Canary(
-        Guards, "surveyor_ready", take_up_no_guards, "what stands is watched"
+        *(Guards, "surveyor_ready", take_up_no_guards),
+        "what stands is watched|what is unwatched was watched",
     ),
     "every look at a blocked route is told": Canary(
         *(Guards, "_is_news", lambda self, told, seen: True),
@@ -209,7 +291,7 @@ CANARIES = {
         *(Guards, "publish", publish_no_good_news), "what the surveyor sees is told"
     ),
     "vehicles may be silent for ever": Canary(
-        Guards, "settle", lambda self, now: None, "no silence is without end"
+        Guards, "settle", lambda self, now: None, "no silence is without end|time goes on"
     ),
     "guards are lost before their time": Canary(
         *(Guards, "move", move_without_hearing), "a guard is lost after the silence"

@@ -11,6 +11,7 @@ from collections import defaultdict
 from collections.abc import Callable
 from dataclasses import dataclass, field
 
+from tests.simulation.freshcheck import FreshCheck
 from tests.simulation.guardcheck import GuardCheck
 from tests.simulation.promises import BrokenPromise, promise
 
@@ -54,8 +55,8 @@ class Numbers:
 
     acknowledged: int = 0
     refused: set[int] = field(default_factory=set)
-    #: Numbers of claims: nothing of them is to be seen on the site.
-    traceless: set[int] = field(default_factory=set)
+    #: Claims by number: nothing of them is to be seen on the site.
+    traceless: dict[int, messages.Claim] = field(default_factory=dict)
 
 
 class Checkers:
@@ -68,18 +69,18 @@ class Checkers:
         settings: FrontSettings,
         is_safe: Callable[[str, str, int], bool],
         recall_is_visible: Callable[[], bool],
+        fresh: FreshCheck,
     ) -> None:
         self.epoch = epoch
         self.sees = sees
         self.is_safe = is_safe
         self.recall_is_visible = recall_is_visible
+        self.fresh = fresh
         self.requests: dict[str, Request] = {}
         self.sources: dict[str, Numbers] = defaultdict(Numbers)
         self.revision = 0
         #: Highest revision in an acknowledgement that has reached its source.
         self.known_revision = 0
-        #: What was said of each layer last: "stale" or "fresh".
-        self.freshness: dict[str, str] = {}
         self.streams: dict[str, int] = defaultdict(int)
         #: (outcome body, revision): routes that a worker found or checked.
         self.verified: set[tuple[bytes, int]] = set()
@@ -127,7 +128,7 @@ class Checkers:
         message = effect.message
         self.guards.reply(effect, now_ns)
         if isinstance(message, messages.Acknowledged | messages.Refused):
-            self._told_source(message)
+            self._told_source(message, now_ns)
         elif effect.peer.channel == "requests" and effect.header.id.startswith("replan"):
             self._told_asker(effect, now_ns)
         if isinstance(message, messages.Acknowledged | messages.Accepted | messages.Welcome):
@@ -137,7 +138,7 @@ class Checkers:
         promise(revision >= self.revision, "revisions never go back", revision, self.revision)
         self.revision = revision
 
-    def _told_source(self, message: messages.Acknowledged | messages.Refused) -> None:
+    def _told_source(self, message: messages.Acknowledged | messages.Refused, now_ns: int) -> None:
         numbers = self.sources[message.source]
         if isinstance(message, messages.Refused):
             if message.number > numbers.acknowledged:
@@ -158,7 +159,9 @@ class Checkers:
                 "what is acknowledged of a durable layer is on the disk",
                 *(message.source, number),
             )
-            numbers.traceless.discard(number)
+            claim = numbers.traceless.pop(number, None)
+            if claim is not None and claim.expected_period_s and number not in numbers.refused:
+                self.fresh.acknowledged(claim.layer, now_ns)
             numbers.refused.discard(number)
         numbers.acknowledged = message.number
 
@@ -172,6 +175,8 @@ class Checkers:
             promise(self.recall_is_visible(), "no replan before what is kept is there", request.id)
             request.accepted_ns = now_ns
             request.accepted_revision = message.revision
+            assert request.ask is not None
+            self.fresh.accepted(request.ask, now_ns)
             promise(
                 message.revision >= request.seen_revision,
                 "a replan sees what was acknowledged before it was sent",
@@ -196,6 +201,8 @@ class Checkers:
             return
         request.final, request.final_ns = message, now_ns
         self.answered += 1
+        if isinstance(message, messages.ErrorMessage) and request.ask is not None:
+            self.fresh.refused(request.ask, message, now_ns)
         if request.accepted_ns is not None:
             took_ns = now_ns - request.accepted_ns
             promise(
@@ -246,9 +253,10 @@ class Checkers:
         if self.guards.publish(effect, now_ns):
             return
         if isinstance(message, messages.LayerState):
-            self._layer_state(effect.topic, message)
+            self.fresh.layer_state(effect.topic, message, now_ns)
             return
         if isinstance(message, messages.HealthIs):
+            self.fresh.health(message, now_ns)
             self._rises(message.revision)
             return
         promise(isinstance(message, messages.BetterMessage), "routes and health are published")
@@ -271,13 +279,6 @@ class Checkers:
                 *(request.id, best, cost),
             )
         request.best = (message.revision, cost)
-
-    def _layer_state(self, topic: str, message: messages.LayerState) -> None:
-        promise(topic == f"layers.{message.layer}", "what becomes of a layer goes to its topic")
-        if message.state != "forfeited":
-            last = self.freshness.get(message.layer, "fresh")
-            promise(message.state != last, "a layer becomes stale or fresh once", message)
-            self.freshness[message.layer] = message.state
 
     # -- snapshots ----------------------------------------------------------------------------
 

@@ -73,6 +73,7 @@ class Crew:
             del self.workers[event.worker]
         if isinstance(event, events.SurveyorLost):
             self.surveyor.number = None
+        self.surveyor.heard(event)
         self.world.hand_in(event)
 
     def carry_out(self, effect: effects.Effect) -> None:

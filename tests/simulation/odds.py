@@ -11,6 +11,8 @@ from __future__ import annotations
 import random
 from dataclasses import dataclass, field
 
+from byway.messages import WhenStale
+
 #: Every fault, with its odds on a bad day. What is in brackets is one chance of these.
 FAULTS = {
     "lose": 0.2,  # (a message) the network loses it
@@ -44,6 +46,7 @@ FAULTS = {
     "trespass": 0.1,  # (a change) it is for a layer of somebody else
     "driver_silent": 0.05,  # (a turn of a driver) it says nothing for longer than it may
     "fall_silent": 0.02,  # a source says nothing for a while
+    "expectant": 1.0,  # (a claim) it tells how often its layer changes, and what if it does not
     "restart": 0.0003,  # (an event) the daemon is killed, and another takes its place
     "lag": 0.3,  # (a tick) the front gets its turn late, within what its margin allows
 }
@@ -70,12 +73,16 @@ class Odds:
     guards_max: int = 256
     #: Sources whose layers are durable.
     durable: int = 0
+    expiries_max: int = 100_000
+    #: What is done when the layer that is declared at the start becomes stale.
+    when_stale: WhenStale = "report"
 
     @classmethod
     def draw(cls, rng: random.Random) -> Odds:
         """Return the odds of one day."""
         alive = rng.sample(sorted(FAULTS), rng.randint(1, len(FAULTS)))
         units = rng.randint(1, 12)
+        durable = rng.choice([0, 1, 2])
         return cls(
             {
                 name: FAULTS[name] * rng.uniform(0.02, 1.0) if name in alive else 0.0
@@ -88,7 +95,10 @@ class Odds:
             units=units,
             # On some days there is not room for the guards of all.
             guards_max=rng.choice([max(1, units - 1), 256]),
-            durable=rng.choice([0, 1, 2]),
+            durable=durable,
+            # What is recalled without room for its expiry would stay.
+            expiries_max=100_000 if durable else rng.choice([20, 100_000]),
+            when_stale="refuse" if rng.random() < 0.1 else "report",
         )
 
     def calm(self) -> None:

@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 import numpy as np
+from tests.simulation.freshcheck import Terms
 from tests.simulation.times import MS, SECOND
 
 from byway import frames, messages
@@ -19,6 +20,7 @@ if TYPE_CHECKING:
 
 WINDOW = 16
 POOL = 6
+KINDS = ("put", "drop", "replace", "patch", "claim", "track", "scan")
 
 
 def obstacles(token: int, ids: list[str]) -> tuple[dict[str, object], bytes]:
@@ -32,6 +34,23 @@ def obstacles(token: int, ids: list[str]) -> tuple[dict[str, object], bytes]:
         }
     )
     return {"polygons": 0, "discs": len(ids), "columns": columns}, packed
+
+
+def tracks(token: int, ids: list[str]) -> tuple[dict[str, object], bytes]:
+    """Return the fields and the packed frame of discs that move, told apart in the same way."""
+    count = len(ids)
+    columns, packed = pack(
+        {
+            "ids": np.frombuffer("\n".join(ids).encode(), np.uint8),
+            "starts": np.zeros(1, np.int64),
+            "vertices_m": np.empty((0, 2)),
+            "radii_m": np.ones(count),
+            "poses": np.full((count, 3), float(token)),
+            "velocities": np.ones((count, 3)),
+            "uncertainties": np.zeros((count, 2)),
+        }
+    )
+    return {"discs": count, "columns": columns}, packed
 
 
 @dataclass
@@ -62,6 +81,18 @@ class Sources:
         #: Token and layer of each of them.
         self.made: dict[tuple[str, str, int], tuple[int, str]] = {}
         self.serial = 0
+        #: What whoever tells anything of a layer tells of it, on this day.
+        self.terms = {source.layer: self._terms() for source in self.sources.values()}
+        self.terms[f"layer{len(self.sources)}"] = self._terms()
+        self.terms["outlines"] = Terms(1.0, world.odds.when_stale)
+
+    def _terms(self) -> Terms:
+        rng = self.world.rng
+        when_stale: messages.WhenStale = rng.choice(["ignore", "report", "report", "refuse"])
+        # Where replans are refused too often, nothing else can be seen.
+        return Terms(
+            rng.choice([0.3, 1.0, 3.0] if when_stale == "refuse" else [0.05, 0.3, 1.0]), when_stale
+        )
 
     def begin(self) -> None:
         for source in self.sources.values():
@@ -88,7 +119,8 @@ class Sources:
         world, rng = self.world, self.world.rng
         layer = source.layer
         if world.chance("trespass"):
-            layer = f"layer{rng.randrange(len(self.sources) + 1)}"
+            others = [f"layer{i}" for i in range(len(self.sources) + 1)]
+            layer = rng.choice([*others, "outlines"])
         self.serial += 1
         token = self.serial
         self._name(token, source, layer)
@@ -96,7 +128,7 @@ class Sources:
         expires = rng.choice([None, None, 0.02, 0.1, 0.5])
         packed = b""
         message: messages.Change
-        match rng.choice(["put", "put", "put", "drop", "replace", "patch", "claim"]):
+        match rng.choice([*KINDS, "put", "put", "track"]):
             case "put":
                 fields, packed = obstacles(token, ids)
                 message = messages.Put(layer=layer, expires_in_s=expires, **fields)
@@ -112,12 +144,33 @@ class Sources:
                 message = messages.Patch(
                     layer=layer, corner_m=(float(token), 0.0), cell_m=0.1, columns={}
                 )
+            case "scan":
+                message = messages.Scan(
+                    layer=layer,
+                    origin=(float(token), 0.0, 0.0),
+                    range_m_max=9.0,
+                    age_s=rng.choice([0.0, 0.05]),
+                    columns={},
+                )
+            case "track":
+                fields, packed = tracks(token, ids)
+                message = messages.Track(
+                    layer=layer, expires_in_s=expires, age_s=rng.choice([0.0, 0.05]), **fields
+                )
             case _:
                 flag = rng.choice([None, None, False, True])
                 # Where nothing is kept it will be refused.
                 durable = (not world.durable or layer in world.durable) and token % 8 == 0
+                told: dict[str, object] = {}
+                if world.chance("expectant"):
+                    terms = self.terms[layer]
+                    told = {"expected_period_s": terms.period_s, "when_stale": terms.when_stale}
                 message = messages.Claim(
-                    layer=layer, lease_s=1.0, unknown_blocks=flag, durable=durable or None
+                    layer=layer,
+                    lease_s=1.0,
+                    unknown_blocks=flag,
+                    durable=durable or None,
+                    **told,
                 )
                 del self.made[self.tokens.pop(token)]
         self._send_new(source, message, packed)
@@ -135,7 +188,8 @@ class Sources:
     def _send_new(self, source: Source, message: messages.Change, packed: bytes) -> None:
         entry = (source.next, message, packed)
         if isinstance(message, messages.Claim) and source.epoch == self.world.epoch:
-            self.world.checkers.sources[source.name].traceless.add(source.next)
+            numbers = self.world.checkers.sources[source.name]
+            numbers.traceless[source.next] = message
         source.next += 1
         source.unacked.append(entry)
         self._send(source, entry)
@@ -151,11 +205,18 @@ class Sources:
         if world.chance("garble"):
             fault = BadMessage("something is wrong")
             fault.header = world.rng.choice([header, None])
-            world.to_front(lambda: events.Unreadable(peer, fault))
+
+            def make_garbage() -> events.Event:
+                if fault.header is not None:
+                    world.checkers.fresh.heard_ns[source.name] = world.now_ns
+                return events.Unreadable(peer, fault)
+
+            world.to_front(make_garbage)
             return
         came = frames.Received(header, message, b"body", packed)
 
         def make() -> events.Event:
+            world.checkers.fresh.heard_ns[source.name] = world.now_ns
             world.crew.surveyor.site_arrives(came)
             return events.Received(peer, came)
 

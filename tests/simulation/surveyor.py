@@ -18,6 +18,9 @@ from tests.simulation.times import MS, SECOND
 from byway import frames, messages, obstacles
 from bywayd.core import effects, events
 
+#: How often what moves is carried forward.
+CARRY_S = 0.02
+
 if TYPE_CHECKING:
     from tests.simulation.crew import Crew
     from tests.simulation.world import World
@@ -30,6 +33,10 @@ class Model:
     revision: int = 1
     layers: dict[str, dict[str, tuple[int, int | None]]] = field(default_factory=dict)
     patches: dict[str, int] = field(default_factory=dict)
+    scans: dict[str, int] = field(default_factory=dict)
+    #: Which obstacles move, and how often they were carried forward.
+    moving: dict[str, set[str]] = field(default_factory=dict)
+    carries: int = 0
     #: The last number of each source that has been applied, and all that are not acknowledged.
     applied: dict[str, int] = field(default_factory=dict)
     seen: dict[str, set[int]] = field(default_factory=dict)
@@ -40,9 +47,22 @@ class Model:
             self.revision,
             {name: dict(layer) for name, layer in self.layers.items()},
             dict(self.patches),
+            dict(self.scans),
+            {name: set(ids) for name, ids in self.moving.items()},
+            self.carries,
             dict(self.applied),
             {name: set(numbers) for name, numbers in self.seen.items()},
         )
+
+    @property
+    def looks(self) -> tuple[object, ...]:
+        """What makes one revision another than the last."""
+        return self.layers, self.patches, self.scans, self.carries
+
+    @property
+    def next_in_s(self) -> float | None:
+        """When something has to be carried forward."""
+        return CARRY_S if any(self.moving.values()) else None
 
 
 class Surveyor:
@@ -69,6 +89,14 @@ class Surveyor:
         #: What has been recalled and applied, by layer and id; patches with "".
         self.recalled: set[tuple[str, str]] = set()
         self.lookout = Lookout(self)
+        #: The front has had it killed; what it still says does not count.
+        self.is_killed = False
+        #: What was last handed out, and when for the first time.
+        self.order: tuple[tuple[effects.Change, ...], int] = ((), 0)
+        #: What was said last, if it made sense: batch, and the layers that sources changed in it.
+        self.said: tuple[int, list[str]] | None = None
+        #: When the front has to hand out a batch, if only an empty one.
+        self.wanted_ns: int | None = None
 
     def carry_out(self, effect: effects.Effect) -> None:
         """Do what the front wants."""
@@ -77,6 +105,7 @@ class Surveyor:
             case effects.SpawnSurveyor():
                 self.spawn(effect)
             case effects.KillSurveyor():
+                self.is_killed, self.wanted_ns = True, None
                 delay = rng.uniform(0, 2) * MS
                 self.world.at(delay, self.die, self.crew.life, effect.surveyor)
             case effects.PingSurveyor():
@@ -96,7 +125,7 @@ class Surveyor:
     def spawn(self, effect: effects.SpawnSurveyor) -> None:
         world, rng = self.world, self.world.rng
         promise(self.number is None, "one surveyor at a time", effect.surveyor)
-        self.number, self.hung = effect.surveyor, False
+        self.number, self.hung, self.is_killed = effect.surveyor, False, False
         self.lookout = Lookout(self)
         self.busy_until_ns = world.now_ns
         if effect.revision is None:
@@ -116,7 +145,9 @@ class Surveyor:
         revision = self.model.revision
         if effect.revision is not None and world.chance("surveyor_raves"):
             revision -= 1
-        ready = events.SurveyorReady(number, revision, {"revision": revision})
+        ready = events.SurveyorReady(
+            *(number, revision, {"revision": revision}), next_in_s=self.model.next_in_s
+        )
         self.crew.say(rng.uniform(5, 30) * MS, ready)
 
     def die(self, life: int, number: int) -> None:
@@ -127,7 +158,12 @@ class Surveyor:
 
     def survey(self, effect: effects.ApplyChanges) -> None:
         world, rng = self.world, self.world.rng
-        promise(effect.changes != (), "a batch has changes")
+        promise(effect.at.ns == world.now_ns, "what moves is carried to where it is now")
+        is_due = self.wanted_ns is not None and world.now_ns >= self.wanted_ns
+        promise(effect.changes != () or is_due, "a batch is empty when one is wanted only")
+        self.wanted_ns = None
+        if not effect.changes or effect.changes != self.order[0]:
+            self.order = (effect.changes, world.now_ns)
         if effect.surveyor != self.number:
             return
         if world.chance("surveyor_hangs"):
@@ -136,24 +172,31 @@ class Surveyor:
             delay = rng.uniform(0, 1) * MS
             world.at(delay, self.die, self.crew.life, effect.surveyor)
         took_ns = rng.uniform(0.1, 2.0) * MS
-        world.at(took_ns, self._apply, self.crew.life, effect)
+        world.at(took_ns, self._apply, self.crew.life, effect, self.order[1])
 
-    def _apply(self, life: int, effect: effects.ApplyChanges) -> None:
+    def _apply(self, life: int, effect: effects.ApplyChanges, handed_out_ns: int) -> None:
         world = self.world
         if life != self.crew.life or effect.surveyor != self.number or self.hung:
             return
         before = self.model.copy()
         refusals = []
+        refused: list[effects.Change] = []
+        changed = []
         for index, change in enumerate(effect.changes):
             token = self.token_of(change)
             is_new = token is not None and not self._is_recalled(change, token)
             if is_new and world.chance("refuse"):
                 refusals.append(events.Refusal(index, "bad_geometry", "crosses itself", {}))
+                refused.append(change)
             else:
                 self._apply_one(change)
+                changed += [change.layer] if is_new else []
+        self._check_expired(handed_out_ns, effect.changes, refused)
+        if any(self.model.moving.values()) and world.rng.random() < 0.5:
+            self.model.carries += 1
         self.last_batch = {token for change in effect.changes if (token := self.token_of(change))}
         self.may_come_again = set()
-        if (self.model.layers, self.model.patches) != (before.layers, before.patches):
+        if self.model.looks != before.looks:
             self.model.revision += 1
         self.snapshots[self.model.revision] = self.model.copy()
         if world.chance("surveyor_dies"):  # it has published, and nobody will know
@@ -161,11 +204,16 @@ class Surveyor:
             return
         revision = self.model.revision
         batch = effect.batch
+        self.said = (batch, changed)
         if world.chance("surveyor_raves"):
-            revision, batch = world.rng.choice([(revision - 1000, batch), (revision, batch + 99)])
+            revision, batch = world.rng.choice([(0, batch), (revision, batch + 99)])
+            self.said = None
         counts = {name: len(layer) for name, layer in self.model.layers.items()}
         ready = events.SnapshotReady(
-            effect.surveyor, batch, revision, {"revision": revision}, tuple(refusals), 1000, counts
+            *(effect.surveyor, batch, revision, {"revision": revision}, tuple(refusals), 1000),
+            counts,
+            {name: len(ids) for name, ids in self.model.moving.items()},
+            self.model.next_in_s,
         )
         self.crew.say(0, ready)
         self.lookout.look_at_all()
@@ -193,25 +241,39 @@ class Surveyor:
             acknowledged = world.checkers.sources[source].acknowledged
             seen = self.model.seen.get(source, set())
             self.model.seen[source] = {n for n in seen if n > acknowledged} | {number}
+        if change.as_of is not None:
+            self._check_seen(change, token)
         expires_in_s = getattr(change.message, "expires_in_s", None)
+        if expires_in_s is None and change.what == "track":
+            expires_in_s = world.settings.track_expires_s
         if expires_in_s is not None:
             assert token is not None
             first, _ = self.arrived[world.sources.tokens[token]]
             expires_at = first + round(expires_in_s * SECOND)
+        moving = self.model.moving.setdefault(change.layer, set())
         match change.what:
-            case "put" | "replace":
+            case "put" | "replace" | "track":
                 assert token is not None
                 if change.what == "replace":
                     layer.clear()
+                    moving.clear()
                     self.model.patches.pop(change.layer, None)
+                    self.model.scans.pop(change.layer, None)
                 for id in self._ids_of(change):
                     if recalled:
                         expires_at = world.crew.clerk.expiry(change.layer, id, token)
                     layer[id] = (token, expires_at)
+                    moving.discard(id)
+                if change.what == "track":
+                    moving.update(self._ids_of(change))
             case "patch":
                 assert token is not None
                 self.model.patches[change.layer] = token
+            case "scan":
+                assert token is not None
+                self.model.scans[change.layer] = token
             case "drop":
+                moving.difference_update(change.ids)
                 for id in change.ids:
                     if token is None and id in layer:
                         at_ns = layer[id][1]
@@ -221,6 +283,59 @@ class Surveyor:
                             *(change.layer, id, layer[id], world.now_ns),
                         )
                     layer.pop(id, None)
+
+    def _check_seen(self, change: effects.Change, token: int | None) -> None:
+        """A scan or track is where it may be, with the moment that it was seen."""
+        assert token is not None
+        assert isinstance(change.message, messages.Scan | messages.Track)
+        takes = not change.settings.durable and not change.settings.outlines_only
+        promise(takes, "what is seen goes to layers that take it", change.layer)
+        first, last = self.arrived[self.world.sources.tokens[token]]
+        arrived = change.as_of.ns + round(change.message.age_s * SECOND)  # type: ignore[union-attr]
+        promise(first <= arrived <= last, "what was seen keeps its moment", change.message)
+
+    def _check_expired(
+        self,
+        handed_out_ns: int,
+        changes: tuple[effects.Change, ...],
+        refused: list[effects.Change],
+    ) -> None:
+        """What was there, and had expired when this batch was first handed out, goes with it."""
+        tokens = self.world.sources.tokens
+        new = {self.token_of(change) for change in changes}
+        # What is to take the place of something keeps it until that is decided.
+        replaced = {change.layer for change in refused if change.what == "replace"}
+        kept = {(change.layer, id) for change in refused for id in self._ids_of(change)}
+        for name, layer in self.model.layers.items():
+            for id, (token, expires_at) in layer.items():
+                if token in new or tokens[token][0] != self.world.epoch:
+                    continue
+                if expires_at is None or name in replaced or (name, id) in kept:
+                    continue
+                first, last = self.arrived[tokens[token]]
+                promise(
+                    expires_at + last - first > handed_out_ns,
+                    "nothing outlasts its expiry",
+                    *(name, id, token, expires_at / 1e6, handed_out_ns / 1e6),
+                )
+
+    def heard(self, event: events.Event) -> None:
+        """The front is about to hear something."""
+        if isinstance(event, events.SurveyorLost):
+            self.wanted_ns = None
+        if self.is_killed or not isinstance(event, events.SurveyorReady | events.SnapshotReady):
+            return
+        if event.next_in_s is not None:
+            self.wanted_ns = self.world.now_ns + round(event.next_in_s * SECOND)
+        if isinstance(event, events.SnapshotReady) and self.said is not None:
+            batch, changed = self.said
+            if batch == event.batch:
+                self.world.checkers.fresh.became_visible(changed, self.world.now_ns)
+
+    def check_carried(self) -> None:
+        """What moves is carried forward in time."""
+        is_late = self.wanted_ns is not None and self.world.now_ns >= self.wanted_ns
+        promise(not is_late, "what moves is carried forward in time")
 
     def _is_recalled(self, change: effects.Change, token: int) -> bool:
         """Whether it is a change of an earlier life, which this one was told by the clerk."""
@@ -238,7 +353,7 @@ class Surveyor:
     def _ids_of(change: effects.Change) -> list[str]:
         """Return the ids of obstacles that are put."""
         message = change.message
-        if not isinstance(message, messages.Put | messages.ReplaceLayer):
+        if not isinstance(message, messages.Put | messages.ReplaceLayer | messages.Track):
             return []
         return obstacles.ids_of(message.columns, change.packed, message.discs)
 
@@ -248,6 +363,11 @@ class Surveyor:
         if isinstance(change.message, messages.Put | messages.ReplaceLayer):
             column = change.message.columns["discs_m"]
             return round(struct.unpack_from("<d", change.packed, column.offset)[0])
+        if isinstance(change.message, messages.Track):
+            column = change.message.columns["poses"]
+            return round(struct.unpack_from("<d", change.packed, column.offset)[0])
+        if isinstance(change.message, messages.Scan):
+            return round(change.message.origin[0])
         if isinstance(change.message, messages.Patch):
             return round(change.message.corner_m[0])
         for id in change.ids:

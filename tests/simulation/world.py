@@ -20,6 +20,7 @@ from tests.simulation.checkers import BrokenPromise, Checkers, describes, promis
 from tests.simulation.clients import Clients
 from tests.simulation.crew import Crew
 from tests.simulation.drivers import Drivers
+from tests.simulation.freshcheck import FreshCheck
 from tests.simulation.odds import Odds
 from tests.simulation.sources import Sources
 from tests.simulation.times import MS, SECOND
@@ -33,6 +34,8 @@ from bywayd.core.instants import Instant
 #: How often the core checks all of its own state: a prime, so that it drifts over all situations.
 CHECK_EVERY = 101
 FORGET_EVERY = 20_011
+#: A front that wants to be woken at once again and again would let no time pass.
+STEPS_AT_ONCE_MAX = 1_000
 
 MakeFront = Callable[[FrontSettings, str, int], Front]
 
@@ -54,6 +57,9 @@ def settings_for(odds: Odds) -> FrontSettings:
         answers_kept_s=30.0,
         budget_max_s=10.0,
         guards_max=odds.guards_max,
+        track_expires_s=0.2,
+        expiries_max=odds.expiries_max,
+        expected={"outlines": (1.0, odds.when_stale)},
     )
 
 
@@ -75,6 +81,7 @@ class World:
         self.now_ns = 10_000 * SECOND
         self._heap: list[tuple[int, int, Callable[..., None], tuple[Any, ...]]] = []
         self._serial = 0
+        self._steps_at_once = 0
         #: Events handed to any front.
         self.event_count = 0
         self.lives = 0
@@ -114,6 +121,8 @@ class World:
     def step(self) -> None:
         """Let the next thing happen."""
         at_ns, _, call, args = heapq.heappop(self._heap)
+        self._steps_at_once = self._steps_at_once + 1 if at_ns == self.now_ns else 0
+        promise(self._steps_at_once < STEPS_AT_ONCE_MAX, "time goes on")
         self.now_ns = at_ns
         call(*args)
 
@@ -127,6 +136,7 @@ class World:
         self.checkers = Checkers(
             *(self.epoch, surveyor.sees, self.settings),
             *(self.sources.is_safe, surveyor.recall_is_visible),
+            FreshCheck(self.sources.terms, self.settings.expected, self.now_ns),
         )
         self.crew.all_gone()
         self.front = self.make_front(self.settings, self.epoch, self.seed + self.lives)
@@ -152,6 +162,9 @@ class World:
             self.checkers.guards.effect(effect, self.now_ns)
             self._carry_out(effect)
         self.checkers.guards.turn_ends(self.now_ns)
+        self.checkers.fresh.turn_ends(self.now_ns)
+        if self.stopped is None:
+            self.crew.surveyor.check_carried()
         if self.event_count % CHECK_EVERY == 0:
             self.front.check()
             self.checkers.guards.check(self.now_ns)
@@ -230,6 +243,9 @@ class World:
         ledger = front.ledger.statistics()
         keep_max = settings.source_window * self.odds.sources + settings.expiries_max
         promise(front.keeping.pending <= keep_max, "what waits for the disk is bounded")
+        promise(ledger.expiries <= settings.expiries_max, "what may expire is bounded")
+        promise(ledger.sources <= self.odds.sources, "sources are known once")
+        promise(ledger.layers <= self.odds.sources + 3, "layers are known once")
         promise(ledger.pending_bytes <= settings.pending_bytes_max, "what is pending is bounded")
         promise(front.outbox.stream_count <= settings.units_max + 1, "streams are bounded")
 
@@ -288,7 +304,7 @@ class World:
     def drain(self) -> None:
         """Ask for the end while replans are open: all are answered, and it ends in two seconds."""
         self.odds.faults["restart"] = 0.0
-        self.is_ending = True
+        self.is_ending = self.checkers.fresh.is_ending = True
         self.clients.burst()
         asked_ns = self.now_ns
         while self.now_ns < asked_ns + 2 * MS:

@@ -84,7 +84,7 @@ class Ledger:
         self._out: Batch | None = None
         #: Of everything undecided.
         self._pending_bytes = 0
-        #: That of the last batch decided.
+        #: The newest, in which everything decided is visible.
         self._revision = 0
 
     # -- what sources send ---------------------------------------------------------------------
@@ -242,6 +242,10 @@ class Ledger:
             source = self._source(name)
             if source.settle(number, positions.get(name, 0), self.keepline.kept_to):
                 self._acknowledge(source, revision)
+
+    def carried(self, revision: int) -> None:
+        """Nothing was decided, but what is visible is so in a newer revision."""
+        self._revision = revision
 
     def _settle_change(self, entry: Entry, change: Change, no: No | None, now: Instant) -> None:
         self._pending_bytes -= entry.size_bytes

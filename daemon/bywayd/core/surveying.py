@@ -151,6 +151,8 @@ class Surveying:
             self._carry_in(event.next_in_s, now)
             if self._ledger.out is not None:
                 self._ledger.decide(event.refusals, event.revision, now)
+            else:
+                self._ledger.carried(event.revision)
 
     def saw(self, event: GuardSeen, now: Instant) -> None:
         """A guarded route has been looked at."""

@@ -180,6 +180,16 @@ def test_a_site_on_which_nothing_has_moved_keeps_its_revision(desk: Desk) -> Non
     assert desk.reply() == messages.Acknowledged(source="s", number=2, revision=2)
 
 
+def test_a_repeat_is_acknowledged_with_the_revision_that_it_was_carried_to(desk: Desk) -> None:
+    message = track("lidar", "cart")
+    desk.change(*message)
+    carried(desk, 1, next_in_s=0.1)
+    desk.tick(100)
+    carried(desk, batch(desk), next_in_s=None)
+    desk.change(*message, number=1)
+    assert desk.reply() == messages.Acknowledged(source="s", number=1, revision=3)
+
+
 def test_changes_that_come_first_carry_forward_as_well(desk: Desk) -> None:
     desk.change(*track("lidar", "cart"))
     carried(desk, 1, next_in_s=0.1)
