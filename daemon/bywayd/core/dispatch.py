@@ -130,6 +130,10 @@ class Dispatch:
             docket = task.docket
             self._restless = self._restless or docket.best is None
             if docket.hold(outcome, task.snapshot.revision, now):
+                docket.expect_changes(now)
+                looks_from = known(docket.looks_from, "who has a route looks", docket.story)
+                if now < looks_from:
+                    self._alarms.set(docket.id, looks_from)
                 self._act(docket, docket.move("better", now), now)
 
     def done(self, event: WorkerDone, now: Instant) -> None:
@@ -210,8 +214,13 @@ class Dispatch:
         while (id := self._alarms.pop_due(now)) is not None:
             self._restless = True
             docket = self._answering.open.get(id)
-            if docket is not None:
+            if docket is None:
+                continue
+            if docket.phase != "waiting" and now < docket.times.answer_by:
+                self._alarms.set(id, docket.times.answer_by)  # it was time to look, below
+            else:
                 self._act(docket, docket.move("due", now), now)
+        self._look_at_changes(now)
         while self._restless:
             self._restless = False
             self._begin_jobs(now)
@@ -345,6 +354,18 @@ class Dispatch:
     def _hasten(self, docket: Docket, why: Hurry, now: Instant) -> None:
         docket.hurry = why
         self._act(docket, docket.move("finish" if why == "finish" else "shorten", now), now)
+
+    def _look_at_changes(self, now: Instant) -> None:
+        """End the jobs whose site has changed while there is time for another search."""
+        newest = self._snapshots.revision
+        for docket in list(self._at_work.values()):
+            best, looks_from = docket.best, docket.looks_from
+            if docket.phase != "planning" or best is None or looks_from is None:
+                continue
+            changed = best.revision < newest and now >= looks_from
+            if changed and self._has_another_try(docket, now):
+                self._health.count("changed_under_way_total")
+                self._hasten(docket, "changed", now)
 
     def _press(self, now: Instant) -> None:
         """Cut short whoever has a route already, for those who have waited long enough."""

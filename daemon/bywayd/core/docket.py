@@ -41,7 +41,7 @@ Move: TypeAlias = Literal[
     "fell_late",
     "lost_early",  # the worker is gone
     "lost_late",
-    "shorten",  # others wait: no more improving
+    "shorten",  # no more improving: others wait, or the site has changed
     "finish",  # the client wants the best now
     "cancel",  # the client does not want it any more
     "supersede",  # a newer one of the same unit takes its place
@@ -110,7 +110,12 @@ MOVES: Final[Mapping[tuple[Phase, Move], tuple[Phase, Act]]] = {
 }
 
 #: Why a job was told to end before its time.
-Hurry: TypeAlias = Literal["", "finish", "shorten", "newer"]
+Hurry: TypeAlias = Literal["", "finish", "shorten", "newer", "changed"]
+
+#: What is kept of a budget for a second search, in case the site changes under the first: so many
+#: times what its first route took, and at most this share of the time that the job has.
+_SECOND_SEARCH_FIRSTS: Final = 4.0
+_SECOND_SEARCH_RATIO_MAX: Final = 0.4
 
 
 @dataclass(frozen=True, slots=True)
@@ -169,6 +174,9 @@ class Docket:
     first_at: Instant | None = None
     attempts: int = 0
     hurry: Hurry = ""
+    #: From when on the job under way ends at once when the site has changed. Set with its first
+    #: route; sooner, there is nothing yet to look at.
+    looks_from: Instant | None = None
     #: What the planner made of it, when it failed: code, text, facts.
     failure: tuple[str, str, Mapping[str, object]] | None = None
     #: What happened, newest last, for error messages.
@@ -232,7 +240,7 @@ class Docket:
         """Whether there is time, and reason, to plan once more."""
         return (
             self.attempts < self.attempts_max
-            and self.hurry in ("", "shorten")
+            and self.hurry in ("", "shorten", "changed")
             and now < self.times.start_by
             and now.until(self.times.answer_by) >= self.retry_left_min
         )
@@ -244,8 +252,24 @@ class Docket:
         self.task, self.worker = task, worker
         self.verdict = None
         self.hurry = ""
+        self.looks_from = None
         if self.begun_at is None:
             self.begun_at = now
+
+    def expect_changes(self, now: Instant) -> None:
+        """
+        The job has its first route: decide from when on a changed site ends it.
+
+        Improved to the end of its budget on ground that has changed meanwhile, a route that does
+        not stand any more would leave no time for another; and the best one passes close by the
+        very things that move.
+        """
+        if self.looks_from is not None or self.first_at is None or self.begun_at is None:
+            return
+        firsts = self.first_at.since(self.begun_at).times(_SECOND_SEARCH_FIRSTS)
+        second = Duration(firsts.ns + self.retry_left_min.ns)
+        left = now.until(self.times.work_by)
+        self.looks_from = self.times.work_by - min(second, left.times(_SECOND_SEARCH_RATIO_MAX))
 
     def leave_worker(self) -> None:
         """Take note that no worker is at it any more."""
