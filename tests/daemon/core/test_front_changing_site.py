@@ -94,7 +94,7 @@ def test_a_search_that_has_found_nothing_yet_goes_on_when_the_site_changes(desk:
     desk.tick(95.0)
     assert desk.all_of(effects.SteerJob) == []
     desk.done(nothing("not_found"))
-    assert frames.decode_outcome(desk.outcome()[0], b"").kind == "not_found"
+    assert desk.outcome() == (nothing("not_found").body, 1)
 
 
 def test_a_search_is_not_ended_when_there_is_no_time_for_another(desk: Desk) -> None:
