@@ -236,7 +236,7 @@ def test_a_clerk_that_stands_still_holds_up_durable_layers_only(started, meet):
     daemon = started()
     durable, live = meet(daemon), meet(daemon)
     live.decided(rename(live, "other").change(messages.Claim(layer="moving")))
-    clerk = clerk_of(first)
+    clerk = clerk_of(daemon)
     os.kill(clerk, signal.SIGSTOP)
     number = put(durable, "a", 1.0)
     for k in range(20):
