@@ -86,7 +86,7 @@ class Surveying:
         self._visible: tuple[int, Instant] | None = None
         self.obstacles: dict[str, int] = {}
         self.tracks: dict[str, int] = {}
-        #: When the surveyor wants a batch, if only an empty one.
+        #: When the surveyor wants a batch, if only an empty one; None while it is at one.
         self._carry_at: Instant | None = None
 
     # -- what clients want ---------------------------------------------------------------------
@@ -216,7 +216,7 @@ class Surveying:
                 self._ledger.decide((), self._snapshots.revision, now)
                 continue
             self._hand_out(number, batch.changes, now)
-        if self._batch is None and self._carry_at is not None and now >= self._carry_at:
+        if self._carry_at is not None and now >= self._carry_at:
             self._hand_out(number, (), now)
         revision = self._snapshots.maybe_release()
         if revision is not None:
@@ -233,8 +233,8 @@ class Surveying:
         self._carry_at = None if next_in_s is None else now + Duration.of_s(next_in_s)
 
     def next_alarm(self) -> Instant | None:
-        """Return when something is to be carried forward, unless a batch is out."""
-        return self._carry_at if self._ready is not None and self._batch is None else None
+        """Return when something is to be carried forward."""
+        return self._carry_at
 
     @property
     def is_ready(self) -> bool:
@@ -267,5 +267,7 @@ class Surveying:
         """Stop with a `Defect` if something could be forgotten."""
         invariant(len(self._tickets) <= self._settings.descriptions_max, "questions are bounded")
         invariant(self._batch is None or self._ready is not None, "a batch is out with somebody")
+        is_free = self._ready is not None and self._batch is None
+        invariant(self._carry_at is None or is_free, "what moves is carried by who is free")
         for ticket in self._tickets.values():
             invariant(ticket.surveyor in (None, self._ready), "questions are with who is ready")

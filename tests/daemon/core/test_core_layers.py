@@ -60,6 +60,27 @@ def test_what_a_layer_is_cannot_be_changed(layers: Layers) -> None:
     assert refused(claim(layers, "A", "fixed", outlines_only=True)) == "conflict"
 
 
+def test_how_long_a_layer_remembers_what_was_seen_cannot_be_changed(layers: Layers) -> None:
+    found = claim(layers, "A", decay_s=2.0)
+    assert isinstance(found, Layer)
+    assert found.flags == LayerFlags(decay_s=2.0)
+    assert claim(layers, "A") is found
+    assert claim(layers, "A", decay_s=2.0) is found
+    no = claim(layers, "A", decay_s=3.0)
+    assert isinstance(no, No)
+    assert no.code == "conflict"
+    assert no.facts == {"layer": "stacks", "field": "decay_s", "value": 2.0}
+    # One that remembers for ever cannot begin to forget either.
+    assert refused(claim(layers, "A", "fixed", decay_s=2.0)) == "conflict"
+
+
+def test_a_conflict_changes_nothing_that_is_expected(layers: Layers) -> None:
+    layer = claim(layers, "A", decay_s=2.0, expected_period_s=1.0, when_stale="report")
+    claim(layers, "A", decay_s=3.0, expected_period_s=9.0, when_stale="refuse", lease_s=5.0)
+    assert isinstance(layer, Layer)
+    assert (layer.expected_period, layer.when_stale, layer.lease) == (ms(1000), "report", None)
+
+
 def test_a_conflict_does_not_give_the_layer_away(layers: Layers) -> None:
     claim(layers, "A", "fixed", unknown_blocks=False)
     layer = layers.get("fixed")

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import pytest
 from tests.daemon.core.coursetables import straight
-from tests.daemon.core.frontdesk import Desk, put, replace, settings
+from tests.daemon.core.frontdesk import Desk, ms, put, replace, settings
 from tests.daemon.core.guarddesk import GuardDesk, block
 from tests.daemon.core.movingdesk import batch, scan, states
 
@@ -168,6 +168,55 @@ def test_nobody_hears_of_a_layer_that_nobody_minds_until_somebody_does(desk: Des
     desk.publish(3)
     see(desk)
     assert told(desk) == ["fresh"]
+
+
+def test_what_is_done_about_a_stale_layer_may_change_both_ways(desk: Desk) -> None:
+    claim(desk, expected_period_s=1.0, when_stale="report")
+    desk.tick(1_000)
+    assert told(desk) == ["stale"]
+    assert not is_refused(desk, "a")
+    desk.change(messages.Claim(layer="lidar", when_stale="refuse"))
+    assert told(desk) == []  # it is known already
+    assert is_refused(desk, "b")
+    desk.change(messages.Claim(layer="lidar"))
+    assert is_refused(desk, "c")
+    desk.change(messages.Claim(layer="lidar", when_stale="ignore"))
+    assert not is_refused(desk, "d")
+
+
+def test_what_is_expected_may_be_told_with_the_whole_layer(desk: Desk) -> None:
+    fields = {"expected_period_s": 1.0, "when_stale": "report", "decay_s": 5.0}
+    desk.change(*replace("lidar", "a", **fields))
+    assert desk.one(effects.ApplyChanges).changes[0].settings == LayerFlags(decay_s=5.0)
+    desk.publish(batch(desk), after_ms=0.0)
+    desk.change(*replace("lidar", "a", expected_period_s=2.0))
+    desk.publish(batch(desk), after_ms=0.0)
+    desk.tick(1_999)
+    assert told(desk) == []
+    desk.tick(1)
+    assert told(desk) == ["stale"]
+
+
+def test_a_whole_layer_that_is_refused_has_told_what_is_expected_all_the_same(desk: Desk) -> None:
+    desk.change(*replace("lidar", "a", expected_period_s=1.0, when_stale="report"))
+    desk.publish(batch(desk), events.Refusal(0, "bad_geometry", "no", {}), after_ms=0.0)
+    desk.tick(1_000)
+    (message,) = states(desk)
+    assert (message.state, message.age_s) == ("stale", None)
+
+
+def test_the_ledger_is_woken_when_a_layer_becomes_stale_and_not_again(desk: Desk) -> None:
+    claim(desk, expected_period_s=0.05, when_stale="report")
+    assert desk.front.ledger.next_alarm() == desk.now + ms(50)
+    desk.tick(50)
+    assert told(desk) == ["stale"]
+    assert desk.front.ledger.freshness.next_alarm() is None
+
+
+def test_a_shorter_period_leaves_no_alarm_behind(desk: Desk) -> None:
+    claim(desk, expected_period_s=3.0, when_stale="report")
+    desk.change(messages.Claim(layer="lidar", expected_period_s=0.5), after_ms=1_000)
+    assert desk.front.ledger.freshness.next_alarm() is None
 
 
 def test_a_layer_of_which_nothing_is_expected_is_never_stale(desk: Desk) -> None:

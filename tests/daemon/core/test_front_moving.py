@@ -8,6 +8,7 @@ from tests.daemon.core.movingdesk import batch, carried, scan, told, track
 
 from byway import messages
 from bywayd.core import effects, events
+from bywayd.core.invariant import Defect
 
 
 @pytest.fixture
@@ -213,6 +214,59 @@ def test_changes_that_come_while_things_are_carried_wait_their_turn(desk: Desk) 
     assert change_of(desk).what == "put"
     desk.publish(batch(desk))
     assert told(desk) == [("acknowledged", 2)]
+
+
+def test_a_batch_may_be_wanted_at_once_and_what_waits_goes_with_it(desk: Desk) -> None:
+    desk.change(*track("lidar", "cart"))
+    carried(desk, 1, next_in_s=0.0)
+    empty = desk.one(effects.ApplyChanges)
+    assert (empty.changes, empty.at) == ((), desk.now)
+    desk.change(*put("stacks", "a"))
+    carried(desk, empty.batch, next_in_s=0.0)
+    assert change_of(desk).what == "put"
+
+
+def test_a_batch_that_is_due_while_another_is_out_is_the_next_one(desk: Desk) -> None:
+    desk.change(*track("lidar", "cart"))
+    carried(desk, 1, next_in_s=0.1)
+    desk.change(*put("stacks", "a"), after_ms=99)
+    out = batch(desk)
+    # It would have been due now; whoever is at work says anew when it wants one.
+    desk.tick(5)
+    assert not desk.all_of(effects.ApplyChanges)
+    carried(desk, out, next_in_s=0.02)
+    desk.tick(19)
+    assert not desk.all_of(effects.ApplyChanges)
+    desk.tick(1)
+    assert desk.one(effects.ApplyChanges).changes == ()
+
+
+def test_nothing_is_carried_while_there_is_no_surveyor(desk: Desk) -> None:
+    desk.change(*track("lidar", "cart"))
+    carried(desk, 1, next_in_s=0.1)
+    desk.hand_in(events.SurveyorLost(1, "killed"))
+    desk.tick(200)
+    assert not desk.all_of(effects.ApplyChanges)
+    assert desk.front.surveying.next_alarm() is None
+    desk.hand_in(events.SurveyorReady(2, 2, {"revision": 2}))
+    desk.tick(200)
+    assert not desk.all_of(effects.ApplyChanges)
+
+
+def test_the_batch_of_a_surveyor_that_was_lost_comes_before_what_its_successor_wants(
+    desk: Desk,
+) -> None:
+    desk.change(*track("lidar", "cart"))
+    desk.hand_in(events.SurveyorLost(1, "killed"))
+    desk.hand_in(events.SurveyorReady(2, 1, {"revision": 1}, next_in_s=0.0))
+    assert change_of(desk).what == "track"
+
+
+def test_a_batch_that_is_due_while_another_is_out_is_a_defect(desk: Desk) -> None:
+    desk.change(*track("lidar", "cart"))
+    desk.front.surveying._carry_at = desk.now
+    with pytest.raises(Defect, match="carried by who is free"):
+        desk.front.check()
 
 
 def test_a_surveyor_that_is_lost_while_it_carries_owes_no_changes(desk: Desk) -> None:

@@ -211,6 +211,20 @@ def test_how_long_an_alert_takes_after_the_acknowledgement_is_observed(
     assert guarded.front.health.statistics().observed["alert_s"] == 1
 
 
+def test_an_alert_is_late_by_the_first_snapshot_of_its_revision(guarded: GuardDesk) -> None:
+    """Later ones in which nothing differs did not bring it about."""
+    message, packed = put("live", "a")
+    guarded.change(message, packed)
+    guarded.publish(guarded.one(effects.ApplyChanges).batch)
+    guarded.change(message, packed)
+    out = guarded.one(effects.ApplyChanges).batch
+    guarded.hand_in(events.SnapshotReady(1, out, guarded.revision, {}), after_ms=40.0)
+    guarded.saw(None)  # nothing is told
+    assert guarded.front.health.statistics().observed["alert_s"] == 0
+    guarded.saw(block(), after_ms=3.0)
+    assert guarded.front.health.histograms()["alert_s"].sum_s == pytest.approx(0.043)
+
+
 def test_a_guard_that_nobody_would_miss_is_a_defect(guarded: GuardDesk) -> None:
     guarded.front.guards._alarms.clear(1)
     with pytest.raises(Defect, match="every silence has an end"):
