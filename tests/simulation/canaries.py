@@ -7,7 +7,7 @@ A checker that nobody has seen fail may be one that cannot.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from types import ModuleType
 from typing import Any
 
@@ -16,6 +16,7 @@ from bywayd.core import changes
 from bywayd.core.answers import Answers
 from bywayd.core.dispatch import Dispatch
 from bywayd.core.docket import Docket, Held
+from bywayd.core.effects import Change
 from bywayd.core.events import Outcome
 from bywayd.core.expiries import Expiries
 from bywayd.core.freshness import Freshness
@@ -37,6 +38,7 @@ true_ended = Docket.ended
 true_decide = Ledger.decide
 true_publish = Outbox.publish
 true_forsake = Surveying._forsake
+true_hand_out = Surveying._hand_out
 true_guards_publish = Guards.publish
 true_move = Guards.move
 true_change_over = Rerouting._change_over
@@ -44,6 +46,7 @@ true_clerk_forsake = Keeping._forsake
 true_keep = KeepLine.append
 true_pop_due = Expiries.pop_due
 true_claimed = Freshness.claimed
+true_claim = Layers.claim
 
 
 @dataclass(frozen=True)
@@ -173,6 +176,22 @@ def begin_anew_with_every_claim(freshness: Freshness, layer: Layer, now: Instant
     true_claimed(freshness, layer, now)
 
 
+def hand_out_what_sources_sent_only(
+    surveying: Surveying, number: int, changes: tuple[Change, ...], now: Instant
+) -> None:
+    if changes:
+        true_hand_out(surveying, number, changes, now)
+
+
+def let_claims_change_what_layers_are(
+    layers: Layers, source: str, name: str, wanted: Any, now: Instant
+) -> Any:
+    layer = layers.get(name)
+    if layer is not None and wanted.decay_s is not None:
+        layer.flags = replace(layer.flags, decay_s=wanted.decay_s)
+    return true_claim(layers, source, name, wanted, now)
+
+
 def take_layers_from_whoever_has_them(layers: Layers, now: Instant) -> Layer | None:
     name = layers._alarms.pop_due(now)
     layer = None if name is None else layers.get(name)
@@ -204,10 +223,18 @@ CANARIES = {
         is_about_sources=True,
     ),
     "what moves stays where it was seen": Canary(
-        Surveying,
-        "_carry_in",
-        lambda self, next_in_s, now: None,
-        "is carried forward in time",
+        *(Surveying, "_hand_out", hand_out_what_sources_sent_only),
+        "what moves is carried forward in time",
+        is_about_sources=True,
+    ),
+    "nobody is woken to carry what moves": Canary(
+        *(Surveying, "next_alarm", lambda self: None),
+        "there is somebody awake to have it carried forward",
+        is_about_sources=True,
+    ),
+    "later claims change what a layer is": Canary(
+        *(Layers, "claim", let_claims_change_what_layers_are),
+        "what a layer is never changes",
         is_about_sources=True,
     ),
     "layers of outlines take scans and tracks": Canary(

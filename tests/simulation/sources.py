@@ -169,6 +169,8 @@ class Sources:
                     layer=layer,
                     lease_s=1.0,
                     unknown_blocks=flag,
+                    # Who comes second with another time is refused.
+                    decay_s=rng.choice([None, None, None, 0.5, 1.0]),
                     durable=durable or None,
                     **told,
                 )

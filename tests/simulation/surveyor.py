@@ -7,6 +7,7 @@ so that it can be seen what has become visible, and in which order.
 
 from __future__ import annotations
 
+import random
 import struct
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
@@ -18,8 +19,9 @@ from tests.simulation.times import MS, SECOND
 from byway import frames, messages, obstacles
 from bywayd.core import effects, events
 
-#: How often what moves is carried forward.
-CARRY_S = 0.02
+#: What moves is carried forward within this time, what was scanned decays within that.
+CARRY_S = 0.04
+DECAY_S = 0.5
 
 if TYPE_CHECKING:
     from tests.simulation.crew import Crew
@@ -59,10 +61,11 @@ class Model:
         """What makes one revision another than the last."""
         return self.layers, self.patches, self.scans, self.carries
 
-    @property
-    def next_in_s(self) -> float | None:
-        """When something has to be carried forward."""
-        return CARRY_S if any(self.moving.values()) else None
+    def next_in_s(self, rng: random.Random) -> float | None:
+        """When something has to be carried forward: at once, soon, later, or never."""
+        if any(self.moving.values()):
+            return rng.choice([0.0, *[rng.uniform(0.001, CARRY_S)] * 9])
+        return rng.choice([None, rng.uniform(0.0, DECAY_S)]) if self.scans else None
 
 
 class Surveyor:
@@ -95,6 +98,8 @@ class Surveyor:
         self.order: tuple[tuple[effects.Change, ...], int] = ((), 0)
         #: What was said last, if it made sense: batch, and the layers that sources changed in it.
         self.said: tuple[int, list[str]] | None = None
+        #: What each layer is.
+        self.flags: dict[str, effects.LayerFlags] = dict(self.world.settings.layers)
         #: When the front has to hand out a batch, if only an empty one.
         self.wanted_ns: int | None = None
 
@@ -146,7 +151,7 @@ class Surveyor:
         if effect.revision is not None and world.chance("surveyor_raves"):
             revision -= 1
         ready = events.SurveyorReady(
-            *(number, revision, {"revision": revision}), next_in_s=self.model.next_in_s
+            *(number, revision, {"revision": revision}), next_in_s=self.model.next_in_s(rng)
         )
         self.crew.say(rng.uniform(5, 30) * MS, ready)
 
@@ -213,7 +218,7 @@ class Surveyor:
             *(effect.surveyor, batch, revision, {"revision": revision}, tuple(refusals), 1000),
             counts,
             {name: len(ids) for name, ids in self.model.moving.items()},
-            self.model.next_in_s,
+            self.model.next_in_s(world.rng),
         )
         self.crew.say(0, ready)
         self.lookout.look_at_all()
@@ -221,6 +226,8 @@ class Surveyor:
     def _apply_one(self, change: effects.Change) -> None:
         world = self.world
         layer = self.model.layers.setdefault(change.layer, {})
+        is_so = self.flags.setdefault(change.layer, change.settings)
+        promise(change.settings == is_so, "what a layer is never changes", change.layer, is_so)
         token = self.token_of(change)
         expires_at = None
         recalled = token is not None and self._is_recalled(change, token)
@@ -333,9 +340,13 @@ class Surveyor:
                 self.world.checkers.fresh.became_visible(changed, self.world.now_ns)
 
     def check_carried(self) -> None:
-        """What moves is carried forward in time."""
-        is_late = self.wanted_ns is not None and self.world.now_ns >= self.wanted_ns
-        promise(not is_late, "what moves is carried forward in time")
+        """What moves is carried forward in time, and if nothing else happens until then as well."""
+        if self.wanted_ns is None:
+            return
+        wake_ns = self.world.wake_ns
+        promise(self.world.now_ns < self.wanted_ns, "what moves is carried forward in time")
+        is_awake = wake_ns is not None and wake_ns <= self.wanted_ns
+        promise(is_awake, "there is somebody awake to have it carried forward")
 
     def _is_recalled(self, change: effects.Change, token: int) -> bool:
         """Whether it is a change of an earlier life, which this one was told by the clerk."""

@@ -49,12 +49,14 @@ def test_on_a_quiet_day_nobody_is_killed_and_nobody_waits_in_vain() -> None:
     assert counts.get("refused_overloaded_total", 0) == 0
 
 
-def test_on_the_worst_day_everything_happens_and_nothing_breaks() -> None:
+def test_on_the_worst_days_everything_happens_and_nothing_breaks() -> None:
     rates = {name: high / 2 for name, (_, high) in RATES.items()}
-    odds = Odds(dict(FAULTS), rates, workers=3, durable=2)
-    world = World(3, odds)
-    world.run(15_000)
-    assert {name for name in FAULTS if name not in world.counts} <= {"restart"}
+    happened: set[str] = set()
+    for seed in range(3, 7):  # some faults are too rare for each to happen every day
+        world = World(seed, Odds(dict(FAULTS), dict(rates), workers=3, durable=2))
+        world.run(10_000)
+        happened |= world.counts.keys()
+    assert set(FAULTS) - happened == set()
 
 
 def test_the_same_seed_gives_the_same_day() -> None:

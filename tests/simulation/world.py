@@ -85,6 +85,8 @@ class World:
         #: Events handed to any front.
         self.event_count = 0
         self.lives = 0
+        #: When the front wants to be woken, if it has said so.
+        self.wake_ns: int | None = None
         self.story: deque[str] = deque(maxlen=60)
         self.digest = hashlib.blake2b(digest_size=16)
         self.keep_digest = False
@@ -141,6 +143,7 @@ class World:
         self.crew.all_gone()
         self.front = self.make_front(self.settings, self.epoch, self.seed + self.lives)
         self._wake_serial = 0
+        self.wake_ns = None
         self.stopped = None
         self.hand_in(events.Started(self.now_ns / 1e9))
 
@@ -187,6 +190,7 @@ class World:
                     self.at(self._transit_ns(), self.drivers.hear_event, effect)
             case effects.Wake():
                 self._wake_serial += 1
+                self.wake_ns = effect.at.ns
                 lag_ns = self.rng.uniform(0, 0.2 * MS) if self.chance("lag") else 0
                 delay_ns = max(0, effect.at.ns - self.now_ns) + lag_ns
                 self.at(delay_ns, self._tick, self.epoch, self._wake_serial)
@@ -199,6 +203,7 @@ class World:
 
     def _tick(self, epoch: str, serial: int) -> None:
         if epoch == self.epoch and serial == self._wake_serial:
+            self.wake_ns = None
             self.hand_in(events.Tick())
 
     # -- the network --------------------------------------------------------------------------
